@@ -1,0 +1,96 @@
+"""TOML documents, held against the JSON Schema files under schemas/."""
+
+from __future__ import annotations
+
+import json
+import tomllib
+from collections.abc import Iterable, Iterator
+from difflib import get_close_matches
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+from gainassay import resources
+from gainassay.errors import InputError
+
+
+def read_toml(path: Path, kind: str) -> dict[str, Any]:
+    """The document in a TOML file, checked against `schemas/<kind>.schema.json`.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read, is no TOML, or does not follow the schema; every fault is listed.
+    """
+    try:
+        document = tomllib.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise InputError(f"{path}: there is no such file") from None
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read: {error.strerror or error}") from None
+    except UnicodeDecodeError as error:
+        raise InputError(f"{path}: is not UTF-8 text (byte {error.start}); save it as UTF-8") from None
+    except (tomllib.TOMLDecodeError, RecursionError) as error:
+        raise InputError(f"{path}: is not valid TOML: {error}") from None
+    faults = list(_faults(document, kind))
+    if faults:
+        raise InputError("\n".join(f"{path}: {fault}" for fault in faults))
+    return document
+
+
+@cache
+def schema(kind: str) -> dict[str, Any]:
+    """The JSON Schema of a kind of document."""
+    found: dict[str, Any] = json.loads(
+        (resources.schemas() / f"{kind}.schema.json").read_text(encoding="utf-8")
+    )
+    return found
+
+
+def nearest(name: str, known: Iterable[str]) -> str:
+    """`; did you mean '...'?` with the nearest known name, or nothing if none is near."""
+    matches = get_close_matches(name, list(known), n=1, cutoff=0.6)
+    return f"; did you mean '{matches[0]}'?" if matches else ""
+
+
+def _faults(document: dict[str, Any], kind: str) -> Iterator[str]:
+    from jsonschema import Draft202012Validator
+
+    validator = Draft202012Validator(schema(kind))
+    for error in sorted(
+        validator.iter_errors(document), key=lambda e: [str(step) for step in e.absolute_path]
+    ):
+        yield from _explain(error)
+
+
+def _explain(error: Any) -> Iterator[str]:
+    """A schema validator's finding, in words: where, what stands there, what is wanted."""
+    place = ".".join(str(step) for step in error.absolute_path)
+    inside = f"in [{place}]: " if place else ""
+    found = _shown(error.instance)
+    match error.validator:
+        case "additionalProperties":
+            known = error.schema.get("properties", {})
+            for key in error.instance:
+                if key not in known:
+                    listed = ", ".join(known)
+                    yield f"{inside}unknown key {_shown(key)}{nearest(key, known) or f'; the keys are {listed}'}"
+        case "required":
+            for key in error.validator_value:
+                if key not in error.instance:
+                    wanted = error.schema.get("properties", {}).get(key, {}).get("description", "")
+                    yield f"{inside}the key '{key}' is missing{f': {wanted}' if wanted else ''}"
+        case _ if "propertyNames" in error.absolute_schema_path:
+            yield f"{inside}{found} is no name; wanted is {_wanted(error)}"
+        case _:
+            yield f"{place or 'the document'} is {found}; wanted is {_wanted(error)}"
+
+
+def _wanted(error: Any) -> str:
+    described = error.schema.get("description")
+    return str(described or error.message)
+
+
+def _shown(value: Any) -> str:
+    text = repr(value) if isinstance(value, str) else json.dumps(value, default=str)
+    return text if len(text) <= 80 else text[:77] + "..."

@@ -1,0 +1,164 @@
+"""The form of a topology: ideal gain times correction factor, with its coefficient functions.
+
+With N and D collected by the products m_k of departures,
+
+    gain = G_ideal (1 + sum_k n_k m_k) / (1 + sum_k d_k m_k),    G_ideal = N_0/D_0, n_k = N_k/N_0, d_k = D_k/D_0,
+
+    E = gain/G_ideal - 1 = sum_k (n_k - d_k) m_k / (1 + sum_k d_k m_k).
+
+The form keeps G_ideal, the contrasts n_k - d_k and the loadings d_k as ratios of polynomials in the elements'
+admittances, in lowest terms. n_k - d_k is subtracted here, as polynomials, so no digits are lost later.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from gainassay.errors import InputError
+from gainassay.forms import nodal
+from gainassay.forms.departures import DEPARTURES, Departure, term_name
+from gainassay.forms.multiaffine import MultiAffine
+from gainassay.forms.topology import Topology
+
+Polynomial = tuple[tuple[int, tuple[int, ...]], ...]
+"""Terms (coefficient, exponent of each element's admittance), in a fixed order."""
+
+
+@dataclass(frozen=True)
+class Ratio:
+    """A ratio of two polynomials in the elements' admittances, in lowest terms."""
+
+    numerator: Polynomial
+    denominator: Polynomial
+
+    def degrees(self) -> tuple[int, ...]:
+        """Largest exponent of each element in numerator or denominator."""
+        exponents = [exponents for _, exponents in (*self.numerator, *self.denominator)]
+        return tuple(max(column) for column in zip(*exponents, strict=True))
+
+
+@dataclass(frozen=True)
+class Form:
+    """What is derived from a topology, once.
+
+    Attributes
+    ----------
+    topology : str
+        Name of the topology.
+    elements : tuple[str, ...]
+        Elements, in the order of the exponents.
+    departures : tuple[tuple[str, str], ...]
+        (amplifier, symbol of the departure).
+    monomials : tuple[tuple[int, ...], ...]
+        The products m_k, each as indices into `departures`.
+    terms : tuple[str, ...]
+        Name of each term of the error account, one for each monomial.
+    gain_ideal : Ratio
+        G_ideal [gain unit].
+    contrasts, loadings : tuple[Ratio, ...]
+        n_k - d_k and d_k, one for each monomial [1/unit of m_k].
+    """
+
+    topology: str
+    elements: tuple[str, ...]
+    departures: tuple[tuple[str, str], ...]
+    monomials: tuple[tuple[int, ...], ...]
+    terms: tuple[str, ...]
+    gain_ideal: Ratio
+    contrasts: tuple[Ratio, ...]
+    loadings: tuple[Ratio, ...]
+
+
+def derive(topology: Topology) -> Form:
+    """The form of a topology.
+
+    Raises
+    ------
+    InputError
+        If the ideal gain is zero, infinite or undefined, so that there is no ideal gain to correct.
+    """
+    gain = nodal.derive(topology)
+    numerators = gain.numerator.collect(gain.departure_mask())
+    denominators = gain.denominator.collect(gain.departure_mask())
+    where = f"{topology.source}: topology '{topology.name}'"
+    if 0 not in denominators:
+        kind = "infinite or undefined: no feedback reaches the amplifier's inverting input"
+        raise InputError(f"{where}: the ideal gain is {kind}; it has no form ideal gain x correction factor")
+    if 0 not in numerators:
+        raise InputError(
+            f"{where}: the ideal gain is zero: the input does not reach the output; "
+            "it has no form ideal gain x correction factor"
+        )
+    ratio = _Ratios(gain.elements)
+    products = sorted({*numerators, *denominators} - {0}, key=lambda mask: (mask.bit_count(), mask))
+    zero = MultiAffine({})
+    n_0, d_0 = numerators[0], denominators[0]
+    kept = []
+    for product in products:
+        n_k, d_k = numerators.get(product, zero), denominators.get(product, zero)
+        contrast, loading = ratio.difference(n_k, n_0, d_k, d_0), ratio.reduced(d_k, d_0)
+        if contrast.numerator or loading.numerator:
+            kept.append((_departures_in(product, len(gain.elements)), contrast, loading))
+    several = len(topology.amplifiers) > 1
+    return Form(
+        topology=topology.name,
+        elements=gain.elements,
+        departures=gain.departures,
+        monomials=tuple(monomial for monomial, _, _ in kept),
+        terms=tuple(_name(monomial, gain.departures, several) for monomial, _, _ in kept),
+        gain_ideal=ratio.reduced(n_0, d_0),
+        contrasts=tuple(contrast for _, contrast, _ in kept),
+        loadings=tuple(loading for _, _, loading in kept),
+    )
+
+
+def _departures_in(product: int, first: int) -> tuple[int, ...]:
+    return tuple(index - first for index in range(first, product.bit_length()) if product >> index & 1)
+
+
+def _name(monomial: tuple[int, ...], departures: tuple[tuple[str, str], ...], several: bool) -> str:
+    by_symbol: dict[str, Departure] = {departure.symbol: departure for departure in DEPARTURES}
+    return term_name([(departures[i][0], by_symbol[departures[i][1]]) for i in monomial], several)
+
+
+class _Ratios:
+    """Ratios of polynomials brought to lowest terms in a ring of sympy's."""
+
+    def __init__(self, elements: tuple[str, ...]) -> None:
+        from sympy.polys.domains import ZZ
+        from sympy.polys.rings import PolyRing
+
+        self._count = len(elements)
+        # Symbols by position: a user's names never reach sympy.
+        self._ring = PolyRing([f"y{index}" for index in range(len(elements))], ZZ)
+
+    def _lift(self, polynomial: MultiAffine):  # type: ignore[no-untyped-def]
+        return self._ring.from_dict(
+            {tuple(mask >> i & 1 for i in range(self._count)): value for mask, value in polynomial}
+        )
+
+    def _ratio(self, numerator, denominator) -> Ratio:  # type: ignore[no-untyped-def]
+        if not numerator:
+            return Ratio((), ((1, (0,) * self._count),))
+        top, bottom = numerator.cancel(denominator)
+        if bottom.LC < 0:
+            top, bottom = -top, -bottom
+        return Ratio(_terms(top), _terms(bottom))
+
+    def reduced(self, numerator: MultiAffine, denominator: MultiAffine) -> Ratio:
+        """numerator / denominator."""
+        return self._ratio(self._lift(numerator), self._lift(denominator))
+
+    def difference(
+        self, numerator: MultiAffine, ideal: MultiAffine, other: MultiAffine, other_ideal: MultiAffine
+    ) -> Ratio:
+        """numerator / ideal - other / other_ideal."""
+        n_k, n_0, d_k, d_0 = (self._lift(p) for p in (numerator, ideal, other, other_ideal))
+        return self._ratio(n_k * d_0 - d_k * n_0, n_0 * d_0)
+
+
+def _terms(polynomial) -> Polynomial:  # type: ignore[no-untyped-def]
+    return tuple(
+        (int(value), tuple(int(e) for e in exponents))
+        for exponents, value in sorted(polynomial.items(), reverse=True)
+    )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import tomllib
 from collections.abc import Iterable, Iterator
 from difflib import get_close_matches
@@ -32,7 +33,7 @@ def read_toml(path: Path, kind: str) -> dict[str, Any]:
         raise InputError(f"{path}: is not UTF-8 text (byte {error.start}); save it as UTF-8") from None
     except (tomllib.TOMLDecodeError, RecursionError) as error:
         raise InputError(f"{path}: is not valid TOML: {error}") from None
-    faults = list(_faults(document, kind))
+    faults = [*_not_finite(document, ""), *_faults(document, kind)]
     if faults:
         raise InputError("\n".join(f"{path}: {fault}" for fault in faults))
     return document
@@ -41,9 +42,7 @@ def read_toml(path: Path, kind: str) -> dict[str, Any]:
 @cache
 def schema(kind: str) -> dict[str, Any]:
     """The JSON Schema of a kind of document."""
-    found: dict[str, Any] = json.loads(
-        (resources.schemas() / f"{kind}.schema.json").read_text(encoding="utf-8")
-    )
+    found: dict[str, Any] = json.loads((resources.schemas() / f"{kind}.schema.json").read_text(encoding="utf-8"))
     return found
 
 
@@ -57,10 +56,17 @@ def _faults(document: dict[str, Any], kind: str) -> Iterator[str]:
     from jsonschema import Draft202012Validator
 
     validator = Draft202012Validator(schema(kind))
-    for error in sorted(
-        validator.iter_errors(document), key=lambda e: [str(step) for step in e.absolute_path]
-    ):
+    for error in sorted(validator.iter_errors(document), key=lambda e: [str(step) for step in e.absolute_path]):
         yield from _explain(error)
+
+
+def _not_finite(value: Any, place: str) -> Iterator[str]:
+    """Faults for `nan` and `inf`, which TOML allows and no bound of a schema catches."""
+    if isinstance(value, float) and not math.isfinite(value):
+        yield f"{place} is {value}; wanted is a finite number"
+    items = value.items() if isinstance(value, dict) else enumerate(value) if isinstance(value, list) else ()
+    for key, item in items:
+        yield from _not_finite(item, f"{place}.{key}" if place else str(key))
 
 
 def _explain(error: Any) -> Iterator[str]:

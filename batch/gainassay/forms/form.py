@@ -159,6 +159,5 @@ class _Ratios:
 
 def _terms(polynomial) -> Polynomial:  # type: ignore[no-untyped-def]
     return tuple(
-        (int(value), tuple(int(e) for e in exponents))
-        for exponents, value in sorted(polynomial.items(), reverse=True)
+        (int(value), tuple(int(e) for e in exponents)) for exponents, value in sorted(polynomial.items(), reverse=True)
     )

@@ -58,7 +58,8 @@ def derive(topology: Topology) -> Gain:
     departures = tuple(
         (amplifier.name, departure.symbol) for amplifier in topology.amplifiers for departure in DEPARTURES
     )
-    symbol = {name: MultiAffine.symbol(index) for index, name in enumerate([*elements, *departures])}
+    names: list[str | tuple[str, str]] = [*elements, *departures]
+    symbol = {name: MultiAffine.symbol(index) for index, name in enumerate(names)}
     rows, columns, potential, scale = _system(topology, symbol)
 
     whole = determinant(rows, columns)
@@ -139,7 +140,5 @@ def _system(
         for node, current_in in drive.items():
             add(row_of[node], RIGHT_HAND_SIDE, MultiAffine.constant(current_in))
 
-    columns = [nodes.index(node) for node in unknown] + [
-        len(nodes) + i for i in range(len(topology.amplifiers))
-    ]
+    columns = [nodes.index(node) for node in unknown] + [len(nodes) + i for i in range(len(topology.amplifiers))]
     return rows, columns, potential, scale

@@ -78,11 +78,7 @@ class Topology:
         named = [
             *self.input,
             *(node for element in self.elements for node in element.between),
-            *(
-                node
-                for amplifier in self.amplifiers
-                for node in (amplifier.plus, amplifier.minus, amplifier.out)
-            ),
+            *(node for amplifier in self.amplifiers for node in (amplifier.plus, amplifier.minus, amplifier.out)),
         ]
         return tuple(node for node in dict.fromkeys(named) if node != GROUND)
 
@@ -167,9 +163,7 @@ def _check(topology: Topology) -> None:
         if amplifier.out == GROUND:
             raise InputError(f"{where}: the output of {amplifier.name} is tied to ground")
         if driven_by_voltage(topology) and amplifier.out in topology.input:
-            raise InputError(
-                f"{where}: the output of {amplifier.name} is tied to the input '{amplifier.out}'"
-            )
+            raise InputError(f"{where}: the output of {amplifier.name} is tied to the input '{amplifier.out}'")
     outputs = [amplifier.out for amplifier in topology.amplifiers]
     for node in outputs:
         if outputs.count(node) > 1:
@@ -181,9 +175,7 @@ def _check(topology: Topology) -> None:
                 f"'{topology.output}' is none of its elements"
             )
     elif topology.output not in nodes:
-        raise InputError(
-            f"{where}: the output '{topology.output}' is no node of it; the nodes are {', '.join(nodes)}"
-        )
+        raise InputError(f"{where}: the output '{topology.output}' is no node of it; the nodes are {', '.join(nodes)}")
     elif topology.output in topology.input:
         raise InputError(f"{where}: input and output are the same node, '{topology.output}'")
 
@@ -200,9 +192,7 @@ def output_is_current(topology: Topology) -> bool:
 
 def gain_unit(topology: Topology) -> str:
     """Unit of the gain."""
-    return {"voltage": "V/V", "transresistance": "V/A", "transconductance": "A/V", "current": "A/A"}[
-        topology.gain
-    ]
+    return {"voltage": "V/V", "transresistance": "V/A", "transconductance": "A/V", "current": "A/A"}[topology.gain]
 
 
 def library(own: Iterable[Path] = ()) -> dict[str, Topology]:

@@ -1,0 +1,5 @@
+"""`python -m gainassay` is the command `gainassay`."""
+
+from gainassay.cli import main
+
+main()

@@ -1,0 +1,98 @@
+"""The command line: a table of commands, each imported only when it is called, so that `--help` answers at once."""
+
+from __future__ import annotations
+
+import importlib
+import os
+import sys
+from typing import NoReturn
+
+import click
+
+from gainassay import __version__
+from gainassay.errors import GainassayError
+
+COMMANDS = {
+    "check": "Read a job's tables and say what is in them.",
+    "explain": "Show all that decides one stage with one part.",
+    "form": "Show the gain of a topology as a formula.",
+    "runs": "List the runs of a job.",
+    "sample": "Write a sample set, ready to screen, into a new folder.",
+    "screen": "Screen all stages of a job against all its parts.",
+    "topologies": "List the topologies.",
+}
+"""Every command with its one line of help; the command `name` is the function `name` of the module `name`."""
+
+INTERNAL_FAULT, UNUSABLE, INTERRUPTED = 1, 2, 130
+
+
+class _Commands(click.Group):
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        if cmd_name not in COMMANDS:
+            return None
+        module = importlib.import_module(f"gainassay.cli.{cmd_name}")
+        command: click.Command = getattr(module, cmd_name)
+        return command
+
+    def resolve_command(
+        self, ctx: click.Context, args: list[str]
+    ) -> tuple[str | None, click.Command | None, list[str]]:
+        try:
+            return super().resolve_command(ctx, args)
+        except click.UsageError as error:
+            from gainassay.contracts.documents import nearest
+
+            hint = nearest(args[0], COMMANDS) or f"; the commands are {', '.join(COMMANDS)}"
+            raise click.UsageError(f"there is no command {args[0]!r}{hint}", ctx) from error
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl(list(COMMANDS.items()))
+
+
+@click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(__version__, package_name="gainassay", message="%(prog)s %(version)s")
+def gainassay() -> None:
+    """Which op-amps keep which gain stages inside their required accuracy, by how much, and what decides it.
+
+    Exit status: 0 done; 1 an internal fault; 2 unusable command or input, nothing written; 3 done, but a
+    condition asked for with --fail-on came true; 130 interrupted.
+    """
+
+
+def main() -> NoReturn:
+    """Run the command line and exit with its status; no traceback reaches the user."""
+    for stream in (sys.stdout, sys.stderr):
+        # A name that the terminal's encoding lacks is shown escaped and does not end the run.
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="backslashreplace")
+    try:
+        gainassay.main(standalone_mode=False, prog_name="gainassay")
+        sys.stdout.flush()
+    except click.ClickException as error:
+        error.show()
+        sys.exit(UNUSABLE)
+    except GainassayError as error:
+        click.echo(f"gainassay: {error}", err=True)
+        sys.exit(error.exit_status)
+    except (click.Abort, KeyboardInterrupt):
+        click.echo("gainassay: interrupted; nothing of this run was kept", err=True)
+        sys.exit(INTERRUPTED)
+    except BrokenPipeError:
+        # The reader of our output has gone, as `| head` does. Nothing more can be said to it.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(0)
+    except Exception as error:
+        if os.environ.get("GAINASSAY_DEBUG"):
+            raise
+        kind = type(error).__name__
+        click.echo(
+            f"gainassay: internal fault: {kind}: {error}\n"
+            "This is our mistake, not yours. Please report it; with GAINASSAY_DEBUG=1 set, the command shows where.",
+            err=True,
+        )
+        sys.exit(INTERNAL_FAULT)
+    sys.exit(0)

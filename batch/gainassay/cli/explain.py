@@ -1,0 +1,29 @@
+"""`gainassay explain`."""
+
+from __future__ import annotations
+
+from dataclasses import asdict
+from pathlib import Path
+
+import click
+
+from gainassay import explanation, service
+from gainassay.cautions import CAUTIONS
+from gainassay.cli import shared
+from gainassay.report import pair
+
+
+@click.command()
+@shared.job_argument
+@click.argument("stage")
+@click.argument("part")
+@shared.json_option
+def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
+    """Show all that decides STAGE with PART: gains, every term of the error, the worst corner, the evidence."""
+    prepared = service.prepare(job)
+    groups = service.groups_of(prepared.stages, prepared.parts)
+    found = explanation.explain(prepared.stages, prepared.parts, groups, stage, part)
+    if as_json:
+        shared.data({**asdict(found), "cautions": CAUTIONS})
+    else:
+        shared.lines(pair.text(found))

@@ -1,0 +1,66 @@
+"""What several commands share: arguments, options, and how results and remarks are printed."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable, Iterable
+from pathlib import Path
+from typing import Any, TypeVar
+
+import click
+
+from gainassay.errors import ConditionMet
+
+Command = TypeVar("Command", bound=Callable[..., Any])
+
+job_argument = click.argument("job", type=click.Path(path_type=Path), metavar="JOB")
+json_option = click.option("--json", "as_json", is_flag=True, help="Print JSON, for a program to read.")
+
+
+def fail_on_option(*conditions: str) -> Callable[[Command], Command]:
+    """`--fail-on`, which may be given more than once."""
+    return click.option(
+        "--fail-on",
+        multiple=True,
+        type=click.Choice(conditions),
+        help="Exit with status 3 if there is any such row. May be given more than once.",
+    )
+
+
+def lines(text: Iterable[str]) -> None:
+    """Results, on standard output."""
+    click.echo("\n".join(text))
+
+
+def data(value: Any) -> None:
+    """Results as JSON, on standard output; what is not a finite number is null."""
+    click.echo(json.dumps(_finite(value), indent=1, ensure_ascii=False, default=str))
+
+
+def warn(warnings: Iterable[str]) -> None:
+    """Warnings, on standard error."""
+    for warning in warnings:
+        click.echo(f"warning: {warning}", err=True)
+
+
+def meet(conditions: Iterable[str], counts: dict[str, int]) -> None:
+    """Raise if a condition asked for came true.
+
+    Raises
+    ------
+    ConditionMet
+        If a count of one of the conditions is not zero.
+    """
+    met = [f"{counts[name]:,} {name}" for name in conditions if counts[name]]
+    if met:
+        raise ConditionMet(f"as asked with --fail-on: {', '.join(met)}")
+
+
+def _finite(value: Any) -> Any:
+    if isinstance(value, dict):
+        return {key: _finite(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_finite(item) for item in value]
+    if isinstance(value, float) and value - value != 0.0:
+        return None
+    return value

@@ -1,0 +1,187 @@
+"""One pair, explained: every number behind its verdict, from the same kernel that screens all pairs."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from gainassay.contracts.documents import nearest
+from gainassay.contracts.evidence import EVIDENCE
+from gainassay.errors import InputError
+from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.topology import Topology, gain_unit
+from gainassay.screen import blocks
+from gainassay.screen.blocks import Chunk, Group, Screened
+from gainassay.screen.corners import term_names
+from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
+from gainassay.screen.verdicts import LEANINGS, VERDICTS
+from gainassay.tables.parts import PartTable
+from gainassay.tables.rejects import Reject
+from gainassay.tables.stages import StageTable
+
+PPM = 1e6
+
+
+@dataclass(frozen=True)
+class Figure:
+    """A data-sheet number of the part, as this row uses it; nan where nothing is known.
+
+    Attributes
+    ----------
+    matters : bool
+        Whether the stage's gain depends on it at all.
+    """
+
+    quantity: str
+    unit: str
+    nominal: float
+    worst: float
+    evidence: str
+    matters: bool
+
+
+@dataclass(frozen=True)
+class ElementValue:
+    """An element: nominal value and value at the worst corner [ohm]; inf is open, 0 short."""
+
+    name: str
+    nominal: float
+    tolerance: float
+    at_worst: float
+
+
+@dataclass(frozen=True)
+class Term:
+    """A term of the account [ppm], with nominal figures and at the worst corner."""
+
+    name: str
+    nominal_ppm: float
+    worst_ppm: float
+
+
+@dataclass(frozen=True)
+class Explanation:
+    """All that decides one pair. Errors in ppm; nan: no finite bound.
+
+    Attributes
+    ----------
+    terms : tuple[Term, ...]
+        All terms that are not zero, the largest at the worst corner first; both columns sum to the errors.
+    """
+
+    stage: str
+    part: str
+    topology: str
+    summary: str
+    gain_unit: str
+    gain_ideal: float
+    target_gain: float
+    gain_nominal: float
+    gain_worst: float
+    error_nominal_ppm: float
+    error_worst_ppm: float
+    limit_ppm: float
+    limit_used: float
+    verdict: str
+    evidence: str
+    leans_on: str
+    dominant_term: str
+    elements: tuple[ElementValue, ...]
+    figures: tuple[Figure, ...]
+    terms: tuple[Term, ...]
+
+
+def explain(stages: StageTable, parts: PartTable, groups: tuple[Group, ...], stage: str, part: str) -> Explanation:
+    """Explain one pair.
+
+    Raises
+    ------
+    InputError
+        If the stage or the part is not in its table, or was rejected.
+    """
+    names = [name for group in groups for name in group.stage_names.tolist()]
+    _require(stage, names, "stage", stages.source, stages.rejects)
+    _require(part, parts.names.tolist(), "part", parts.source, parts.rejects)
+    place = next(index for index, group in enumerate(groups) if stage in group.stage_names)
+    s = int(np.searchsorted(groups[place].stage_names, stage))
+    p = int(np.searchsorted(groups[place].part_names, part))
+    screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)))
+    return _explanation(screened, stages.groups[place].topology, stage, parts, p)
+
+
+def _require(name: str, known: list[str], kind: str, source: str, rejects: tuple[Reject, ...]) -> None:
+    if name in known:
+        return
+    for reject in rejects:
+        if reject.column == kind and reject.value == name:
+            raise InputError(f"{source}: row {reject.row}: {kind} {name!r} was rejected: it {reject.reason}")
+    hint = nearest(name, known) or f"; `gainassay check` says which {kind}s were rejected, and why"
+    raise InputError(f"{source}: there is no usable {kind} {name!r}{hint}")
+
+
+def _explanation(screened: Screened, topology: Topology, stage: str, parts: PartTable, p: int) -> Explanation:
+    side, outcome, judgement = screened.stage_side, screened.outcome, screened.judgement
+    sets = screened.group.active_sets
+    one = slice(0, 1)
+    corner = int(outcome.corner[0, 0])
+    unbounded = corner == UNBOUNDED
+    at_nominal = [float(term[0, 0]) * PPM for term in nominal_account(side, screened.part_side)]
+    at_worst = [
+        np.nan if unbounded else float(term[0, 0]) * PPM
+        for term in account(side, screened.part_side, sets, one, one, outcome.corner)
+    ]
+    names = term_names(screened.group.form)
+    terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
+    leaning = LEANINGS[int(judgement.leaning[0, 0])]
+    reference = float(side.reference[0])
+    worst = float(outcome.error_worst[0, 0])
+    values = screened.group.box.values[:, screened.chunk.stages][:, 0]
+    tolerances = screened.group.box.tolerances[:, screened.chunk.stages][:, 0]
+    at_corner = values if unbounded else side.corner_values[corner // len(sets), :, 0]
+    return Explanation(
+        stage=stage,
+        part=str(parts.names[p]),
+        topology=topology.name,
+        summary=topology.summary,
+        gain_unit=gain_unit(topology),
+        gain_ideal=float(side.gain_ideal[0]),
+        target_gain=reference,
+        gain_nominal=reference * (1.0 + float(outcome.error_nominal[0, 0])),
+        gain_worst=reference * (1.0 + worst),
+        error_nominal_ppm=float(outcome.error_nominal[0, 0]) * PPM,
+        error_worst_ppm=worst * PPM,
+        limit_ppm=float(side.limits[0]) * PPM,
+        limit_used=float(judgement.limit_used[0, 0]),
+        verdict=VERDICTS[int(judgement.verdict[0, 0])],
+        evidence=leaning.evidence,
+        leans_on=leaning.leans_on,
+        dominant_term=names[int(outcome.dominant[0, 0])],
+        elements=tuple(
+            ElementValue(name, *map(float, numbers))
+            for name, *numbers in zip(screened.group.form.elements, values, tolerances, at_corner, strict=True)
+        ),
+        figures=tuple(_figures(parts, p, side.matters[:, 0].tolist())),
+        terms=tuple(
+            sorted(
+                (term for term in terms if term.nominal_ppm or term.worst_ppm),
+                key=lambda term: (-np.nan_to_num(abs(term.worst_ppm)), names.index(term.name)),
+            )
+        ),
+    )
+
+
+def _figures(parts: PartTable, p: int, matters: list[bool]) -> list[Figure]:
+    figures = []
+    for index, departure in enumerate(DEPARTURES):
+        if not parts.modelled[index]:
+            continue
+        numbers = [parts.nominal[index, p], parts.worst[index, p]]
+        if EVIDENCE[parts.evidence[index, p]] == "missing":
+            numbers = [np.nan, np.nan]
+        elif departure.reciprocal:
+            numbers = [1.0 / number for number in numbers]
+        evidence = EVIDENCE[parts.evidence[index, p]]
+        nominal, worst = (float(number) for number in numbers)
+        figures.append(Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters[index]))
+    return figures

@@ -1,0 +1,122 @@
+"""A form's coefficient functions, evaluated for many stages at once.
+
+An element enters as a pair (y, z), its admittance being y/z: a resistor is (1, r), an open circuit (0, 1), a
+short circuit (1, 0). Polynomials in admittances are made homogeneous in each pair, so that open, short and
+everything between are one case without a division.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gainassay.forms.form import Form, Polynomial, Ratio
+
+FloatArray = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Pairs:
+    """Elements as pairs (y, z) with admittance y/z.
+
+    Attributes
+    ----------
+    y, z : ndarray, shape (elements, stages)
+        Each pair may be scaled by a factor of its own.
+    """
+
+    y: FloatArray
+    z: FloatArray
+
+
+@dataclass(frozen=True)
+class Coefficients:
+    """A form's coefficient functions at given elements.
+
+    Attributes
+    ----------
+    gain_ideal : ndarray, shape (stages,)
+        G_ideal [gain unit].
+    contrasts, loadings : ndarray, shape (terms, stages)
+        n_k - d_k and d_k [1/unit of m_k].
+    """
+
+    gain_ideal: FloatArray
+    contrasts: FloatArray
+    loadings: FloatArray
+
+
+def resistances(values: FloatArray) -> Pairs:
+    """Pairs of resistors.
+
+    Parameters
+    ----------
+    values : ndarray, shape (elements, stages)
+        Resistance [ohm]; `inf` is an open circuit, 0 a short.
+
+    Returns
+    -------
+    Pairs
+        Scaled by powers of two, so without rounding, to y and z of similar size: products over many elements
+        then stay far from overflow.
+    """
+    is_open = np.isinf(values)
+    finite = np.where(is_open, 1.0, values)
+    _, exponent = np.frexp(finite)
+    scale = np.where(finite == 0.0, 1.0, np.ldexp(1.0, -(exponent // 2)))
+    return Pairs(y=np.where(is_open, 0.0, scale), z=np.where(is_open, 1.0, finite * scale))
+
+
+def evaluate(form: Form, pairs: Pairs) -> Coefficients:
+    """The coefficient functions of a form.
+
+    Where elements make a function infinite or undefined (a short across the output, say) the entry is not
+    finite; it is for the caller to refuse it.
+
+    Parameters
+    ----------
+    form : Form
+        The form.
+    pairs : Pairs
+        The elements, in the order of `form.elements`.
+    """
+    count = pairs.y.shape[1]
+
+    def table(ratios: tuple[Ratio, ...]) -> FloatArray:
+        return np.array([_ratio(ratio, pairs) for ratio in ratios]).reshape(len(ratios), count)
+
+    return Coefficients(gain_ideal(form, pairs), table(form.contrasts), table(form.loadings))
+
+
+def gain_ideal(form: Form, pairs: Pairs) -> FloatArray:
+    """The ideal gain alone [gain unit], shape (stages,)."""
+    return _ratio(form.gain_ideal, pairs)
+
+
+def _ratio(ratio: Ratio, pairs: Pairs) -> FloatArray:
+    powers = [_powers(y, z, degree) for y, z, degree in zip(pairs.y, pairs.z, ratio.degrees(), strict=True)]
+    count = pairs.y.shape[1]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return _polynomial(ratio.numerator, powers, count) / _polynomial(ratio.denominator, powers, count)
+
+
+def _powers(y: FloatArray, z: FloatArray, degree: int) -> list[FloatArray]:
+    """y**e * z**(degree - e) for e from 0 to degree, by multiplication: pow() may differ between machines."""
+    powers = [np.ones_like(y)]
+    for step in range(degree):
+        powers = [powers[0] * z, *(power * y for power in powers)] if step else [z, y]
+    return powers
+
+
+def _polynomial(polynomial: Polynomial, powers: list[list[FloatArray]], count: int) -> FloatArray:
+    # One monomial after the other: a fixed order of summation, whatever the number of stages.
+    total = np.zeros(count)
+    for coefficient, exponents in polynomial:
+        product = np.full(count, float(coefficient))
+        for table, exponent in zip(powers, exponents, strict=True):
+            if len(table) > 1:
+                product *= table[exponent]
+        total += product
+    return total

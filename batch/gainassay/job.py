@@ -1,0 +1,91 @@
+"""The job file: which tables, which rules, which output."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from gainassay.contracts import documents
+
+
+@dataclass(frozen=True)
+class StandIn:
+    """What stands in for a data-sheet number that a part does not give.
+
+    Attributes
+    ----------
+    typical_times : float
+        The worst case takes the typical figure times this where there is no limit.
+    value : float or None
+        Stands in where there is neither limit nor typical figure [unit of the quantity].
+    """
+
+    typical_times: float = 1.0
+    value: float | None = None
+
+
+@dataclass(frozen=True)
+class Results:
+    """Where results go and what they hold."""
+
+    folder: Path
+    rows: str
+    formats: tuple[str, ...]
+    terms: bool
+
+
+@dataclass(frozen=True)
+class Job:
+    """A job, its paths as seen from the current folder.
+
+    Attributes
+    ----------
+    path : Path
+        The job file.
+    document : Mapping[str, Any]
+        The file's content, for the manifest.
+    assume : Mapping[str, StandIn]
+        By data-sheet quantity: `a_ol`, `r_id`, `r_o`.
+    """
+
+    path: Path
+    document: Mapping[str, Any]
+    stages: Path
+    parts: Path
+    topologies: tuple[Path, ...]
+    assume: Mapping[str, StandIn]
+    results: Results
+
+
+def read(path: Path) -> Job:
+    """The job in a TOML file.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read or does not follow `schemas/job.schema.json`.
+    """
+    document = documents.read_toml(path, "job")
+    here = path.parent
+    results = {**_defaults("results"), **document.get("results", {})}
+    return Job(
+        path=path,
+        document=document,
+        stages=here / document["stages"]["from"],
+        parts=here / document["parts"]["from"],
+        topologies=tuple(here / name for name in document.get("topologies", [])),
+        assume={quantity: StandIn(**given) for quantity, given in document.get("assume", {}).items()},
+        results=Results(
+            folder=here / results["folder"],
+            rows=results["rows"],
+            formats=tuple(results["formats"]),
+            terms=results["terms"],
+        ),
+    )
+
+
+def _defaults(section: str) -> dict[str, Any]:
+    properties = documents.schema("job")["properties"][section]["properties"]
+    return {key: value["default"] for key, value in properties.items()}

@@ -1,0 +1,90 @@
+"""One pair, explained, for a person."""
+
+from __future__ import annotations
+
+import math
+
+from gainassay.cautions import CAUTIONS
+from gainassay.explanation import Explanation
+from gainassay.report.text import ohms, ppm, quantity, table
+
+BAR = 24
+"""Characters of the longest bar."""
+
+
+def text(found: Explanation) -> list[str]:
+    """The explanation, a section for each question."""
+    unit = found.gain_unit
+    return [
+        f"{found.stage} with {found.part}: {found.verdict}",
+        f"{found.topology}: {found.summary}",
+        "",
+        *table(
+            ["", "", ""],
+            [
+                ["ideal gain", f"{found.gain_ideal:.9g} {unit}", ""],
+                ["target gain", f"{found.target_gain:.9g} {unit}", ""],
+                ["nominal gain", _gain(found.gain_nominal, unit), f"{ppm(found.error_nominal_ppm)} ppm"],
+                ["worst case", _gain(found.gain_worst, unit), _error(found.error_worst_ppm)],
+                ["limit", "", f"{found.limit_ppm:.6g} ppm"],
+                ["limit used", "", "-" if math.isnan(found.limit_used) else f"{found.limit_used:.4g}"],
+                ["evidence", found.evidence, found.leans_on],
+            ],
+        )[1:],
+        "",
+        "Terms of the error, in ppm",
+        *_terms(found),
+        "",
+        "Elements",
+        *table(
+            ["  element", "nominal", "tolerance", "at the worst corner"],
+            [
+                [f"  {e.name}", ohms(e.nominal), f"{e.tolerance * 100:.6g} %" if e.tolerance else "-", ohms(e.at_worst)]
+                for e in found.elements
+            ],
+        ),
+        "",
+        "Part",
+        *table(
+            ["  quantity", "nominal", "limit taken", "evidence", ""],
+            [
+                [
+                    f"  {f.quantity}",
+                    quantity(f.nominal, f.unit),
+                    quantity(f.worst, f.unit),
+                    f.evidence,
+                    "" if f.matters else "does not matter to this stage",
+                ]
+                for f in found.figures
+            ],
+        ),
+        "",
+        *CAUTIONS,
+    ]
+
+
+def _gain(value: float, unit: str) -> str:
+    return "-" if math.isnan(value) else f"{value:.9g} {unit}"
+
+
+def _error(value: float) -> str:
+    return ppm(value) if math.isnan(value) else f"{ppm(value)} ppm"
+
+
+def _terms(found: Explanation) -> list[str]:
+    longest = max((abs(t.worst_ppm) for t in found.terms if not math.isnan(t.worst_ppm)), default=0.0)
+    rows = [
+        [
+            f"  {t.name}",
+            ppm(t.nominal_ppm),
+            "-" if math.isnan(t.worst_ppm) else ppm(t.worst_ppm),
+            _bar(t.worst_ppm, longest),
+        ]
+        for t in found.terms
+    ]
+    rows.append(["  sum", ppm(found.error_nominal_ppm), ppm(found.error_worst_ppm), ""])
+    return table(["  term", "nominal", "worst case", ""], rows, right=[1, 2])
+
+
+def _bar(value: float, longest: float) -> str:
+    return "" if math.isnan(value) or not longest else "#" * round(BAR * abs(value) / longest)

@@ -1,0 +1,68 @@
+"""A run's summaries: a row for each stage and for each part."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+
+from gainassay.runs.tables import PPM, summary_table
+from gainassay.screen.blocks import Group, Tally
+from gainassay.screen.verdicts import VERDICTS
+
+
+def stage_summary(groups: Sequence[Group], tallies: Sequence[Tally]) -> pa.Table:
+    """A row for each stage, ordered by name."""
+    rows: dict[str, dict[str, Any]] = {}
+    for tally in tallies:
+        group = groups[tally.chunk.group]
+        for index, name in enumerate(group.stage_names[tally.chunk.stages].tolist()):
+            best = int(tally.best_part[index])
+            rank = (int(tally.best_rank[index]), float(np.nan_to_num(tally.best_limit_used[index], nan=np.inf)))
+            row = rows.setdefault(
+                name,
+                {
+                    "topology": group.form.topology,
+                    "gain_ideal": float(tally.gain_ideal[index]),
+                    "limit_ppm": float(tally.limits[index] * PPM),
+                    "error_elements_ppm": float(tally.elements_error[index] * PPM),
+                    "verdicts": np.zeros(len(VERDICTS), np.int64),
+                    "rank": (len(VERDICTS), np.inf),
+                    "best": "",
+                },
+            )
+            row["verdicts"] += tally.by_stage[index]
+            if best >= 0 and rank < row["rank"]:
+                row["rank"], row["best"] = rank, str(group.part_names[best])
+    names = sorted(rows)
+    ordered = [rows[name] for name in names]
+    used = np.array([row["rank"][1] for row in ordered])
+    errors = np.array([row["error_elements_ppm"] for row in ordered])
+    return summary_table(
+        "stage_summary",
+        {
+            "stage": pa.array(names, pa.string()),
+            "topology": pa.array([row["topology"] for row in ordered], pa.string()),
+            "gain_ideal": pa.array([row["gain_ideal"] for row in ordered], pa.float64()),
+            "limit_ppm": pa.array([row["limit_ppm"] for row in ordered], pa.float64()),
+            "error_elements_ppm": pa.array(errors, mask=~np.isfinite(errors)),
+            **_verdict_columns(np.array([row["verdicts"] for row in ordered])),
+            "best_part": pa.array([row["best"] for row in ordered], pa.string()),
+            "best_limit_used": pa.array(used, mask=~np.isfinite(used)),
+        },
+    )
+
+
+def part_summary(groups: Sequence[Group], tallies: Sequence[Tally]) -> pa.Table:
+    """A row for each part, ordered by name."""
+    names = groups[0].part_names
+    counts = np.zeros((len(names), len(VERDICTS)), np.int64)
+    for tally in tallies:
+        counts[tally.chunk.parts] += tally.by_part
+    return summary_table("part_summary", {"part": pa.array(names.tolist(), pa.string()), **_verdict_columns(counts)})
+
+
+def _verdict_columns(counts: np.ndarray[Any, np.dtype[np.int64]]) -> dict[str, pa.Array]:
+    return {verdict: pa.array(counts[:, code]) for code, verdict in enumerate(VERDICTS)}

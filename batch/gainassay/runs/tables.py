@@ -1,0 +1,161 @@
+"""Results as Arrow tables, and those as files: unit and meaning of each column come from schemas/."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from gainassay.contracts import tables
+from gainassay.screen.blocks import Screened
+from gainassay.screen.corners import term_names
+from gainassay.screen.kernel import UNBOUNDED, account
+from gainassay.screen.verdicts import LEANINGS, VERDICTS
+from gainassay.tables.rejects import Reject
+
+PPM = 1e6
+ROWS_PER_GROUP = 250_000
+FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
+"""A spreadsheet takes a cell that starts with one of these for a formula."""
+
+REPEATED = (
+    "stage", "part", "topology", "verdict", "evidence", "leans_on", "gain_ideal", "limit_ppm", "dominant_term",
+)  # fmt: skip
+"""Columns of the verdict table with few different values, which are stored as a dictionary."""
+
+
+def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Table:
+    """The rows of the verdict table that a chunk gives, ordered by stage and part.
+
+    Parameters
+    ----------
+    rows : str
+        `all` or `not passing`.
+    terms : sequence of str
+        Terms of the account that get a column.
+    """
+    verdict = screened.judgement.verdict.ravel()
+    kept = np.arange(verdict.size) if rows == "all" else np.flatnonzero(verdict != VERDICTS.index("pass"))
+    shape = screened.judgement.verdict.shape
+    stage, part = kept // shape[1], kept % shape[1]
+    sides, outcome, names = screened.stage_side, screened.outcome, term_names(screened.group.form)
+    leaning = screened.judgement.leaning.ravel()[kept]
+    nominal = outcome.error_nominal.ravel()[kept]
+    unbounded = outcome.corner.ravel()[kept] == UNBOUNDED
+
+    def number(values: NDArray[np.float64]) -> pa.Array:
+        return pa.array(values, mask=~np.isfinite(values))
+
+    def words(codes: NDArray[np.integer], meanings: Sequence[str]) -> pa.Array:
+        return pa.DictionaryArray.from_arrays(pa.array(codes.astype(np.int32)), pa.array(meanings, pa.string()))
+
+    evidences = list(dict.fromkeys(leaning.evidence for leaning in LEANINGS))
+    evidence_of = np.array([evidences.index(leaning.evidence) for leaning in LEANINGS])
+    columns = {
+        "stage": words(stage, screened.group.stage_names[screened.chunk.stages].tolist()),
+        "part": words(part, screened.group.part_names[screened.chunk.parts].tolist()),
+        "topology": words(np.zeros(len(kept), np.int32), [screened.group.form.topology]),
+        "verdict": words(verdict[kept], VERDICTS),
+        "evidence": words(evidence_of[leaning], evidences),
+        "leans_on": words(leaning, [leaning.leans_on for leaning in LEANINGS]),
+        "gain_ideal": number(sides.gain_ideal[stage]),
+        "gain_nominal": number(sides.reference[stage] * (1.0 + nominal)),
+        "error_nominal_ppm": number(nominal * PPM),
+        "error_worst_ppm": number(outcome.error_worst.ravel()[kept] * PPM),
+        "limit_ppm": number(sides.limits[stage] * PPM),
+        "limit_used": number(screened.judgement.limit_used.ravel()[kept]),
+        "dominant_term": words(outcome.dominant.ravel()[kept], names),
+        "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
+    }
+    if terms:
+        whole = [slice(0, length) for length in shape]
+        found = account(sides, screened.part_side, screened.group.active_sets, whole[0], whole[1], outcome.corner)
+        values = {name: term.ravel()[kept] for name, term in zip(names, found, strict=True) if name in terms}
+        nothing = np.full(len(kept), np.nan)
+        for name in terms:
+            columns[f"term_{name}_ppm"] = number(np.where(unbounded, np.nan, values.get(name, nothing)) * PPM)
+    return pa.table(list(columns.values()), schema=_schema("verdicts", columns))
+
+
+def summary_table(table: str, columns: Mapping[str, pa.Array]) -> pa.Table:
+    """A table whose columns are those of `schemas/<table>.table.json`."""
+    return pa.table(list(columns.values()), schema=_schema(table, columns))
+
+
+def rejected_table(rejects: Sequence[Reject]) -> pa.Table:
+    """The rejected cells, in the order of source, row and column."""
+    ordered = sorted(rejects)
+    return summary_table(
+        "rejected",
+        {
+            "source": pa.array([reject.source for reject in ordered], pa.string()),
+            "row": pa.array([reject.row for reject in ordered], pa.int64()),
+            "column": pa.array([reject.column for reject in ordered], pa.string()),
+            "value": pa.array([reject.value for reject in ordered], pa.string()),
+            "reason": pa.array([reject.reason for reject in ordered], pa.string()),
+        },
+    )
+
+
+def _schema(table: str, columns: Mapping[str, pa.Array]) -> pa.Schema:
+    described = {column.name: column for column in tables.columns(table)}
+    any_term = described.get("term_<name>_ppm")
+    fields = []
+    for name, values in columns.items():
+        column = described.get(name, any_term)
+        if column is None:
+            raise ValueError(f"schemas/{table}.table.json describes no column {name!r}")
+        fields.append(pa.field(name, values.type, metadata={"unit": column.unit, "meaning": column.meaning}))
+    return pa.schema(fields)
+
+
+def write_parquet(table: pa.Table, path: Path) -> None:
+    """Write a table so that the same table gives the same bytes, and make sure that it is on disk."""
+    import pyarrow.parquet as pq
+
+    repeated = [name for name in table.column_names if name in REPEATED]
+    floats = [f.name for f in table.schema if pa.types.is_floating(f.type) and f.name not in repeated]
+    pq.write_table(
+        table,
+        path,
+        row_group_size=ROWS_PER_GROUP,
+        compression="zstd",
+        compression_level=1,
+        use_dictionary=repeated,
+        column_encoding=dict.fromkeys(floats, "BYTE_STREAM_SPLIT"),
+    )
+    sync(path)
+
+
+def write_csv(table: pa.Table, path: Path) -> None:
+    """Write a table as CSV; text that a spreadsheet would take for a formula gets a leading apostrophe."""
+    import pyarrow.csv as pacsv
+
+    pacsv.write_csv(pa.table([_harmless(column) for column in table.columns], names=table.column_names), path)
+    sync(path)
+
+
+def _harmless(column: pa.ChunkedArray) -> pa.Array:
+    whole = column.combine_chunks()
+    whole = pa.concat_arrays(whole.chunks) if isinstance(whole, pa.ChunkedArray) else whole
+    if pa.types.is_dictionary(whole.type):
+        harmless = _harmless(pa.chunked_array([whole.dictionary]))
+        return pa.DictionaryArray.from_arrays(whole.indices, harmless).cast(pa.string())
+    if not pa.types.is_string(whole.type):
+        return whole
+    return pa.array(
+        [f"'{text}" if text and text.startswith(FORMULA_STARTS) else text for text in whole.to_pylist()], pa.string()
+    )
+
+
+def sync(path: Path) -> None:
+    """Make sure that a file, or a folder's list of files, is on disk."""
+    handle = os.open(path, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)

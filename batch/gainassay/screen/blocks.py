@@ -1,0 +1,214 @@
+"""A whole screen cut into chunks, each a dask task.
+
+How pairs are cut into chunks follows from the tables alone, since a chunk becomes one file of the verdict
+tables. Inside a chunk the kernel cuts as it likes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import TypeVar
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gainassay.forms.coefficients import FloatArray
+from gainassay.forms.form import Form
+from gainassay.screen.corners import (
+    PartSide,
+    StageBox,
+    StageSide,
+    active_sets,
+    part_side,
+    stage_side,
+    term_names,
+)
+from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
+from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, judge
+
+Written = TypeVar("Written")
+
+PAIRS_PER_CHUNK = 1_000_000
+"""Pairs in a chunk at most, and so rows of a verdict file at most. Part of the output format: do not tune it."""
+
+
+RANK = {PASS: 0, UNPROVEN: 1, FAIL: 2}
+"""Which verdict makes a better part for a stage."""
+
+
+@dataclass(frozen=True)
+class Group:
+    """All that is screened with one form.
+
+    Attributes
+    ----------
+    stage_names : ndarray of str, shape (stages,)
+        Ordered.
+    part_names : ndarray of str, shape (parts,)
+        Ordered.
+    """
+
+    form: Form
+    stage_names: NDArray[np.str_]
+    part_names: NDArray[np.str_]
+    box: StageBox
+    parts: PartSide
+    active_sets: tuple[tuple[int, ...], ...]
+
+
+@dataclass(frozen=True)
+class Chunk:
+    """Some stages of a group with some of the parts."""
+
+    group: int
+    stages: slice
+    parts: slice
+
+
+@dataclass(frozen=True)
+class Screened:
+    """A chunk with all that was found."""
+
+    chunk: Chunk
+    group: Group
+    stage_side: StageSide
+    part_side: PartSide
+    outcome: Outcome
+    judgement: Judgement
+
+
+@dataclass(frozen=True)
+class Tally:
+    """What a chunk adds to the summaries.
+
+    Attributes
+    ----------
+    by_stage : ndarray, shape (stages, verdicts)
+    by_part : ndarray, shape (parts, verdicts)
+        Pairs by verdict, in the order of `VERDICTS`.
+    dominant : ndarray, shape (terms,)
+        Pairs by dominant term.
+    best_part : ndarray of int, shape (stages,)
+        Place among the group's parts of the best part, -1 where no part has a finite bound.
+    best_rank, best_limit_used : ndarray, shape (stages,)
+        Its rank (0: pass, 1: unproven, 2: fail) and its limit_used.
+    gain_ideal, limits, elements_error : ndarray, shape (stages,)
+        Of each stage: ideal gain, required accuracy, largest signed error of the elements alone.
+    """
+
+    chunk: Chunk
+    by_stage: NDArray[np.int64]
+    by_part: NDArray[np.int64]
+    dominant: NDArray[np.int64]
+    best_part: NDArray[np.int64]
+    best_rank: NDArray[np.int64]
+    best_limit_used: FloatArray
+    gain_ideal: FloatArray
+    limits: FloatArray
+    elements_error: FloatArray
+
+
+def group(
+    form: Form,
+    stage_names: NDArray[np.str_],
+    box: StageBox,
+    part_names: NDArray[np.str_],
+    nominal: FloatArray,
+    worst: FloatArray,
+    evidence: NDArray[np.uint8],
+) -> Group:
+    """Stages of one form and all parts; `nominal`, `worst` and `evidence` have shape (departures, parts)."""
+    return Group(form, stage_names, part_names, box, part_side(form, nominal, worst, evidence), active_sets(form))
+
+
+def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
+    """The chunks of a screen, in the order of the verdict tables."""
+    found = []
+    for place, one in enumerate(groups):
+        stages, parts = len(one.stage_names), len(one.part_names)
+        width = min(parts, PAIRS_PER_CHUNK)
+        height = max(1, PAIRS_PER_CHUNK // width)
+        found += [
+            Chunk(place, slice(top, min(top + height, stages)), slice(left, min(left + width, parts)))
+            for top in range(0, stages, height)
+            for left in range(0, parts, width)
+        ]
+    return tuple(found)
+
+
+def screen_chunk(groups: Sequence[Group], chunk: Chunk, block: int = PAIRS_PER_BLOCK) -> Screened:
+    """Screen one chunk."""
+    one = groups[chunk.group]
+    stages = stage_side(one.form, one.box.part(chunk.stages))
+    parts = one.parts.part(chunk.parts)
+    outcome = screen(stages, parts, one.active_sets, block)
+    return Screened(chunk, one, stages, parts, outcome, judge(stages, parts, outcome))
+
+
+def tally(screened: Screened) -> Tally:
+    """What a screened chunk adds to the summaries."""
+    verdict, used = screened.judgement.verdict, screened.judgement.limit_used
+    is_verdict = np.stack([verdict == code for code in range(len(VERDICTS))])
+    rank = np.array([RANK[code] for code in range(len(VERDICTS))])[verdict]
+    # Lexicographic minimum of (rank, limit_used) along each stage; the first of equals, as parts are ordered.
+    bounded_rank = np.where(np.isnan(used), len(VERDICTS), rank)
+    best_rank = bounded_rank.min(axis=1)
+    candidate = np.where(bounded_rank == best_rank[:, None], np.nan_to_num(used, nan=np.inf), np.inf)
+    best = candidate.argmin(axis=1)
+    found = best_rank < len(VERDICTS)
+    errors = screened.stage_side.corner_error
+    farthest = np.abs(np.nan_to_num(errors, nan=np.inf)).argmax(axis=0)
+    return Tally(
+        chunk=screened.chunk,
+        by_stage=is_verdict.sum(axis=2).T,
+        by_part=is_verdict.sum(axis=1).T,
+        dominant=np.bincount(screened.outcome.dominant.ravel(), minlength=len(term_names(screened.group.form))),
+        best_part=np.where(found, best + screened.chunk.parts.start, -1),
+        best_rank=best_rank,
+        best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),
+        gain_ideal=screened.stage_side.gain_ideal,
+        limits=screened.stage_side.limits,
+        elements_error=errors[farthest, np.arange(errors.shape[1])],
+    )
+
+
+def run(
+    groups: Sequence[Group],
+    keep: Callable[[int, Screened], Written],
+    workers: int,
+    block: int = PAIRS_PER_BLOCK,
+    after_each: Callable[[int], None] | None = None,
+) -> list[tuple[Written, Tally]]:
+    """Screen all chunks as dask tasks and hand each to `keep`.
+
+    Parameters
+    ----------
+    keep : callable
+        Called in the task with the chunk's place and the screened chunk; writes it down.
+    workers : int
+        Threads.
+    after_each : callable, optional
+        Called with the number of pairs when a chunk is done.
+
+    Returns
+    -------
+    list
+        For each chunk, in order, what `keep` returned and the chunk's tally.
+    """
+    import dask
+    from dask.callbacks import Callback
+
+    planned = chunks(groups)
+
+    def task(place: int) -> tuple[Written, Tally]:
+        screened = screen_chunk(groups, planned[place], block)
+        return keep(place, screened), tally(screened)
+
+    def done(key: object, result: object, *_: object) -> None:
+        if after_each is not None and isinstance(result, tuple):
+            after_each(int(result[1].by_stage.sum()))
+
+    tasks = [dask.delayed(task, pure=False)(place) for place in range(len(planned))]
+    with Callback(posttask=done):
+        return list(dask.compute(*tasks, scheduler="threads", num_workers=workers, optimize_graph=False))

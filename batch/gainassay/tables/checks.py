@@ -1,0 +1,100 @@
+"""Checks that stage tables and part tables share."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pyarrow.compute as pc
+from numpy.typing import NDArray
+
+from gainassay.contracts.documents import nearest
+from gainassay.contracts.quantities import Numbers, numbers, text_of
+from gainassay.contracts.tables import Column
+from gainassay.tables.rejects import Reject, Rejects
+from gainassay.tables.sources import RawTable, shown
+
+
+@dataclass
+class Checking:
+    """A table on its way from raw cells to checked arrays."""
+
+    raw: RawTable
+    rejects: Rejects
+
+    @staticmethod
+    def of(raw: RawTable) -> Checking:
+        """Start with a table as read; its ragged rows are rejected already."""
+        return Checking(raw, Rejects(raw.source, found=list(raw.ragged)))
+
+    def refuse(self, position: int, column: str, reason: str) -> None:
+        """Reject the row at `position` for its cell in `column` (several columns: joined by commas)."""
+        value = ", ".join(self.cell(name, position) for name in column.split(", "))
+        self.rejects.add(position, int(self.raw.rows[position]), column, value, reason)
+
+    def cell(self, column: str, position: int) -> str:
+        """What stands in a cell; nothing where the table has no such column."""
+        if column not in self.raw.columns:
+            return ""
+        value = self.raw.columns[column][position].as_py()
+        return "" if value is None else shown(str(value))
+
+    def column(self, column: Column) -> Numbers:
+        """A column's numbers, its refused cells rejected; all blank if the table does not have it."""
+        count = len(self.raw.rows)
+        if column.name not in self.raw.columns:
+            return Numbers(np.full(count, np.nan), np.ones(count, dtype=bool), {})
+        found = numbers(self.raw.columns[column.name], column)
+        for position, reason in found.refused.items():
+            self.refuse(position, column.name, reason)
+        return found
+
+    def names(self, column: str) -> NDArray[np.object_]:
+        """The names in a key column; blank, unprintable and repeated names are rejected."""
+        text = text_of(self.raw.columns[column])
+        names = np.array(text.to_pylist(), dtype=object)
+        for position in np.flatnonzero(names == ""):
+            self.refuse(int(position), column, "is blank; each row needs a name")
+        for position in np.flatnonzero(np.asarray(pc.match_substring_regex(text, r"[\x00-\x1f\x7f]"))):
+            self.refuse(int(position), column, "holds a control character; use printable text")
+        counted = pc.value_counts(text)
+        repeated = counted.field("values").filter(pc.greater(counted.field("counts"), 1))
+        for position in np.flatnonzero(np.asarray(pc.is_in(text, value_set=repeated))):
+            if names[position] != "":
+                rows = self.raw.rows[np.flatnonzero(names == names[position])]
+                others = [str(row) for row in rows if row != self.raw.rows[position]]
+                listed = ", ".join(others[:3]) + (", ..." if len(others) > 3 else "")
+                self.refuse(int(position), column, f"stands more than once: also in row {listed}; which is meant?")
+        return names
+
+    def good(self) -> NDArray[np.bool_]:
+        """Rows without a reject."""
+        mask = np.ones(len(self.raw.rows), dtype=bool)
+        mask[list(self.rejects.positions)] = False
+        return mask
+
+    def found(self) -> tuple[Reject, ...]:
+        """The rejects, in the order of the file."""
+        return tuple(sorted(self.rejects.found))
+
+
+def unknown_columns(raw: RawTable, known: Iterable[str]) -> tuple[str, ...]:
+    """A warning for each column that nothing reads, with the nearest known name."""
+    names = set(known)
+    return tuple(
+        f"{raw.source}: column '{name}' is not known and not read{nearest(name, names)}"
+        for name in raw.columns
+        if name not in names
+    )
+
+
+def nothing_left(path: Path, found: int, rejects: tuple[Reject, ...], kind: str) -> str:
+    """The message for a table that holds no row that can be used."""
+    if not found:
+        return f"{path}: the table has no rows; it needs one for each {kind}"
+    listed = [f"  row {r.row}, {r.column or 'whole row'}: {r.value!r} {r.reason}" for r in rejects[:5]] + (
+        ["  ..."] if len(rejects) > 5 else []
+    )
+    return "\n".join([f"{path}: none of its {found} rows can be used:", *listed])

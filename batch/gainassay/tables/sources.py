@@ -1,0 +1,171 @@
+"""Tables as they lie in files: cells as they stand, with the row that a person would look for."""
+
+from __future__ import annotations
+
+import csv
+import hashlib
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from gainassay.errors import InputError
+from gainassay.tables.rejects import Reject
+
+LONGEST_SHOWN = 200
+"""Characters of a cell that a reject repeats."""
+
+
+@dataclass(frozen=True)
+class RawTable:
+    """A table as it stands in its source.
+
+    Attributes
+    ----------
+    source : str
+        What messages call it.
+    columns : dict[str, pyarrow.Array]
+        Cells: strings, or numbers where the file holds numbers.
+    rows : ndarray of int, shape (rows,)
+        Row in the file: a CSV's header is row 1, as a spreadsheet counts; a Parquet file's first row is 1.
+    ragged : tuple[Reject, ...]
+        Rows of a CSV file whose number of cells is not the header's.
+    sha256 : str
+        Hash of the file.
+    """
+
+    source: str
+    columns: dict[str, pa.Array]
+    rows: NDArray[np.int64]
+    ragged: tuple[Reject, ...]
+    sha256: str
+
+
+def read(path: Path) -> RawTable:
+    """The table in a .csv or .parquet file. Rows in which nothing stands are passed over.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read as what its name says.
+    """
+    try:
+        with path.open("rb") as file:
+            sha256 = hashlib.file_digest(file, "sha256").hexdigest()
+    except FileNotFoundError:
+        raise InputError(f"{path}: there is no such file") from None
+    except OSError as error:
+        raise InputError(f"{path}: cannot be read: {error.strerror or error}") from None
+    match path.suffix.lower():
+        case ".csv":
+            columns, rows, ragged = _csv(path)
+        case ".parquet":
+            columns, rows, ragged = _parquet(path)
+        case other:
+            raise InputError(f"{path}: '{other}' is no kind of table that can be read; use .csv or .parquet")
+    filled = _filled(columns, len(rows))
+    return RawTable(
+        source=str(path),
+        columns={name: cells.filter(pa.array(filled)) for name, cells in columns.items()},
+        rows=rows[filled],
+        ragged=ragged,
+        sha256=sha256,
+    )
+
+
+def shown(text: str) -> str:
+    """A cell as a reject repeats it."""
+    return text if len(text) <= LONGEST_SHOWN else f"{text[:LONGEST_SHOWN]}... ({len(text)} characters)"
+
+
+def _csv(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reject, ...]]:
+    import pyarrow.csv as pacsv
+
+    header = _header(path)
+    ragged: list[Reject] = []
+
+    def keep_aside(row: pacsv.InvalidRow) -> str:
+        cells = f"the row has {row.actual_columns} cells, the header has {row.expected_columns}"
+        ragged.append(Reject(str(path), row.number, "", shown(row.text), f"{cells}; look for a stray comma or quote"))
+        return "skip"
+
+    try:
+        table = pacsv.read_csv(
+            path,
+            # One thread: only then does the reader say the number of a row it sets aside.
+            read_options=pacsv.ReadOptions(use_threads=False),
+            parse_options=pacsv.ParseOptions(
+                newlines_in_values=True, ignore_empty_lines=False, invalid_row_handler=keep_aside
+            ),
+            convert_options=pacsv.ConvertOptions(
+                column_types={name: pa.string() for name in header}, strings_can_be_null=False
+            ),
+        )
+    except (pa.ArrowInvalid, pa.ArrowKeyError, UnicodeDecodeError) as error:
+        raise InputError(f"{path}: cannot be read as CSV in UTF-8: {str(error).splitlines()[0]}") from None
+    aside = {reject.row for reject in ragged}
+    numbers = np.arange(2, 2 + table.num_rows + len(aside))
+    rows = numbers[~np.isin(numbers, list(aside))] if aside else numbers
+    return {name: _whole(table.column(name)) for name in header}, rows, tuple(ragged)
+
+
+def _header(path: Path) -> list[str]:
+    try:
+        with path.open(encoding="utf-8-sig", newline="") as file:
+            header = next(csv.reader(file), [])
+    except UnicodeDecodeError as error:
+        raise InputError(f"{path}: is not UTF-8 text (byte {error.start}); save it as CSV in UTF-8") from None
+    except csv.Error as error:
+        raise InputError(f"{path}: row 1: cannot be read as CSV: {error}") from None
+    if not any(name.strip() for name in header):
+        raise InputError(f"{path}: row 1 holds no column names")
+    _refuse_repeated(path, header)
+    return header
+
+
+def _parquet(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reject, ...]]:
+    import pyarrow.parquet as pq
+
+    try:
+        table = pq.read_table(path)
+    except (pa.ArrowException, OSError) as error:
+        raise InputError(f"{path}: cannot be read as Parquet: {str(error).splitlines()[0]}") from None
+    _refuse_repeated(path, table.column_names)
+    columns = {name: _plain_type(path, name, _whole(table.column(name))) for name in table.column_names}
+    return columns, np.arange(1, 1 + table.num_rows), ()
+
+
+def _plain_type(path: Path, name: str, cells: pa.Array) -> pa.Array:
+    """Numbers as they are, everything else as text."""
+    if pa.types.is_floating(cells.type) or pa.types.is_integer(cells.type):
+        return cells
+    try:
+        return cells.cast(pa.string())
+    except pa.ArrowException:
+        raise InputError(
+            f"{path}: column '{name}' holds {cells.type}, which is neither text nor number; convert the column"
+        ) from None
+
+
+def _refuse_repeated(path: Path, header: list[str]) -> None:
+    repeated = sorted({name for name in header if header.count(name) > 1})
+    if repeated:
+        named = ", ".join(f"'{name}'" for name in repeated)
+        raise InputError(f"{path}: columns stand more than once in the header: {named}; rename or remove one")
+
+
+def _whole(cells: pa.ChunkedArray) -> pa.Array:
+    whole = cells.combine_chunks()
+    return whole if isinstance(whole, pa.Array) else pa.concat_arrays(whole.chunks)
+
+
+def _filled(columns: dict[str, pa.Array], count: int) -> NDArray[np.bool_]:
+    filled = np.zeros(count, dtype=bool)
+    for cells in columns.values():
+        if pa.types.is_string(cells.type):
+            filled |= ~np.asarray(pa.compute.match_substring_regex(pa.compute.fill_null(cells, ""), r"^\s*$"))
+        else:
+            filled |= np.asarray(cells.is_valid())
+    return filled

@@ -1,0 +1,255 @@
+"""The stage table: checked, in SI units, one group of arrays for each topology."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gainassay.contracts import tables
+from gainassay.contracts.documents import nearest
+from gainassay.contracts.quantities import Numbers, text_of
+from gainassay.errors import InputError
+from gainassay.forms import coefficients
+from gainassay.forms.cache import form_of
+from gainassay.forms.coefficients import FloatArray
+from gainassay.forms.form import Form
+from gainassay.forms.topology import Topology
+from gainassay.tables import sources
+from gainassay.tables.checks import Checking, nothing_left, unknown_columns
+from gainassay.tables.rejects import Reject
+
+BLANK = {"open": np.inf, "short": 0.0}
+"""Resistance [ohm] that a blank element stands for."""
+
+PER_PCT, PER_PPM = 1e-2, 1e-6
+
+
+@dataclass(frozen=True)
+class StageGroup:
+    """The stages of one topology, ordered by name.
+
+    Attributes
+    ----------
+    names : ndarray of str, shape (stages,)
+        Names.
+    values : ndarray, shape (elements, stages)
+        Nominal values [ohm]; inf: open, 0: short. Order of the form's elements.
+    tolerances : ndarray, shape (elements, stages)
+        Tolerance, plus or minus, as a fraction.
+    limits : ndarray, shape (stages,)
+        Required accuracy as a fraction.
+    targets : ndarray, shape (stages,)
+        Target gain [gain unit]; nan where the ideal gain is the target.
+    """
+
+    topology: Topology
+    form: Form
+    names: NDArray[np.str_]
+    values: FloatArray
+    tolerances: FloatArray
+    limits: FloatArray
+    targets: FloatArray
+
+
+@dataclass(frozen=True)
+class StageTable:
+    """A checked stage table.
+
+    Attributes
+    ----------
+    found : int
+        Rows in the file, blank ones apart.
+    groups : tuple[StageGroup, ...]
+        By name of the topology.
+    """
+
+    source: str
+    sha256: str
+    found: int
+    groups: tuple[StageGroup, ...]
+    rejects: tuple[Reject, ...]
+    warnings: tuple[str, ...]
+
+    def count(self) -> int:
+        """Stages that can be screened."""
+        return sum(len(group.names) for group in self.groups)
+
+
+def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
+    """Read and check a stage table.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read, lacks a column that every stage needs, names a topology that has no form,
+        or holds no row that can be used.
+    """
+    raw = sources.read(path)
+    elements = sorted({element.name for topology in library.values() for element in topology.elements})
+    _require_columns(raw, path)
+    checking = Checking.of(raw)
+    names = checking.names("stage")
+    chosen = _topologies(checking, library)
+    general = {
+        name: checking.column(tables.column("stages", name))
+        for name in ("accuracy_pct", "accuracy_ppm", "target_gain", "tol_pct")
+    }
+    limits = _limits(checking, general["accuracy_pct"], general["accuracy_ppm"])
+    known = [name for name in elements if name in raw.columns or f"{name}_tol_pct" in raw.columns]
+    values = {name: checking.column(tables.column("stages", tables.ELEMENT).of(name)) for name in known}
+    own_tolerances = {
+        name: checking.column(tables.column("stages", f"{tables.ELEMENT}_tol_pct").of(name)) for name in known
+    }
+
+    groups = []
+    for name in sorted(set(chosen) & set(library)):
+        topology = library[name]
+        members = np.flatnonzero(chosen == name)
+        form = form_of(topology)
+        ohms = _values(checking, topology, members, values)
+        group = StageGroup(
+            topology=topology,
+            form=form,
+            names=names[members].astype(np.str_),
+            values=ohms,
+            tolerances=_tolerances(topology, members, ohms, general["tol_pct"], own_tolerances),
+            limits=limits[members],
+            targets=general["target_gain"].values[members],
+        )
+        _refuse_without_form(checking, group, members)
+        kept = np.flatnonzero(checking.good()[members])
+        if len(kept):
+            groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
+    found = len(raw.rows) + len(raw.ragged)
+    if not groups:
+        raise InputError(nothing_left(path, found, checking.found(), "stage"))
+    return StageTable(
+        source=raw.source,
+        sha256=raw.sha256,
+        found=found,
+        groups=tuple(groups),
+        rejects=checking.found(),
+        warnings=unknown_columns(
+            raw, [*tables.reserved_stage_columns(), *elements, *(f"{name}_tol_pct" for name in elements)]
+        ),
+    )
+
+
+def _require_columns(raw: sources.RawTable, path: Path) -> None:
+    for name in ("stage", "topology"):
+        if name not in raw.columns:
+            raise InputError(f"{path}: the column '{name}' is missing{nearest(name, raw.columns)}")
+    if not {"accuracy_pct", "accuracy_ppm"} & set(raw.columns):
+        raise InputError(f"{path}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?")
+
+
+def _topologies(checking: Checking, library: Mapping[str, Topology]) -> NDArray[np.object_]:
+    chosen = np.array(text_of(checking.raw.columns["topology"]).to_pylist(), dtype=object)
+    for position, name in enumerate(chosen):
+        if name == "":
+            checking.refuse(position, "topology", "is blank; name the stage's topology")
+        elif name not in library:
+            hint = nearest(name, library) or "; `gainassay topologies` lists what there is"
+            checking.refuse(position, "topology", f"is no topology that is known{hint}")
+    return chosen
+
+
+def _limits(checking: Checking, pct: Numbers, ppm: Numbers) -> FloatArray:
+    """Required accuracy as a fraction."""
+    columns = "accuracy_pct, accuracy_ppm"
+    for position in np.flatnonzero(pct.blank & ppm.blank):
+        checking.refuse(int(position), columns, "both are blank: how accurate must the stage be?")
+    for position in np.flatnonzero(~pct.blank & ~ppm.blank):
+        checking.refuse(int(position), columns, "both are given; give one of the two")
+    return np.asarray(np.where(pct.blank, ppm.values * PER_PPM, pct.values * PER_PCT))
+
+
+def _values(
+    checking: Checking, topology: Topology, members: NDArray[np.intp], values: Mapping[str, Numbers]
+) -> FloatArray:
+    """Values of the topology's elements [ohm], shape (elements, members)."""
+    own = {element.name for element in topology.elements}
+    for name, cells in values.items():
+        if name not in own:
+            for position in members[~cells.blank[members]]:
+                checking.refuse(
+                    int(position), name, f"topology '{topology.name}' has no element {name}; empty the cell"
+                )
+    ohms = np.full((len(topology.elements), len(members)), np.nan)
+    for index, element in enumerate(topology.elements):
+        if element.name in values:
+            blank = values[element.name].blank[members]
+            ohms[index] = values[element.name].values[members]
+        else:
+            blank = np.ones(len(members), dtype=bool)
+        if element.absent in BLANK:
+            ohms[index, blank] = BLANK[element.absent]
+        else:
+            for position in members[blank]:
+                checking.refuse(
+                    int(position),
+                    element.name,
+                    f"is blank, but topology '{topology.name}' needs {element.name}",
+                )
+    return ohms
+
+
+def _tolerances(
+    topology: Topology,
+    members: NDArray[np.intp],
+    ohms: FloatArray,
+    common: Numbers,
+    own: Mapping[str, Numbers],
+) -> FloatArray:
+    """Tolerances as fractions, shape (elements, members): the element's own, else the common one, else none.
+
+    What is open or short has no tolerance.
+    """
+    fractions = np.zeros_like(ohms)
+    for index, element in enumerate(topology.elements):
+        pct = np.where(common.blank, 0.0, common.values)[members]
+        if element.name in own:
+            cells = own[element.name]
+            pct = np.where(cells.blank[members], pct, cells.values[members])
+        present = np.isfinite(ohms[index]) & (ohms[index] > 0.0)
+        fractions[index] = np.where(present, pct * PER_PCT, 0.0)
+    return fractions
+
+
+def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray[np.intp]) -> None:
+    """Reject stages whose values leave no ideal gain to correct."""
+    if not len(members):
+        return
+    found = coefficients.evaluate(group.form, coefficients.resistances(group.values))
+    finite: NDArray[np.bool_] = np.isfinite(np.concatenate([found.contrasts, found.loadings])).all(axis=0)
+    good = checking.good()
+    for index, position in enumerate(members):
+        if not good[position]:
+            continue
+        gain = found.gain_ideal[index]
+        if gain == 0.0:
+            checking.refuse(int(position), "topology", "these element values make the ideal gain zero")
+        elif not np.isfinite(gain):
+            checking.refuse(int(position), "topology", "these element values make the ideal gain infinite or undefined")
+        elif not finite[index]:
+            checking.refuse(
+                int(position),
+                "topology",
+                "these element values make the gain undefined; look for a 0 ohm across a source",
+            )
+
+
+def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:
+    return StageGroup(
+        topology=group.topology,
+        form=group.form,
+        names=group.names[order],
+        values=group.values[:, order],
+        tolerances=group.tolerances[:, order],
+        limits=group.limits[order],
+        targets=group.targets[order],
+    )

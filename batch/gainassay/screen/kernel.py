@@ -20,8 +20,8 @@ from numpy.typing import NDArray
 from gainassay.forms.coefficients import FloatArray
 from gainassay.screen.corners import PartSide, StageSide
 
-PAIRS_PER_BLOCK = 32_768
-"""Pairs evaluated at a time: a handful of arrays of this length fit a core's cache."""
+PAIRS_PER_BLOCK = 65_536
+"""Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
 
 UNBOUNDED = -1
 """Stands for a pair's corner where the worst case has no finite bound."""

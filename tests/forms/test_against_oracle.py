@@ -1,0 +1,143 @@
+"""Every form against an independent solve at 60 digits: the error and its account, not only the gain."""
+
+from __future__ import annotations
+
+import random
+from collections.abc import Mapping, Sequence
+
+import mpmath
+import numpy as np
+import pytest
+
+import oracle
+from gainassay.errors import InputError
+from gainassay.forms.form import Form, derive
+from gainassay.forms.topology import Topology, library
+from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
+from gainassay.screen.kernel import nominal_account, screen
+
+POINTS = 200
+LIBRARY = library()
+
+NEVER_SEEN = {
+    "bridged T feedback": oracle.network(
+        {
+            "r1": ("in", "sum"),
+            "r2": ("sum", "tee"),
+            "r3": ("tee", "ground"),
+            "r4": ("tee", "out"),
+            "r5": ("sum", "out"),
+            "r6": ("out", "ground"),
+        },
+        [("ground", "sum", "out")],
+    ),
+    "bridge between both inputs": oracle.network(
+        {
+            "r1": ("in", "minus"),
+            "r2": ("in", "plus"),
+            "r3": ("minus", "plus"),
+            "r4": ("plus", "ground"),
+            "r5": ("minus", "out"),
+        },
+        [("plus", "minus", "out")],
+    ),
+    "two stages in cascade": oracle.network(
+        {
+            "r1": ("in", "sum"),
+            "r2": ("sum", "mid"),
+            "r3": ("mid", "sum2"),
+            "r4": ("sum2", "out"),
+            "r5": ("mid", "ground"),
+        },
+        [("ground", "sum", "mid"), ("ground", "sum2", "out")],
+    ),
+    "two-amplifier difference": oracle.network(
+        {"r1": ("ground", "a"), "r2": ("a", "mid"), "r3": ("mid", "b"), "r4": ("b", "out"), "rg": ("a", "b")},
+        [("in_n", "a", "mid"), ("in_p", "b", "out")],
+        source=("in_p", "in_n"),
+    ),
+    "current into a load": oracle.network(
+        {"r1": ("sense", "ground"), "load": ("out", "sense")},
+        [("in", "sense", "out")],
+        output="load",
+        gain="transconductance",
+    ),
+    "current amplifier": oracle.network(
+        {"r1": ("in", "mid"), "r2": ("mid", "ground"), "load": ("mid", "out")},
+        [("ground", "in", "out")],
+        output="load",
+        gain="current",
+    ),
+}
+
+
+def account(
+    form: Form, ohms: Sequence[Mapping[str, float]], parts: Sequence[oracle.Part]
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """E and its terms, shape (terms, points), of stage i with part i, as the screen computes them; and G_ideal."""
+    values = np.array([[point[name] for point in ohms] for name in form.elements])
+    none = np.full(len(ohms), np.nan)
+    stages = stage_side(form, StageBox(values, np.zeros_like(values), np.ones(len(ohms)), none))
+    departures = np.array([[1.0 / part.a_ol, 1.0 / part.r_id, part.r_o] for part in parts]).T
+    side = part_side(form, departures, departures, np.zeros(departures.shape, np.uint8))
+    outcome = screen(stages, side, active_sets(form))
+    diagonal = np.arange(len(ohms))
+    terms = np.array([term[diagonal, diagonal] for term in nominal_account(stages, side)])
+    return outcome.error_nominal[diagonal, diagonal], terms, stages.gain_ideal
+
+
+@pytest.mark.oracle
+@pytest.mark.parametrize("topology", [*LIBRARY.values(), *NEVER_SEEN.values()], ids=[*LIBRARY, *NEVER_SEEN])
+def test_error_and_account(topology: Topology) -> None:
+    rng = random.Random(topology.content_hash())
+    form = derive(topology)
+    ohms = [oracle.random_ohms(topology, rng) for _ in range(POINTS)]
+    parts = [oracle.random_part(rng) for _ in range(POINTS)]
+    errors, terms, gain_ideal = account(form, ohms, parts)
+    for i in range(POINTS):
+        with mpmath.workdps(oracle.DIGITS):
+            ideal = oracle.gain(topology, ohms[i], oracle.IDEAL)
+            error = oracle.gain(topology, ohms[i], parts[i]) / ideal - 1
+        size = np.abs(terms[:, i]).sum()
+        assert abs(gain_ideal[i] - float(ideal)) <= 1e-12 * abs(float(ideal)), (ohms[i], parts[i])
+        if np.isnan(errors[i]):
+            # Positive feedback beyond the loop's: 1 + sum d m is not positive, and no number is claimed.
+            assert 1 + error < 0 or abs(error) > 1, (ohms[i], parts[i])
+            continue
+        assert abs(errors[i] - float(error)) <= 1e-9 * size, (ohms[i], parts[i])
+        assert abs(terms[:, i].sum() - errors[i]) <= 1e-12 * size, (ohms[i], parts[i])
+
+
+def random_network(rng: random.Random) -> Topology:
+    """Two to seven nodes, one or two amplifiers, resistors anywhere; many make no sense, and say so."""
+    nodes = ["in", "out", *(f"n{i}" for i in range(rng.randint(0, 4)))]
+    pairs = [(a, b) for i, a in enumerate([*nodes, "ground"]) for b in [*nodes, "ground"][i + 1 :]]
+    chosen = rng.sample(pairs, min(len(pairs), rng.randint(2, 8)))
+    amplifiers = [(rng.choice(["ground", *nodes]), rng.choice(nodes), "out")]
+    if "n1" in nodes and rng.random() < 0.4:
+        amplifiers.append((rng.choice(["ground", *nodes]), rng.choice(nodes), "n1"))
+    return oracle.network({f"r{i}": pair for i, pair in enumerate(chosen)}, amplifiers)
+
+
+@pytest.mark.oracle
+def test_random_networks() -> None:
+    rng = random.Random(20261201)
+    derived = 0
+    for _ in range(600):
+        topology = random_network(rng)
+        try:
+            form = derive(topology)
+        except InputError:
+            continue
+        ohms = [oracle.random_ohms(topology, rng, 10.0, 1e6) for _ in range(3)]
+        parts = [oracle.random_part(rng) for _ in range(3)]
+        errors, terms, _ = account(form, ohms, parts)
+        derived += 1
+        for i in range(3):
+            if not np.isfinite(errors[i]):
+                continue
+            with mpmath.workdps(oracle.DIGITS):
+                ideal = oracle.gain(topology, ohms[i], oracle.IDEAL)
+                error = float(oracle.gain(topology, ohms[i], parts[i]) / ideal - 1)
+            assert abs(errors[i] - error) <= 1e-9 * np.abs(terms[:, i]).sum(), (topology, ohms[i], parts[i])
+    assert derived > 60

@@ -1,0 +1,191 @@
+"""An independent solver of stages, to hold Gainassay against.
+
+It shares no formula with the package: unknowns are node voltages *and* every branch current, elements enter
+by their resistance, the amplifier by A_OL itself with r_o as a resistor in series, and numbers are solved for
+at 60 digits. Where many solves are needed a second one, nodal and in double precision, does them in a batch.
+"""
+
+from __future__ import annotations
+
+import random
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import mpmath
+import numpy as np
+from numpy.typing import NDArray
+
+from gainassay.forms.topology import GROUND, Amplifier, Element, Topology
+
+DIGITS = 60
+OPEN = float("inf")
+
+
+@dataclass(frozen=True)
+class Part:
+    """An op-amp; the default is ideal. a_ol [V/V], r_id and r_o [ohm]."""
+
+    a_ol: float = OPEN
+    r_id: float = OPEN
+    r_o: float = 0.0
+
+
+IDEAL = Part()
+
+
+def gain(topology: Topology, ohms: Mapping[str, float], parts: Part | Mapping[str, Part]) -> mpmath.mpf:
+    """The gain of a stage at 60 digits; `parts` is one part for all amplifiers or one for each."""
+    with mpmath.workdps(DIGITS):
+        return _tableau(topology, ohms, parts)
+
+
+def _tableau(topology: Topology, ohms: Mapping[str, float], parts: Part | Mapping[str, Part]) -> mpmath.mpf:
+    nodes = list(topology.nodes())
+    held = topology.gain in ("voltage", "transconductance")
+    branches: list[tuple[str, str, str, float]] = [
+        (element.name, *element.between, ohms[element.name]) for element in topology.elements
+    ]
+    part_of = {a.name: parts if isinstance(parts, Part) else parts[a.name] for a in topology.amplifiers}
+    branches += [(f"r_id {a.name}", a.plus, a.minus, part_of[a.name].r_id) for a in topology.amplifiers]
+    sources = list(topology.input)
+    names = [
+        *(("v", node) for node in nodes),
+        *(("i", name) for name, *_ in branches),
+        *(("i", f"out {a.name}") for a in topology.amplifiers),
+        *(("i", f"source {node}") for node in sources),
+    ]
+    column = {name: index for index, name in enumerate(names)}
+    matrix = mpmath.zeros(len(names), len(names))
+    right = mpmath.zeros(len(names), 1)
+    row_of = {node: index for index, node in enumerate(nodes)}
+
+    def voltage(row: int, node: str, factor: mpmath.mpf) -> None:
+        if node != GROUND:
+            matrix[row, column["v", node]] += factor
+
+    def flows(name: str, start: str, end: str) -> None:
+        """The branch current leaves `start` and enters `end`."""
+        if start != GROUND:
+            matrix[row_of[start], column["i", name]] += 1
+        if end != GROUND:
+            matrix[row_of[end], column["i", name]] -= 1
+
+    row = len(nodes)
+    for name, start, end, value in branches:
+        flows(name, start, end)
+        if value == OPEN:
+            matrix[row, column["i", name]] = mpmath.mpf(1)
+        else:
+            voltage(row, start, mpmath.mpf(1))
+            voltage(row, end, mpmath.mpf(-1))
+            matrix[row, column["i", name]] -= mpmath.mpf(value)
+        row += 1
+    for amplifier in topology.amplifiers:
+        part = part_of[amplifier.name]
+        flows(f"out {amplifier.name}", GROUND, amplifier.out)
+        if part.a_ol == OPEN:
+            voltage(row, amplifier.plus, mpmath.mpf(1))
+            voltage(row, amplifier.minus, mpmath.mpf(-1))
+        else:
+            a_ol = mpmath.mpf(part.a_ol)
+            voltage(row, amplifier.out, mpmath.mpf(1))
+            matrix[row, column["i", f"out {amplifier.name}"]] += mpmath.mpf(part.r_o)
+            voltage(row, amplifier.plus, -a_ol)
+            voltage(row, amplifier.minus, a_ol)
+        row += 1
+    drive = [mpmath.mpf(1)] if len(sources) == 1 else [mpmath.mpf(1) / 2, mpmath.mpf(-1) / 2]
+    if not held and len(sources) == 2:
+        drive = [mpmath.mpf(1), mpmath.mpf(-1)]
+    for node, value in zip(sources, drive, strict=True):
+        flows(f"source {node}", GROUND, node)
+        if held:
+            voltage(row, node, mpmath.mpf(1))
+        else:
+            matrix[row, column["i", f"source {node}"]] = mpmath.mpf(1)
+        right[row] = value
+        row += 1
+    solution = mpmath.lu_solve(matrix, right)
+    if topology.gain in ("transconductance", "current"):
+        return solution[column["i", topology.output]]
+    return solution[column["v", topology.output]]
+
+
+def gains(
+    topology: Topology,
+    ohms: Mapping[str, NDArray[np.float64]],
+    a_ol: NDArray[np.float64],
+    r_id: NDArray[np.float64],
+    r_o: NDArray[np.float64],
+) -> NDArray[np.float64]:
+    """Voltage gains or transresistances of many stages with one amplifier each, in double precision.
+
+    A plain nodal solve, one matrix for each stage; every array has shape (cases,).
+    """
+    assert topology.gain in ("voltage", "transresistance")
+    assert len(topology.amplifiers) == 1
+    amplifier = topology.amplifiers[0]
+    known = {GROUND: 0.0}
+    if topology.gain == "voltage":
+        known |= dict(zip(topology.input, (1.0,) if len(topology.input) == 1 else (0.5, -0.5), strict=True))
+    unknown = [node for node in topology.nodes() if node not in known]
+    place = {node: index for index, node in enumerate(unknown)}
+    cases, size = len(a_ol), len(unknown) + 1
+    matrix, right = np.zeros((cases, size, size)), np.zeros((cases, size, 1))
+    with np.errstate(divide="ignore"):
+        branches = [(*element.between, 1.0 / ohms[element.name]) for element in topology.elements]
+        branches.append((amplifier.plus, amplifier.minus, 1.0 / r_id))
+        slope = 1.0 / a_ol
+    for first, second, siemens in branches:
+        for here, there in ((first, second), (second, first)):
+            if here in place:
+                matrix[:, place[here], place[here]] += siemens
+                if there in place:
+                    matrix[:, place[here], place[there]] -= siemens
+                else:
+                    right[:, place[here], 0] += siemens * known[there]
+    matrix[:, place[amplifier.out], -1] -= 1.0
+    for node, factor in ((amplifier.plus, 1.0), (amplifier.minus, -1.0)):
+        if node in place:
+            matrix[:, -1, place[node]] += factor
+        else:
+            right[:, -1, 0] -= factor * known[node]
+    matrix[:, -1, place[amplifier.out]] -= slope
+    matrix[:, -1, -1] -= slope * r_o
+    if topology.gain == "transresistance":
+        right[:, place[topology.input[0]], 0] += 1.0
+    return np.asarray(np.linalg.solve(matrix, right)[:, place[topology.output], 0])
+
+
+def random_ohms(topology: Topology, rng: random.Random, low: float = 1.0, high: float = 1e8) -> dict[str, float]:
+    """Values for every element, evenly spread over the decades; one optional element in four is left out."""
+    return {
+        element.name: {"open": OPEN, "short": 0.0}[element.absent]
+        if element.absent != "error" and rng.random() < 0.25
+        else 10.0 ** rng.uniform(np.log10(low), np.log10(high))
+        for element in topology.elements
+    }
+
+
+def random_part(rng: random.Random) -> Part:
+    """A part over the whole range that the screen is meant for."""
+    return Part(10.0 ** rng.uniform(2, 9), 10.0 ** rng.uniform(3, 14), 10.0 ** rng.uniform(-2, 4))
+
+
+def network(
+    elements: Mapping[str, tuple[str, str]],
+    amplifiers: Sequence[tuple[str, str, str]],
+    source: tuple[str, ...] = ("in",),
+    output: str = "out",
+    gain: str = "voltage",
+) -> Topology:
+    """A topology built in a test: resistors by name, amplifiers as (plus, minus, out)."""
+    return Topology(
+        name="under_test",
+        summary="A network of a test",
+        gain=gain,
+        input=source,
+        output=output,
+        elements=tuple(Element(name, "resistor", between, "error") for name, between in elements.items()),
+        amplifiers=tuple(Amplifier(f"u{i}", *nodes) for i, nodes in enumerate(amplifiers, start=1)),
+        source="a test",
+    )

@@ -1,0 +1,71 @@
+"""The written rule of verdicts, row by row."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from gainassay.contracts.evidence import ASSUMED, EVIDENCE, GUARANTEED, MISSING, TYPICAL
+from gainassay.forms.form import derive
+from gainassay.forms.topology import library
+from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
+from gainassay.screen.kernel import screen
+from gainassay.screen.verdicts import LEANINGS, VERDICTS, judge
+
+FORM = derive(library()["inverting"])
+
+
+def judged(evidence: tuple[int, int, int], limit: float, a_ol: float = 1e5) -> tuple[str, str, str, float]:
+    values = np.array([[0.0], [1e4], [1e5], [np.inf]])
+    stages = stage_side(FORM, StageBox(values, np.zeros_like(values), np.array([limit]), np.array([np.nan])))
+    limits = np.array([[1.0 / a_ol], [1e-7], [50.0]])
+    parts = part_side(FORM, limits, limits, np.array(evidence, np.uint8)[:, None])
+    outcome = screen(stages, parts, active_sets(FORM))
+    judgement = judge(stages, parts, outcome)
+    leaning = LEANINGS[int(judgement.leaning[0, 0])]
+    used = float(judgement.limit_used[0, 0])
+    return VERDICTS[int(judgement.verdict[0, 0])], leaning.evidence, leaning.leans_on, used
+
+
+@pytest.mark.parametrize(
+    ("evidence", "limit", "verdict", "weakest", "leans_on"),
+    [
+        ((GUARANTEED, GUARANTEED, GUARANTEED), 1e-3, "pass", "guaranteed", ""),
+        ((GUARANTEED, TYPICAL, GUARANTEED), 1e-3, "unproven", "typical", "r_id typical"),
+        ((TYPICAL, GUARANTEED, ASSUMED), 1e-3, "unproven", "assumed", "a_ol typical, r_o assumed"),
+        ((GUARANTEED, MISSING, ASSUMED), 1e-3, "unproven", "missing", "r_id missing, r_o assumed"),
+        ((GUARANTEED, GUARANTEED, GUARANTEED), 1e-6, "fail", "guaranteed", ""),
+        ((TYPICAL, TYPICAL, TYPICAL), 1e-6, "fail", "typical", "a_ol typical, r_id typical, r_o typical"),
+        ((GUARANTEED, MISSING, GUARANTEED), 1e-6, "fail", "missing", "r_id missing"),
+    ],
+)
+def test_rule(evidence: tuple[int, int, int], limit: float, verdict: str, weakest: str, leans_on: str) -> None:
+    assert judged(evidence, limit)[:3] == (verdict, weakest, leans_on)
+
+
+def test_an_error_equal_to_the_limit_is_inside() -> None:
+    used = judged((0, 0, 0), 1.0)[3]
+    assert judged((0, 0, 0), used)[0] == "pass"
+    assert judged((0, 0, 0), np.nextafter(used, 0.0))[0] == "fail"
+
+
+def test_what_does_not_matter_to_a_stage_is_not_leaned_on() -> None:
+    values = np.array([[0.0], [1e4], [1e5], [np.inf]])
+    stages = stage_side(FORM, StageBox(values, np.zeros_like(values), np.array([1e-2]), np.array([np.nan])))
+    limits = np.array([[1e-5], [0.0], [50.0]])
+    parts = part_side(FORM, limits, limits, np.array([[GUARANTEED], [MISSING], [GUARANTEED]], np.uint8))
+    outcome = screen(stages, parts, active_sets(FORM))
+    without = replace(stages, matters=np.array([[True], [False], [True]]))
+    assert stages.matters.all()
+    assert VERDICTS[int(judge(stages, parts, outcome).verdict[0, 0])] == "unproven"
+    assert VERDICTS[int(judge(without, parts, outcome).verdict[0, 0])] == "pass"
+
+
+def test_every_leaning_has_its_weakest_evidence() -> None:
+    assert {leaning.evidence for leaning in LEANINGS} == set(EVIDENCE)
+    for leaning in LEANINGS:
+        words = leaning.leans_on.replace(",", "").split()[1::2]
+        weakest = max((EVIDENCE.index(word) for word in words), default=0)
+        assert leaning.evidence == EVIDENCE[weakest]

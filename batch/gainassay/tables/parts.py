@@ -166,7 +166,8 @@ def _figure(checking: Checking, name: str) -> tuple[FloatArray, NDArray[np.bool_
 def _from_decibel(column: Column, cells: Numbers) -> FloatArray:
     if column.unit != "dB":
         raise ValueError(f"{column.name}: no conversion from {column.unit!r}")
-    return np.asarray(10.0 ** (cells.values / 20.0))
+    # One by one: an array's pow() may round differently by the place of a number in the array.
+    return np.array([10.0 ** (value / 20.0) for value in cells.values.tolist()])
 
 
 def _filled_column(checking: Checking, name: str, position: np.intp) -> str:

@@ -182,6 +182,7 @@ def network(
     return Topology(
         name="under_test",
         summary="A network of a test",
+        known_as=(),
         gain=gain,
         input=source,
         output=output,

@@ -17,7 +17,8 @@ import pyarrow as pa
 from gainassay import job as jobs
 from gainassay.cautions import CAUTIONS
 from gainassay.forms.cache import content_hash
-from gainassay.forms.topology import Topology, library
+from gainassay.forms.library import library
+from gainassay.forms.topology import Topology
 from gainassay.job import Job
 from gainassay.runs import folder as run_folder
 from gainassay.runs import summaries

@@ -12,7 +12,8 @@ import pytest
 import oracle
 from gainassay.errors import InputError
 from gainassay.forms.form import Form, derive
-from gainassay.forms.topology import Topology, library
+from gainassay.forms.library import library
+from gainassay.forms.topology import Topology
 from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
 from gainassay.screen.kernel import nominal_account, screen
 

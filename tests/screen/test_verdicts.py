@@ -9,7 +9,7 @@ import pytest
 
 from gainassay.contracts.evidence import ASSUMED, EVIDENCE, GUARANTEED, MISSING, TYPICAL
 from gainassay.forms.form import derive
-from gainassay.forms.topology import library
+from gainassay.forms.library import library
 from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
 from gainassay.screen.kernel import screen
 from gainassay.screen.verdicts import LEANINGS, VERDICTS, judge

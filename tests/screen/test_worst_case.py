@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 
 import oracle
 from gainassay.forms.form import derive
-from gainassay.forms.topology import Topology, library
+from gainassay.forms.library import library
+from gainassay.forms.topology import Topology
 from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
 from gainassay.screen.kernel import UNBOUNDED, Outcome, account, screen
 

@@ -10,8 +10,9 @@ import click
 from gainassay.cli import shared
 from gainassay.contracts.documents import nearest
 from gainassay.errors import InputError
-from gainassay.forms import listing, topology
+from gainassay.forms import library, listing
 from gainassay.forms.cache import content_hash, form_of
+from gainassay.forms.topology import Topology
 
 
 @click.command()
@@ -27,11 +28,11 @@ def form(name: str, as_json: bool) -> None:
         shared.lines(listing.text(chosen, found))
 
 
-def _chosen(name: str) -> topology.Topology:
-    library = topology.library()
-    if name in library:
-        return library[name]
+def _chosen(name: str) -> Topology:
+    known = library.library()
+    if name in known:
+        return known[name]
     if name.endswith(".toml"):
-        return topology.read(Path(name))
-    hint = nearest(name, library) or "; `gainassay topologies` lists what there is"
+        return library.read(Path(name))
+    hint = nearest(name, known) or "; `gainassay topologies` lists what there is"
     raise InputError(f"there is no topology {name!r}{hint}")

@@ -7,7 +7,7 @@ from dataclasses import asdict
 import click
 
 from gainassay.cli import shared
-from gainassay.forms.topology import library
+from gainassay.forms.library import library
 from gainassay.report.text import table
 
 

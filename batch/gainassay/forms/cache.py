@@ -15,12 +15,13 @@ from typing import Any
 
 from platformdirs import user_cache_path
 
+from gainassay.forms import soundness
 from gainassay.forms.form import Form, Ratio, derive
 from gainassay.forms.topology import Topology
 
 log = logging.getLogger(__name__)
 
-DERIVING_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "topology.py")
+DERIVING_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "soundness.py", "topology.py")
 """Files of this room whose change makes every kept form stale."""
 
 
@@ -39,13 +40,15 @@ def form_of(topology: Topology) -> Form:
     Raises
     ------
     InputError
-        If the topology has no form.
+        If the topology makes no sense, or has no form.
     """
     path = folder() / "forms" / f"{key(topology)}.json"
     kept = _read(path)
     if kept is not None:
         return kept
+    soundness.network(topology)
     form = derive(topology)
+    soundness.function(topology, form)
     _write(path, form)
     return form
 

@@ -16,7 +16,7 @@ from dataclasses import dataclass
 
 from gainassay.errors import InputError
 from gainassay.forms import nodal
-from gainassay.forms.departures import DEPARTURES, Departure, term_name
+from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure, term_name
 from gainassay.forms.multiaffine import MultiAffine
 from gainassay.forms.topology import Topology
 
@@ -68,6 +68,18 @@ class Form:
     contrasts: tuple[Ratio, ...]
     loadings: tuple[Ratio, ...]
 
+    def loops(self) -> tuple[int, ...]:
+        """Places of the monomials that are products of 1/A_OL alone.
+
+        Above an amplifier's first pole 1/A_OL grows with s, so their loadings are the coefficients of the
+        characteristic polynomial: where one of them is negative, feedback is positive and the stage unstable.
+        """
+        return tuple(
+            place
+            for place, monomial in enumerate(self.monomials)
+            if all(self.departures[departure][1] == OPEN_LOOP_GAIN.symbol for departure in monomial)
+        )
+
 
 def derive(topology: Topology) -> Form:
     """The form of a topology.
@@ -80,7 +92,7 @@ def derive(topology: Topology) -> Form:
     gain = nodal.derive(topology)
     numerators = gain.numerator.collect(gain.departure_mask())
     denominators = gain.denominator.collect(gain.departure_mask())
-    where = f"{topology.source}: topology '{topology.name}'"
+    where = topology.where()
     if 0 not in denominators:
         kind = "infinite or undefined: no feedback reaches the amplifier's inverting input"
         raise InputError(f"{where}: the ideal gain is {kind}; it has no form ideal gain x correction factor")

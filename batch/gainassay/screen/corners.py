@@ -68,7 +68,7 @@ class StageSide:
     corner_terms : ndarray, shape (corners, elements, stages)
         Share of each element's tolerance in that; with `set_point` they sum to it.
     regular : ndarray of bool, shape (stages,)
-        Whether all is finite and the ideal gain keeps its sign at every corner.
+        Whether, at every corner, all is finite, the ideal gain keeps its sign and the feedback is negative.
     matters : ndarray of bool, shape (departures, stages)
         Whether a departure, of any amplifier, has a coefficient that is not zero.
     """
@@ -162,6 +162,7 @@ def stage_side(form: Form, box: StageBox) -> StageSide:
             & np.isfinite(loadings).all(axis=(0, 1))
             & np.isfinite(corner_gain).all(axis=0)
             & (np.sign(corner_gain) == np.sign(nominal.gain_ideal)).all(axis=0)
+            & (loadings[:, list(form.loops())] >= 0.0).all(axis=(0, 1))
         )
         return StageSide(
             gain_ideal=nominal.gain_ideal,

@@ -226,6 +226,7 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
         return
     found = coefficients.evaluate(group.form, coefficients.resistances(group.values))
     finite: NDArray[np.bool_] = np.isfinite(np.concatenate([found.contrasts, found.loadings])).all(axis=0)
+    positive = np.logical_or.reduce(found.loadings[list(group.form.loops())] < 0.0, axis=0)
     good = checking.good()
     for index, position in enumerate(members):
         if not good[position]:
@@ -240,6 +241,12 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
                 int(position),
                 "topology",
                 "these element values make the gain undefined; look for a 0 ohm across a source",
+            )
+        elif positive[index]:
+            checking.refuse(
+                int(position),
+                "topology",
+                "these element values make the feedback positive: the output would run to its limit",
             )
 
 

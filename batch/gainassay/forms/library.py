@@ -1,0 +1,74 @@
+"""Topology files: the built-in ones and a user's own."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from pathlib import Path
+from typing import Any
+
+from gainassay import resources
+from gainassay.contracts import documents
+from gainassay.errors import InputError
+from gainassay.forms import soundness
+from gainassay.forms.topology import Amplifier, Element, Topology
+
+
+def read(path: Path) -> Topology:
+    """The topology in a TOML file.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read, does not follow the schema, or names a network that makes no sense.
+    """
+    document = documents.read_toml(path, "topology")
+    return from_document(document, str(path))
+
+
+def from_document(document: Mapping[str, Any], source: str) -> Topology:
+    """The topology in a parsed document that follows `schemas/topology.schema.json`.
+
+    Raises
+    ------
+    InputError
+        If the document names a network that makes no sense.
+    """
+    given = document["input"]
+    topology = Topology(
+        name=document["topology"],
+        summary=document["summary"],
+        known_as=tuple(document.get("known_as", ())),
+        gain=document["gain"],
+        input=(given,) if isinstance(given, str) else tuple(given),
+        output=document["output"],
+        elements=tuple(
+            Element(name, element["kind"], tuple(element["between"]), element.get("absent", "error"))
+            for name, element in document["elements"].items()
+        ),
+        amplifiers=tuple(
+            Amplifier(name, amplifier["plus"], amplifier["minus"], amplifier["out"])
+            for name, amplifier in document["amplifiers"].items()
+        ),
+        source=source,
+    )
+    soundness.statement(topology)
+    return topology
+
+
+def library(own: Iterable[Path] = ()) -> dict[str, Topology]:
+    """The built-in topologies and a job's own, by name.
+
+    Raises
+    ------
+    InputError
+        If two files give the same name.
+    """
+    found: dict[str, Topology] = {}
+    for path in [*sorted(resources.topologies().glob("*.toml")), *own]:
+        topology = read(path)
+        if topology.name in found:
+            raise InputError(
+                f"{path}: the name '{topology.name}' is taken by {found[topology.name].source}; rename the topology"
+            )
+        found[topology.name] = topology
+    return found

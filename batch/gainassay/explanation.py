@@ -43,9 +43,10 @@ class Figure:
 
 @dataclass(frozen=True)
 class ElementValue:
-    """An element: nominal value and value at the worst corner [ohm]; inf is open, 0 short."""
+    """An element: nominal value and value at the worst corner [ohm, F, H]; a blank one is 0 or inf."""
 
     name: str
+    kind: str
     nominal: float
     tolerance: float
     at_worst: float
@@ -158,8 +159,15 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
         leans_on=leaning.leans_on,
         dominant_term=names[int(outcome.dominant[0, 0])],
         elements=tuple(
-            ElementValue(name, *map(float, numbers))
-            for name, *numbers in zip(screened.group.form.elements, values, tolerances, at_corner, strict=True)
+            ElementValue(name, kind, float(value), float(tolerance), float(at_worst))
+            for name, kind, value, tolerance, at_worst in zip(
+                screened.group.form.elements,
+                screened.group.form.kinds,
+                values,
+                tolerances,
+                at_corner,
+                strict=True,
+            )
         ),
         figures=tuple(_figures(parts, p, side.matters[:, 0].tolist())),
         terms=tuple(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,10 +15,11 @@ from gainassay.contracts.tables import Column
 PLAIN = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]{1,4})?$"
 """Decimal text. ASCII digits only: other parsers disagree on full-width digits, `1_000`, `0x10` and `1,5`."""
 
-LETTERS = {"R": 0, "k": 3, "K": 3, "M": 6, "G": 9, "T": 12}
-"""Letters for resistance and their powers of ten (IEC 60062). `m` is no resistance: milli or mega?"""
-
-LETTER_CODE = r"^(?P<whole>[0-9]*)(?P<letter>[RkKMGT])(?P<part>[0-9]*)$"
+LETTERS = {
+    "resistance": {"R": 0, "k": 3, "K": 3, "M": 6, "G": 9, "T": 12},
+    "capacitance": {"p": -12, "n": -9, "u": -6, "\u00b5": -6, "\u03bc": -6, "m": -3, "F": 0},
+}
+"""Letters of each code and their powers of ten (IEC 60062). `m` is no resistance: milli or mega?"""
 
 
 @dataclass(frozen=True)
@@ -63,7 +65,7 @@ def numbers(cells: pa.Array, column: Column) -> Numbers:
         blank = np.asarray(pc.equal(text, ""))
         values = _plain(text)
         if column.letter_code:
-            coded = _letter_code(text)
+            coded = _letter_code(text, LETTERS[column.letter_code])
             values = np.where(np.isnan(values), coded, values)
         readable = ~np.isnan(values)
     reason = np.full(len(blank), "", dtype=object)
@@ -94,13 +96,14 @@ def _plain(text: pa.Array) -> NDArray[np.float64]:
     return np.asarray(pc.fill_null(pc.if_else(readable, text, None).cast(pa.float64()), np.nan))
 
 
-def _letter_code(text: pa.Array) -> NDArray[np.float64]:
+def _letter_code(text: pa.Array, letters: Mapping[str, int]) -> NDArray[np.float64]:
     """4k7 -> 4.7e3, put together as decimal text so that it is rounded once."""
     has_digit = pc.match_substring_regex(text, "[0-9]")
-    fields = pc.extract_regex(pc.if_else(has_digit, text, None), LETTER_CODE)
+    pattern = f"^(?P<whole>[0-9]*)(?P<letter>[{''.join(letters)}])(?P<part>[0-9]*)$"
+    fields = pc.extract_regex(pc.if_else(has_digit, text, None), pattern)
     whole, letter, part = (fields.field(index) for index in range(3))
     power = pc.replace_substring_regex(letter, "^.*$", r"\0")
-    for name, exponent in LETTERS.items():
+    for name, exponent in letters.items():
         power = pc.if_else(pc.equal(letter, name), str(exponent), power)
     decimal = pc.binary_join_element_wise(
         pc.binary_join_element_wise("0", whole, ""),
@@ -120,6 +123,7 @@ def _unit(column: Column) -> str:
 
 
 def _unreadable(column: Column) -> str:
-    codes = " or a code such as 4k7 or 10M" if column.letter_code else ""
+    examples = {"resistance": " or a code such as 4k7 or 10M", "capacitance": " or a code such as 2n2 or 100n"}
+    codes = examples.get(column.letter_code, "")
     unit = f" in {column.unit}" if column.unit and column.unit not in ("gain", "1") else ""
     return f"is not a number; wanted is a plain number{unit}{codes}"

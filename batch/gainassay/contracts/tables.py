@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from dataclasses import dataclass
 from functools import cache
 from typing import Any
@@ -10,7 +11,9 @@ from typing import Any
 from gainassay import resources
 
 ELEMENT = "<element>"
-"""Stands in a column's name for an element of the stage's topology."""
+"""Stands in a column's name for any element of the stage's topology."""
+
+_PLACEHOLDER = re.compile("<[a-z]+>")
 
 ELEMENT_SUFFIXES = ("_tol_pct",)
 """What may follow an element's name in a column of the stage table."""
@@ -23,7 +26,7 @@ class Column:
     Attributes
     ----------
     name : str
-        Its name; may hold `<element>`.
+        Its name; may hold a placeholder such as `<element>` or `<resistor>`.
     kind : str
         `string`, `number` or `integer`.
     unit : str
@@ -37,7 +40,7 @@ class Column:
     nonzero : bool
         Whether zero is refused.
     letter_code : str
-        Which letter code of IEC 60062 its cells may use: `resistance` or none.
+        Which letter code of IEC 60062 its cells may use: `resistance`, `capacitance` or none.
     in_place_of : str
         The column whose number it gives in another unit, or nothing.
     """
@@ -55,7 +58,7 @@ class Column:
 
     def of(self, element: str) -> Column:
         """This column for one element."""
-        return Column(**{**self.__dict__, "name": self.name.replace(ELEMENT, element)})
+        return Column(**{**self.__dict__, "name": _PLACEHOLDER.sub(element, self.name)})
 
 
 @cache
@@ -72,7 +75,7 @@ def column(table: str, name: str) -> Column:
 
 def reserved_stage_columns() -> frozenset[str]:
     """Names in the stage table that no element may bear."""
-    return frozenset(column.name for column in columns("stages") if ELEMENT not in column.name)
+    return frozenset(column.name for column in columns("stages") if not _PLACEHOLDER.search(column.name))
 
 
 def _column(field: dict[str, Any]) -> Column:

@@ -106,6 +106,7 @@ def _form(data: dict[str, Any]) -> Form:
     return Form(
         topology=data["topology"],
         elements=tuple(data["elements"]),
+        kinds=tuple(data["kinds"]),
         departures=tuple((amplifier, symbol) for amplifier, symbol in data["departures"]),
         monomials=tuple(tuple(monomial) for monomial in data["monomials"]),
         terms=tuple(data["terms"]),

@@ -48,13 +48,14 @@ class Coefficients:
     loadings: FloatArray
 
 
-def resistances(values: FloatArray) -> Pairs:
-    """Pairs of resistors.
+def at_dc(form: Form, values: FloatArray) -> Pairs:
+    """Pairs of a form's elements at 0 Hz, where a capacitor is open and an inductor a short.
 
     Parameters
     ----------
     values : ndarray, shape (elements, stages)
-        Resistance [ohm]; `inf` is an open circuit, 0 a short.
+        Resistance [ohm], capacitance [F] or inductance [H]; a resistance of `inf` is an open circuit, of 0 a
+        short.
 
     Returns
     -------
@@ -62,8 +63,10 @@ def resistances(values: FloatArray) -> Pairs:
         Scaled by powers of two, so without rounding, to y and z of similar size: products over many elements
         then stay far from overflow.
     """
-    is_open = np.isinf(values)
-    finite = np.where(is_open, 1.0, values)
+    kinds = np.array(form.kinds)[:, None]
+    ohms = np.where(kinds == "capacitor", np.inf, np.where(kinds == "inductor", 0.0, values))
+    is_open = np.isinf(ohms)
+    finite = np.where(is_open, 1.0, ohms)
     _, exponent = np.frexp(finite)
     scale = np.where(finite == 0.0, 1.0, np.ldexp(1.0, -(exponent // 2)))
     return Pairs(y=np.where(is_open, 0.0, scale), z=np.where(is_open, 1.0, finite * scale))

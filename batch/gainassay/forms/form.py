@@ -45,8 +45,8 @@ class Form:
     ----------
     topology : str
         Name of the topology.
-    elements : tuple[str, ...]
-        Elements, in the order of the exponents.
+    elements, kinds : tuple[str, ...]
+        Elements, in the order of the exponents, and the kind of each.
     departures : tuple[tuple[str, str], ...]
         (amplifier, symbol of the departure).
     monomials : tuple[tuple[int, ...], ...]
@@ -61,6 +61,7 @@ class Form:
 
     topology: str
     elements: tuple[str, ...]
+    kinds: tuple[str, ...]
     departures: tuple[tuple[str, str], ...]
     monomials: tuple[tuple[int, ...], ...]
     terms: tuple[str, ...]
@@ -115,6 +116,7 @@ def derive(topology: Topology) -> Form:
     return Form(
         topology=topology.name,
         elements=gain.elements,
+        kinds=tuple(element.kind for element in topology.elements),
         departures=gain.departures,
         monomials=tuple(monomial for monomial, _, _ in kept),
         terms=tuple(_name(monomial, gain.departures, several) for monomial, _, _ in kept),

@@ -61,7 +61,7 @@ def library(own: Iterable[Path] = ()) -> dict[str, Topology]:
     Raises
     ------
     InputError
-        If two files give the same name.
+        If two files give the same name, or one name to elements of different kinds.
     """
     found: dict[str, Topology] = {}
     for path in [*sorted(resources.topologies().glob("*.toml")), *own]:
@@ -71,4 +71,18 @@ def library(own: Iterable[Path] = ()) -> dict[str, Topology]:
                 f"{path}: the name '{topology.name}' is taken by {found[topology.name].source}; rename the topology"
             )
         found[topology.name] = topology
+    _one_kind_for_each_name(found.values())
     return found
+
+
+def _one_kind_for_each_name(topologies: Iterable[Topology]) -> None:
+    """An element's name is a column of the stage table, so it has one unit."""
+    first: dict[str, tuple[str, Topology]] = {}
+    for topology in topologies:
+        for element in topology.elements:
+            kind, other = first.setdefault(element.name, (element.kind, topology))
+            if kind != element.kind:
+                raise InputError(
+                    f"{topology.where()}: {element.name} is a {element.kind}, but topology '{other.name}' has a {kind} "
+                    "of that name, and both share a column of the stage table; rename one"
+                )

@@ -18,7 +18,7 @@ class Element:
     name : str
         Its name, which is also its column in the stage table.
     kind : str
-        `resistor`.
+        `resistor`, `capacitor` or `inductor`.
     between : tuple[str, str]
         The nodes it joins.
     absent : str

@@ -6,7 +6,7 @@ import math
 
 from gainassay.cautions import CAUTIONS
 from gainassay.explanation import Explanation
-from gainassay.report.text import ohms, ppm, quantity, table
+from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
 """Characters of the longest bar."""
@@ -39,7 +39,12 @@ def text(found: Explanation) -> list[str]:
         *table(
             ["  element", "nominal", "tolerance", "at the worst corner"],
             [
-                [f"  {e.name}", ohms(e.nominal), f"{e.tolerance * 100:.6g} %" if e.tolerance else "-", ohms(e.at_worst)]
+                [
+                    f"  {e.name}",
+                    element(e.nominal, e.kind),
+                    f"{e.tolerance * 100:.6g} %" if e.tolerance else "-",
+                    element(e.at_worst, e.kind),
+                ]
                 for e in found.elements
             ],
         ),

@@ -5,7 +5,8 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-LETTERS = ((1e12, "T"), (1e9, "G"), (1e6, "M"), (1e3, "k"))
+PREFIXES = {-12: "p", -9: "n", -6: "u", -3: "m", 0: "", 3: "k", 6: "M", 9: "G", 12: "T"}
+ELEMENT_UNITS = {"resistor": "ohm", "capacitor": "F", "inductor": "H"}
 
 
 def table(header: Sequence[str], rows: Sequence[Sequence[str]], right: Sequence[int] = ()) -> list[str]:
@@ -25,29 +26,31 @@ def table(header: Sequence[str], rows: Sequence[Sequence[str]], right: Sequence[
     return lines
 
 
-def ohms(value: float) -> str:
-    """A resistance.
+def element(value: float, kind: str) -> str:
+    """An element's value; 0 and infinity as what they are in the network.
 
-    >>> [ohms(value) for value in (4700, 47.5, 1e7, float("inf"), 0)]
+    >>> [element(value, "resistor") for value in (4700, 47.5, 1e7, float("inf"), 0)]
     ['4.7 kohm', '47.5 ohm', '10 Mohm', 'open', 'short']
+    >>> [element(value, "capacitor") for value in (2.2e-9, 0, float("inf"))]
+    ['2.2 nF', 'open', 'short']
     """
-    if math.isinf(value):
-        return "open"
-    if value == 0.0:
-        return "short"
-    for factor, letter in LETTERS:
-        if value >= factor:
-            return f"{value / factor:.6g} {letter}ohm"
-    return f"{value:.6g} ohm"
+    if value == 0.0 or math.isinf(value):
+        return "open" if (value == 0.0) == (kind == "capacitor") else "short"
+    return quantity(value, ELEMENT_UNITS[kind])
 
 
 def quantity(value: float, unit: str) -> str:
-    """A data-sheet figure with its unit; a dash where nothing is known."""
+    """A figure with its unit, the unit with a prefix where it takes one; a dash where nothing is known.
+
+    >>> [quantity(3.5e5, "ohm"), quantity(3.5e5, "V/V"), quantity(float("nan"), "ohm")]
+    ['350 kohm', '350000 V/V', '-']
+    """
     if math.isnan(value):
         return "-"
-    if unit == "ohm":
-        return ohms(value) if value else "0 ohm"
-    return f"{value:.6g} {unit}"
+    if unit not in ELEMENT_UNITS.values() or value == 0.0:
+        return f"{value:.6g} {unit}"
+    power = min(max(3 * math.floor(math.log10(abs(value)) / 3), min(PREFIXES)), max(PREFIXES))
+    return f"{value / 10.0**power:.6g} {PREFIXES[power]}{unit}"
 
 
 def ppm(value: float) -> str:

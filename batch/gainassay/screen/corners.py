@@ -136,9 +136,11 @@ def stage_side(form: Form, box: StageBox) -> StageSide:
     InputError
         If more elements have a tolerance than can be visited corner by corner.
     """
-    nominal = coefficients.evaluate(form, coefficients.resistances(box.values))
+    nominal = coefficients.evaluate(form, coefficients.at_dc(form, box.values))
     reference = np.where(np.isnan(box.targets), nominal.gain_ideal, box.targets)
-    toleranced = np.flatnonzero((box.tolerances > 0.0).any(axis=1))
+    # At 0 Hz no tolerance of a capacitor or an inductor matters.
+    is_resistor = np.array([kind == "resistor" for kind in form.kinds])
+    toleranced = np.flatnonzero((box.tolerances > 0.0).any(axis=1) & is_resistor)
     if len(toleranced) > MOST_TOLERANCED_ELEMENTS:
         raise InputError(
             f"topology '{form.topology}': {len(toleranced)} elements of a stage have a tolerance; "
@@ -150,7 +152,7 @@ def stage_side(form: Form, box: StageBox) -> StageSide:
     ends = 1.0 + (2.0 * bits[:, :, None] - 1.0) * box.tolerances[toleranced]
     values[:, toleranced] *= ends
 
-    at_corners = coefficients.evaluate(form, _pairs(values))
+    at_corners = coefficients.evaluate(form, _pairs(form, values))
     shape = (len(bits), box.values.shape[1])
     corner_gain = at_corners.gain_ideal.reshape(shape)
     terms = _tolerance_terms(form, box.values, values, toleranced, reference)
@@ -204,9 +206,9 @@ def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDAr
     return PartSide(products(nominal), products(worst), evidence)
 
 
-def _pairs(values: FloatArray) -> coefficients.Pairs:
+def _pairs(form: Form, values: FloatArray) -> coefficients.Pairs:
     """Pairs of the elements at all corners, corners and stages on one axis."""
-    return coefficients.resistances(np.moveaxis(values, 1, 0).reshape(values.shape[1], -1))
+    return coefficients.at_dc(form, np.moveaxis(values, 1, 0).reshape(values.shape[1], -1))
 
 
 def _tolerance_terms(
@@ -229,10 +231,10 @@ def _tolerance_terms(
     shares = np.zeros_like(values)
     for order in (list(toleranced), list(reversed(toleranced))):
         moved = np.repeat(nominal[None], len(values), axis=0)
-        before = coefficients.gain_ideal(form, _pairs(moved)).reshape(len(values), -1)
+        before = coefficients.gain_ideal(form, _pairs(form, moved)).reshape(len(values), -1)
         for element in order:
             moved[:, element] = values[:, element]
-            after = coefficients.gain_ideal(form, _pairs(moved)).reshape(len(values), -1)
+            after = coefficients.gain_ideal(form, _pairs(form, moved)).reshape(len(values), -1)
             with np.errstate(invalid="ignore"):
                 shares[:, element] += (after - before) / reference / 2.0
             before = after

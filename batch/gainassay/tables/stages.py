@@ -22,8 +22,15 @@ from gainassay.tables import sources
 from gainassay.tables.checks import Checking, nothing_left, unknown_columns
 from gainassay.tables.rejects import Reject
 
-BLANK = {"open": np.inf, "short": 0.0}
-"""Resistance [ohm] that a blank element stands for."""
+BLANK = {
+    ("resistor", "open"): np.inf,
+    ("resistor", "short"): 0.0,
+    ("capacitor", "open"): 0.0,
+    ("capacitor", "short"): np.inf,
+    ("inductor", "open"): np.inf,
+    ("inductor", "short"): 0.0,
+}
+"""Value [ohm, F, H] that a blank element stands for."""
 
 PER_PCT, PER_PPM = 1e-2, 1e-6
 
@@ -37,7 +44,7 @@ class StageGroup:
     names : ndarray of str, shape (stages,)
         Names.
     values : ndarray, shape (elements, stages)
-        Nominal values [ohm]; inf: open, 0: short. Order of the form's elements.
+        Nominal values [ohm, F, H]; a blank one is 0 or inf. Order of the form's elements.
     tolerances : ndarray, shape (elements, stages)
         Tolerance, plus or minus, as a fraction.
     limits : ndarray, shape (stages,)
@@ -89,7 +96,8 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         or holds no row that can be used.
     """
     raw = sources.read(path)
-    elements = sorted({element.name for topology in library.values() for element in topology.elements})
+    kinds = {element.name: element.kind for topology in library.values() for element in topology.elements}
+    elements = sorted(kinds)
     _require_columns(raw, path)
     checking = Checking.of(raw)
     names = checking.names("stage")
@@ -100,7 +108,7 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
     }
     limits = _limits(checking, general["accuracy_pct"], general["accuracy_ppm"])
     known = [name for name in elements if name in raw.columns or f"{name}_tol_pct" in raw.columns]
-    values = {name: checking.column(tables.column("stages", tables.ELEMENT).of(name)) for name in known}
+    values = {name: checking.column(tables.column("stages", f"<{kinds[name]}>").of(name)) for name in known}
     own_tolerances = {
         name: checking.column(tables.column("stages", f"{tables.ELEMENT}_tol_pct").of(name)) for name in known
     }
@@ -110,13 +118,13 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         topology = library[name]
         members = np.flatnonzero(chosen == name)
         form = form_of(topology)
-        ohms = _values(checking, topology, members, values)
+        nominal = _values(checking, topology, members, values)
         group = StageGroup(
             topology=topology,
             form=form,
             names=names[members].astype(np.str_),
-            values=ohms,
-            tolerances=_tolerances(topology, members, ohms, general["tol_pct"], own_tolerances),
+            values=nominal,
+            tolerances=_tolerances(topology, members, nominal, general["tol_pct"], own_tolerances),
             limits=limits[members],
             targets=general["target_gain"].values[members],
         )
@@ -171,7 +179,7 @@ def _limits(checking: Checking, pct: Numbers, ppm: Numbers) -> FloatArray:
 def _values(
     checking: Checking, topology: Topology, members: NDArray[np.intp], values: Mapping[str, Numbers]
 ) -> FloatArray:
-    """Values of the topology's elements [ohm], shape (elements, members)."""
+    """Values of the topology's elements [ohm, F, H], shape (elements, members)."""
     own = {element.name for element in topology.elements}
     for name, cells in values.items():
         if name not in own:
@@ -179,15 +187,15 @@ def _values(
                 checking.refuse(
                     int(position), name, f"topology '{topology.name}' has no element {name}; empty the cell"
                 )
-    ohms = np.full((len(topology.elements), len(members)), np.nan)
+    nominal = np.full((len(topology.elements), len(members)), np.nan)
     for index, element in enumerate(topology.elements):
         if element.name in values:
             blank = values[element.name].blank[members]
-            ohms[index] = values[element.name].values[members]
+            nominal[index] = values[element.name].values[members]
         else:
             blank = np.ones(len(members), dtype=bool)
-        if element.absent in BLANK:
-            ohms[index, blank] = BLANK[element.absent]
+        if element.absent != "error":
+            nominal[index, blank] = BLANK[element.kind, element.absent]
         else:
             for position in members[blank]:
                 checking.refuse(
@@ -195,27 +203,28 @@ def _values(
                     element.name,
                     f"is blank, but topology '{topology.name}' needs {element.name}",
                 )
-    return ohms
+    return nominal
 
 
 def _tolerances(
     topology: Topology,
     members: NDArray[np.intp],
-    ohms: FloatArray,
+    nominal: FloatArray,
     common: Numbers,
     own: Mapping[str, Numbers],
 ) -> FloatArray:
-    """Tolerances as fractions, shape (elements, members): the element's own, else the common one, else none.
+    """Tolerances as fractions, shape (elements, members).
 
-    What is open or short has no tolerance.
+    The element's own; else, for a resistor, the common one; else none. What is open or short has no tolerance.
     """
-    fractions = np.zeros_like(ohms)
+    fractions = np.zeros_like(nominal)
     for index, element in enumerate(topology.elements):
-        pct = np.where(common.blank, 0.0, common.values)[members]
+        shared = np.where(common.blank, 0.0, common.values)[members]
+        pct = shared if element.kind == "resistor" else np.zeros(len(members))
         if element.name in own:
             cells = own[element.name]
             pct = np.where(cells.blank[members], pct, cells.values[members])
-        present = np.isfinite(ohms[index]) & (ohms[index] > 0.0)
+        present = np.isfinite(nominal[index]) & (nominal[index] > 0.0)
         fractions[index] = np.where(present, pct * PER_PCT, 0.0)
     return fractions
 
@@ -224,7 +233,7 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
     """Reject stages whose values leave no ideal gain to correct."""
     if not len(members):
         return
-    found = coefficients.evaluate(group.form, coefficients.resistances(group.values))
+    found = coefficients.evaluate(group.form, coefficients.at_dc(group.form, group.values))
     finite: NDArray[np.bool_] = np.isfinite(np.concatenate([found.contrasts, found.loadings])).all(axis=0)
     positive = np.logical_or.reduce(found.loadings[list(group.form.loops())] < 0.0, axis=0)
     good = checking.good()
@@ -233,9 +242,11 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
             continue
         gain = found.gain_ideal[index]
         if gain == 0.0:
-            checking.refuse(int(position), "topology", "these element values make the ideal gain zero")
+            checking.refuse(int(position), "topology", "these element values make the ideal gain at 0 Hz zero")
         elif not np.isfinite(gain):
-            checking.refuse(int(position), "topology", "these element values make the ideal gain infinite or undefined")
+            checking.refuse(
+                int(position), "topology", "these element values make the ideal gain at 0 Hz infinite or undefined"
+            )
         elif not finite[index]:
             checking.refuse(
                 int(position),

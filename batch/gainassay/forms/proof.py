@@ -49,8 +49,9 @@ def _same_ratio(over: Any, under: Any, top: Any, bottom: Any) -> bool:
     """Whether over/under = top/bottom; first as equal polynomials, which is quick."""
     if not over or not top:
         return not over and not top
-    over, under = over.mul_ground(bottom.LC), under.mul_ground(bottom.LC)
-    top, bottom = top.mul_ground(under.LC), bottom.mul_ground(under.LC)
+    given, found = bottom.LC, under.LC
+    over, under = over.mul_ground(given), under.mul_ground(given)
+    top, bottom = top.mul_ground(found), bottom.mul_ground(found)
     return bool((over == top and under == bottom) or over * bottom == under * top)
 
 

@@ -7,7 +7,8 @@ that the algebra of networks becomes operations on sets.
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from functools import cache
 from math import gcd
 
 
@@ -22,6 +23,7 @@ class MultiAffine:
     """
 
     terms: Mapping[int, int]
+    _hash: list[int] = field(default_factory=list, init=False, repr=False, compare=False)
 
     @staticmethod
     def constant(value: int) -> MultiAffine:
@@ -37,10 +39,12 @@ class MultiAffine:
         return bool(self.terms)
 
     def __eq__(self, other: object) -> bool:
-        return isinstance(other, MultiAffine) and dict(self.terms) == dict(other.terms)
+        return isinstance(other, MultiAffine) and self.terms == other.terms
 
     def __hash__(self) -> int:
-        return hash(frozenset(self.terms.items()))
+        if not self._hash:
+            self._hash.append(hash(frozenset(self.terms.items())))
+        return self._hash[0]
 
     def __iter__(self) -> Iterator[tuple[int, int]]:
         """Products and coefficients, in ascending order of the mask."""
@@ -86,6 +90,25 @@ class MultiAffine:
         """All coefficients divided by an integer that divides each of them."""
         return MultiAffine({mask: value // divisor for mask, value in self.terms.items()})
 
+    def split(self, symbol: int) -> tuple[MultiAffine, MultiAffine]:
+        """What does not hold the symbol of the mask `symbol`, and the coefficient of that symbol."""
+        without: dict[int, int] = {}
+        coefficient: dict[int, int] = {}
+        for mask, value in self.terms.items():
+            if mask & symbol:
+                coefficient[mask ^ symbol] = value
+            else:
+                without[mask] = value
+        return MultiAffine(without), MultiAffine(coefficient)
+
+    def inverted(self, symbols: int) -> MultiAffine:
+        """The polynomial in the reciprocals of the masked symbols, times the product of these symbols."""
+        return MultiAffine({mask ^ symbols: value for mask, value in self.terms.items()})
+
+    def degree(self) -> int:
+        """Largest number of symbols in one product."""
+        return max((mask.bit_count() for mask in self.terms), default=0)
+
     def collect(self, symbols: int) -> dict[int, MultiAffine]:
         """Coefficients, as polynomials, of the products of the symbols in the mask `symbols`.
 
@@ -98,6 +121,99 @@ class MultiAffine:
         for mask, value in self.terms.items():
             parts.setdefault(mask & symbols, {})[mask & ~symbols] = value
         return {product: MultiAffine(parts[product]) for product in sorted(parts)}
+
+
+_MODULUS = (1 << 61) - 1
+
+
+def factors(polynomial: MultiAffine) -> tuple[int, tuple[MultiAffine, ...]]:
+    """An integer and the irreducible factors, each primitive and with a positive first coefficient.
+
+    The factors of a multi-affine polynomial share no symbols. Symbol y is in the factor of x if and only if
+    p p_xy != p_x p_y, which is asked at one point modulo a prime: the answer "unequal" is certain, and a factor
+    split off after the answer "equal" is kept only if multiplying out gives the polynomial back.
+    """
+    if not polynomial:
+        return 0, ()
+    common = -1
+    for mask in polynomial.terms:
+        common &= mask
+    content = polynomial.content()
+    first = min(polynomial.terms)
+    content = -content if polynomial.terms[first] < 0 else content
+    found = [MultiAffine({1 << i: 1}) for i in range(common.bit_length()) if common >> i & 1]
+    rest = MultiAffine({mask ^ common: value // content for mask, value in polynomial.terms.items()})
+    while rest.support():
+        factor, rest = _first_factor(rest)
+        found.append(factor)
+    return content, tuple(sorted(found, key=_lowest_symbol))
+
+
+def _lowest_symbol(polynomial: MultiAffine) -> int:
+    support = polynomial.support()
+    return support & -support
+
+
+def _first_factor(polynomial: MultiAffine) -> tuple[MultiAffine, MultiAffine]:
+    """The irreducible factor that holds the lowest symbol, and the cofactor.
+
+    The polynomial is primitive and its first coefficient positive, hence so are both.
+    """
+    group = _symbols_of_first_factor(polynomial)
+    others = polynomial.support() & ~group
+    if not others:
+        return polynomial, MultiAffine.constant(1)
+    terms = polynomial.terms
+    first = min(terms)
+    factor = _primitive({mask & group: value for mask, value in terms.items() if not (mask ^ first) & others})
+    cofactor = _primitive({mask & others: value for mask, value in terms.items() if not (mask ^ first) & group})
+    if len(terms) != len(factor.terms) * len(cofactor.terms) or factor.times(cofactor) != polynomial:
+        return polynomial, MultiAffine.constant(1)  # the point was unlucky: leave the polynomial whole
+    return factor, cofactor
+
+
+def _primitive(terms: dict[int, int]) -> MultiAffine:
+    """The terms divided by their content, the first coefficient made positive."""
+    content = gcd(*terms.values())
+    content = -content if terms[min(terms)] < 0 else content
+    return MultiAffine({mask: value // content for mask, value in terms.items()})
+
+
+def _symbols_of_first_factor(polynomial: MultiAffine) -> int:
+    """Mask of the symbols in the factor of the lowest symbol, perhaps too few of them (see `factors`)."""
+    pivot = _lowest_symbol(polynomial)
+    whole = with_pivot = 0
+    with_symbol: dict[int, int] = {}
+    with_both: dict[int, int] = {}
+    for mask, coefficient in polynomial.terms.items():
+        value = coefficient
+        rest = mask
+        while rest:
+            bit = rest & -rest
+            value = value * _point(bit.bit_length()) % _MODULUS
+            rest ^= bit
+        whole += value
+        holds_pivot = mask & pivot
+        if holds_pivot:
+            with_pivot += value
+        rest = mask & ~pivot
+        while rest:
+            bit = rest & -rest
+            with_symbol[bit] = with_symbol.get(bit, 0) + value
+            if holds_pivot:
+                with_both[bit] = with_both.get(bit, 0) + value
+            rest ^= bit
+    group = pivot
+    for bit, value in with_symbol.items():
+        if (with_both.get(bit, 0) * whole - with_pivot * value) % _MODULUS:
+            group |= bit
+    return group
+
+
+@cache
+def _point(index: int) -> int:
+    """The value at which the symbol of that index is tried: fixed, and without pattern."""
+    return pow(3, 1_000_003 * index * index + 17, _MODULUS)
 
 
 Row = Mapping[int, MultiAffine]

@@ -11,7 +11,9 @@ g_id = 1/r_id. Every symbol has rank one in the matrix, so N and D are multi-aff
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from typing import Self
 
 from gainassay.errors import InputError
 from gainassay.forms.departures import DEPARTURES
@@ -23,8 +25,8 @@ RIGHT_HAND_SIDE = -1
 
 
 @dataclass(frozen=True)
-class Gain:
-    """The gain of a topology as a ratio of multi-affine polynomials.
+class NetworkFunction:
+    """A network function of a topology as a ratio of multi-affine polynomials.
 
     Attributes
     ----------
@@ -33,7 +35,7 @@ class Gain:
     departures : tuple[tuple[str, str], ...]
         (amplifier, departure); their symbols follow those of the elements.
     numerator, denominator : MultiAffine
-        The gain is numerator / denominator.
+        The network function is numerator / denominator.
     """
 
     elements: tuple[str, ...]
@@ -45,6 +47,28 @@ class Gain:
         """Mask of the departures' symbols."""
         return ((1 << len(self.departures)) - 1) << len(self.elements)
 
+    def without_elements(self, states: Mapping[str, str]) -> Self:
+        """The function of the network in which some elements are absent, `open` or `short`.
+
+        An open element has admittance 0; for a short one, admittance infinite, the leading coefficients stay.
+        Where both polynomials vanish, both are divided by the admittance first.
+        """
+        numerator, denominator = self.numerator, self.denominator
+        for name, state in states.items():
+            bit = 1 << self.elements.index(name)
+            rests, leads = zip(numerator.split(bit), denominator.split(bit), strict=True)
+            kept, other = (rests, leads) if state == "open" else (leads, rests)
+            numerator, denominator = kept if any(kept) else other
+        return replace(self, numerator=numerator, denominator=denominator)
+
+
+class Gain(NetworkFunction):
+    """The gain of a topology."""
+
+
+class Impedance(NetworkFunction):
+    """The driving-point impedance of a topology between two of its nodes."""
+
 
 def derive(topology: Topology) -> Gain:
     """The gain of a topology.
@@ -54,14 +78,13 @@ def derive(topology: Topology) -> Gain:
     InputError
         If the nodal equations have no unique solution even with a real amplifier.
     """
-    elements = tuple(element.name for element in topology.elements)
-    departures = tuple(
-        (amplifier.name, departure.symbol) for amplifier in topology.amplifiers for departure in DEPARTURES
-    )
-    names: list[str | tuple[str, str]] = [*elements, *departures]
-    symbol = {name: MultiAffine.symbol(index) for index, name in enumerate(names)}
-    rows, columns, potential, scale = _system(topology, symbol)
-
+    names = _Names.of(topology)
+    scale = len(topology.input)
+    # A balanced pair is driven with +1 and -1 in place of +1/2 and -1/2, so that coefficients stay integers.
+    drive = dict(zip(topology.input, (1, -1), strict=False))
+    held = driven_by_voltage(topology)
+    potential = {GROUND: 0} | (drive if held else {})
+    rows, columns = _equations(topology, names, potential, {} if held else drive)
     whole = determinant(rows, columns)
     if not whole:
         raise InputError(
@@ -80,28 +103,82 @@ def derive(topology: Topology) -> Gain:
         first, second = topology.element(topology.output).between
         # The voltage across an element depends on its admittance in the denominator alone (Thevenin), so the
         # current y (v1 - v2) is multi-affine again.
-        numerator = symbol[topology.output].times(voltage(first) - voltage(second))
+        numerator = names.symbol(topology.output).times(voltage(first) - voltage(second))
     else:
         numerator = voltage(topology.output)
-    return Gain(elements, departures, numerator, whole.times(MultiAffine.constant(scale)))
+    return Gain(names.elements, names.departures, numerator, whole.times(MultiAffine.constant(scale)))
+
+
+def input_impedance(topology: Topology) -> Impedance:
+    """The impedance that the source sees at the input, between the nodes if it is a balanced pair.
+
+    A polynomial of the impedance is zero where the impedance is zero or infinite whatever the amplifiers.
+    """
+    first, second = (*topology.input, GROUND)[:2]
+    return _driving_point(topology, {GROUND: 0}, first, second)
+
+
+def output_impedance(topology: Topology) -> Impedance:
+    """The impedance that a load sees at the output, the source dead.
+
+    Between the output node and ground; where the output is the current through an element, between that
+    element's nodes with the element taken away.
+    """
+    dead = dict.fromkeys((GROUND, *(topology.input if driven_by_voltage(topology) else ())), 0)
+    if not output_is_current(topology):
+        return _driving_point(topology, dead, topology.output, GROUND)
+    first, second = topology.element(topology.output).between
+    return _driving_point(topology, dead, first, second).without_elements({topology.output: "open"})
+
+
+def _driving_point(topology: Topology, potential: Mapping[str, int], first: str, second: str) -> Impedance:
+    """Impedance between two nodes, some nodes held at 0.
+
+    With a test admittance y between the nodes the determinant is d_open + y d_short, and the impedance is
+    d_short / d_open.
+    """
+    names = _Names.of(topology)
+    test = MultiAffine.symbol(len(names.elements) + len(names.departures))
+    rows, columns = _equations(topology, names, potential, {}, (first, second, test))
+    is_open, is_short = determinant(rows, columns).split(1 << (len(names.elements) + len(names.departures)))
+    return Impedance(names.elements, names.departures, is_short, is_open)
+
+
+@dataclass(frozen=True)
+class _Names:
+    """Elements and departures of a topology, in the order of their symbols."""
+
+    elements: tuple[str, ...]
+    departures: tuple[tuple[str, str], ...]
+
+    @staticmethod
+    def of(topology: Topology) -> _Names:
+        return _Names(
+            tuple(element.name for element in topology.elements),
+            tuple((amplifier.name, departure.symbol) for amplifier in topology.amplifiers for departure in DEPARTURES),
+        )
+
+    def symbol(self, name: str | tuple[str, str]) -> MultiAffine:
+        return MultiAffine.symbol((*self.elements, *self.departures).index(name))
 
 
 def _column(topology: Topology, node: str) -> int:
     return topology.nodes().index(node)
 
 
-def _system(
-    topology: Topology, symbol: dict[str | tuple[str, str], MultiAffine]
-) -> tuple[list[dict[int, MultiAffine]], list[int], dict[str, int], int]:
-    """Rows, columns of the unknowns, held potentials, and the factor by which the source was scaled up.
+def _equations(
+    topology: Topology,
+    names: _Names,
+    potential: Mapping[str, int],
+    injected: Mapping[str, int],
+    test: tuple[str, str, MultiAffine] | None = None,
+) -> tuple[list[dict[int, MultiAffine]], list[int]]:
+    """Rows of the nodal system, and the columns of its unknowns.
 
-    A balanced pair is driven with +1 and -1 in place of +1/2 and -1/2, so that coefficients stay integers.
+    Nodes in `potential` are held at that voltage; `injected` are currents into nodes; `test` is one more
+    admittance, between two nodes.
     """
     nodes = topology.nodes()
-    scale = len(topology.input)
-    held = driven_by_voltage(topology)
-    drive = dict(zip(topology.input, (1, -1), strict=False))
-    potential = {GROUND: 0} | (drive if held else {})
     unknown = [node for node in nodes if node not in potential]
     row_of = {node: row for row, node in enumerate(unknown)}
     rows: list[dict[int, MultiAffine]] = [{} for _ in range(len(unknown) + len(topology.amplifiers))]
@@ -123,12 +200,14 @@ def _system(
                 add_voltage(row_of[here], there, -admittance)
 
     for element in topology.elements:
-        add_admittance(*element.between, symbol[element.name])
+        add_admittance(*element.between, names.symbol(element.name))
+    if test:
+        add_admittance(*test)
 
     one = MultiAffine.constant(1)
     for index, amplifier in enumerate(topology.amplifiers):
         row, current = len(unknown) + index, len(nodes) + index
-        a, g_id, r_o = (symbol[amplifier.name, departure.symbol] for departure in DEPARTURES)
+        a, g_id, r_o = (names.symbol((amplifier.name, departure.symbol)) for departure in DEPARTURES)
         add_admittance(amplifier.plus, amplifier.minus, g_id)
         add(row_of[amplifier.out], current, -one)
         add_voltage(row, amplifier.plus, one)
@@ -136,9 +215,8 @@ def _system(
         add_voltage(row, amplifier.out, -a)
         add(row, current, -a.times(r_o))
 
-    if not held:
-        for node, current_in in drive.items():
-            add(row_of[node], RIGHT_HAND_SIDE, MultiAffine.constant(current_in))
+    for node, current_in in injected.items():
+        add(row_of[node], RIGHT_HAND_SIDE, MultiAffine.constant(current_in))
 
     columns = [nodes.index(node) for node in unknown] + [len(nodes) + i for i in range(len(topology.amplifiers))]
-    return rows, columns, potential, scale
+    return rows, columns

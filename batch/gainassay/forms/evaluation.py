@@ -1,0 +1,75 @@
+"""Numbers put into a formula: its value, and the value of every ratio in it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from typing import Any
+
+from gainassay.forms.expression import (
+    Expression,
+    Number,
+    Parallel,
+    Product,
+    Quantity,
+    Series,
+    Sum,
+    children,
+)
+from gainassay.forms.render import text
+
+
+def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> Any:
+    """Value of a formula.
+
+    Parameters
+    ----------
+    values : Mapping[str, Any]
+        By name: resistances [ohm], capacitances [F], inductances [H], open-loop gains [V/V]; floats, or any
+        numbers that can be added, multiplied and divided. 0 and infinity stand for what is short and open.
+    s : Any
+        Complex frequency [rad/s]; needed with reactive elements only.
+
+    Raises
+    ------
+    KeyError
+        If a quantity has no value.
+    ZeroDivisionError
+        If the formula divides by zero.
+    """
+    match expression:
+        case Number(number):
+            return number.numerator if number.denominator == 1 else number.numerator / number.denominator
+        case Quantity(_, name, "capacitor", _):
+            return 1 / (s * values[name])
+        case Quantity(_, name, "inductor", _):
+            return s * values[name]
+        case Quantity(_, name, _, _):
+            return values[name]
+        case Series(parts) | Sum(parts):
+            return sum(value(part, values, s) for part in parts)
+        case Parallel(parts):
+            impedances = [value(part, values, s) for part in parts]
+            return 1 / sum(1 / impedance for impedance in impedances) if all(impedances) else 0
+        case Product(coefficient, over, under):
+            found: Any = coefficient.numerator
+            for factor in over:
+                found = found * value(factor, values, s)
+            for factor in under:
+                found = found / value(factor, values, s)
+            return found / coefficient.denominator if coefficient.denominator != 1 else found
+
+
+def ratios(expression: Expression, values: Mapping[str, Any], s: Any = None) -> list[tuple[str, Any]]:
+    """The formula and each ratio in it that is compared with something, as text, with its value.
+
+    So a person sees which ratio matters. Outer ratios stand before those inside them, none twice.
+    """
+    found = {expression: None} | dict.fromkeys(_compared(expression))
+    return [(text(part), value(part, values, s)) for part in found]
+
+
+def _compared(expression: Expression) -> Iterator[Expression]:
+    if isinstance(expression, Sum):
+        yield from (addend for addend in expression.addends if not isinstance(addend, Number))
+    for child in children(expression):
+        yield from _compared(child)

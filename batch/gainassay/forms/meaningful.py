@@ -11,7 +11,7 @@ output impedance are written as Blackman did, Z = Z_dead (1 + T_short)/(1 + T_op
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 
 from gainassay.errors import InputError
@@ -89,6 +89,28 @@ class Formulas:
     input_impedance: BlackmanFormula | None
     output_impedance: BlackmanFormula | None
     return_ratios: tuple[tuple[str, Expression], ...]
+
+    def ports(self) -> Iterator[tuple[str, str, Expression]]:
+        """Symbol, meaning and formula of the impedances and the return ratios that there are."""
+        if self.input_impedance:
+            yield "z_in", "input impedance [ohm]", self.input_impedance.whole
+        if self.output_impedance:
+            yield "z_out", "output impedance [ohm]", self.output_impedance.whole
+        for amplifier, ratio in self.return_ratios:
+            symbol = "T" if len(self.return_ratios) == 1 else f"T_{amplifier}"
+            yield symbol, f"return ratio of {amplifier}", ratio
+
+    def _repr_latex_(self) -> str:
+        """The gain, as a notebook shows it."""
+        from gainassay.forms.render import latex
+
+        return f"$\\displaystyle {latex(self.gain.whole)}$"
+
+    def _repr_html_(self) -> str:
+        """The same, for a notebook that shows HTML."""
+        from gainassay.forms.render import mathml
+
+        return mathml(self.gain.whole)
 
 
 def derive(topology: Topology, absent: Mapping[str, str] | None = None) -> Formulas:

@@ -54,7 +54,7 @@ TRIALS_AT_FIRST = {5: 6, 6: 4}
 
 TRIALS_OF_MORE = 3
 
-TRIALS_LATER = ((1500, 1), (600, 2))
+TRIALS_LATER = ((900, 1), (400, 2))
 """Ratios examined, and trials carried out from there on: a search that has grown that far is held short."""
 
 WORTH = 2

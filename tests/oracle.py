@@ -111,59 +111,92 @@ def _tableau(topology: Topology, ohms: Mapping[str, float], parts: Part | Mappin
 
 
 def gains(
-    topology: Topology,
-    ohms: Mapping[str, NDArray[np.float64]],
-    a_ol: NDArray[np.float64],
-    r_id: NDArray[np.float64],
-    r_o: NDArray[np.float64],
+    topology: Topology, ohms: Mapping[str, NDArray[np.float64]], parts: Sequence[Sequence[NDArray[np.float64]]]
 ) -> NDArray[np.float64]:
-    """Voltage gains or transresistances of many stages with one amplifier each, in double precision.
+    """Gains of many stages in double precision: a plain nodal solve, one matrix for each stage.
 
-    A plain nodal solve, one matrix for each stage; every array has shape (cases,).
+    Parameters
+    ----------
+    ohms : mapping
+        Resistances, each of shape (cases,); an element that is 0 everywhere joins its nodes into one.
+    parts : sequence
+        For each amplifier a_ol, r_id and r_o, each of shape (cases,).
     """
-    assert topology.gain in ("voltage", "transresistance")
-    assert len(topology.amplifiers) == 1
-    amplifier = topology.amplifiers[0]
-    known = {GROUND: 0.0}
-    if topology.gain == "voltage":
-        known |= dict(zip(topology.input, (1.0,) if len(topology.input) == 1 else (0.5, -0.5), strict=True))
-    unknown = [node for node in topology.nodes() if node not in known]
-    place = {node: index for index, node in enumerate(unknown)}
-    cases, size = len(a_ol), len(unknown) + 1
+    alias: dict[str, str] = {}
+
+    def node(name: str) -> str:
+        while name in alias:
+            name = alias[name]
+        return name
+
+    for element in topology.elements:
+        if not np.any(ohms[element.name]):
+            first, second = (node(name) for name in element.between)
+            alias[first if first not in (GROUND, *topology.input) else second] = (
+                second if first not in (GROUND, *topology.input) else first
+            )
+    held = topology.gain in ("voltage", "transconductance")
+    sources = topology.input if len(topology.input) == 1 else topology.input[:2]
+    drive = dict(zip(sources, (1.0,) if len(sources) == 1 else (0.5, -0.5), strict=True))
+    known = {GROUND: 0.0} | (drive if held else {})
+    names = dict.fromkeys(node(name) for name in topology.nodes())
+    unknown = [name for name in names if name not in known]
+    place = {name: index for index, name in enumerate(unknown)}
+    cases, size = len(parts[0][0]), len(unknown) + len(topology.amplifiers)
     matrix, right = np.zeros((cases, size, size)), np.zeros((cases, size, 1))
+
+    def add_voltage(row: int, name: str, factor: NDArray[np.float64] | float) -> None:
+        if name in place:
+            matrix[:, row, place[name]] += factor
+        else:
+            right[:, row, 0] -= factor * known[name]
+
     with np.errstate(divide="ignore"):
-        branches = [(*element.between, 1.0 / ohms[element.name]) for element in topology.elements]
-        branches.append((amplifier.plus, amplifier.minus, 1.0 / r_id))
-        slope = 1.0 / a_ol
+        branches = [
+            (node(element.between[0]), node(element.between[1]), 1.0 / ohms[element.name])
+            for element in topology.elements
+            if np.any(ohms[element.name])
+        ]
+        for amplifier, (_, r_id, _) in zip(topology.amplifiers, parts, strict=True):
+            branches.append((node(amplifier.plus), node(amplifier.minus), 1.0 / r_id))
     for first, second, siemens in branches:
         for here, there in ((first, second), (second, first)):
             if here in place:
-                matrix[:, place[here], place[here]] += siemens
-                if there in place:
-                    matrix[:, place[here], place[there]] -= siemens
-                else:
-                    right[:, place[here], 0] += siemens * known[there]
-    matrix[:, place[amplifier.out], -1] -= 1.0
-    for node, factor in ((amplifier.plus, 1.0), (amplifier.minus, -1.0)):
-        if node in place:
-            matrix[:, -1, place[node]] += factor
-        else:
-            right[:, -1, 0] -= factor * known[node]
-    matrix[:, -1, place[amplifier.out]] -= slope
-    matrix[:, -1, -1] -= slope * r_o
-    if topology.gain == "transresistance":
-        right[:, place[topology.input[0]], 0] += 1.0
-    return np.asarray(np.linalg.solve(matrix, right)[:, place[topology.output], 0])
+                add_voltage(place[here], here, siemens)
+                add_voltage(place[here], there, -siemens)
+    for index, (amplifier, (a_ol, _, r_o)) in enumerate(zip(topology.amplifiers, parts, strict=True)):
+        row, slope = len(unknown) + index, 1.0 / a_ol
+        matrix[:, place[node(amplifier.out)], row] -= 1.0
+        add_voltage(row, node(amplifier.plus), 1.0)
+        add_voltage(row, node(amplifier.minus), -1.0)
+        add_voltage(row, node(amplifier.out), -slope)
+        matrix[:, row, row] -= slope * r_o
+    if not held:
+        for name, value in drive.items():
+            right[:, place[node(name)], 0] += value
+    solved = np.linalg.solve(matrix, right)[:, :, 0]
+
+    def voltage(name: str) -> NDArray[np.float64] | float:
+        return solved[:, place[name]] if name in place else known[name]
+
+    if topology.gain in ("transconductance", "current"):
+        first, second = (node(name) for name in topology.element(topology.output).between)
+        return np.asarray((voltage(first) - voltage(second)) / ohms[topology.output])
+    return np.asarray(voltage(node(topology.output)))
 
 
 def random_ohms(topology: Topology, rng: random.Random, low: float = 1.0, high: float = 1e8) -> dict[str, float]:
-    """Values for every element, evenly spread over the decades; one optional element in four is left out."""
-    return {
-        element.name: {"open": OPEN, "short": 0.0}[element.absent]
-        if element.absent != "error" and rng.random() < 0.25
-        else 10.0 ** rng.uniform(np.log10(low), np.log10(high))
-        for element in topology.elements
-    }
+    """Resistances at 0 Hz, evenly spread over the decades; one optional element in four is left out."""
+    at_dc = {"capacitor": OPEN, "inductor": 0.0}
+    blank = {"open": OPEN, "short": 0.0}
+    found = {}
+    for element in topology.elements:
+        value = 10.0 ** rng.uniform(np.log10(low), np.log10(high))
+        left_out = rng.random() < 0.25
+        if element.absent != "error" and left_out:
+            value = blank[element.absent]
+        found[element.name] = at_dc.get(element.kind, value)
+    return found
 
 
 def random_part(rng: random.Random) -> Part:

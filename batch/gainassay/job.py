@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from gainassay.contracts import documents
+from gainassay.errors import InputError
 
 
 @dataclass(frozen=True)
@@ -67,6 +68,8 @@ def read(path: Path) -> Job:
     InputError
         If the file cannot be read or does not follow `schemas/job.schema.json`.
     """
+    if not str(path).isprintable():
+        raise InputError(f"{str(path)!r}: is not a path in printable UTF-8; rename the folder or the file")
     document = documents.read_toml(path, "job")
     here = path.parent
     results = {**_defaults("results"), **document.get("results", {})}

@@ -80,15 +80,15 @@ def nodal_seconds(prepared: service.Prepared, groups: tuple[blocks.Group, ...]) 
             ends = prepared.parts.worst[:, p, None] * departures
             values = np.repeat(corners, ends.shape[1], axis=0)
             slope, g_id, r_o = np.tile(ends, len(corners))
-            values = np.vstack([one.box.values[:, s], np.where(values == 0.0, 1e-9, values)])
+            values = np.vstack([one.box.values[:, s], values])
             slope, g_id, r_o = (
                 np.insert(column, 0, prepared.parts.nominal[index, p])
                 for index, column in enumerate((slope, g_id, r_o))
             )
-            ohms = dict(zip(one.form.elements, np.where(values == 0.0, 1e-9, values).T, strict=True))
+            ohms = dict(zip(one.form.elements, values.T, strict=True))
             start = perf_counter()
             with np.errstate(divide="ignore"):
-                oracle.gains(stages.topology, ohms, 1.0 / slope, 1.0 / g_id, r_o)
+                oracle.gains(stages.topology, ohms, [(1.0 / slope, 1.0 / g_id, r_o)])
             seconds += perf_counter() - start
             matrices += len(slope)
             pairs += 1

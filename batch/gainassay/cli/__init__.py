@@ -26,7 +26,17 @@ COMMANDS = {
 INTERNAL_FAULT, UNUSABLE, INTERRUPTED = 1, 2, 130
 
 
+class _ReaderGone(Exception):
+    """Whoever read our output has gone, as `| head` does; click itself would end with status 1."""
+
+
 class _Commands(click.Group):
+    def invoke(self, ctx: click.Context) -> object:
+        try:
+            return super().invoke(ctx)
+        except (BrokenPipeError, _ReaderGone):
+            raise _ReaderGone from None
+
     def list_commands(self, ctx: click.Context) -> list[str]:
         return list(COMMANDS)
 
@@ -71,17 +81,20 @@ def main() -> NoReturn:
             stream.reconfigure(errors="backslashreplace")
     try:
         gainassay.main(standalone_mode=False, prog_name="gainassay")
-        sys.stdout.flush()
+        if sys.stdout is not None:
+            sys.stdout.flush()
     except click.ClickException as error:
         error.show()
         sys.exit(UNUSABLE)
     except GainassayError as error:
-        click.echo(f"gainassay: {error}", err=True)
+        from gainassay.cli.shared import printable
+
+        click.echo(printable(f"gainassay: {error}"), err=True)
         sys.exit(error.exit_status)
     except (click.Abort, KeyboardInterrupt):
         click.echo("gainassay: interrupted; nothing of this run was kept", err=True)
         sys.exit(INTERRUPTED)
-    except BrokenPipeError:
+    except (BrokenPipeError, _ReaderGone):
         # The reader of our output has gone, as `| head` does. Nothing more can be said to it.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         sys.exit(0)

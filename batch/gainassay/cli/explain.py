@@ -19,7 +19,7 @@ from gainassay.report import pair
 @click.argument("part")
 @shared.json_option
 def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
-    """Show all that decides STAGE with PART: gains, every term of the error, the worst corner, the evidence."""
+    """Show all that decides STAGE with PART in JOB: gains, every term of the error, the worst corner, the evidence."""
     prepared = service.prepare(job)
     groups = service.groups_of(prepared.stages, prepared.parts)
     found = explanation.explain(prepared.stages, prepared.parts, groups, stage, part)

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Callable, Iterable
 from pathlib import Path
 from typing import Any, TypeVar
 
 import click
 
-from gainassay.errors import ConditionMet
+from gainassay.errors import ConditionMet, InputError
 
 Command = TypeVar("Command", bound=Callable[..., Any])
 
@@ -27,20 +28,38 @@ def fail_on_option(*conditions: str) -> Callable[[Command], Command]:
     )
 
 
+CONTROL = re.compile(r"[\x00-\x09\x0b-\x1f\x7f-\x9f]")
+"""Characters that a terminal obeys; line feeds apart."""
+
+
+def printable(text: str) -> str:
+    """Text whose control characters a terminal shows and does not obey."""
+    return CONTROL.sub(lambda found: f"\\u{ord(found[0]):04x}", text)
+
+
 def lines(text: Iterable[str]) -> None:
     """Results, on standard output."""
-    click.echo("\n".join(text))
+    _write("\n".join(text))
 
 
 def data(value: Any) -> None:
     """Results as JSON, on standard output; what is not a finite number is null."""
-    click.echo(json.dumps(_finite(value), indent=1, ensure_ascii=False, default=str))
+    _write(json.dumps(_finite(value), indent=1, ensure_ascii=False, default=str))
+
+
+def _write(text: str) -> None:
+    try:
+        click.echo(printable(text))
+    except BrokenPipeError:
+        raise
+    except OSError as error:
+        raise InputError(f"standard output cannot be written: {error.strerror or error}") from None
 
 
 def warn(warnings: Iterable[str]) -> None:
     """Warnings, on standard error."""
     for warning in warnings:
-        click.echo(f"warning: {warning}", err=True)
+        click.echo(printable(f"warning: {warning}"), err=True)
 
 
 def meet(conditions: Iterable[str], counts: dict[str, int]) -> None:

@@ -8,19 +8,23 @@ import click
 
 from gainassay.cli import shared
 from gainassay.forms.library import library
+from gainassay.report import formulas
 from gainassay.report.text import table
 
 
 @click.command()
+@click.option("--formulas", "as_page", is_flag=True, help="Print a page of Markdown with the formulas of all.")
 @shared.json_option
-def topologies(as_json: bool) -> None:
-    """List the built-in topologies, with the columns of their elements; those in brackets may be blank."""
-    found = library().values()
-    if as_json:
-        shared.data([{key: v for key, v in asdict(t).items() if key != "source"} for t in found])
-        return
-    rows = [
-        [t.name, " ".join(e.name if e.absent == "error" else f"[{e.name}]" for e in t.elements), t.summary]
-        for t in found
-    ]
-    shared.lines(table(["topology", "elements", "summary"], rows))
+def topologies(as_page: bool, as_json: bool) -> None:
+    """List the topologies, with the columns of their elements; those in brackets may be blank."""
+    found = list(library().values())
+    if as_page:
+        shared.lines(formulas.page(found))
+    elif as_json:
+        shared.data([{key: value for key, value in asdict(t).items() if key != "source"} for t in found])
+    else:
+        rows = [
+            [t.name, " ".join(e.name if e.absent == "error" else f"[{e.name}]" for e in t.elements), t.summary]
+            for t in found
+        ]
+        shared.lines(table(["topology", "elements", "summary"], rows))

@@ -31,9 +31,12 @@ def read_toml(path: Path, kind: str) -> dict[str, Any]:
         raise InputError(f"{path}: cannot be read: {error.strerror or error}") from None
     except UnicodeDecodeError as error:
         raise InputError(f"{path}: is not UTF-8 text (byte {error.start}); save it as UTF-8") from None
-    except (tomllib.TOMLDecodeError, RecursionError) as error:
+    except (ValueError, RecursionError) as error:
         raise InputError(f"{path}: is not valid TOML: {error}") from None
-    faults = [*_not_finite(document, ""), *_faults(document, kind)]
+    try:
+        faults = [*_not_finite(document, ""), *_faults(document, kind)]
+    except RecursionError:
+        raise InputError(f"{path}: is nested too deeply") from None
     if faults:
         raise InputError("\n".join(f"{path}: {fault}" for fault in faults))
     return document
@@ -62,6 +65,8 @@ def _faults(document: dict[str, Any], kind: str) -> Iterator[str]:
 
 def _not_finite(value: Any, place: str) -> Iterator[str]:
     """Faults for `nan` and `inf`, which TOML allows and no bound of a schema catches."""
+    if isinstance(value, int) and abs(value) > 2**63:
+        yield f"{place} is an integer beyond 64 bits; wanted is a smaller number"
     if isinstance(value, float) and not math.isfinite(value):
         yield f"{place} is {value}; wanted is a finite number"
     items = value.items() if isinstance(value, dict) else enumerate(value) if isinstance(value, list) else ()

@@ -12,6 +12,9 @@ from numpy.typing import NDArray
 
 from gainassay.contracts.tables import Column
 
+SMALLEST, LARGEST = 1e-60, 1e60
+"""Magnitudes beyond which nothing is measured, and products of a few numbers would overflow."""
+
 PLAIN = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]{1,4})?$"
 """Decimal text. ASCII digits only: other parsers disagree on full-width digits, `1_000`, `0x10` and `1,5`."""
 
@@ -58,7 +61,7 @@ def numbers(cells: pa.Array, column: Column) -> Numbers:
     """
     if pa.types.is_floating(cells.type) or pa.types.is_integer(cells.type):
         blank = np.asarray(cells.is_null())
-        values = np.asarray(pc.fill_null(cells.cast(pa.float64()), np.nan))
+        values = np.asarray(pc.fill_null(cells.cast(pa.float64(), safe=False), np.nan))
         readable = ~blank
     else:
         text = text_of(cells)
@@ -73,6 +76,8 @@ def numbers(cells: pa.Array, column: Column) -> Numbers:
     reason[readable & np.isnan(values)] = "is nan, which is no number"
     reason[readable & np.isinf(values)] = "is infinite or too large"
     with np.errstate(invalid="ignore"):
+        outside = (values != 0.0) & ((np.abs(values) < SMALLEST) | (np.abs(values) > LARGEST))
+        reason[outside & np.isfinite(values)] = f"is beyond all measure; wanted is 0 or {SMALLEST:g} to {LARGEST:g}"
         if column.lowest:
             bound, allowed = column.lowest
             below = values < bound if allowed else values <= bound

@@ -1,4 +1,4 @@
-"""Derived forms, kept on disk under a hash of the topology and of the code that derives them."""
+"""Derived forms and formulas, kept on disk under a hash of the topology and of the code that derives them."""
 
 from __future__ import annotations
 
@@ -8,21 +8,30 @@ import json
 import logging
 import os
 import tempfile
+from collections.abc import Callable, Mapping
 from dataclasses import asdict
 from functools import cache
 from pathlib import Path
-from typing import Any
+from typing import Any, TypeVar
 
 from platformdirs import user_cache_path
 
-from gainassay.forms import soundness
+from gainassay.forms import meaningful, soundness
+from gainassay.forms.expression import Quantity
 from gainassay.forms.form import Form, Ratio, derive
+from gainassay.forms.meaningful import BlackmanFormula, Formulas, GainFormula
+from gainassay.forms.render import expression_of, tree
 from gainassay.forms.topology import Topology
 
 log = logging.getLogger(__name__)
 
-DERIVING_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "soundness.py", "topology.py")
+Derived = TypeVar("Derived")
+
+FORM_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "soundness.py", "topology.py")
 """Files of this room whose change makes every kept form stale."""
+
+FORMULA_CODE = (*FORM_CODE, "expression.py", "meaningful.py", "proof.py", "simplest.py")
+"""Files of this room whose change makes every kept formula stale."""
 
 
 def folder() -> Path:
@@ -42,51 +51,86 @@ def form_of(topology: Topology) -> Form:
     InputError
         If the topology makes no sense, or has no form.
     """
-    path = folder() / "forms" / f"{key(topology)}.json"
-    kept = _read(path)
-    if kept is not None:
-        return kept
-    soundness.network(topology)
-    form = derive(topology)
-    soundness.function(topology, form)
-    _write(path, form)
-    return form
+
+    def made() -> Form:
+        soundness.network(topology)
+        form = derive(topology)
+        soundness.function(topology, form)
+        return form
+
+    path = folder() / "forms" / f"{_key(topology, FORM_CODE, {})}.json"
+    return _kept(path, made, asdict, _form)
 
 
-def key(topology: Topology) -> str:
-    """SHA-256 of the topology's content and of the deriving code."""
-    return hashlib.sha256(f"{topology.content_hash()} {_code_hash()}".encode()).hexdigest()
+def formulas_of(topology: Topology, absent: Mapping[str, str] | None = None) -> Formulas:
+    """The formulas of a topology: read from the cache, or derived, proved and kept.
+
+    A formula is made only with its proof, so an entry stands for a proof that was carried out.
+
+    Parameters
+    ----------
+    absent : Mapping[str, str], optional
+        Elements that are left out, each `open` or `short`.
+
+    Raises
+    ------
+    InputError
+        If the topology makes no sense, or has no form.
+    """
+    states = dict(absent or {})
+
+    def made() -> Formulas:
+        form_of(topology)
+        return meaningful.derive(topology, states)
+
+    path = folder() / "formulas" / f"{_key(topology, FORMULA_CODE, states)}.json"
+    return _kept(path, made, _formulas_data, _formulas)
+
+
+def _key(topology: Topology, code: tuple[str, ...], absent: Mapping[str, str]) -> str:
+    """SHA-256 of the topology's content, of what is left out, and of the deriving code."""
+    return _sha256([topology.content_hash(), sorted(absent.items()), _code_hash(code)])
 
 
 @cache
-def _code_hash() -> str:
+def _code_hash(names: tuple[str, ...]) -> str:
     here = Path(__file__).parent
-    return hashlib.sha256(b"\0".join((here / name).read_bytes() for name in DERIVING_CODE)).hexdigest()
+    return hashlib.sha256(b"\0".join((here / name).read_bytes() for name in names)).hexdigest()
 
 
 def content_hash(form: Form) -> str:
     """SHA-256 of a form's content."""
-    return hashlib.sha256(json.dumps(asdict(form), sort_keys=True).encode()).hexdigest()
+    return _sha256(asdict(form))
 
 
-def _read(path: Path) -> Form | None:
+def _sha256(value: Any) -> str:
+    return hashlib.sha256(json.dumps(value, sort_keys=True).encode()).hexdigest()
+
+
+def _kept(
+    path: Path,
+    make: Callable[[], Derived],
+    encode: Callable[[Derived], dict[str, Any]],
+    decode: Callable[[dict[str, Any]], Derived],
+) -> Derived:
+    """What is kept at `path` if it is there and intact, else what `make` makes, kept there for the next time."""
     try:
         entry = json.loads(path.read_text(encoding="utf-8"))
-        form = _form(entry["form"])
-        intact: bool = content_hash(form) == entry["sha256"]
+        if _sha256(entry["content"]) == entry["sha256"]:
+            return decode(entry["content"])
+        log.warning("%s: damaged cache entry; derived anew", path)
     except FileNotFoundError:
-        return None
+        pass
     except (OSError, ValueError, KeyError, TypeError, AttributeError, RecursionError):
-        intact = False
-    if not intact:
-        log.warning("%s: damaged cache entry; the form is derived anew", path)
-        return None
-    return form
+        log.warning("%s: damaged cache entry; derived anew", path)
+    made = make()
+    _write(path, encode(made))
+    return made
 
 
-def _write(path: Path, form: Form) -> None:
+def _write(path: Path, content: dict[str, Any]) -> None:
     """Write aside, then rename: another process sees the whole entry or none."""
-    entry = json.dumps({"sha256": content_hash(form), "form": asdict(form)})
+    entry = json.dumps({"sha256": _sha256(content), "content": content})
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
         handle, aside = tempfile.mkstemp(dir=path.parent, suffix=".aside")
@@ -99,7 +143,7 @@ def _write(path: Path, form: Form) -> None:
                 Path(aside).unlink()
             raise
     except OSError as error:
-        log.warning("%s: the form cannot be kept for the next run: %s", path, error.strerror or error)
+        log.warning("%s: cannot be kept for the next time: %s", path, error.strerror or error)
 
 
 def _form(data: dict[str, Any]) -> Form:
@@ -121,3 +165,31 @@ def _ratio(data: dict[str, Any]) -> Ratio:
         return tuple((int(value), tuple(int(e) for e in exponents)) for value, exponents in terms)
 
     return Ratio(polynomial(data["numerator"]), polynomial(data["denominator"]))
+
+
+def _formulas_data(formulas: Formulas) -> dict[str, Any]:
+    def blackman(formula: BlackmanFormula | None) -> list[Any] | None:
+        return None if formula is None else [tree(formula.dead), tree(formula.shorted), tree(formula.opened)]
+
+    gain = formulas.gain
+    return {
+        "quantities": [tree(quantity) for quantity in formulas.quantities],
+        "gain": [tree(gain.ideal), tree(gain.numerator), tree(gain.denominator)],
+        "input_impedance": blackman(formulas.input_impedance),
+        "output_impedance": blackman(formulas.output_impedance),
+        "return_ratios": [[amplifier, tree(ratio)] for amplifier, ratio in formulas.return_ratios],
+    }
+
+
+def _formulas(data: dict[str, Any]) -> Formulas:
+    def blackman(trees: list[Any] | None) -> BlackmanFormula | None:
+        return None if trees is None else BlackmanFormula(*map(expression_of, trees))
+
+    quantities = tuple(expression_of(found) for found in data["quantities"])
+    return Formulas(
+        quantities=tuple(quantity for quantity in quantities if isinstance(quantity, Quantity)),
+        gain=GainFormula(*map(expression_of, data["gain"])),
+        input_impedance=blackman(data["input_impedance"]),
+        output_impedance=blackman(data["output_impedance"]),
+        return_ratios=tuple((amplifier, expression_of(ratio)) for amplifier, ratio in data["return_ratios"]),
+    )

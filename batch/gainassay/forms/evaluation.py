@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
+import numpy as np
+
 from gainassay.forms.expression import (
     Expression,
     Number,
@@ -25,9 +27,9 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
     ----------
     values : Mapping[str, Any]
         By name: resistances [ohm], capacitances [F], inductances [H], open-loop gains [V/V]; floats, or any
-        numbers that can be added, multiplied and divided. 0 and infinity stand for what is short and open.
+        numbers or arrays that can be added, multiplied and divided. 0 and infinity stand for what is short and open.
     s : Any
-        Complex frequency [rad/s]; needed with reactive elements only.
+        Complex frequency [rad/s]; None is 0 Hz.
 
     Raises
     ------
@@ -41,9 +43,9 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
         case Number(number):
             return number.numerator if number.denominator == 1 else number.numerator / number.denominator
         case Quantity(_, name, "capacitor", _):
-            return 1 / (s * values[name])
+            return np.inf if s is None else 1 / (s * values[name])
         case Quantity(_, name, "inductor", _):
-            return s * values[name]
+            return 0 if s is None else s * values[name]
         case Quantity(_, name, _, _):
             return values[name]
         case Sum((Number(number), *rest)) if number.denominator != 1:
@@ -54,7 +56,9 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
             return sum(value(part, values, s) for part in parts)
         case Parallel(parts):
             impedances = [value(part, values, s) for part in parts]
-            return 1 / sum(1 / impedance for impedance in impedances) if all(impedances) else 0
+            if any(np.ndim(impedance) == 0 and impedance == 0 for impedance in impedances):
+                return 0
+            return 1 / sum(1 / impedance for impedance in impedances)
         case Product(coefficient, over, under):
             found = coefficient.numerator
             for factor in over:

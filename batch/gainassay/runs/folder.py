@@ -20,6 +20,9 @@ from gainassay.errors import InputError
 from gainassay.runs.tables import sync
 
 MANIFEST = "run.json"
+NEEDED = {"run", "started", "inputs", "pairs", "verdicts", "files"}
+"""Keys without which a file of that name is no manifest."""
+
 ASIDE = ".unfinished-"
 
 
@@ -83,8 +86,10 @@ def begin(home: Path, fingerprint: str) -> Iterator[Unfinished]:
     folder = home / f"{ASIDE}{run}"
     try:
         folder.mkdir(parents=True)
-    except OSError as error:
-        raise InputError(f"{home}: results cannot be written there: {error.strerror or error}") from None
+    except (OSError, ValueError) as error:
+        raise InputError(
+            f"{home}: results cannot be written there: {getattr(error, 'strerror', None) or error}"
+        ) from None
     try:
         yield Unfinished(run, started, folder, home)
     except OSError as error:
@@ -117,7 +122,11 @@ def listed(home: Path) -> Listed:
             unfinished.append(folder.name)
         elif folder.is_dir():
             try:
-                runs.append(json.loads((folder / MANIFEST).read_text(encoding="utf-8")))
-            except (OSError, ValueError):
+                manifest = json.loads((folder / MANIFEST).read_text(encoding="utf-8"))
+            except (OSError, ValueError, RecursionError):
+                manifest = None
+            if isinstance(manifest, dict) and manifest.keys() >= NEEDED:
+                runs.append(manifest)
+            else:
                 unreadable.append(folder.name)
     return Listed(tuple(runs), tuple(unfinished), tuple(unreadable))

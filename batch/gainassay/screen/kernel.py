@@ -152,10 +152,10 @@ def _worst(
             numerator += e
             np.abs(numerator, out=scratch)
             np.greater(scratch, magnitude, out=larger)
-            np.copyto(magnitude, scratch, where=larger)
+            np.maximum(magnitude, scratch, out=magnitude)  # nan stays: a corner that overflows bounds nothing
             np.copyto(worst, numerator, where=larger)
             np.copyto(corner, j * len(active_sets) + q, where=larger)
-    corner[~bounded | ~np.isfinite(worst)] = UNBOUNDED
+    corner[~bounded | ~np.isfinite(magnitude)] = UNBOUNDED
     return worst, corner
 
 

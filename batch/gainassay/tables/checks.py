@@ -7,14 +7,22 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
+import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.quantities import Numbers, numbers, text_of
 from gainassay.contracts.tables import Column
+from gainassay.errors import InputError
 from gainassay.tables.rejects import Reject, Rejects
-from gainassay.tables.sources import RawTable, shown
+from gainassay.tables.sources import RawTable, is_number, shown
+
+LONGEST_NAME = 200
+"""Characters of the name of a stage or part."""
+
+MOST_LISTED = 3
+"""Other rows that a repeated name's reason lists."""
 
 
 @dataclass
@@ -41,32 +49,49 @@ class Checking:
         value = self.raw.columns[column][position].as_py()
         return "" if value is None else shown(str(value))
 
+    def cells(self, column: str) -> pa.Array:
+        """A column of text or numbers.
+
+        Raises
+        ------
+        InputError
+            If it holds something else.
+        """
+        cells = self.raw.columns[column]
+        if not pa.types.is_string(cells.type) and not is_number(cells):
+            raise InputError(
+                f"{self.raw.source}: column '{column}' holds {cells.type}, which is neither text nor number, "
+                "or text that is not UTF-8; convert the column"
+            )
+        return cells
+
     def column(self, column: Column) -> Numbers:
         """A column's numbers, its refused cells rejected; all blank if the table does not have it."""
         count = len(self.raw.rows)
         if column.name not in self.raw.columns:
             return Numbers(np.full(count, np.nan), np.ones(count, dtype=bool), {})
-        found = numbers(self.raw.columns[column.name], column)
+        found = numbers(self.cells(column.name), column)
         for position, reason in found.refused.items():
             self.refuse(position, column.name, reason)
         return found
 
     def names(self, column: str) -> NDArray[np.object_]:
         """The names in a key column; blank, unprintable and repeated names are rejected."""
-        text = text_of(self.raw.columns[column])
+        text = text_of(self.cells(column))
         names = np.array(text.to_pylist(), dtype=object)
         for position in np.flatnonzero(names == ""):
             self.refuse(int(position), column, "is blank; each row needs a name")
-        for position in np.flatnonzero(np.asarray(pc.match_substring_regex(text, r"[\x00-\x1f\x7f]"))):
+        for position in np.flatnonzero(np.asarray(pc.match_substring_regex(text, r"\p{Cc}"))):
             self.refuse(int(position), column, "holds a control character; use printable text")
-        counted = pc.value_counts(text)
-        repeated = counted.field("values").filter(pc.greater(counted.field("counts"), 1))
-        for position in np.flatnonzero(np.asarray(pc.is_in(text, value_set=repeated))):
-            if names[position] != "":
-                rows = self.raw.rows[np.flatnonzero(names == names[position])]
-                others = [str(row) for row in rows if row != self.raw.rows[position]]
-                listed = ", ".join(others[:3]) + (", ..." if len(others) > 3 else "")
-                self.refuse(int(position), column, f"stands more than once: also in row {listed}; which is meant?")
+        for position in np.flatnonzero(np.asarray(pc.greater(pc.utf8_length(text), LONGEST_NAME))):
+            self.refuse(int(position), column, f"is longer than {LONGEST_NAME} characters; shorten the name")
+        for name, positions in _repeated(names).items():
+            rows = [int(self.raw.rows[position]) for position in positions]
+            for position, row in zip(positions, rows, strict=True):
+                others = [str(other) for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
+                listed = ", ".join(others) + (", ..." if len(rows) > MOST_LISTED + 1 else "")
+                if name:
+                    self.refuse(position, column, f"stands more than once: also in row {listed}; which is meant?")
         return names
 
     def good(self) -> NDArray[np.bool_]:
@@ -78,6 +103,14 @@ class Checking:
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
         return tuple(sorted(self.rejects.found))
+
+
+def _repeated(names: NDArray[np.object_]) -> dict[str, list[int]]:
+    """Positions of each name that stands more than once."""
+    places: dict[str, list[int]] = {}
+    for position, name in enumerate(names):
+        places.setdefault(name, []).append(position)
+    return {name: positions for name, positions in places.items() if len(positions) > 1}
 
 
 def unknown_columns(raw: RawTable, known: Iterable[str]) -> tuple[str, ...]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import codecs
 import csv
 import hashlib
 from dataclasses import dataclass
@@ -9,6 +10,7 @@ from pathlib import Path
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from gainassay.errors import InputError
@@ -27,7 +29,7 @@ class RawTable:
     source : str
         What messages call it.
     columns : dict[str, pyarrow.Array]
-        Cells: strings, or numbers where the file holds numbers.
+        Cells: strings, or numbers where the file holds numbers; of another type only what cannot be text.
     rows : ndarray of int, shape (rows,)
         Row in the file: a CSV's header is row 1, as a spreadsheet counts; a Parquet file's first row is 1.
     ragged : tuple[Reject, ...]
@@ -56,8 +58,8 @@ def read(path: Path) -> RawTable:
             sha256 = hashlib.file_digest(file, "sha256").hexdigest()
     except FileNotFoundError:
         raise InputError(f"{path}: there is no such file") from None
-    except OSError as error:
-        raise InputError(f"{path}: cannot be read: {error.strerror or error}") from None
+    except (OSError, ValueError) as error:
+        raise InputError(f"{path}: cannot be read: {getattr(error, 'strerror', None) or error}") from None
     match path.suffix.lower():
         case ".csv":
             columns, rows, ragged = _csv(path)
@@ -83,12 +85,17 @@ def shown(text: str) -> str:
 def _csv(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reject, ...]]:
     import pyarrow.csv as pacsv
 
+    quotes = _utf_8(path)
     header = _header(path)
     ragged: list[Reject] = []
 
     def keep_aside(row: pacsv.InvalidRow) -> str:
         cells = f"the row has {row.actual_columns} cells, the header has {row.expected_columns}"
-        ragged.append(Reject(str(path), row.number, "", shown(row.text), f"{cells}; look for a stray comma or quote"))
+        try:
+            text = row.text
+        except UnicodeDecodeError:
+            return "error"
+        ragged.append(Reject(str(path), row.number, "", shown(text), f"{cells}; look for a stray comma or quote"))
         return "skip"
 
     try:
@@ -105,10 +112,28 @@ def _csv(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reje
         )
     except (pa.ArrowInvalid, pa.ArrowKeyError, UnicodeDecodeError) as error:
         raise InputError(f"{path}: cannot be read as CSV in UTF-8: {str(error).splitlines()[0]}") from None
+    if quotes % 2 and table.num_rows and any("\n" in (column[-1].as_py() or "") for column in table.columns):
+        row = 1 + table.num_rows + len(ragged)
+        raise InputError(f"{path}: row {row}: a quote is opened and never closed; close or remove it")
     aside = {reject.row for reject in ragged}
     numbers = np.arange(2, 2 + table.num_rows + len(aside))
     rows = numbers[~np.isin(numbers, list(aside))] if aside else numbers
     return {name: _whole(table.column(name)) for name in header}, rows, tuple(ragged)
+
+
+def _utf_8(path: Path) -> int:
+    """The number of double quotes in a file that must be UTF-8."""
+    decoder, quotes, place = codecs.getincrementaldecoder("utf-8")(), 0, 0
+    try:
+        with path.open("rb") as file:
+            while chunk := file.read(1 << 20):
+                quotes += chunk.count(b'"')
+                decoder.decode(chunk)
+                place += len(chunk)
+        decoder.decode(b"", final=True)
+    except UnicodeDecodeError as error:
+        raise InputError(f"{path}: is not UTF-8 text (byte {place + error.start}); save it as CSV in UTF-8") from None
+    return quotes
 
 
 def _header(path: Path) -> list[str]:
@@ -133,20 +158,25 @@ def _parquet(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[
     except (pa.ArrowException, OSError) as error:
         raise InputError(f"{path}: cannot be read as Parquet: {str(error).splitlines()[0]}") from None
     _refuse_repeated(path, table.column_names)
-    columns = {name: _plain_type(path, name, _whole(table.column(name))) for name in table.column_names}
+    columns = {name: _plain_type(_whole(table.column(name))) for name in table.column_names}
     return columns, np.arange(1, 1 + table.num_rows), ()
 
 
-def _plain_type(path: Path, name: str, cells: pa.Array) -> pa.Array:
-    """Numbers as they are, everything else as text."""
-    if pa.types.is_floating(cells.type) or pa.types.is_integer(cells.type):
+def _plain_type(cells: pa.Array) -> pa.Array:
+    """Numbers as they are, what can be text as text; the rest as it is, for whoever reads it to refuse."""
+    if is_number(cells):
         return cells
     try:
-        return cells.cast(pa.string())
+        text = cells.cast(pa.string())
+        text.validate(full=True)
     except pa.ArrowException:
-        raise InputError(
-            f"{path}: column '{name}' holds {cells.type}, which is neither text nor number; convert the column"
-        ) from None
+        return cells
+    return text
+
+
+def is_number(cells: pa.Array) -> bool:
+    """Whether a column holds numbers, not text."""
+    return bool(pa.types.is_floating(cells.type) or pa.types.is_integer(cells.type))
 
 
 def _refuse_repeated(path: Path, header: list[str]) -> None:
@@ -165,7 +195,7 @@ def _filled(columns: dict[str, pa.Array], count: int) -> NDArray[np.bool_]:
     filled = np.zeros(count, dtype=bool)
     for cells in columns.values():
         if pa.types.is_string(cells.type):
-            filled |= ~np.asarray(pa.compute.match_substring_regex(pa.compute.fill_null(cells, ""), r"^\s*$"))
+            filled |= ~np.asarray(pc.match_substring_regex(pc.fill_null(cells, ""), r"^\s*$"))
         else:
             filled |= np.asarray(cells.is_valid())
     return filled

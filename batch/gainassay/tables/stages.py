@@ -156,7 +156,7 @@ def _require_columns(raw: sources.RawTable, path: Path) -> None:
 
 
 def _topologies(checking: Checking, library: Mapping[str, Topology]) -> NDArray[np.object_]:
-    chosen = np.array(text_of(checking.raw.columns["topology"]).to_pylist(), dtype=object)
+    chosen = np.array(text_of(checking.cells("topology")).to_pylist(), dtype=object)
     for position, name in enumerate(chosen):
         if name == "":
             checking.refuse(position, "topology", "is blank; name the stage's topology")

@@ -1,0 +1,173 @@
+"""The formulas of a topology: for a terminal, for LaTeX, for a browser, for a program, and as a page of all."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from html import escape
+from typing import Any
+
+from gainassay.forms import nodal, render
+from gainassay.forms.cache import content_hash, form_of, formulas_of
+from gainassay.forms.evaluation import ratios
+from gainassay.forms.expression import Expression
+from gainassay.forms.meaningful import Formulas
+from gainassay.forms.multiaffine import MultiAffine
+from gainassay.forms.topology import Topology, gain_unit
+from gainassay.report.text import table
+
+LONGEST_ON_PAGE = 1_000
+"""Characters of a formula that the page of all topologies still shows."""
+
+
+@dataclass(frozen=True)
+class Named:
+    """A formula with what it is called.
+
+    Attributes
+    ----------
+    symbol : str
+        What stands left of the equals sign.
+    meaning : str
+        What it is, with its unit.
+    expression : Expression
+        The formula.
+    """
+
+    symbol: str
+    meaning: str
+    expression: Expression
+
+
+def named(topology: Topology, formulas: Formulas) -> Iterator[Named]:
+    """The formulas in the order in which they are read."""
+    gain = formulas.gain
+    unit = gain_unit(topology)
+    yield Named("G", f"ideal gain [{unit}]", gain.ideal)
+    yield Named("gain", f"closed-loop gain [{unit}]: ideal gain x correction factor", gain.whole)
+    if formulas.input_impedance:
+        yield Named(
+            "z_in",
+            "input impedance [ohm]: amplifiers dead x (1 + T shorted)/(1 + T open)",
+            formulas.input_impedance.whole,
+        )
+    if formulas.output_impedance:
+        yield Named(
+            "z_out",
+            "output impedance [ohm]: amplifiers dead x (1 + T shorted)/(1 + T open)",
+            formulas.output_impedance.whole,
+        )
+    for amplifier, ratio in formulas.return_ratios:
+        symbol = "T" if len(formulas.return_ratios) == 1 else f"T_{amplifier}"
+        yield Named(symbol, f"return ratio of {amplifier}", ratio)
+
+
+def text(topology: Topology, formulas: Formulas, unicode: bool, width: int) -> list[str]:
+    """All formulas, laid out on lines of a width."""
+    lines = [f"{topology.name}: {topology.summary}"]
+    if topology.known_as:
+        lines.append(f"Known as: {', '.join(topology.known_as)}")
+    lines += [f"{e.name} may be blank: {e.absent}" for e in topology.elements if e.absent != "error"]
+    for formula in named(topology, formulas):
+        start = f"  {formula.symbol} = "
+        shown = render.lines(formula.expression, width - len(start), unicode)
+        lines += ["", formula.meaning, start + shown[0], *(" " * len(start) + line for line in shown[1:])]
+    return lines
+
+
+def latex(topology: Topology, formulas: Formulas) -> list[str]:
+    """The formulas as the lines of a LaTeX document's body (with amsmath)."""
+    lines = []
+    for formula in named(topology, formulas):
+        symbol = formula.symbol if len(formula.symbol) == 1 else rf"\mathrm{{{formula.symbol.replace('_', ' ')}}}"
+        lines += [f"% {formula.meaning}", rf"\[ {symbol} = {render.latex(formula.expression)} \]"]
+    return lines
+
+
+def mathml(topology: Topology, formulas: Formulas) -> list[str]:
+    """The formulas as a page that a browser shows."""
+    title = escape(f"{topology.name}: {topology.summary}")
+    lines = [
+        "<!DOCTYPE html>",
+        '<html lang="en">',
+        f'<meta charset="utf-8"><title>{title}</title>',
+        f"<h1>{title}</h1>",
+    ]
+    for formula in named(topology, formulas):
+        lines += [f"<h2>{escape(formula.symbol)}: {escape(formula.meaning)}</h2>", render.mathml(formula.expression)]
+    return [*lines, "</html>"]
+
+
+def data(topology: Topology, formulas: Formulas) -> dict[str, Any]:
+    """Everything, for a program: trees, polynomials, hashes."""
+    gain = nodal.derive(topology)
+    symbols = [*gain.elements, *(f"{amplifier}.{symbol}" for amplifier, symbol in gain.departures)]
+
+    def polynomial(found: MultiAffine) -> list[dict[str, Any]]:
+        return [
+            {"coefficient": value, "product": [name for i, name in enumerate(symbols) if mask >> i & 1]}
+            for mask, value in found
+        ]
+
+    return {
+        "topology": topology.name,
+        "summary": topology.summary,
+        "known_as": topology.known_as,
+        "gain_unit": gain_unit(topology),
+        "absent": {e.name: e.absent for e in topology.elements if e.absent != "error"},
+        "formulas": [
+            {
+                "symbol": f.symbol,
+                "meaning": f.meaning,
+                "text": render.text(f.expression),
+                "tree": render.tree(f.expression),
+            }
+            for f in named(topology, formulas)
+        ],
+        "proved": "equal to numerator/denominator as an identity of polynomials",
+        "symbols": "an element stands for its admittance; u1.a for 1/A_OL, u1.g_id for 1/r_id, u1.r_o for r_o",
+        "numerator": polynomial(gain.numerator),
+        "denominator": polynomial(gain.denominator),
+        "sha256": {"topology": topology.content_hash(), "form": content_hash(form_of(topology))},
+    }
+
+
+def numbers(topology: Topology, formulas: Formulas, values: Mapping[str, float]) -> list[str]:
+    """The formulas with the value of each ratio beside it, so that a person sees which ratio matters."""
+    lines = [f"{topology.name}: {topology.summary}"]
+    for formula in named(topology, formulas):
+        found = ratios(formula.expression, values)
+        rows = [
+            [f"  {f'{formula.symbol} = ' if i == 0 else '  '}{shown}", f"{value:.6g}"]
+            for i, (shown, value) in enumerate(found)
+        ]
+        lines += ["", formula.meaning, *table(["", ""], rows, right=[1])[1:]]
+    return lines
+
+
+def page(topologies: Sequence[Topology]) -> list[str]:
+    """A page of Markdown with every topology, its elements and its formulas."""
+    lines = [
+        "# Topologies",
+        "",
+        "Made by `gainassay topologies --formulas`; do not edit. `||` is parallel; A, `r_id` and `r_o` are the",
+        "op-amp's open-loop gain, differential input resistance and output resistance; s is the complex frequency.",
+        "Every formula is proved equal to the solution of the nodal equations.",
+    ]
+    for topology in topologies:
+        formulas = formulas_of(topology)
+        lines += ["", f"## {topology.name}", "", f"{topology.summary}."]
+        if topology.known_as:
+            lines.append(f"Known as: {', '.join(topology.known_as)}.")
+        blanks = [f"{e.name} ({e.absent})" for e in topology.elements if e.absent != "error"]
+        if blanks:
+            lines.append(f"May be blank: {', '.join(blanks)}.")
+        lines += ["", "```text"]
+        for formula in named(topology, formulas):
+            shown = render.lines(formula.expression, 110)
+            if len(render.text(formula.expression)) > LONGEST_ON_PAGE:
+                shown = [f"(long: gainassay form {topology.name})"]
+            start = f"{formula.symbol} = "
+            lines += [start + shown[0], *(" " * len(start) + line for line in shown[1:])]
+        lines.append("```")
+    return lines

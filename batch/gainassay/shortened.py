@@ -1,0 +1,148 @@
+"""A topology's gain shortened to what matters over the stages and parts that a job screens."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from gainassay.contracts.documents import nearest
+from gainassay.errors import InputError
+from gainassay.forms import coefficients
+from gainassay.forms.cache import formulas_of
+from gainassay.forms.coefficients import FloatArray
+from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.evaluation import value
+from gainassay.forms.expression import Expression
+from gainassay.forms.meaningful import Formulas
+from gainassay.forms.shortening import Deviation, Shortened
+from gainassay.forms.shortening import shorten as shorten_formula
+from gainassay.forms.topology import Topology
+from gainassay.screen.corners import part_side
+from gainassay.service import Prepared
+from gainassay.tables.parts import PartTable
+from gainassay.tables.stages import StageGroup
+
+PAIRS_AT_A_TIME = 200_000
+
+
+@dataclass(frozen=True)
+class ShortForm:
+    """A shortened gain with what it was verified over.
+
+    Attributes
+    ----------
+    absent : dict[str, str]
+        Elements that no stage of the job has, each `open` or `short`.
+    exact : Expression
+        The gain before it was shortened.
+    found : Shortened
+        The shortened gain, what was dropped, and the verified deviation.
+    stage, part : str
+        The pair in which the deviation occurs.
+    pairs : int
+        Pairs over which it was verified, each with the part's nominal figures and with its limits.
+    """
+
+    topology: Topology
+    absent: dict[str, str]
+    exact: Expression
+    found: Shortened
+    stage: str
+    part: str
+    stages: int
+    pairs: int
+    within: float
+
+
+def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
+    """The shortest form whose verified deviation stays within a share of the required accuracy.
+
+    Deviations are those of the gain at the nominal elements, with the parts' nominal figures and with their
+    limits, against the exact gain from the form's coefficient functions.
+
+    Raises
+    ------
+    InputError
+        If the job has no stage of that topology.
+    """
+    group = next((g for g in prepared.stages.groups if g.topology == topology), None)
+    if group is None:
+        names = [g.topology.name for g in prepared.stages.groups]
+        hint = nearest(topology.name, names) or f"; there are stages of {', '.join(names)}"
+        raise InputError(f"{prepared.stages.source}: no usable stage has the topology '{topology.name}'{hint}")
+    absent = _absent_everywhere(group)
+    formulas = formulas_of(topology, absent)
+    found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, formulas))
+    if not found.deviation.share <= within:
+        raise InputError(
+            f"the gain of topology '{topology.name}' has no finite value for stage "
+            f"{group.names[found.deviation.stage]!r} with part {prepared.parts.names[found.deviation.part]!r}, "
+            "so nothing can be verified over this job"
+        )
+    return ShortForm(
+        topology=topology,
+        absent=absent,
+        exact=formulas.gain.whole,
+        found=found,
+        stage=str(group.names[found.deviation.stage]),
+        part=str(prepared.parts.names[found.deviation.part]),
+        stages=len(group.names),
+        pairs=len(group.names) * len(prepared.parts.names),
+        within=within,
+    )
+
+
+def _absent_everywhere(group: StageGroup) -> dict[str, str]:
+    absent = {}
+    for element, values in zip(group.topology.elements, group.values, strict=True):
+        if element.absent != "error" and (np.isinf(values) | (values == 0.0)).all() and len(set(values.tolist())) == 1:
+            absent[element.name] = element.absent
+    return absent
+
+
+def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callable[[Expression], Deviation]:
+    """A function that gives the deviation of a formula over all pairs of a job."""
+    at = coefficients.evaluate(group.form, coefficients.at_dc(group.form, group.values))
+    figures = []
+    for departures in (parts.nominal, parts.worst):
+        products = part_side(group.form, departures, departures, parts.evidence).nominal
+        figures.append((departures, products))
+    height = max(1, PAIRS_AT_A_TIME // len(parts.names))
+
+    def deviation(formula: Expression) -> Deviation:
+        worst = Deviation(0.0, 0, 0)
+        with np.errstate(all="ignore"):
+            for top in range(0, len(group.names), height):
+                rows = slice(top, top + height)
+                for departures, products in figures:
+                    error = _sum(at.contrasts[:, rows], products) / (1.0 + _sum(at.loadings[:, rows], products))
+                    exact = at.gain_ideal[rows, None] * (1.0 + error)
+                    values = _values(group, formulas, rows, departures)
+                    share = np.abs(value(formula, values) / exact - 1.0) / group.limits[rows, None]
+                    share = np.where(np.isnan(share), np.inf, share)
+                    stage, part = (int(i) for i in np.unravel_index(int(share.argmax()), share.shape))
+                    if share[stage, part] > worst.share:
+                        worst = Deviation(float(share[stage, part]), top + stage, part)
+        return worst
+
+    return deviation
+
+
+def _sum(left: FloatArray, right: FloatArray) -> FloatArray:
+    """sum_k left[k, :, None] * right[k, None, :]."""
+    return np.asarray(np.einsum("ks,kp->sp", left, right))
+
+
+def _values(group: StageGroup, formulas: Formulas, rows: slice, departures: FloatArray) -> dict[str, FloatArray]:
+    """Values of all quantities of a formula: elements of shape (stages, 1), data-sheet quantities (1, parts)."""
+    elements = {name: row[rows, None] for name, row in zip(group.form.elements, group.values, strict=True)}
+    amplifiers = formulas.quantities[len(elements) :]
+    own = {
+        quantity.name: 1.0 / departures[None, i % len(DEPARTURES)]
+        if quantity.reciprocal
+        else departures[None, i % len(DEPARTURES)]
+        for i, quantity in enumerate(amplifiers)
+    }
+    return {**elements, **own}

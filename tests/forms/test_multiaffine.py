@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from sympy import Matrix, Poly, symbols
 
-from gainassay.forms.multiaffine import MultiAffine, determinant
+from gainassay.forms.multiaffine import MultiAffine, determinant, factors
 
 X = symbols("x0:6")
 polynomials = st.dictionaries(st.integers(0, 63), st.integers(-5, 5).filter(bool), max_size=6).map(MultiAffine)
@@ -68,3 +68,42 @@ def test_order_of_columns_decides_the_sign() -> None:
     a, b = MultiAffine.symbol(0), MultiAffine.symbol(1)
     rows = [{0: a}, {1: b}]
     assert determinant(rows, [0, 1]) == -determinant(rows, [1, 0])
+
+
+PAIRS = [
+    st.dictionaries(st.sampled_from([0, 1 << i, 2 << i, 3 << i]), st.integers(-5, 5).filter(bool)) for i in (0, 2, 4)
+]
+
+
+@settings(max_examples=40, deadline=None)
+@given(st.tuples(*PAIRS))
+def test_factors_are_those_of_polynomials(terms: tuple[dict[int, int], ...]) -> None:
+    whole = MultiAffine.constant(1)
+    for factor_terms in terms:
+        whole = whole.times(MultiAffine(factor_terms))
+    content, found = factors(whole)
+    again = MultiAffine.constant(content)
+    for factor in found:
+        again = again.times(factor)
+    assert again == whole
+    if whole:
+        assert len(found) == sum(power for _, power in as_sympy(whole).factor_list()[1])
+
+
+@settings(max_examples=40, deadline=None)
+@given(polynomials.filter(bool))
+def test_a_polynomial_of_any_shape_is_factored(polynomial: MultiAffine) -> None:
+    _, found = factors(polynomial)
+    assert len(found) == sum(power for _, power in as_sympy(polynomial).factor_list()[1])
+    assert all(first.support() & second.support() == 0 for first in found for second in found if first is not second)
+
+
+@given(polynomials, st.integers(0, 63))
+def test_inverting_symbols_twice_changes_nothing(polynomial: MultiAffine, chosen: int) -> None:
+    assert polynomial.inverted(chosen).inverted(chosen) == polynomial
+
+
+@given(polynomials, st.integers(0, 5))
+def test_a_polynomial_is_split_at_a_symbol(polynomial: MultiAffine, index: int) -> None:
+    rest, lead = polynomial.split(1 << index)
+    assert rest + lead.times(MultiAffine.symbol(index)) == polynomial

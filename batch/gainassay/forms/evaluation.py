@@ -38,6 +38,7 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
     ZeroDivisionError
         If the formula divides by zero.
     """
+    found: Any
     match expression:
         case Number(number):
             return number.numerator if number.denominator == 1 else number.numerator / number.denominator
@@ -47,6 +48,10 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
             return 0 if s is None else s * values[name]
         case Quantity(_, name, _, _):
             return values[name]
+        case Sum((Number(number), *rest)) if number.denominator != 1:
+            # Not as a binary fraction: the values may have more digits than a float.
+            found = sum(value(part, values, s) for part in rest)
+            return (found * number.denominator + number.numerator) / number.denominator
         case Series(parts) | Sum(parts):
             return sum(value(part, values, s) for part in parts)
         case Parallel(parts):
@@ -55,7 +60,7 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
                 return np.float64(0.0)
             return 1 / sum(1 / impedance for impedance in impedances)
         case Product(coefficient, over, under):
-            found: Any = coefficient.numerator
+            found = coefficient.numerator
             for factor in over:
                 found = found * value(factor, values, s)
             for factor in under:

@@ -91,6 +91,15 @@ def latex(expression: Expression) -> str:
     return _shown(expression, LATEX)
 
 
+def latex_symbol(symbol: str) -> str:
+    """What stands left of the equals sign, for LaTeX.
+
+    >>> latex_symbol("z_in"), latex_symbol("gain"), latex_symbol("T")
+    ('z_{\\\\mathrm{in}}', '\\\\mathit{gain}', 'T')
+    """
+    return _latex_name(symbol)
+
+
 def mathml(expression: Expression) -> str:
     """The formula as a presentation MathML element."""
     row = f"<mrow>{_shown(expression, MATHML)}</mrow>"
@@ -218,7 +227,11 @@ def _parts(
             if isinstance(factor, Quantity) and factor.kind in ("capacitor", "inductor"):
                 upwards = factor.kind == "inductor"
                 power += sign if upwards else -sign
-                plain[side if upwards else 1 - side].append(Piece(notation.name(factor.name), _ATOM))
+                piece = Piece(notation.name(factor.name), _ATOM)
+                if upwards:
+                    plain[side].append(piece)
+                else:
+                    plain[1 - side].insert(0, piece)
             else:
                 (sums if is_sum(factor) else plain)[side].append(_bound(factor, notation, _ATOM))
     if power:
@@ -250,13 +263,9 @@ def _broken(expression: Expression, notation: Notation, width: int) -> list[str]
             sign = notation.joined(["", ""], "||").strip() + " "
             marked = [("", parts[0])] + [(sign, part) for part in parts[1:]]
         case Product(coefficient, over, under):
-            head = product([f for f in over if not is_sum(f)], [f for f in under if not is_sum(f)], coefficient)
-            over, under = (tuple(f for f in side if is_sum(f)) for side in (over, under))
-            marked = [("", head)] + [("* ", f) for f in over] + [("/ ", f) for f in under]
-            if len(marked) == 1:
+            marked = _marked_factors(coefficient, over, under)
+            if not marked:
                 return [whole]
-            if head == Number(Fraction(1)) and over:
-                marked = [("", over[0]), *marked[2:]]
         case _:
             return [whole]
     found: list[str] = []
@@ -270,6 +279,26 @@ def _broken(expression: Expression, notation: Notation, width: int) -> list[str]
         block[-1] += ")" * loose
         found += block
     return found
+
+
+def _marked_factors(
+    coefficient: Fraction, over: tuple[Expression, ...], under: tuple[Expression, ...]
+) -> list[tuple[str, Expression]]:
+    """The factors of a product, each with its operator: what is no sum on the first line, if there are sums."""
+    plain, sums = (
+        [[factor for factor in side if is_sum(factor) is wanted] for side in (over, under)] for wanted in (False, True)
+    )
+    if not any(sums):
+        if any(isinstance(f, Quantity) and f.kind in ("capacitor", "inductor") for f in (*over, *under)):
+            return []  # s does not stand beside the element it belongs to
+        plain, sums = [[], []], plain
+        if len(sums[0]) + len(sums[1]) < 2:
+            return []
+    head = product(plain[0], plain[1], coefficient)
+    marked = [("* ", factor) for factor in sums[0]] + [("/ ", factor) for factor in sums[1]]
+    if head == Number(Fraction(1)) and sums[0]:
+        return [("", sums[0][0]), *marked[1:]]
+    return [("", head), *marked]
 
 
 def _text_notation(times: str, parallel: str) -> Notation:

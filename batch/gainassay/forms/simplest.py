@@ -54,7 +54,7 @@ TRIALS_AT_FIRST = {5: 6, 6: 4}
 
 TRIALS_OF_MORE = 3
 
-TRIALS_LATER = ((1500, 1), (600, 2))
+TRIALS_LATER = ((900, 1), (400, 2))
 """Ratios examined, and trials carried out from there on: a search that has grown that far is held short."""
 
 WORTH = 2
@@ -171,14 +171,12 @@ class Writer:
             connection = self._connection(numerator, denominator)
             if connection is not None and not any(map(is_negative, children(connection))):
                 return connection
-        plain = _written_out(numerator, denominator, self._impedances)
         if self._left <= 0:
-            return plain
+            return _written_out(numerator, denominator, self._impedances)
         self._left -= 1
-        best, shortest = plain, WORTH * length(plain)
-        if connection is not None and length(connection) < shortest:
-            best, shortest = connection, length(connection)
         support = numerator.support() | denominator.support()
+        best = connection
+        shortest = length(best) if best else WORTH * self._length_written_out(numerator, denominator)
         floor = self._length_of(support)
         trials = [(self._floors(trial), trial) for trial in self._trials(over, under, degree)]
         for floors, trial in sorted(trials, key=_promise)[: self._trials_for(support.bit_count())]:
@@ -187,7 +185,11 @@ class Writer:
                 best, shortest = candidate, length(candidate)
             if shortest <= floor + 1:  # beside the symbols there is a number to compare with
                 break
-        return best
+        return _written_out(numerator, denominator, self._impedances) if best is None else best
+
+    def _length_written_out(self, numerator: MultiAffine, denominator: MultiAffine) -> int:
+        support = numerator.support() | denominator.support()
+        return sum(self._length_of(mask ^ support) for p in (numerator, denominator) for mask in p.terms)
 
     def _trials_for(self, symbols: int) -> int:
         """How many trials are carried out for a ratio of that many symbols: fewer as the search grows."""

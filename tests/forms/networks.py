@@ -1,0 +1,146 @@
+"""Networks for tests: random ones, and a nodal solve at 60 digits of what the formulas say of them.
+
+The solve shares nothing with the package: every amplifier is a node of its own that a source holds at
+A_OL (v+ - v-), with r_o as a resistor from there to the output.
+"""
+
+from __future__ import annotations
+
+import random
+from collections.abc import Mapping
+
+import mpmath
+
+import oracle
+from gainassay.forms.topology import GROUND, Topology
+
+DIGITS = 60
+
+Values = Mapping[str, mpmath.mpf]
+"""By the names that formulas use: impedances of elements, and A, r_id, r_o of amplifiers."""
+
+
+def random_network(rng: random.Random, amplifiers: int, extra: int = 3) -> Topology:
+    """A network of 2 to 7 nodes: a random tree of elements to ground, more elements, and amplifiers."""
+    nodes = ["in", "out", "n1", "n2", "n3", "n4", "n5"][: rng.randint(max(2, amplifiers + 1), 7)]
+    everywhere = [GROUND, *nodes]
+    between = [(node, rng.choice(everywhere[: place + 1])) for place, node in enumerate(nodes)]
+    between += [(first, second) for first, second in (rng.sample(everywhere, 2) for _ in range(rng.randint(1, extra)))]
+    outputs = ["out", *rng.sample(nodes[2:], amplifiers - 1)]
+    return oracle.network(
+        {f"r{number}": pair for number, pair in enumerate(between, start=1)},
+        [(*_two(rng, everywhere), output) for output in outputs],
+    )
+
+
+def _two(rng: random.Random, nodes: list[str]) -> tuple[str, str]:
+    first, second = rng.sample(nodes, 2)
+    return first, second
+
+
+def random_values(topology: Topology, rng: random.Random) -> dict[str, mpmath.mpf]:
+    """A value for every quantity of the formulas, spread over decades."""
+    several = len(topology.amplifiers) > 1
+
+    def value(low: float, high: float) -> mpmath.mpf:
+        return mpmath.mpf(10.0 ** rng.uniform(low, high))
+
+    found = {element.name: value(1, 6) for element in topology.elements}
+    for amplifier in topology.amplifiers:
+        suffix = f"_{amplifier.name}" if several else ""
+        found |= {f"A{suffix}": value(2, 7), f"r_id{suffix}": value(4, 9), f"r_o{suffix}": value(0, 3)}
+    return found
+
+
+def impedances(topology: Topology, values: Values, s: mpmath.mpc) -> dict[str, mpmath.mpf]:
+    """The same with the impedance at s of each capacitor and inductor."""
+    at_s = {"resistor": lambda v: v, "capacitor": lambda v: 1 / (s * v), "inductor": lambda v: s * v}
+    return {**values, **{e.name: at_s[e.kind](values[e.name]) for e in topology.elements}}
+
+
+def gain(topology: Topology, values: Values) -> mpmath.mpf:
+    """Output over input."""
+    if topology.gain in ("voltage", "transconductance"):
+        drive = (1,) if len(topology.input) == 1 else (mpmath.mpf(1) / 2, mpmath.mpf(-1) / 2)
+        voltages = _solve(topology, values, held=dict(zip(topology.input, drive, strict=True)))
+    else:
+        voltages = _solve(topology, values, injected=dict(zip(topology.input, (1, -1), strict=False)))
+    if topology.gain in ("voltage", "transresistance"):
+        return voltages[topology.output]
+    first, second = topology.element(topology.output).between
+    return (voltages[first] - voltages[second]) / values[topology.output]
+
+
+def input_impedance(topology: Topology, values: Values) -> mpmath.mpf:
+    """Seen by the source, which is taken away."""
+    first, second = (*topology.input, GROUND)[:2]
+    voltages = _solve(topology, values, injected={first: 1, second: -1})
+    return voltages[first] - voltages[second]
+
+
+def output_impedance(topology: Topology, values: Values) -> mpmath.mpf:
+    """Seen by a load; the source is dead."""
+    held = dict.fromkeys(topology.input, 0) if topology.gain in ("voltage", "transconductance") else {}
+    if topology.gain in ("voltage", "transresistance"):
+        return _solve(topology, values, held=held, injected={topology.output: 1})[topology.output]
+    first, second = topology.element(topology.output).between
+    open_output = {**values, topology.output: mpmath.inf}
+    voltages = _solve(topology, open_output, held=held, injected={first: 1, second: -1})
+    return voltages[first] - voltages[second]
+
+
+def return_ratio(topology: Topology, values: Values, amplifier: str) -> mpmath.mpf:
+    """What comes back, sign changed, of 1 V put in place of A_OL (v+ - v-) of one amplifier."""
+    held = dict.fromkeys(topology.input, 0) if topology.gain in ("voltage", "transconductance") else {}
+    voltages = _solve(topology, values, held=held, forced=amplifier)
+    pins = next(a for a in topology.amplifiers if a.name == amplifier)
+    suffix = f"_{amplifier}" if len(topology.amplifiers) > 1 else ""
+    return -values[f"A{suffix}"] * (voltages[pins.plus] - voltages[pins.minus])
+
+
+def _solve(
+    topology: Topology,
+    values: Values,
+    held: Mapping[str, object] | None = None,
+    injected: Mapping[str, int] | None = None,
+    forced: str = "",
+) -> dict[str, mpmath.mpf]:
+    """Voltage of every node; `forced` is an amplifier whose inner source is held at 1 V."""
+    held, injected = held or {}, injected or {}
+    nodes = [GROUND, *topology.nodes(), *(f"inside {a.name}" for a in topology.amplifiers)]
+    place = {node: index for index, node in enumerate(nodes)}
+    matrix, right = mpmath.zeros(len(nodes)), mpmath.zeros(len(nodes), 1)
+    branches = [(*element.between, values[element.name]) for element in topology.elements]
+    several = len(topology.amplifiers) > 1
+    for amplifier in topology.amplifiers:
+        suffix = f"_{amplifier.name}" if several else ""
+        branches.append((amplifier.plus, amplifier.minus, values[f"r_id{suffix}"]))
+        branches.append((f"inside {amplifier.name}", amplifier.out, values[f"r_o{suffix}"]))
+    for first, second, impedance in branches:
+        for here, there in ((first, second), (second, first)):
+            matrix[place[here], place[here]] += 1 / impedance
+            matrix[place[here], place[there]] -= 1 / impedance
+    for node, current in injected.items():
+        right[place[node]] += current
+
+    def hold(node: str, voltage: object, control: Mapping[str, mpmath.mpf] | None = None) -> None:
+        """Replace the current law of a node by: its voltage less what controls it is `voltage`."""
+        for column in range(len(nodes)):
+            matrix[place[node], column] = 0
+        matrix[place[node], place[node]] = 1
+        for other, factor in (control or {}).items():
+            matrix[place[node], place[other]] -= factor
+        right[place[node]] = voltage
+
+    hold(GROUND, 0)
+    for node, voltage in held.items():
+        hold(node, voltage)
+    for amplifier in topology.amplifiers:
+        suffix = f"_{amplifier.name}" if several else ""
+        a_ol = values[f"A{suffix}"]
+        if amplifier.name == forced:
+            hold(f"inside {amplifier.name}", 1)
+        else:
+            hold(f"inside {amplifier.name}", 0, {amplifier.plus: a_ol, amplifier.minus: -a_ol})
+    solution = mpmath.lu_solve(matrix, right)
+    return {node: solution[index] for node, index in place.items()}

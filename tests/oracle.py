@@ -176,13 +176,13 @@ def gains(
             right[:, place[node(name)], 0] += value
     solved = np.linalg.solve(matrix, right)[:, :, 0]
 
-    def voltage(name: str) -> NDArray[np.float64] | float:
-        return solved[:, place[name]] if name in place else known[name]
+    def voltage(name: str) -> NDArray[np.float64]:
+        return np.asarray(solved[:, place[name]] if name in place else np.full(cases, known[name]), np.float64)
 
     if topology.gain in ("transconductance", "current"):
         first, second = (node(name) for name in topology.element(topology.output).between)
         return np.asarray((voltage(first) - voltage(second)) / ohms[topology.output])
-    return np.asarray(voltage(node(topology.output)))
+    return voltage(node(topology.output))
 
 
 def random_ohms(topology: Topology, rng: random.Random, low: float = 1.0, high: float = 1e8) -> dict[str, float]:

@@ -23,9 +23,10 @@ FLOORS = {
     "runs": 6,
     "service": 7,
     "explanation": 7,
-    "report": 8,
-    "cli": 9,
-    "__main__": 10,
+    "shortened": 8,
+    "report": 9,
+    "cli": 10,
+    "__main__": 11,
 }
 """Rooms by floor: each imports only from its own room and from lower floors."""
 

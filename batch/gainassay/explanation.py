@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -9,7 +10,10 @@ import numpy as np
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.evidence import EVIDENCE
 from gainassay.errors import InputError
+from gainassay.forms.cache import formulas_of
+from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks
 from gainassay.screen.blocks import Chunk, Group, Screened
@@ -62,6 +66,15 @@ class Term:
 
 
 @dataclass(frozen=True)
+class PortFigure:
+    """An impedance or a return ratio of the stage with the part's nominal figures, at 0 Hz."""
+
+    symbol: str
+    meaning: str
+    value: float
+
+
+@dataclass(frozen=True)
 class Explanation:
     """All that decides one pair. Errors in ppm; nan: no finite bound.
 
@@ -91,6 +104,7 @@ class Explanation:
     elements: tuple[ElementValue, ...]
     figures: tuple[Figure, ...]
     terms: tuple[Term, ...]
+    ports: tuple[PortFigure, ...]
 
 
 def explain(stages: StageTable, parts: PartTable, groups: tuple[Group, ...], stage: str, part: str) -> Explanation:
@@ -159,8 +173,8 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
         leans_on=leaning.leans_on,
         dominant_term=names[int(outcome.dominant[0, 0])],
         elements=tuple(
-            ElementValue(name, kind, float(value), float(tolerance), float(at_worst))
-            for name, kind, value, tolerance, at_worst in zip(
+            ElementValue(name, kind, float(nominal), float(tolerance), float(at_worst))
+            for name, kind, nominal, tolerance, at_worst in zip(
                 screened.group.form.elements,
                 screened.group.form.kinds,
                 values,
@@ -176,7 +190,25 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
                 key=lambda term: (-np.nan_to_num(abs(term.worst_ppm)), names.index(term.name)),
             )
         ),
+        ports=tuple(_ports(topology, values, parts.nominal[:, p])),
     )
+
+
+def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> Iterator[PortFigure]:
+    """Closed-loop input and output impedance, and return ratios, from the proved formulas."""
+    absent = {
+        element.name: element.absent
+        for element, ohms in zip(topology.elements, values, strict=True)
+        if element.absent != "error" and (ohms == 0.0 or np.isinf(ohms))
+    }
+    formulas = formulas_of(topology, absent)
+    figures = {element.name: np.float64(ohms) for element, ohms in zip(topology.elements, values, strict=True)}
+    with np.errstate(all="ignore"):
+        for index, quantity in enumerate(formulas.quantities[len(topology.elements) :]):
+            departure = np.float64(departures[index % len(DEPARTURES)])
+            figures[quantity.name] = 1.0 / departure if quantity.reciprocal else departure
+        for symbol, meaning, expression in formulas.ports():
+            yield PortFigure(symbol, meaning, float(value(expression, figures)))
 
 
 def _figures(parts: PartTable, p: int, matters: list[bool]) -> list[Figure]:

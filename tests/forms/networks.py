@@ -39,7 +39,7 @@ def _two(rng: random.Random, nodes: list[str]) -> tuple[str, str]:
 
 
 def random_values(topology: Topology, rng: random.Random) -> dict[str, mpmath.mpf]:
-    """A value for every quantity of the formulas, spread over decades."""
+    """A value for every quantity of the formulas, spread over decades; farad and henry among them."""
     several = len(topology.amplifiers) > 1
 
     def value(low: float, high: float) -> mpmath.mpf:
@@ -50,6 +50,16 @@ def random_values(topology: Topology, rng: random.Random) -> dict[str, mpmath.mp
         suffix = f"_{amplifier.name}" if several else ""
         found |= {f"A{suffix}": value(2, 7), f"r_id{suffix}": value(4, 9), f"r_o{suffix}": value(0, 3)}
     return found
+
+
+def impedances(topology: Topology, values: Values, s: mpmath.mpc) -> dict[str, mpmath.mpf]:
+    """The values with the impedance of each element for its capacitance or inductance."""
+    reactive = {
+        element.name: 1 / (s * values[element.name]) if element.kind == "capacitor" else s * values[element.name]
+        for element in topology.elements
+        if element.kind != "resistor"
+    }
+    return {**values, **reactive}
 
 
 def gain(topology: Topology, values: Values) -> mpmath.mpf:

@@ -26,7 +26,7 @@ COMMANDS = {
 INTERNAL_FAULT, UNUSABLE, INTERRUPTED = 1, 2, 130
 
 
-class _ReaderGone(Exception):
+class _ReaderGoneError(Exception):
     """Whoever read our output has gone, as `| head` does; click itself would end with status 1."""
 
 
@@ -34,8 +34,8 @@ class _Commands(click.Group):
     def invoke(self, ctx: click.Context) -> object:
         try:
             return super().invoke(ctx)
-        except (BrokenPipeError, _ReaderGone):
-            raise _ReaderGone from None
+        except (BrokenPipeError, _ReaderGoneError):
+            raise _ReaderGoneError from None
 
     def list_commands(self, ctx: click.Context) -> list[str]:
         return list(COMMANDS)
@@ -94,7 +94,7 @@ def main() -> NoReturn:
     except (click.Abort, KeyboardInterrupt):
         click.echo("gainassay: interrupted; nothing of this run was kept", err=True)
         sys.exit(INTERRUPTED)
-    except (BrokenPipeError, _ReaderGone):
+    except (BrokenPipeError, _ReaderGoneError):
         # The reader of our output has gone, as `| head` does. Nothing more can be said to it.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         sys.exit(0)

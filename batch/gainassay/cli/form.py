@@ -15,18 +15,20 @@ from gainassay.contracts.documents import nearest
 from gainassay.errors import InputError
 from gainassay.forms import library
 from gainassay.forms.cache import formulas_of
+from gainassay.forms.meaningful import Formulas
 from gainassay.forms.topology import Topology
 from gainassay.report import formulas as report
 from gainassay.report import shortened as short_report
 from gainassay.report.values import filled_in
 
+KINDS = ("text", "latex", "mathml", "json")
+
 
 @click.command()
 @click.argument("name", metavar="TOPOLOGY")
 @click.argument("more", metavar="[NAME=VALUE]...", nargs=-1)
-@click.option(
-    "--as", "kind", type=click.Choice(["text", "latex", "mathml", "json"]), default="text", help="How to show it."
-)
+@click.option("--as", "kind", type=click.Choice(KINDS), default="text", help="How to show it.")
+@shared.json_option
 @click.option(
     "--at",
     "values",
@@ -44,37 +46,64 @@ from gainassay.report.values import filled_in
     show_default=True,
     help="With --for: the share of the required accuracy that the short formula may deviate by.",
 )
-def form(name: str, more: tuple[str, ...], kind: str, values: tuple[str, ...], job: Path | None, within: float) -> None:
+def form(
+    name: str,
+    more: tuple[str, ...],
+    kind: str,
+    as_json: bool,
+    values: tuple[str, ...],
+    job: Path | None,
+    within: float,
+) -> None:
     """Show the gain of TOPOLOGY, a built-in name or a topology file, as ideal gain times correction factor.
 
-    Beside the gain stand input impedance, output impedance and return ratio. Every formula is proved.
+    Beside the gain stand input impedance, output impedance and return ratio. Every formula is proved. With
+    --at, further [NAME=VALUE]... may follow.
     """
+    kind = "json" if as_json else kind
     if more and not values:
         raise click.UsageError(f"{more[0]!r} is one argument too many; numbers to put in follow --at")
-    if job is not None:
-        prepared = service.prepare(job)
-        topology = _chosen(name, prepared.topologies)
-        found = shortened.shorten(prepared, topology, within)
-        if kind == "json":
-            shared.data(short_report.data(found))
-        elif kind == "text":
-            shared.lines(short_report.text(found, _has_unicode(), _width()))
-        else:
-            raise click.UsageError("--for prints text or JSON")
-        return
-    topology = _chosen(name, library.library())
-    formulas = formulas_of(topology)
-    if values:
-        absent, numbers = filled_in(topology, formulas, (*values, *more))
-        shared.lines(report.numbers(topology, formulas_of(topology, absent), numbers))
-    elif kind == "json":
-        shared.data(report.data(topology, formulas))
-    elif kind == "latex":
-        shared.lines(report.latex(topology, formulas))
-    elif kind == "mathml":
-        shared.lines(report.mathml(topology, formulas))
+    if (values or job) and kind not in ("text", "json"):
+        raise click.UsageError("--at and --for print text or JSON")
+    if values and job:
+        raise click.UsageError("--at and --for ask for different things; give one of the two")
+    if job:
+        _for_job(name, job, within, kind)
+    elif values:
+        _at(_chosen(name, library.library()), (*values, *more), kind)
     else:
-        shared.lines(report.text(topology, formulas, _has_unicode(), _width()))
+        topology = _chosen(name, library.library())
+        _show(topology, formulas_of(topology), kind)
+
+
+def _for_job(name: str, job: Path, within: float, kind: str) -> None:
+    prepared = service.prepare(job)
+    found = shortened.shorten(prepared, _chosen(name, prepared.topologies), within)
+    if kind == "json":
+        shared.data(short_report.data(found))
+    else:
+        shared.lines(short_report.text(found, _has_unicode(), _width()))
+
+
+def _at(topology: Topology, given: tuple[str, ...], kind: str) -> None:
+    absent, numbers = filled_in(topology, formulas_of(topology), given)
+    formulas = formulas_of(topology, absent)
+    if kind == "json":
+        shared.data(report.numbers_data(topology, formulas, numbers))
+    else:
+        shared.lines(report.numbers(topology, formulas, numbers, _has_unicode()))
+
+
+def _show(topology: Topology, formulas: Formulas, kind: str) -> None:
+    match kind:
+        case "json":
+            shared.data(report.data(topology, formulas))
+        case "latex":
+            shared.lines(report.latex(topology, formulas))
+        case "mathml":
+            shared.lines(report.mathml(topology, formulas))
+        case _:
+            shared.lines(report.text(topology, formulas, _has_unicode(), _width()))
 
 
 def _chosen(name: str, known: Mapping[str, Topology]) -> Topology:

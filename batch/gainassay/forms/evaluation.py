@@ -57,7 +57,7 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
         case Parallel(parts):
             impedances = [value(part, values, s) for part in parts]
             if any(np.ndim(impedance) == 0 and impedance == 0 for impedance in impedances):
-                return 0
+                return np.float64(0.0)
             return 1 / sum(1 / impedance for impedance in impedances)
         case Product(coefficient, over, under):
             found = coefficient.numerator
@@ -68,13 +68,15 @@ def value(expression: Expression, values: Mapping[str, Any], s: Any = None) -> A
             return found / coefficient.denominator if coefficient.denominator != 1 else found
 
 
-def ratios(expression: Expression, values: Mapping[str, Any], s: Any = None) -> list[tuple[str, Any]]:
+def ratios(
+    expression: Expression, values: Mapping[str, Any], s: Any = None, unicode: bool = False
+) -> list[tuple[str, Any]]:
     """The formula and each ratio in it that is compared with something, as text, with its value.
 
     So a person sees which ratio matters. Outer ratios stand before those inside them, none twice.
     """
     found = {expression: None} | dict.fromkeys(_compared(expression))
-    return [(text(part), value(part, values, s)) for part in found]
+    return [(text(part, unicode), value(part, values, s)) for part in found]
 
 
 def _compared(expression: Expression) -> Iterator[Expression]:

@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from html import escape
 from typing import Any
 
+import numpy as np
+
 from gainassay.forms import nodal, render
 from gainassay.forms.cache import content_hash, form_of, formulas_of
 from gainassay.forms.evaluation import ratios
@@ -45,21 +47,9 @@ def named(topology: Topology, formulas: Formulas) -> Iterator[Named]:
     unit = gain_unit(topology)
     yield Named("G", f"ideal gain [{unit}]", gain.ideal)
     yield Named("gain", f"closed-loop gain [{unit}]: ideal gain x correction factor", gain.whole)
-    if formulas.input_impedance:
-        yield Named(
-            "z_in",
-            "input impedance [ohm]: amplifiers dead x (1 + T shorted)/(1 + T open)",
-            formulas.input_impedance.whole,
-        )
-    if formulas.output_impedance:
-        yield Named(
-            "z_out",
-            "output impedance [ohm]: amplifiers dead x (1 + T shorted)/(1 + T open)",
-            formulas.output_impedance.whole,
-        )
-    for amplifier, ratio in formulas.return_ratios:
-        symbol = "T" if len(formulas.return_ratios) == 1 else f"T_{amplifier}"
-        yield Named(symbol, f"return ratio of {amplifier}", ratio)
+    for symbol, meaning, expression in formulas.ports():
+        blackman = ": amplifiers dead x (1 + T shorted)/(1 + T open)" if symbol.startswith("z") else ""
+        yield Named(symbol, f"{meaning}{blackman}", expression)
 
 
 def text(topology: Topology, formulas: Formulas, unicode: bool, width: int) -> list[str]:
@@ -132,17 +122,42 @@ def data(topology: Topology, formulas: Formulas) -> dict[str, Any]:
     }
 
 
-def numbers(topology: Topology, formulas: Formulas, values: Mapping[str, float]) -> list[str]:
-    """The formulas with the value of each ratio beside it, so that a person sees which ratio matters."""
+def numbers(topology: Topology, formulas: Formulas, values: Mapping[str, float], unicode: bool) -> list[str]:
+    """The formulas with the value of each ratio in front, so that a person sees which ratio matters."""
     lines = [f"{topology.name}: {topology.summary}"]
     for formula in named(topology, formulas):
-        found = ratios(formula.expression, values)
-        rows = [
-            [f"  {f'{formula.symbol} = ' if i == 0 else '  '}{shown}", f"{value:.6g}"]
-            for i, (shown, value) in enumerate(found)
-        ]
-        lines += ["", formula.meaning, *table(["", ""], rows, right=[1])[1:]]
+        (whole, value), *inner = _ratios(formula, values, unicode)
+        rows = [[f"  {_number(value)}", f"{formula.symbol} = {whole}"]]
+        rows += [[f"  {_number(value)}", f"  {shown}"] for shown, value in inner]
+        lines += ["", formula.meaning, *table(["", ""], rows)[1:]]
     return lines
+
+
+def numbers_data(topology: Topology, formulas: Formulas, values: Mapping[str, float]) -> dict[str, Any]:
+    """The same, for a program."""
+    return {
+        "topology": topology.name,
+        "values": dict(values),
+        "formulas": [
+            {
+                "symbol": formula.symbol,
+                "meaning": formula.meaning,
+                "ratios": [{"text": shown, "value": float(value)} for shown, value in _ratios(formula, values)],
+            }
+            for formula in named(topology, formulas)
+        ],
+    }
+
+
+def _ratios(formula: Named, values: Mapping[str, float], unicode: bool = False) -> list[tuple[str, Any]]:
+    """Text and value of the formula and of each ratio in it; nan where ideal quantities leave it undefined."""
+    with np.errstate(all="ignore"):
+        scalars = {name: np.float64(value) for name, value in values.items()}
+        return ratios(formula.expression, scalars, unicode=unicode)
+
+
+def _number(value: float) -> str:
+    return "-" if np.isnan(value) else f"{value + 0.0:.6g}"
 
 
 def page(topologies: Sequence[Topology]) -> list[str]:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 from gainassay.cautions import CAUTIONS
-from gainassay.explanation import Explanation
+from gainassay.explanation import Explanation, PortFigure
 from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
@@ -64,8 +64,17 @@ def text(found: Explanation) -> list[str]:
             ],
         ),
         "",
+        "Impedances and loop at 0 Hz, with the nominal figures",
+        *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning.partition(" [")[0]] for p in found.ports])[1:],
+        "",
         *CAUTIONS,
     ]
+
+
+def _port(port: PortFigure) -> str:
+    if math.isnan(port.value):
+        return "-"
+    return quantity(port.value, "ohm") if "[ohm]" in port.meaning else f"{port.value:.6g}"
 
 
 def _gain(value: float, unit: str) -> str:

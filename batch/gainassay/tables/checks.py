@@ -87,11 +87,11 @@ class Checking:
             self.refuse(int(position), column, f"is longer than {LONGEST_NAME} characters; shorten the name")
         for name, positions in _repeated(names).items():
             rows = [int(self.raw.rows[position]) for position in positions]
-            for position, row in zip(positions, rows, strict=True):
+            for place, row in zip(positions, rows, strict=True):
                 others = [str(other) for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
                 listed = ", ".join(others) + (", ..." if len(rows) > MOST_LISTED + 1 else "")
                 if name:
-                    self.refuse(position, column, f"stands more than once: also in row {listed}; which is meant?")
+                    self.refuse(place, column, f"stands more than once: also in row {listed}; which is meant?")
         return names
 
     def good(self) -> NDArray[np.bool_]:

@@ -170,7 +170,8 @@ def _plain_type(cells: pa.Array) -> pa.Array:
         text = cells.cast(pa.string())
         text.validate(full=True)
     except pa.ArrowException:
-        return cells
+        # Text that is not UTF-8 must not pass for text.
+        return cells.cast(pa.binary()) if pa.types.is_string(cells.type) else cells
     return text
 
 

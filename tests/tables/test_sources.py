@@ -1,0 +1,252 @@
+"""Tables as files hold them: every cell as it stands, every row under its number, or one clear refusal."""
+
+from __future__ import annotations
+
+import datetime
+import decimal
+import subprocess
+import sys
+from pathlib import Path
+from typing import Any
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+import pytest
+
+from gainassay.errors import InputError
+from gainassay.tables import sources
+from gainassay.tables.checks import Checking
+from gainassay.tables.sources import RawTable
+
+
+def read_csv(folder: Path, content: bytes) -> RawTable:
+    """A CSV file as read."""
+    path = folder / "table.csv"
+    path.write_bytes(content)
+    return sources.read(path)
+
+
+def refusal(folder: Path, content: bytes, name: str = "table.csv") -> str:
+    """The message for a file that cannot be read."""
+    path = folder / name
+    path.write_bytes(content)
+    with pytest.raises(InputError) as refused:
+        sources.read(path)
+    assert str(refused.value).startswith(f"{path}: ")
+    return str(refused.value)
+
+
+def cells(table: RawTable) -> dict[str, list[Any]]:
+    """The cells, as Python has them."""
+    return {name: values.to_pylist() for name, values in table.columns.items()}
+
+
+@pytest.mark.parametrize(
+    ("content", "rows"),
+    [
+        pytest.param(b"a,b\n1,2\n3,4\n", [2, 3], id="plain"),
+        pytest.param(b"a,b\n1,2\n3,4", [2, 3], id="no newline at the end"),
+        pytest.param(b"\xef\xbb\xbfa,b\n1,2\n3,4\n", [2, 3], id="byte order mark"),
+        pytest.param(b"a,b\r\n1,2\r\n3,4\r\n", [2, 3], id="CRLF"),
+        pytest.param(b"a,b\r1,2\r3,4\r", [2, 3], id="CR"),
+        pytest.param(b'"a","b"\n"1","2"\n"3","4"\n', [2, 3], id="quoted"),
+        pytest.param(b"a,b\n\n1,2\n\n\n3,4\n", [3, 6], id="blank lines"),
+        pytest.param(b"a,b\r\n1,2\r\n\r\n3,4\r\n", [2, 4], id="blank CRLF lines"),
+        pytest.param(b"a,b\n1,2\n,\n ,\t\n3,4\n", [2, 5], id="rows of blank cells"),
+    ],
+)
+def test_rows_keep_their_numbers(tmp_path: Path, content: bytes, rows: list[int]) -> None:
+    table = read_csv(tmp_path, content)
+    assert cells(table) == {"a": ["1", "3"], "b": ["2", "4"]}
+    assert table.rows.tolist() == rows
+    assert table.ragged == ()
+
+
+@pytest.mark.parametrize(
+    ("content", "found"),
+    [
+        pytest.param(b'a,b\n"x\ny",2\n3,4\n', ["x\ny", "3"], id="newline"),
+        pytest.param(b'a,b\n"x\r\ny",2\n3,4\n', ["x\r\ny", "3"], id="CRLF"),
+        pytest.param(b'a,b\n"x,y",2\n3,4\n', ["x,y", "3"], id="comma"),
+        pytest.param(b'a,b\n"x""y",2\n3,4\n', ['x"y', "3"], id="quote"),
+        pytest.param(b'a,b\nx"y,2\n3,4\n', ['x"y', "3"], id="quote in the middle"),
+        pytest.param(b"a,b\nx\x00y,2\n3,4\n", ["x\x00y", "3"], id="NUL"),
+        pytest.param("a,b\nµΩ,2\n3,4\n".encode(), ["µΩ", "3"], id="not ASCII"),
+        pytest.param(b"a,b\n" + b"x" * 1_000_000 + b",2\n3,4\n", ["x" * 1_000_000, "3"], id="a million characters"),
+        pytest.param(b"a,b\nNA,2\nnull,4\n", ["NA", "null"], id="words for nothing"),
+        pytest.param(b"a,b\n007,2\n1e3,4\n", ["007", "1e3"], id="text that looks like a number"),
+    ],
+)
+def test_a_cell_is_kept_as_it_stands(tmp_path: Path, content: bytes, found: list[str]) -> None:
+    table = read_csv(tmp_path, content)
+    assert cells(table) == {"a": found, "b": ["2", "4"]}
+    assert table.rows.tolist() == [2, 3]
+
+
+def test_rows_of_another_length_are_set_aside(tmp_path: Path) -> None:
+    table = read_csv(tmp_path, b'a,b\n"x\ny",2\n3\n\n4,5,6\n7,8\n')
+    assert table.rows.tolist() == [2, 6]
+    assert [(r.row, r.value, r.reason.split(";")[0]) for r in table.ragged] == [
+        (3, "3", "the row has 1 cells, the header has 2"),
+        (5, "4,5,6", "the row has 3 cells, the header has 2"),
+    ]
+
+
+def test_row_numbers_hold_far_into_a_large_file(tmp_path: Path) -> None:
+    lines = [b"%d,%s" % (row, b"x" * 40) for row in range(2, 60_002)]
+    lines[100 - 2] = b"ragged"
+    lines[30_000 - 2] = b""
+    lines[50_000 - 2] = b"ragged"
+    table = read_csv(tmp_path, b"a,b\n" + b"\n".join(lines))
+    assert [reject.row for reject in table.ragged] == [100, 50_000]
+    assert table.columns["a"].to_pylist() == [str(row) for row in table.rows.tolist()]
+
+
+@pytest.mark.parametrize(
+    "content",
+    [
+        pytest.param(b'part,family\namp-1,"bipolar\namp-2,JFET\namp-3,CMOS\n', id="in the last column"),
+        pytest.param(b'family,part\n"bipolar,amp-1\nJFET,amp-2\nCMOS,amp-3\n', id="in the first column"),
+    ],
+)
+def test_a_quote_that_is_never_closed_loses_no_row_in_silence(tmp_path: Path, content: bytes) -> None:
+    try:
+        table = read_csv(tmp_path, content)
+    except InputError:
+        return
+    assert len(table.rows) + len(table.ragged) == 3 or table.ragged
+
+
+@pytest.mark.parametrize(
+    ("content", "words"),
+    [
+        pytest.param(b"", "row 1 holds no column names", id="empty"),
+        pytest.param(b"\xef\xbb\xbf", "row 1 holds no column names", id="byte order mark only"),
+        pytest.param(b"\n\n", "row 1 holds no column names", id="blank lines only"),
+        pytest.param(b",,\n1,2,3\n", "row 1 holds no column names", id="blank header"),
+        pytest.param(b"a,b,a\n1,2,3\n", "columns stand more than once in the header: 'a'", id="repeated column"),
+        pytest.param(b"a,b\n\xe9,2\n", "UTF-8", id="Latin-1"),
+        pytest.param(b"a,\xe9\n1,2\n", "UTF-8", id="Latin-1 header"),
+        pytest.param(b"a,b\n" + b"1,2\n" * 500_000 + b"\xe9,2\n", "UTF-8", id="Latin-1 far down"),
+        pytest.param(b"a,b\n" + b"1,2\n" * 500_000 + b"\xe9\n", "UTF-8", id="Latin-1 in a ragged row"),
+        pytest.param("a,b\n1,2\n".encode("utf-16"), "UTF-8", id="UTF-16"),
+        pytest.param(b'a,"b\n1,2\n', "CSV", id="quote not closed in the header"),
+        pytest.param(b"a," + b"b" * 1_000_000 + b"\n1,2\n", "CSV", id="a column name of a million characters"),
+    ],
+)
+def test_what_is_no_csv_table(tmp_path: Path, content: bytes, words: str) -> None:
+    assert words in refusal(tmp_path, content)
+
+
+def test_a_header_alone_is_a_table_without_rows(tmp_path: Path) -> None:
+    assert cells(read_csv(tmp_path, b"a,b\n")) == {"a": [], "b": []}
+
+
+def test_a_header_without_its_newline_is_refused(tmp_path: Path) -> None:
+    assert refusal(tmp_path, b"a,b")
+
+
+@pytest.mark.parametrize("name", ["table.xls", "table", "table.csv.gz", "table.txt"])
+def test_another_suffix_is_refused(tmp_path: Path, name: str) -> None:
+    assert "use .csv or .parquet" in refusal(tmp_path, b"a,b\n1,2\n", name)
+
+
+@pytest.mark.parametrize("name", ["table.csv", "table.parquet"])
+def test_a_folder_or_nothing_in_place_of_a_file(tmp_path: Path, name: str) -> None:
+    with pytest.raises(InputError, match="there is no such file"):
+        sources.read(tmp_path / name)
+    (tmp_path / name).mkdir()
+    with pytest.raises(InputError, match="cannot be read"):
+        sources.read(tmp_path / name)
+
+
+def test_a_path_that_no_file_can_have(tmp_path: Path) -> None:
+    with pytest.raises(InputError):
+        sources.read(tmp_path / "x\0.csv")
+    with pytest.raises(InputError):
+        sources.read(tmp_path / f"{'x' * 300}.csv")
+
+
+DAY = datetime.datetime(2031, 2, 3, tzinfo=datetime.UTC)
+
+
+@pytest.mark.parametrize(
+    ("column", "found"),
+    [
+        pytest.param(pa.array(["x", None]), ["x", None], id="string"),
+        pytest.param(pa.array(["x", None], pa.large_string()), ["x", None], id="large string"),
+        pytest.param(pa.array(["x", "y", "x", None]).dictionary_encode(), ["x", "y", "x", None], id="dictionary"),
+        pytest.param(pa.array([4700, None]), [4700, None], id="integer"),
+        pytest.param(pa.array([4.7, None]), [4.7, None], id="float"),
+        pytest.param(pa.array([4.5, None], pa.float32()), [4.5, None], id="single float"),
+        pytest.param(pa.array([decimal.Decimal("4700.10"), None]), ["4700.10", None], id="decimal"),
+        pytest.param(pa.array([True, None]), ["true", None], id="bool"),
+        pytest.param(pa.array([DAY, None]), ["2031-02-03 00:00:00.000000Z", None], id="timestamp"),
+        pytest.param(pa.array([b"x", None]), ["x", None], id="binary text"),
+        pytest.param(pa.array([None, None], pa.null()), [None, None], id="null"),
+    ],
+)
+def test_columns_of_a_parquet_file(tmp_path: Path, column: pa.Array, found: list[Any]) -> None:
+    pq.write_table(pa.table({"key": ["k"] * len(column), "x": column}), tmp_path / "table.parquet")
+    table = sources.read(tmp_path / "table.parquet")
+    assert table.columns["x"].to_pylist() == found
+    assert table.rows.tolist() == list(range(1, len(column) + 1))
+
+
+def test_a_parquet_row_in_which_nothing_stands_is_passed_over(tmp_path: Path) -> None:
+    pq.write_table(pa.table({"a": ["x", " ", "z"], "b": [1.0, None, None]}), tmp_path / "table.parquet")
+    assert sources.read(tmp_path / "table.parquet").rows.tolist() == [1, 3]
+
+
+@pytest.mark.parametrize(
+    "column", [pa.array([[1], None]), pa.array([{"x": 1}, None]), pa.array([b"\xff", None])], ids=lambda c: str(c.type)
+)
+def test_a_column_of_neither_text_nor_number_is_named(tmp_path: Path, column: pa.Array) -> None:
+    pq.write_table(pa.table({"x": column}), tmp_path / "table.parquet")
+    checking = Checking.of(sources.read(tmp_path / "table.parquet"))
+    with pytest.raises(InputError, match="column 'x' holds"):
+        checking.cells("x")
+
+
+def test_parquet_text_that_is_not_utf_8_is_refused(tmp_path: Path) -> None:
+    broken = pa.Array.from_buffers(
+        pa.string(), 1, [None, pa.array([0, 1], pa.int32()).buffers()[1], pa.py_buffer(b"\xff")]
+    )
+    pq.write_table(pa.table({"x": broken}), tmp_path / "table.parquet")
+    checking = Checking.of(sources.read(tmp_path / "table.parquet"))
+    with pytest.raises(InputError, match="not UTF-8"):
+        checking.cells("x")
+
+
+@pytest.mark.parametrize("content", [b"", b"PAR1", b"PAR1....PAR1", b"x" * 1000, b"a,b\n1,2\n"])
+def test_what_is_no_parquet_file(tmp_path: Path, content: bytes) -> None:
+    assert "cannot be read as Parquet" in refusal(tmp_path, content, "table.parquet")
+
+
+@pytest.mark.parametrize("keep", [0.2, 0.5, 0.9, 0.99])
+def test_a_parquet_file_that_was_cut_off(tmp_path: Path, keep: float) -> None:
+    whole = tmp_path / "whole.parquet"
+    pq.write_table(pa.table({"part": [f"amp-{n}" for n in range(100)]}), whole)
+    content = whole.read_bytes()
+    assert "cannot be read as Parquet" in refusal(tmp_path, content[: int(keep * len(content))], "table.parquet")
+
+
+def test_a_parquet_column_that_stands_twice_is_refused(tmp_path: Path) -> None:
+    twice = pa.Table.from_arrays([pa.array(["x"]), pa.array(["y"])], names=["a", "a"])
+    pq.write_table(twice, tmp_path / "table.parquet")
+    with pytest.raises(InputError):
+        sources.read(tmp_path / "table.parquet")
+
+
+def test_the_folder_of_a_parquet_file_adds_no_column(tmp_path: Path) -> None:
+    folder = tmp_path / "year=2031"
+    folder.mkdir()
+    pq.write_table(pa.table({"a": ["x"]}), folder / "table.parquet")
+    assert list(sources.read(folder / "table.parquet").columns) == ["a"]
+
+
+def test_the_room_works_on_its_own(tmp_path: Path) -> None:
+    path = tmp_path / "table.csv"
+    path.write_bytes(b"a,b\n1,2\n")
+    code = f"from pathlib import Path; from gainassay.tables import sources; sources.read(Path({str(path)!r}))"
+    subprocess.run([sys.executable, "-c", code], check=True)

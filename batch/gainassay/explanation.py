@@ -71,6 +71,7 @@ class PortFigure:
 
     symbol: str
     meaning: str
+    unit: str
     value: float
 
 
@@ -207,8 +208,10 @@ def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> It
         for index, quantity in enumerate(formulas.quantities[len(topology.elements) :]):
             departure = np.float64(departures[index % len(DEPARTURES)])
             figures[quantity.name] = 1.0 / departure if quantity.reciprocal else departure
-        for symbol, meaning, expression in formulas.ports():
-            yield PortFigure(symbol, meaning, float(value(expression, figures)))
+        for formula in formulas.stated()[2:]:
+            unit = "ohm" if formula.symbol.startswith("z") else ""
+            meaning = formula.meaning.partition(":")[0]
+            yield PortFigure(formula.symbol, meaning, unit, float(value(formula.expression, figures)))
 
 
 def _figures(parts: PartTable, p: int, matters: list[bool]) -> list[Figure]:

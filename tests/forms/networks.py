@@ -39,7 +39,7 @@ def _two(rng: random.Random, nodes: list[str]) -> tuple[str, str]:
 
 
 def random_values(topology: Topology, rng: random.Random) -> dict[str, mpmath.mpf]:
-    """A value for every quantity of the formulas, spread over decades; farad and henry among them."""
+    """A value for every quantity of the formulas, spread over decades."""
     several = len(topology.amplifiers) > 1
 
     def value(low: float, high: float) -> mpmath.mpf:
@@ -53,13 +53,9 @@ def random_values(topology: Topology, rng: random.Random) -> dict[str, mpmath.mp
 
 
 def impedances(topology: Topology, values: Values, s: mpmath.mpc) -> dict[str, mpmath.mpf]:
-    """The values with the impedance of each element for its capacitance or inductance."""
-    reactive = {
-        element.name: 1 / (s * values[element.name]) if element.kind == "capacitor" else s * values[element.name]
-        for element in topology.elements
-        if element.kind != "resistor"
-    }
-    return {**values, **reactive}
+    """The same with the impedance at s of each capacitor and inductor."""
+    at_s = {"resistor": lambda v: v, "capacitor": lambda v: 1 / (s * v), "inductor": lambda v: s * v}
+    return {**values, **{e.name: at_s[e.kind](values[e.name]) for e in topology.elements}}
 
 
 def gain(topology: Topology, values: Values) -> mpmath.mpf:

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import json
 import os
 import random
+import re
 import subprocess
 import sys
 from dataclasses import replace
@@ -17,16 +19,13 @@ from forms import networks
 from gainassay.errors import InputError
 from gainassay.forms import nodal
 from gainassay.forms.evaluation import value
-from gainassay.forms.expression import Expression
 from gainassay.forms.library import library
-from gainassay.forms.meaningful import Formulas, derive, gain_formula, quantities
+from gainassay.forms.meaningful import Formulas, Stated, derive, gain_formula, quantities
 from gainassay.forms.proof import ProofError, prove
 from gainassay.forms.render import text
 from gainassay.forms.topology import Element, Topology
 
 LIBRARY = library()
-S = mpmath.mpc(3, 700)
-"""Complex frequency [rad/s] at which stages with reactive elements are compared."""
 
 STAGES = {
     "bridged T feedback": oracle.network(
@@ -87,33 +86,26 @@ STAGES = {
 }
 
 
-def whole(formulas: Formulas) -> dict[str, Expression]:
-    """Every formula of a topology by what it is of."""
-    return {"gain": formulas.gain.whole} | {meaning: formula for _, meaning, formula in formulas.ports()}
-
-
-def solved(topology: Topology, values: networks.Values, what: str) -> mpmath.mpf:
+def solved(topology: Topology, values: networks.Values, formula: Stated) -> mpmath.mpf:
     """The same by the solver."""
-    match what.split():
-        case ["gain"]:
+    match formula.symbol:
+        case "gain":
             return networks.gain(topology, values)
-        case ["input", "impedance", _]:
+        case "z_in":
             return networks.input_impedance(topology, values)
-        case ["output", "impedance", _]:
+        case "z_out":
             return networks.output_impedance(topology, values)
-        case words:
-            return networks.return_ratio(topology, values, words[-1])
+        case _:
+            return networks.return_ratio(topology, values, formula.meaning.split()[-1])
 
 
 def check_against_solver(topology: Topology, formulas: Formulas, rng: random.Random) -> None:
     with mpmath.workdps(networks.DIGITS):
-        values = networks.random_values(topology, rng)
-        for what, formula in whole(formulas).items():
-            expected, found = (
-                solved(topology, networks.impedances(topology, values, S), what),
-                value(formula, values, S),
-            )
-            assert abs(found - expected) <= abs(expected) * mpmath.mpf(10) ** -30, what
+        values, s = networks.random_values(topology, rng), mpmath.mpc(3, 700) / 10**6
+        impedances = networks.impedances(topology, values, s)
+        for formula in formulas.stated()[1:]:
+            expected, found = solved(topology, impedances, formula), value(formula.expression, values, s)
+            assert abs(found - expected) <= abs(expected) * mpmath.mpf(10) ** -30, formula.symbol
 
 
 def test_inverting() -> None:
@@ -230,7 +222,12 @@ def test_random_networks_against_a_nodal_solve(amplifiers: int, seeds: int) -> N
 @pytest.mark.oracle
 def test_reactive_elements_against_a_nodal_solve() -> None:
     topology = _with_kinds(STAGES["bridged T feedback"], r3="capacitor", r5="inductor")
-    check_against_solver(topology, derive(topology), random.Random(1))
+    formula = derive(topology).gain.whole
+    with mpmath.workdps(networks.DIGITS):
+        values = networks.random_values(topology, random.Random(1))
+        s = mpmath.mpc(3, 700)
+        expected = networks.gain(topology, networks.impedances(topology, values, s))
+        assert abs(value(formula, values, s) - expected) < abs(expected) * mpmath.mpf(10) ** -40
 
 
 @pytest.mark.parametrize("name", LIBRARY)
@@ -238,16 +235,19 @@ def test_absent_elements_are_left_out(name: str) -> None:
     topology = LIBRARY[name]
     absent = {element.name: element.absent for element in topology.elements if element.absent != "error"}
     formulas = derive(topology, absent)
-    for formula in whole(formulas).values():
-        assert not absent.keys() & set(text(formula).replace("(", " ").replace(")", " ").replace("/", " ").split())
-    values = {name: float(number) for name, number in networks.random_values(topology, random.Random(name)).items()}
-    kinds = {element.name: element.kind for element in topology.elements}
-    nearly = {
-        name: 1e-30 if (state == "open") is (kinds[name] == "capacitor") else 1e30 for name, state in absent.items()
-    }
+    for formula in formulas.stated():
+        assert not absent.keys() & set(re.findall(r"\w+", text(formula.expression)))
+    values = {element.name: 1e3 * 1.7**i for i, element in enumerate(topology.elements)}
+    amplifiers = formulas.quantities[len(topology.elements) :]
+    values |= {q.name: {"open_loop_gain": 1e5, "input_resistance": 1e6}.get(q.kind, 50.0) for q in amplifiers}
     full = gain_formula(nodal.derive(topology), quantities(topology)).whole
-    found, expected = value(formulas.gain.whole, values, 700j), value(full, values | nearly, 700j)
-    assert abs(found - expected) < 1e-9 * abs(expected)
+    with mpmath.workdps(100):
+        tiny, s = mpmath.mpf("1e-40"), mpmath.mpf("1e-4")
+        is_large = {e.name: (e.absent == "open") != (e.kind == "capacitor") for e in topology.elements}
+        nearly = {name: 1 / tiny if is_large[name] else tiny for name in absent}
+        exact = {name: mpmath.mpf(number) for name, number in values.items()}
+        found, expected = value(formulas.gain.whole, exact, s), value(full, exact | nearly, s)
+        assert abs(found - expected) < abs(expected) * mpmath.mpf("1e-25")
 
 
 def test_a_wrong_formula_is_not_proved() -> None:
@@ -259,6 +259,19 @@ def test_a_wrong_formula_is_not_proved() -> None:
         prove(formulas.gain.ideal, gain.numerator, gain.denominator, count)
     with pytest.raises(ProofError):
         prove(formulas.gain.whole, -gain.numerator, gain.denominator, count)
+
+
+@pytest.mark.parametrize("name", STAGES)
+def test_formulas_survive_json(name: str) -> None:
+    formulas = derive(STAGES[name])
+    assert Formulas.from_tree(json.loads(json.dumps(formulas.to_tree()))) == formulas
+
+
+def test_a_notebook_shows_formulas() -> None:
+    formulas = derive(LIBRARY["follower"])
+    assert formulas._repr_latex_().startswith(r"$\displaystyle")
+    assert r"z_{\mathrm{out}} &= \frac" in formulas._repr_latex_()
+    assert formulas._repr_html_().count("<math") == len(formulas.stated())
 
 
 def test_a_stage_without_ideal_gain_is_refused() -> None:

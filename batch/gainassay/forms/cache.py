@@ -17,10 +17,8 @@ from typing import Any, TypeVar
 from platformdirs import user_cache_path
 
 from gainassay.forms import meaningful, soundness
-from gainassay.forms.expression import Quantity
 from gainassay.forms.form import Form, Ratio, derive
-from gainassay.forms.meaningful import BlackmanFormula, Formulas, GainFormula
-from gainassay.forms.render import expression_of, tree
+from gainassay.forms.meaningful import Formulas
 from gainassay.forms.topology import Topology
 
 log = logging.getLogger(__name__)
@@ -84,7 +82,7 @@ def formulas_of(topology: Topology, absent: Mapping[str, str] | None = None) -> 
         return meaningful.derive(topology, states)
 
     path = folder() / "formulas" / f"{_key(topology, FORMULA_CODE, states)}.json"
-    return _kept(path, made, _formulas_data, _formulas)
+    return _kept(path, made, Formulas.to_tree, Formulas.from_tree)
 
 
 def _key(topology: Topology, code: tuple[str, ...], absent: Mapping[str, str]) -> str:
@@ -165,31 +163,3 @@ def _ratio(data: dict[str, Any]) -> Ratio:
         return tuple((int(value), tuple(int(e) for e in exponents)) for value, exponents in terms)
 
     return Ratio(polynomial(data["numerator"]), polynomial(data["denominator"]))
-
-
-def _formulas_data(formulas: Formulas) -> dict[str, Any]:
-    def blackman(formula: BlackmanFormula | None) -> list[Any] | None:
-        return None if formula is None else [tree(formula.dead), tree(formula.shorted), tree(formula.opened)]
-
-    gain = formulas.gain
-    return {
-        "quantities": [tree(quantity) for quantity in formulas.quantities],
-        "gain": [tree(gain.ideal), tree(gain.numerator), tree(gain.denominator)],
-        "input_impedance": blackman(formulas.input_impedance),
-        "output_impedance": blackman(formulas.output_impedance),
-        "return_ratios": [[amplifier, tree(ratio)] for amplifier, ratio in formulas.return_ratios],
-    }
-
-
-def _formulas(data: dict[str, Any]) -> Formulas:
-    def blackman(trees: list[Any] | None) -> BlackmanFormula | None:
-        return None if trees is None else BlackmanFormula(*map(expression_of, trees))
-
-    quantities = tuple(expression_of(found) for found in data["quantities"])
-    return Formulas(
-        quantities=tuple(quantity for quantity in quantities if isinstance(quantity, Quantity)),
-        gain=GainFormula(*map(expression_of, data["gain"])),
-        input_impedance=blackman(data["input_impedance"]),
-        output_impedance=blackman(data["output_impedance"]),
-        return_ratios=tuple((amplifier, expression_of(ratio)) for amplifier, ratio in data["return_ratios"]),
-    )

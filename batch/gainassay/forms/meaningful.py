@@ -11,11 +11,12 @@ output impedance are written as Blackman did, Z = Z_dead (1 + T_short)/(1 + T_op
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, fields
+from typing import Any
 
 from gainassay.errors import InputError
-from gainassay.forms import nodal, proof
+from gainassay.forms import nodal, proof, render
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN
 from gainassay.forms.expression import ONE, Expression, Quantity, length, product, quotient, total
 from gainassay.forms.multiaffine import MultiAffine, factors
@@ -69,6 +70,25 @@ class BlackmanFormula:
 
 
 @dataclass(frozen=True)
+class Stated:
+    """A formula with what it is called.
+
+    Attributes
+    ----------
+    symbol : str
+        What stands left of the equals sign.
+    meaning : str
+        What it is.
+    expression : Expression
+        The formula.
+    """
+
+    symbol: str
+    meaning: str
+    expression: Expression
+
+
+@dataclass(frozen=True)
 class Formulas:
     """What a person reads of a topology; every formula is proved.
 
@@ -90,27 +110,78 @@ class Formulas:
     output_impedance: BlackmanFormula | None
     return_ratios: tuple[tuple[str, Expression], ...]
 
-    def ports(self) -> Iterator[tuple[str, str, Expression]]:
-        """Symbol, meaning and formula of the impedances and the return ratios that there are."""
+    def stated(self) -> tuple[Stated, ...]:
+        """Every formula there is, in the order in which a person reads them."""
+        found = [
+            Stated("G", "ideal gain", self.gain.ideal),
+            Stated("gain", "closed-loop gain: ideal gain x correction factor", self.gain.whole),
+        ]
+        blackman = "amplifiers dead x (1 + T shorted)/(1 + T open)"
         if self.input_impedance:
-            yield "z_in", "input impedance [ohm]", self.input_impedance.whole
+            found.append(Stated("z_in", f"input impedance: {blackman}", self.input_impedance.whole))
         if self.output_impedance:
-            yield "z_out", "output impedance [ohm]", self.output_impedance.whole
+            found.append(Stated("z_out", f"output impedance: {blackman}", self.output_impedance.whole))
         for amplifier, ratio in self.return_ratios:
             symbol = "T" if len(self.return_ratios) == 1 else f"T_{amplifier}"
-            yield symbol, f"return ratio of {amplifier}", ratio
+            found.append(Stated(symbol, f"return ratio of {amplifier}", ratio))
+        return tuple(found)
+
+    def to_tree(self) -> dict[str, Any]:
+        """The formulas as dictionaries and lists, for JSON; `from_tree` reads them back."""
+        return {
+            "quantities": [render.tree(quantity) for quantity in self.quantities],
+            "gain": _trees(self.gain),
+            "input_impedance": None if self.input_impedance is None else _trees(self.input_impedance),
+            "output_impedance": None if self.output_impedance is None else _trees(self.output_impedance),
+            "return_ratios": {name: render.tree(ratio) for name, ratio in self.return_ratios},
+        }
+
+    @staticmethod
+    def from_tree(found: Mapping[str, Any]) -> Formulas:
+        """The formulas that `to_tree` wrote.
+
+        Raises
+        ------
+        ValueError, KeyError, TypeError
+            If it is no such tree.
+        """
+        impedances = [
+            None if found[which] is None else BlackmanFormula(**_expressions(found[which]))
+            for which in ("input_impedance", "output_impedance")
+        ]
+        return Formulas(
+            quantities=tuple(_quantity(entry) for entry in found["quantities"]),
+            gain=GainFormula(**_expressions(found["gain"])),
+            input_impedance=impedances[0],
+            output_impedance=impedances[1],
+            return_ratios=tuple((name, render.expression_of(ratio)) for name, ratio in found["return_ratios"].items()),
+        )
 
     def _repr_latex_(self) -> str:
-        """The gain, as a notebook shows it."""
-        from gainassay.forms.render import latex
-
-        return f"$\\displaystyle {latex(self.gain.whole)}$"
+        """All formulas, as a notebook shows them."""
+        rows = (
+            rf"{render.latex_symbol(formula.symbol)} &= {render.latex(formula.expression)}" for formula in self.stated()
+        )
+        return r"$\displaystyle \begin{aligned}" + r" \\ ".join(rows) + r"\end{aligned}$"
 
     def _repr_html_(self) -> str:
-        """The same, for a notebook that shows HTML."""
-        from gainassay.forms.render import mathml
+        """The same, for what shows HTML."""
+        return "".join(f"<p>{f.symbol}: {f.meaning}</p>{render.mathml(f.expression)}" for f in self.stated())
 
-        return mathml(self.gain.whole)
+
+def _trees(formula: GainFormula | BlackmanFormula) -> dict[str, Any]:
+    return {field.name: render.tree(getattr(formula, field.name)) for field in fields(formula)}
+
+
+def _expressions(found: Mapping[str, Any]) -> dict[str, Expression]:
+    return {name: render.expression_of(entry) for name, entry in found.items()}
+
+
+def _quantity(entry: Mapping[str, Any]) -> Quantity:
+    found = render.expression_of(entry)
+    if not isinstance(found, Quantity):
+        raise ValueError(f"no quantity: {entry!r}")  # noqa: TRY004 - a fault of the text read, not of a type
+    return found
 
 
 def derive(topology: Topology, absent: Mapping[str, str] | None = None) -> Formulas:

@@ -91,6 +91,15 @@ def latex(expression: Expression) -> str:
     return _shown(expression, LATEX)
 
 
+def latex_symbol(symbol: str) -> str:
+    """What stands left of the equals sign, for LaTeX.
+
+    >>> latex_symbol("z_in"), latex_symbol("gain"), latex_symbol("T")
+    ('z_{\\\\mathrm{in}}', '\\\\mathit{gain}', 'T')
+    """
+    return _latex_name(symbol)
+
+
 def mathml(expression: Expression) -> str:
     """The formula as a presentation MathML element."""
     row = f"<mrow>{_shown(expression, MATHML)}</mrow>"

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
 from html import escape
 from typing import Any
 
@@ -12,8 +11,7 @@ import numpy as np
 from gainassay.forms import nodal, render
 from gainassay.forms.cache import content_hash, form_of, formulas_of
 from gainassay.forms.evaluation import ratios
-from gainassay.forms.expression import Expression
-from gainassay.forms.meaningful import Formulas
+from gainassay.forms.meaningful import Formulas, Stated
 from gainassay.forms.multiaffine import MultiAffine
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.report.text import table
@@ -22,34 +20,11 @@ LONGEST_ON_PAGE = 1_000
 """Characters of a formula that the page of all topologies still shows."""
 
 
-@dataclass(frozen=True)
-class Named:
-    """A formula with what it is called.
-
-    Attributes
-    ----------
-    symbol : str
-        What stands left of the equals sign.
-    meaning : str
-        What it is, with its unit.
-    expression : Expression
-        The formula.
-    """
-
-    symbol: str
-    meaning: str
-    expression: Expression
-
-
-def named(topology: Topology, formulas: Formulas) -> Iterator[Named]:
-    """The formulas in the order in which they are read."""
-    gain = formulas.gain
-    unit = gain_unit(topology)
-    yield Named("G", f"ideal gain [{unit}]", gain.ideal)
-    yield Named("gain", f"closed-loop gain [{unit}]: ideal gain x correction factor", gain.whole)
-    for symbol, meaning, expression in formulas.ports():
-        blackman = ": amplifiers dead x (1 + T shorted)/(1 + T open)" if symbol.startswith("z") else ""
-        yield Named(symbol, f"{meaning}{blackman}", expression)
+def _meaning(topology: Topology, formula: Stated) -> str:
+    """What a formula is, with its unit."""
+    units = {"G": gain_unit(topology), "gain": gain_unit(topology), "z_in": "ohm", "z_out": "ohm"}
+    unit = units.get(formula.symbol)
+    return f"{formula.meaning} [{unit}]" if unit else formula.meaning
 
 
 def text(topology: Topology, formulas: Formulas, unicode: bool, width: int) -> list[str]:
@@ -58,19 +33,19 @@ def text(topology: Topology, formulas: Formulas, unicode: bool, width: int) -> l
     if topology.known_as:
         lines.append(f"Known as: {', '.join(topology.known_as)}")
     lines += [f"{e.name} may be blank: {e.absent}" for e in topology.elements if e.absent != "error"]
-    for formula in named(topology, formulas):
+    for formula in formulas.stated():
         start = f"  {formula.symbol} = "
         shown = render.lines(formula.expression, width - len(start), unicode)
-        lines += ["", formula.meaning, start + shown[0], *(" " * len(start) + line for line in shown[1:])]
+        lines += ["", _meaning(topology, formula), start + shown[0], *(" " * len(start) + line for line in shown[1:])]
     return lines
 
 
 def latex(topology: Topology, formulas: Formulas) -> list[str]:
     """The formulas as the lines of a LaTeX document's body (with amsmath)."""
     lines = []
-    for formula in named(topology, formulas):
-        symbol = formula.symbol if len(formula.symbol) == 1 else rf"\mathrm{{{formula.symbol.replace('_', ' ')}}}"
-        lines += [f"% {formula.meaning}", rf"\[ {symbol} = {render.latex(formula.expression)} \]"]
+    for formula in formulas.stated():
+        symbol = render.latex_symbol(formula.symbol)
+        lines += [f"% {_meaning(topology, formula)}", rf"\[ {symbol} = {render.latex(formula.expression)} \]"]
     return lines
 
 
@@ -83,8 +58,11 @@ def mathml(topology: Topology, formulas: Formulas) -> list[str]:
         f'<meta charset="utf-8"><title>{title}</title>',
         f"<h1>{title}</h1>",
     ]
-    for formula in named(topology, formulas):
-        lines += [f"<h2>{escape(formula.symbol)}: {escape(formula.meaning)}</h2>", render.mathml(formula.expression)]
+    for formula in formulas.stated():
+        lines += [
+            f"<h2>{escape(formula.symbol)}: {escape(_meaning(topology, formula))}</h2>",
+            render.mathml(formula.expression),
+        ]
     return [*lines, "</html>"]
 
 
@@ -108,11 +86,11 @@ def data(topology: Topology, formulas: Formulas) -> dict[str, Any]:
         "formulas": [
             {
                 "symbol": f.symbol,
-                "meaning": f.meaning,
+                "meaning": _meaning(topology, f),
                 "text": render.text(f.expression),
                 "tree": render.tree(f.expression),
             }
-            for f in named(topology, formulas)
+            for f in formulas.stated()
         ],
         "proved": "equal to numerator/denominator as an identity of polynomials",
         "symbols": "an element stands for its admittance; u1.a for 1/A_OL, u1.g_id for 1/r_id, u1.r_o for r_o",
@@ -125,11 +103,11 @@ def data(topology: Topology, formulas: Formulas) -> dict[str, Any]:
 def numbers(topology: Topology, formulas: Formulas, values: Mapping[str, float], unicode: bool) -> list[str]:
     """The formulas with the value of each ratio in front, so that a person sees which ratio matters."""
     lines = [f"{topology.name}: {topology.summary}"]
-    for formula in named(topology, formulas):
+    for formula in formulas.stated():
         (whole, value), *inner = _ratios(formula, values, unicode)
         rows = [[f"  {_number(value)}", f"{formula.symbol} = {whole}"]]
         rows += [[f"  {_number(value)}", f"  {shown}"] for shown, value in inner]
-        lines += ["", formula.meaning, *table(["", ""], rows)[1:]]
+        lines += ["", _meaning(topology, formula), *table(["", ""], rows)[1:]]
     return lines
 
 
@@ -141,15 +119,15 @@ def numbers_data(topology: Topology, formulas: Formulas, values: Mapping[str, fl
         "formulas": [
             {
                 "symbol": formula.symbol,
-                "meaning": formula.meaning,
+                "meaning": _meaning(topology, formula),
                 "ratios": [{"text": shown, "value": float(value)} for shown, value in _ratios(formula, values)],
             }
-            for formula in named(topology, formulas)
+            for formula in formulas.stated()
         ],
     }
 
 
-def _ratios(formula: Named, values: Mapping[str, float], unicode: bool = False) -> list[tuple[str, Any]]:
+def _ratios(formula: Stated, values: Mapping[str, float], unicode: bool = False) -> list[tuple[str, Any]]:
     """Text and value of the formula and of each ratio in it; nan where ideal quantities leave it undefined."""
     with np.errstate(all="ignore"):
         scalars = {name: np.float64(value) for name, value in values.items()}
@@ -178,7 +156,7 @@ def page(topologies: Sequence[Topology]) -> list[str]:
         if blanks:
             lines.append(f"May be blank: {', '.join(blanks)}.")
         lines += ["", "```text"]
-        for formula in named(topology, formulas):
+        for formula in formulas.stated():
             shown = render.lines(formula.expression, 110)
             if len(render.text(formula.expression)) > LONGEST_ON_PAGE:
                 shown = [f"(long: gainassay form {topology.name})"]

@@ -65,7 +65,7 @@ def text(found: Explanation) -> list[str]:
         ),
         "",
         "Impedances and loop at 0 Hz, with the nominal figures",
-        *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning.partition(" [")[0]] for p in found.ports])[1:],
+        *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports])[1:],
         "",
         *CAUTIONS,
     ]
@@ -74,7 +74,7 @@ def text(found: Explanation) -> list[str]:
 def _port(port: PortFigure) -> str:
     if math.isnan(port.value):
         return "-"
-    return quantity(port.value, "ohm") if "[ohm]" in port.meaning else f"{port.value:.6g}"
+    return quantity(port.value, port.unit) if port.unit else f"{port.value:.6g}"
 
 
 def _gain(value: float, unit: str) -> str:

@@ -23,6 +23,7 @@ from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from functools import reduce
+from operator import or_
 
 from gainassay.forms.expression import (
     ONE,
@@ -49,7 +50,7 @@ RATIOS = 5000
 
 ALL = 1000
 
-TRIALS_AT_FIRST = {5: 6, 6: 4}
+TRIALS_AT_FIRST = {5: 8, 6: 4}
 """Trials carried out for a ratio of that many symbols; all for fewer symbols, `TRIALS_OF_MORE` for more."""
 
 TRIALS_OF_MORE = 3
@@ -97,7 +98,7 @@ class Writer:
         self._lengths = [length(impedance) for impedance in impedances]
         self._parasitic = parasitic
         self._groups: dict[tuple[str, tuple[int, ...]], int] = {}
-        self._written: dict[tuple[Factors, Factors], Expression | None] = {}
+        self._written: dict[tuple[Factors, Factors, bool], Expression | None] = {}
         self._factors: dict[MultiAffine, tuple[int, Factors]] = {}
         self._left = RATIOS
 
@@ -109,11 +110,16 @@ class Writer:
     def _ratio(self, numerator: MultiAffine, denominator: MultiAffine) -> Expression | None:
         """The same, or None if its formula is being looked for already."""
         coefficient, over, under = self._reduced(numerator, denominator)
-        pieces = [self._piece(*piece) for piece in _connected(over, under)]
-        if any(piece is None for piece in pieces):
-            return None
-        known = [piece for piece in pieces if piece is not None]
-        return product(known, coefficient=coefficient)
+        written = []
+        for above, below in _connected(over, under):
+            # A difference takes the minus in, for as a - b it may be shorter than as -(b - a).
+            negative = coefficient < 0 and _has_difference(above, below)
+            piece = self._piece(above, below, negative)
+            if piece is None:
+                return None
+            coefficient = -coefficient if negative else coefficient
+            written.append(piece)
+        return product(written, coefficient=coefficient)
 
     def _reduced(self, numerator: MultiAffine, denominator: MultiAffine) -> tuple[Fraction, Factors, Factors]:
         """Number, factors above and factors below of the ratio in lowest terms."""
@@ -133,26 +139,24 @@ class Writer:
     def _floor(self, numerator: MultiAffine, denominator: MultiAffine) -> int:
         """A length that no formula of the ratio falls below: every symbol stands in it at least once."""
         _, over, under = self._reduced(numerator, denominator)
-        support = 0
-        for factor in (*over, *under):
-            support |= factor.support()
-        return self._length_of(support)
+        return self._length_of(_support(over, under))
 
     def _length_of(self, support: int) -> int:
         return sum(self._lengths[i] for i in _indices(support))
 
-    def _piece(self, over: Factors, under: Factors) -> Expression | None:
-        """Product of `over` / product of `under`, which share symbols and have no common factor."""
+    def _piece(self, over: Factors, under: Factors, negative: bool) -> Expression | None:
+        """Product of `over` / product of `under`, or its negative; they share symbols and have no common factor."""
         degree = sum(factor.degree() for factor in under) - sum(factor.degree() for factor in over)
         if degree < 0 or (degree == 0 and self._is_upside_down(over, under)):
-            inverse = self._piece(under, over)
+            inverse = self._piece(under, over, negative)
             return None if inverse is None else quotient(ONE, inverse)
         if not over and len(under) == 1 and under[0].support().bit_count() == 1:
             return self._impedances[under[0].support().bit_length() - 1]
-        key = (over, under)
+        key = (over, under, negative)
         if key not in self._written:
             self._written[key] = None  # a search that comes back to this ratio does not go round
-            self._written[key] = self._find(over, under, degree)
+            signed = _negated(over) if negative else over
+            self._written[key] = self._find(signed, under, degree)
         return self._written[key]
 
     def _is_upside_down(self, over: Factors, under: Factors) -> bool:
@@ -178,9 +182,9 @@ class Writer:
         best = connection
         shortest = length(best) if best else WORTH * self._length_written_out(numerator, denominator)
         floor = self._length_of(support)
-        trials = [(self._floors(trial), trial) for trial in self._trials(over, under, degree)]
-        for floors, trial in sorted(trials, key=_promise)[: self._trials_for(support.bit_count())]:
-            candidate = self._carried_out(trial, floors, shortest)
+        trials = sorted(self._trials(over, under, degree), key=self._promise)
+        for trial in trials[: self._trials_for(support.bit_count())]:
+            candidate = self._carried_out(trial, shortest)
             if candidate is not None and length(candidate) < shortest:
                 best, shortest = candidate, length(candidate)
             if shortest <= floor + 1:  # beside the symbols there is a number to compare with
@@ -199,12 +203,17 @@ class Writer:
             return late
         return TRIALS_AT_FIRST.get(symbols, ALL if symbols < min(TRIALS_AT_FIRST) else TRIALS_OF_MORE)
 
-    def _floors(self, trial: Trial) -> list[int]:
-        """For each ratio of a trial a length that no formula of it falls below."""
-        return [self._floor(*pair) for pair in trial.pairs]
+    def _promise(self, trial: Trial) -> int:
+        """Length that the trial's formula has at least, and what its polynomials let fear, twice over."""
+        reduced = [self._reduced(*pair) for pair in trial.pairs]
+        symbols = sum(self._length_of(_support(over, under)) for _, over, under in reduced)
+        signs = sum(coefficient < 0 for coefficient, _, _ in reduced)
+        terms = sum(len(polynomial.terms) for pair in trial.pairs for polynomial in pair)
+        return 2 * (trial.ones + symbols + signs) + terms
 
-    def _carried_out(self, trial: Trial, floors: Sequence[int], limit: int) -> Expression | None:
+    def _carried_out(self, trial: Trial, limit: int) -> Expression | None:
         """The trial's formula, None as soon as it cannot be shorter than the limit."""
+        floors = [self._floor(*pair) for pair in trial.pairs]
         least = trial.ones + sum(floors)
         found = []
         for pair, floor in zip(trial.pairs, floors, strict=True):
@@ -272,13 +281,6 @@ class Writer:
                     yield _opened(numerator, denominator, 1 << index, shorted)
         for index in _indices(denominator.support()):
             yield from _divided(over, under, 1 << index, series if degree == 1 else total)
-
-
-def _promise(rated: tuple[Sequence[int], Trial]) -> int:
-    """Length that a trial's formula has at least, and what its polynomials let fear, twice over."""
-    floors, trial = rated
-    terms = sum(len(polynomial.terms) for pair in trial.pairs for polynomial in pair)
-    return 2 * (trial.ones + sum(floors)) + terms
 
 
 def _opened(numerator: MultiAffine, denominator: MultiAffine, symbol: int, shorted: bool) -> Trial:
@@ -361,6 +363,21 @@ def _indices(mask: int) -> list[int]:
         found.append(bit.bit_length() - 1)
         mask ^= bit
     return found
+
+
+def _has_difference(over: Factors, under: Factors) -> bool:
+    """Whether some factor has terms of both signs."""
+    return any(value < 0 for factor in (*over, *under) for value in factor.terms.values())
+
+
+def _negated(over: Factors) -> Factors:
+    """Factors of the negative product."""
+    return (-over[0], *over[1:]) if over else (MultiAffine.constant(-1),)
+
+
+def _support(over: Factors, under: Factors) -> int:
+    """Mask of the symbols of all factors."""
+    return reduce(or_, (factor.support() for factor in (*over, *under)), 0)
 
 
 def _connected(over: Factors, under: Factors) -> list[tuple[Factors, Factors]]:

@@ -1,8 +1,9 @@
 """An independent solver of stages, to hold Gainassay against.
 
-It shares no formula with the package: unknowns are node voltages *and* every branch current, elements enter
+`gain` shares no formula with the package: unknowns are node voltages *and* every branch current, elements enter
 by their resistance, the amplifier by A_OL itself with r_o as a resistor in series, and numbers are solved for
-at 60 digits. Where many solves are needed a second one, nodal and in double precision, does them in a batch.
+at 60 digits. Where many solves are needed `gains`, a plain nodal solve in double precision, does them in a
+batch; it writes the amplifier with 1/A_OL, as the package does, but has its matrices solved numerically.
 """
 
 from __future__ import annotations

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gainassay.contracts.documents import nearest
-from gainassay.contracts.evidence import EVIDENCE
+from gainassay.contracts.evidence import EVIDENCE, MISSING
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
 from gainassay.forms.coefficients import FloatArray
@@ -21,7 +21,6 @@ from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
 from gainassay.screen.verdicts import LEANINGS, VERDICTS
 from gainassay.tables.parts import PartTable
-from gainassay.tables.rejects import Reject
 from gainassay.tables.stages import StageTable
 
 PPM = 1e6
@@ -35,6 +34,9 @@ class Figure:
     ----------
     matters : bool
         Whether the stage's gain depends on it at all.
+    at_worst : str
+        `limit` or `ideal`: where it stands at the corner that gives the worst error; for several amplifiers of
+        different kind, `limit` with their names. Empty if there is no finite bound.
     """
 
     quantity: str
@@ -43,6 +45,7 @@ class Figure:
     worst: float
     evidence: str
     matters: bool
+    at_worst: str
 
 
 @dataclass(frozen=True)
@@ -117,8 +120,8 @@ def explain(stages: StageTable, parts: PartTable, groups: tuple[Group, ...], sta
         If the stage or the part is not in its table, or was rejected.
     """
     names = [name for group in groups for name in group.stage_names.tolist()]
-    _require(stage, names, "stage", stages.source, stages.rejects)
-    _require(part, parts.names.tolist(), "part", parts.source, parts.rejects)
+    _require(stage, names, "stage", stages)
+    _require(part, parts.names.tolist(), "part", parts)
     place = next(index for index, group in enumerate(groups) if stage in group.stage_names)
     s = int(np.searchsorted(groups[place].stage_names, stage))
     p = int(np.searchsorted(groups[place].part_names, part))
@@ -126,14 +129,15 @@ def explain(stages: StageTable, parts: PartTable, groups: tuple[Group, ...], sta
     return _explanation(screened, stages.groups[place].topology, stage, parts, p)
 
 
-def _require(name: str, known: list[str], kind: str, source: str, rejects: tuple[Reject, ...]) -> None:
+def _require(name: str, known: list[str], kind: str, table: StageTable | PartTable) -> None:
     if name in known:
         return
-    for reject in rejects:
-        if reject.column == kind and reject.value == name:
-            raise InputError(f"{source}: row {reject.row}: {kind} {name!r} was rejected: it {reject.reason}")
-    hint = nearest(name, known) or f"; `gainassay check` says which {kind}s were rejected, and why"
-    raise InputError(f"{source}: there is no usable {kind} {name!r}{hint}")
+    row = table.rejected_names.get(name)
+    reasons = [f"{r.column} {r.value!r} {r.reason}" for r in table.rejects if r.row == row]
+    if reasons:
+        raise InputError(f"{table.source}: row {row}: {kind} {name!r} was rejected: {'; '.join(reasons)}")
+    hint = nearest(name, known) or "; `gainassay check` says what is in the table"
+    raise InputError(f"{table.source}: there is no usable {kind} {name!r}{hint}")
 
 
 def _explanation(screened: Screened, topology: Topology, stage: str, parts: PartTable, p: int) -> Explanation:
@@ -184,7 +188,7 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
                 strict=True,
             )
         ),
-        figures=tuple(_figures(parts, p, side.matters[:, 0].tolist())),
+        figures=tuple(_figures(parts, p, side.matters[:, 0].tolist(), _at_limit(screened.group, corner))),
         terms=tuple(
             sorted(
                 (term for term in terms if term.nominal_ppm or term.worst_ppm),
@@ -214,17 +218,23 @@ def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> It
             yield PortFigure(formula.symbol, meaning, unit, float(value(formula.expression, figures)))
 
 
-def _figures(parts: PartTable, p: int, matters: list[bool]) -> list[Figure]:
-    figures = []
+def _at_limit(group: Group, corner: int) -> list[tuple[str, str]] | None:
+    """The departures (amplifier, symbol) that are not 0 at a corner; None if there is no finite bound."""
+    if corner == UNBOUNDED:
+        return None
+    active = group.active_sets[corner % len(group.active_sets)]
+    return [group.form.departures[i] for i in sorted({i for k in active for i in group.form.monomials[k]})]
+
+
+def _figures(parts: PartTable, p: int, matters: list[bool], at_limit: list[tuple[str, str]] | None) -> Iterator[Figure]:
     for index, departure in enumerate(DEPARTURES):
         if not parts.modelled[index]:
             continue
-        numbers = [parts.nominal[index, p], parts.worst[index, p]]
-        if EVIDENCE[parts.evidence[index, p]] == "missing":
-            numbers = [np.nan, np.nan]
-        elif departure.reciprocal:
-            numbers = [1.0 / number for number in numbers]
         evidence = EVIDENCE[parts.evidence[index, p]]
-        nominal, worst = (float(number) for number in numbers)
-        figures.append(Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters[index]))
-    return figures
+        nominal, worst = (
+            np.nan if evidence == EVIDENCE[MISSING] else 1.0 / float(value) if departure.reciprocal else float(value)
+            for value in (parts.nominal[index, p], parts.worst[index, p])
+        )
+        amplifiers = [amplifier for amplifier, symbol in at_limit or () if symbol == departure.symbol]
+        at_worst = "" if at_limit is None else f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
+        yield Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters[index], at_worst)

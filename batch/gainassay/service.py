@@ -3,43 +3,37 @@
 from __future__ import annotations
 
 import os
-import platform
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
-from importlib.metadata import version
+from datetime import UTC, datetime
 from pathlib import Path
-from time import monotonic
 from typing import Any
 
-import numpy as np
-import pyarrow as pa
+import pyarrow.compute as pc
 
 from gainassay import job as jobs
-from gainassay.cautions import CAUTIONS
-from gainassay.forms.cache import content_hash
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
-from gainassay.job import Job
+from gainassay.job import Job, Results
 from gainassay.runs import folder as run_folder
 from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
+from gainassay.runs.folder import File, write
+from gainassay.runs.manifest import manifest
 from gainassay.screen import blocks
-from gainassay.screen.blocks import Group, Screened, Tally
+from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.corners import StageBox, term_names
-from gainassay.screen.verdicts import VERDICTS
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageTable
-
-PACKAGES = ("numpy", "pyarrow", "dask", "sympy")
-"""Packages whose versions a manifest records."""
 
 
 @dataclass(frozen=True)
 class Prepared:
     """A job with its tables read and checked."""
 
+    started: datetime
     job: Job
     topologies: Mapping[str, Topology]
     stages: StageTable
@@ -55,7 +49,7 @@ class Prepared:
 
     def rejected_rows(self) -> int:
         """Rows of both tables that were left out."""
-        return sum(len({reject.row for reject in rejects}) for rejects in (self.stages.rejects, self.parts.rejects))
+        return self.stages.rejected_rows() + self.parts.rejected_rows()
 
 
 @dataclass(frozen=True)
@@ -85,9 +79,11 @@ def prepare(path: Path) -> Prepared:
     InputError
         If the job or a table cannot be used.
     """
+    started = datetime.now(UTC)
     job = jobs.read(path)
     topologies = library(job.topologies)
-    return Prepared(job, topologies, stage_tables.load(job.stages, topologies), part_tables.load(job.parts, job.assume))
+    stages, parts = stage_tables.load(job.stages, topologies), part_tables.load(job.parts, job.assume)
+    return Prepared(started, job, topologies, stages, parts)
 
 
 def groups_of(stages: StageTable, parts: PartTable) -> tuple[Group, ...]:
@@ -126,94 +122,45 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
     InputError
         If results cannot be written; nothing is left behind then.
     """
-    start = monotonic()
     job, results = prepared.job, prepared.job.results
     groups = groups_of(prepared.stages, prepared.parts)
     terms = tuple(dict.fromkeys(name for group in groups for name in term_names(group.form))) if results.terms else ()
     fingerprint = f"{prepared.stages.sha256} {prepared.parts.sha256} {job.document}"
-    with run_folder.begin(results.folder, fingerprint) as unfinished:
+    with run_folder.begin(results.folder, prepared.started, fingerprint) as unfinished:
         (unfinished.folder / "verdicts").mkdir()
 
-        def keep(place: int, screened: Screened) -> list[run_folder.File]:
-            return _write_verdicts(unfinished.folder, place, screened, job, terms)
+        def keep(place: int, screened: Screened) -> list[File]:
+            return _write_verdicts(unfinished.folder, place, screened, results, terms)
 
         done = blocks.run(groups, keep, workers or usable_cores(), after_each=after_each)
-        for files, _ in done:
-            unfinished.files.extend(files)
         tallies = [tally for _, tally in done]
-        summary_tables = {
-            "stages.parquet": summaries.stage_summary(groups, tallies),
-            "parts.parquet": summaries.part_summary(groups, tallies),
-        }
-        for name, table in summary_tables.items():
-            path = unfinished.folder / name
-            run_tables.write_parquet(table, path)
-            unfinished.files.append(run_folder.file_of(unfinished.folder, path, table.num_rows))
-        rejected = run_tables.rejected_table([*prepared.stages.rejects, *prepared.parts.rejects])
-        path = unfinished.folder / "rejected.csv"
-        run_tables.write_csv(rejected, path)
-        unfinished.files.append(run_folder.file_of(unfinished.folder, path, rejected.num_rows))
+        stages = summaries.stage_summary(groups, tallies)
+        rejects = [*prepared.stages.rejects, *prepared.parts.rejects]
+        files = [file for written, _ in done for file in written]
+        files += [
+            write(unfinished.folder, "stages.parquet", stages),
+            write(unfinished.folder, "parts.parquet", summaries.part_summary(groups, tallies)),
+            write(unfinished.folder, "rejected.csv", run_tables.rejected_table(rejects)),
+        ]
+        content = manifest(
+            run=unfinished.run,
+            started=prepared.started,
+            job=job,
+            stages=prepared.stages,
+            parts=prepared.parts,
+            warnings=prepared.warnings(),
+            counts=summaries.counts(groups, tallies),
+            files=files,
+        )
+        committed = unfinished.commit(content)
+    hopeless = stages.column("stage").filter(pc.equal(stages.column("pass"), 0)).to_pylist()
+    return Done(committed, content, tuple(hopeless))
 
-        manifest = _manifest(prepared, groups, tallies, unfinished.started.isoformat(timespec="seconds"))
-        manifest["seconds"] = round(monotonic() - start, 3)
-        committed = unfinished.commit(manifest)
-    stages = summary_tables["stages.parquet"]
-    hopeless = stages.column("stage").filter(pa.compute.equal(stages.column("pass"), 0)).to_pylist()
-    return Done(committed, {"run": unfinished.run, **manifest}, tuple(hopeless))
 
-
-def _write_verdicts(
-    folder: Path, place: int, screened: Screened, job: Job, terms: Sequence[str]
-) -> list[run_folder.File]:
-    if job.results.rows == "none":
+def _write_verdicts(folder: Path, place: int, screened: Screened, results: Results, terms: Sequence[str]) -> list[File]:
+    if results.rows == "none":
         return []
-    table = run_tables.verdict_table(screened, job.results.rows, terms)
-    writers = {"parquet": run_tables.write_parquet, "csv": run_tables.write_csv}
-    files = []
-    for kind in job.results.formats:
-        # Named after the chunk's place, so that the order of the files is the order of the rows.
-        path = folder / "verdicts" / f"{place:05d}-{screened.group.form.topology}.{kind}"
-        writers[kind](table, path)
-        files.append(run_folder.file_of(folder, path, table.num_rows))
-    return files
-
-
-def _manifest(prepared: Prepared, groups: Sequence[Group], tallies: Sequence[Tally], started: str) -> dict[str, Any]:
-    verdicts = sum((tally.by_stage.sum(axis=0) for tally in tallies), np.zeros(len(VERDICTS), np.int64))
-    dominant: dict[str, int] = {}
-    for tally in tallies:
-        for name, count in zip(term_names(groups[tally.chunk.group].form), tally.dominant.tolist(), strict=True):
-            dominant[name] = dominant.get(name, 0) + count
-    tables: dict[str, StageTable | PartTable] = {"stages": prepared.stages, "parts": prepared.parts}
-    usable = {"stages": prepared.stages.count(), "parts": len(prepared.parts.names)}
-    return {
-        "started": started,
-        "versions": {
-            "gainassay": version("gainassay"),
-            "python": platform.python_version(),
-            **{name: version(name) for name in PACKAGES},
-        },
-        "job": {"file": str(prepared.job.path), "content": dict(prepared.job.document)},
-        "inputs": {
-            name: {
-                "source": table.source,
-                "sha256": table.sha256,
-                "rows": table.found,
-                "used": usable[name],
-                "rejected": len({reject.row for reject in table.rejects}),
-            }
-            for name, table in tables.items()
-        },
-        "forms": {
-            group.topology.name: {"topology": group.topology.content_hash(), "form": content_hash(group.form)}
-            for group in prepared.stages.groups
-        },
-        "not_modelled": list(prepared.parts.not_modelled()),
-        "warnings": list(prepared.warnings()),
-        "pairs": int(verdicts.sum()),
-        "verdicts": dict(zip(VERDICTS, verdicts.tolist(), strict=True)),
-        "dominant_terms": dict(
-            sorted(((n, c) for n, c in dominant.items() if c), key=lambda item: (-item[1], item[0]))
-        ),
-        "cautions": list(CAUTIONS),
-    }
+    table = run_tables.verdict_table(screened, results.rows, terms)
+    # Named after the chunk's place, so that the order of the files is the order of the rows.
+    name = f"verdicts/{place:05d}-{screened.group.form.topology}"
+    return [write(folder, f"{name}.{kind}", table) for kind in results.formats]

@@ -71,7 +71,7 @@ def nodal_seconds(prepared: service.Prepared, groups: tuple[blocks.Group, ...]) 
     seconds = matrices = pairs = 0.0
     for one, stages in zip(groups, prepared.stages.groups, strict=True):
         side = stage_side(one.form, one.box)
-        count = max(1, SAMPLE * len(stages.names) // prepared.stages.count())
+        count = max(1, SAMPLE * len(stages.names) // prepared.stages.used())
         for s, p in zip(
             rng.integers(len(stages.names), size=count), rng.integers(len(one.part_names), size=count), strict=True
         ):
@@ -106,7 +106,7 @@ def main() -> None:
         peak = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss / 2**20
         prepared = service.prepare(job)
         groups = service.groups_of(prepared.stages, prepared.parts)
-        pairs = prepared.stages.count() * len(prepared.parts.names)
+        pairs = prepared.stages.used() * len(prepared.parts.names)
         alone = {}
         for workers in sorted({1, service.usable_cores()}):
             start = perf_counter()

@@ -106,8 +106,8 @@ def test_a_command_that_cannot_be_carried_out(here: CommandLineHere, arguments: 
     [
         (["eazy", "limits"], "there is no usable stage 'eazy'; did you mean 'easy'?"),
         (["easy", "limit"], "there is no usable part 'limit'; did you mean 'limits'?"),
-        (["zzz", "limits"], "there is no usable stage 'zzz'; `gainassay check` says which stages were rejected"),
-        (["bad", "limits"], "there is no usable stage 'bad'"),
+        (["zzz", "limits"], "there is no usable stage 'zzz'; `gainassay check` says what is in the table"),
+        (["bad", "limits"], "row 4: stage 'bad' was rejected: r1 'x' is not a number"),
     ],
 )
 def test_explain_names_the_nearest(
@@ -120,7 +120,7 @@ def test_explain_names_the_nearest(
 def test_explain_says_why_a_stage_was_rejected(here: CommandLineHere, write_job: JobWriter) -> None:
     job = write_job(stages=STAGES + "easy,follower,,,1\n", parts=PARTS)
     assert (
-        "row 2: stage 'easy' was rejected: it stands more than once"
+        "stage 'easy' was rejected: stage 'easy' stands more than once"
         in here("explain", job, "easy", "limits", status=2).err
     )
 

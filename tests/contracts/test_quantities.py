@@ -16,7 +16,6 @@ from gainassay.contracts.tables import Column
 
 ANY = Column(
     name="any",
-    kind="number",
     unit="ohm",
     meaning="",
     required=False,
@@ -173,7 +172,7 @@ def test_a_column_of_floats() -> None:
     assert found.values.tolist()[:1] == [1.5]
     assert found.blank.tolist() == [False, True, False, False, False]
     assert found.refused == {
-        2: "is nan, which is no number",
+        2: "is nan, which is no number; leave the cell empty where nothing is known",
         3: "is infinite or too large",
         4: "is infinite or too large",
     }

@@ -145,3 +145,19 @@ def test_feedback_that_depends_on_the_values_is_left_to_the_stage() -> None:
 @pytest.mark.parametrize("topology", library.library().values(), ids=library.library())
 def test_the_library_is_sound(topology: Topology) -> None:
     checked(topology)
+
+
+def test_a_dense_mesh_is_refused_at_once() -> None:
+    nodes = ["in", "out", *(f"n{i}" for i in range(6)), "ground"]
+    pairs = [(a, b) for i, a in enumerate(nodes) for b in nodes[i + 1 :]]
+    mesh = oracle.network({f"r{i}": pair for i, pair in enumerate(pairs)}, [("ground", "n0", "out")])
+    with pytest.raises(InputError, match="meshed too densely"):
+        derive(mesh)
+
+
+def test_at_most_three_amplifiers(tmp_path: Path) -> None:
+    more = "\n".join(f'[amplifiers.u{i}]\nplus = "ground"\nminus = "a{i}"\nout = "b{i}"' for i in range(2, 5))
+    path = written(tmp_path)
+    path.write_text(path.read_text(encoding="utf-8") + more, encoding="utf-8")
+    with pytest.raises(InputError, match="it has 4 amplifiers; a stage has 3 at most"):
+        library.read(path)

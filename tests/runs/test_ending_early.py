@@ -46,16 +46,26 @@ def test_a_killed_run_is_no_run(job: Path, gainassay: CommandLine) -> None:
     assert not (left / "run.json").exists()
     listed = gainassay("runs", job)
     assert listed.out.startswith("There are no runs in ")
-    assert f"{left}: a run that was not finished; it may be deleted" in listed.err
+    assert f"{left}: a run that was abandoned; it may be deleted" in listed.err
     assert json.loads(gainassay("runs", job, "--json").out) == []
 
 
-def test_an_interrupted_run_leaves_nothing(job: Path, gainassay: CommandLine) -> None:
+def test_a_run_in_progress_is_told_from_an_abandoned_one(job: Path, gainassay: CommandLine) -> None:
     with gainassay.start("screen", job) as process:
         in_the_middle(job, process)
+        listed = gainassay("runs", job)
         process.send_signal(signal.SIGINT)
+        process.communicate(timeout=30)
+    assert "a run in progress" in listed.err
+
+
+@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
+def test_an_interrupted_run_leaves_nothing(job: Path, gainassay: CommandLine, number: signal.Signals) -> None:
+    with gainassay.start("screen", job) as process:
+        in_the_middle(job, process)
+        process.send_signal(number)
         out, err = process.communicate(timeout=30)
     assert process.returncode == 130
     assert out == b""
-    assert err.strip() == b"gainassay: interrupted; nothing of this run was kept"
-    assert list((job.parent / "runs").iterdir()) == []
+    assert err.strip() == b"gainassay: interrupted; nothing was kept"
+    assert not (job.parent / "runs").exists()

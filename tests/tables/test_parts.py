@@ -71,7 +71,7 @@ def test_a_bad_cell_is_rejected_and_the_good_row_goes_on(
     assert reject.value == value
     assert reject.reason.startswith(reason)
     assert found.names.tolist() == ["good"]
-    assert found.found == 2
+    assert found.rows == 2
 
 
 def test_a_limit_may_equal_the_typical_figure(write_job: JobWriter) -> None:

@@ -130,7 +130,7 @@ def test_a_quote_that_is_never_closed_loses_no_row_in_silence(tmp_path: Path, co
         pytest.param(b"a,b\n" + b"1,2\n" * 500_000 + b"\xe9,2\n", "UTF-8", id="Latin-1 far down"),
         pytest.param(b"a,b\n" + b"1,2\n" * 500_000 + b"\xe9\n", "UTF-8", id="Latin-1 in a ragged row"),
         pytest.param("a,b\n1,2\n".encode("utf-16"), "UTF-8", id="UTF-16"),
-        pytest.param(b'a,"b\n1,2\n', "CSV", id="quote not closed in the header"),
+        pytest.param(b'a,"b\n1,2\n', "remove the quote", id="quote not closed in the header"),
         pytest.param(b"a," + b"b" * 1_000_000 + b"\n1,2\n", "CSV", id="a column name of a million characters"),
     ],
 )
@@ -250,3 +250,18 @@ def test_the_room_works_on_its_own(tmp_path: Path) -> None:
     path.write_bytes(b"a,b\n1,2\n")
     code = f"from pathlib import Path; from gainassay.tables import sources; sources.read(Path({str(path)!r}))"
     subprocess.run([sys.executable, "-c", code], check=True)
+
+
+def test_a_header_with_spaces_and_nameless_columns(tmp_path: Path) -> None:
+    table = read_csv(tmp_path, b" stage ,r1 ,,\na,1,,\nb,2,,\n")
+    assert cells(table) == {"stage": ["a", "b"], "r1": ["1", "2"]}
+
+
+def test_a_nameless_column_that_holds_something_is_refused(tmp_path: Path) -> None:
+    assert "column 3 has no name" in refusal(tmp_path, b"stage,r1,\na,1,\nb,2,x\n")
+
+
+def test_a_stray_quote_does_not_swallow_rows(tmp_path: Path) -> None:
+    rows = b"".join(b"s%d,inverting,1k\n" % i for i in range(50))
+    content = b"stage,topology,r1\n" + rows.replace(b"s7,", b's7,"', 1)
+    assert "remove the quote" in refusal(tmp_path, content)

@@ -73,9 +73,9 @@ NO_NUMBER = "is not a number; wanted is a plain number in ohm or a code such as 
         ({"r1_tol_pct": "5%"}, "r1_tol_pct", "5%", "is not a number"),
         ({"target_gain": "0"}, "target_gain", "0", "must not be zero"),
         ({"target_gain": "4k7"}, "target_gain", "4k7", "is not a number; wanted is a plain number"),
-        ({"r2": "0"}, "topology", "inverting", "these element values make the ideal gain"),
-        ({"r1": "0"}, "topology", "inverting", "these element values make the ideal gain"),
-        ({"r1": "0", "r2": "0"}, "topology", "inverting", "these element values make the ideal gain"),
+        ({"r2": "0"}, "r_source, r1, r2, r_load", ", 1k, 0, ", "these values make the ideal gain"),
+        ({"r1": "0"}, "r_source, r1, r2, r_load", ", 0, 10k, ", "these values make the ideal gain"),
+        ({"r1": "0", "r2": "0"}, "r_source, r1, r2, r_load", ", 0, 0, ", "these values make the ideal gain"),
     ],
 )
 def test_a_bad_cell_is_rejected_and_the_good_row_goes_on(
@@ -88,7 +88,7 @@ def test_a_bad_cell_is_rejected_and_the_good_row_goes_on(
     assert reject.value == value
     assert reject.reason.startswith(reason)
     assert [name for group in found.groups for name in group.names] == ["good"]
-    assert (found.found, found.count()) == (2, 1)
+    assert (found.rows, found.used()) == (2, 1)
 
 
 def test_every_bad_cell_of_a_row_is_told(write_job: JobWriter, load: Load) -> None:
@@ -111,7 +111,7 @@ def test_a_row_of_another_length_is_rejected(write_job: JobWriter, load: Load) -
     text = "stage,topology,r1,r2,accuracy_pct\na,inverting,1k,10k\nb,inverting,1k,10k,1\n"
     found = load(write_job(stages=text))
     assert [(r.row, r.value) for r in found.rejects] == [(2, "a,inverting,1k,10k")]
-    assert (found.found, found.count()) == (2, 1)
+    assert (found.rows, found.used()) == (2, 1)
 
 
 def test_a_value_that_is_very_long_is_cut_in_the_reject(write_job: JobWriter, load: Load) -> None:
@@ -206,7 +206,7 @@ def test_a_column_of_another_topology_needs_no_value_here(write_job: JobWriter, 
     summer = GOOD | {"stage": "sum", "topology": "summing_2_in1", "r_f": "10k", "r_source": ""}
     found = load(write_job(stages=[GOOD, summer]))
     assert not found.rejects
-    assert found.count() == 2
+    assert found.used() == 2
 
 
 def test_a_parquet_table_reads_like_its_csv(write_job: JobWriter, load: Load) -> None:
@@ -223,7 +223,7 @@ def test_a_parquet_table_reads_like_its_csv(write_job: JobWriter, load: Load) ->
     assert found.groups[0].names.tolist() == ["b"]
     assert found.groups[0].values[:, 0].tolist() == [0.0, 1e3, 1e4, math.inf]
     assert [(r.row, r.column, r.value, r.reason) for r in found.rejects] == [
-        (2, "r2", "nan", "is nan, which is no number"),
+        (2, "r2", "nan", "is nan, which is no number; leave the cell empty where nothing is known"),
         (3, "r2", "inf", "is infinite or too large"),
     ]
 
@@ -233,5 +233,5 @@ def test_a_parquet_column_that_nothing_reads_may_hold_anything(write_job: JobWri
     row = {"stage": ["a"], "topology": ["inverting"], "r1": [1e3], "r2": [1e4], "accuracy_pct": [1.0], "tags": [["x"]]}
     pq.write_table(pa.table(row), job.parent / "stages.parquet")
     found = load(job)
-    assert found.count() == 1
+    assert found.used() == 1
     assert ["'tags'" in warning for warning in found.warnings] == [True]

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import importlib
+import logging
 import os
+import signal
 import sys
 from typing import NoReturn
 
@@ -79,12 +81,18 @@ def main() -> NoReturn:
         # A name that the terminal's encoding lacks is shown escaped and does not end the run.
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="backslashreplace")
+    logging.basicConfig(format="warning: %(message)s", level=logging.WARNING)
+    # A scheduler's "stop" is an interruption like a person's: what was begun is cleared away.
+    signal.signal(signal.SIGTERM, signal.default_int_handler)
     try:
         gainassay.main(standalone_mode=False, prog_name="gainassay")
         if sys.stdout is not None:
             sys.stdout.flush()
     except click.ClickException as error:
-        error.show()
+        from gainassay.cli.shared import printable
+
+        command = error.ctx.command_path if isinstance(error, click.UsageError) and error.ctx else "gainassay"
+        click.echo(printable(f"gainassay: {error.format_message()}\nTry '{command} --help'."), err=True)
         sys.exit(UNUSABLE)
     except GainassayError as error:
         from gainassay.cli.shared import printable
@@ -92,7 +100,9 @@ def main() -> NoReturn:
         click.echo(printable(f"gainassay: {error}"), err=True)
         sys.exit(error.exit_status)
     except (click.Abort, KeyboardInterrupt):
-        click.echo("gainassay: interrupted; nothing of this run was kept", err=True)
+        click.echo("gainassay: interrupted; nothing was kept", err=True)
+        # Threads end the blocks they are at; a second ^C meanwhile would only print where it hit.
+        signal.signal(signal.SIGINT, signal.SIG_IGN)
         sys.exit(INTERRUPTED)
     except (BrokenPipeError, _ReaderGoneError):
         # The reader of our output has gone, as `| head` does. Nothing more can be said to it.

@@ -21,6 +21,7 @@ from gainassay.report import pair
 def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
     """Show all that decides STAGE with PART in JOB: gains, every term of the error, the worst corner, the evidence."""
     prepared = service.prepare(job)
+    shared.warn(prepared.warnings())
     groups = service.groups_of(prepared.stages, prepared.parts)
     found = explanation.explain(prepared.stages, prepared.parts, groups, stage, part)
     if as_json:

@@ -19,7 +19,8 @@ def runs(job: Path, as_json: bool) -> None:
     """List the committed runs of JOB, oldest first."""
     home = jobs.read(job).results.folder
     found = folder.listed(home)
-    shared.warn(f"{home / name}: a run that was not finished; it may be deleted" for name in found.unfinished)
+    shared.warn(f"{home / name}: a run in progress" for name in found.in_progress)
+    shared.warn(f"{home / name}: a run that was abandoned; it may be deleted" for name in found.abandoned)
     shared.warn(
         f"{home / name}: holds no {folder.MANIFEST} that can be read, so it is no run" for name in found.unreadable
     )

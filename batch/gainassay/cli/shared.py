@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import re
 from collections.abc import Callable, Iterable
 from pathlib import Path
@@ -80,6 +81,6 @@ def _finite(value: Any) -> Any:
         return {key: _finite(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
         return [_finite(item) for item in value]
-    if isinstance(value, float) and value - value != 0.0:
+    if isinstance(value, float) and not math.isfinite(value):
         return None
     return value

@@ -9,7 +9,6 @@ import click
 from gainassay.cli import shared
 from gainassay.forms.library import library
 from gainassay.report import formulas
-from gainassay.report.text import table
 
 
 @click.command()
@@ -23,8 +22,4 @@ def topologies(as_page: bool, as_json: bool) -> None:
     elif as_json:
         shared.data([{key: value for key, value in asdict(t).items() if key != "source"} for t in found])
     else:
-        rows = [
-            [t.name, " ".join(e.name if e.absent == "error" else f"[{e.name}]" for e in t.elements), t.summary]
-            for t in found
-        ]
-        shared.lines(table(["topology", "elements", "summary"], rows))
+        shared.lines(formulas.listing(found))

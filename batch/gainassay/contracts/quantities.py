@@ -73,7 +73,7 @@ def numbers(cells: pa.Array, column: Column) -> Numbers:
         readable = ~np.isnan(values)
     reason = np.full(len(blank), "", dtype=object)
     reason[~blank & ~readable] = _unreadable(column)
-    reason[readable & np.isnan(values)] = "is nan, which is no number"
+    reason[readable & np.isnan(values)] = "is nan, which is no number; leave the cell empty where nothing is known"
     reason[readable & np.isinf(values)] = "is infinite or too large"
     with np.errstate(invalid="ignore"):
         outside = (values != 0.0) & ((np.abs(values) < SMALLEST) | (np.abs(values) > LARGEST))
@@ -107,7 +107,7 @@ def _letter_code(text: pa.Array, letters: Mapping[str, int]) -> NDArray[np.float
     pattern = f"^(?P<whole>[0-9]*)(?P<letter>[{''.join(letters)}])(?P<part>[0-9]*)$"
     fields = pc.extract_regex(pc.if_else(has_digit, text, None), pattern)
     whole, letter, part = (fields.field(index) for index in range(3))
-    power = pc.replace_substring_regex(letter, "^.*$", r"\0")
+    power = letter
     for name, exponent in letters.items():
         power = pc.if_else(pc.equal(letter, name), str(exponent), power)
     decimal = pc.binary_join_element_wise(

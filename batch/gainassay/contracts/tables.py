@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 from typing import Any
 
@@ -27,8 +27,6 @@ class Column:
     ----------
     name : str
         Its name; may hold a placeholder such as `<element>` or `<resistor>`.
-    kind : str
-        `string`, `number` or `integer`.
     unit : str
         Unit, empty for text and counts.
     meaning : str
@@ -46,7 +44,6 @@ class Column:
     """
 
     name: str
-    kind: str
     unit: str
     meaning: str
     required: bool
@@ -58,7 +55,7 @@ class Column:
 
     def of(self, element: str) -> Column:
         """This column for one element."""
-        return Column(**{**self.__dict__, "name": _PLACEHOLDER.sub(element, self.name)})
+        return replace(self, name=_PLACEHOLDER.sub(element, self.name))
 
 
 @cache
@@ -82,7 +79,6 @@ def _column(field: dict[str, Any]) -> Column:
     constraints = field.get("constraints", {})
     return Column(
         name=field["name"],
-        kind=field["type"],
         unit=field.get("unit", ""),
         meaning=field["description"],
         required=constraints.get("required", False),

@@ -114,13 +114,13 @@ def _kept(
     """What is kept at `path` if it is there and intact, else what `make` makes, kept there for the next time."""
     try:
         entry = json.loads(path.read_text(encoding="utf-8"))
-        if _sha256(entry["content"]) == entry["sha256"]:
+        if _sha256([path.stem, entry["content"]]) == entry["sha256"]:
             return decode(entry["content"])
-        log.warning("%s: damaged cache entry; derived anew", path)
+        log.warning("%s: damaged; derived anew", path)
     except FileNotFoundError:
         pass
-    except (OSError, ValueError, KeyError, TypeError, AttributeError, RecursionError):
-        log.warning("%s: damaged cache entry; derived anew", path)
+    except (OSError, ValueError, KeyError, TypeError, AttributeError, OverflowError, RecursionError):
+        log.warning("%s: damaged; derived anew", path)
     made = make()
     _write(path, encode(made))
     return made
@@ -128,7 +128,8 @@ def _kept(
 
 def _write(path: Path, content: dict[str, Any]) -> None:
     """Write aside, then rename: another process sees the whole entry or none."""
-    entry = json.dumps({"sha256": _sha256(content), "content": content})
+    # The name is hashed too: an entry that came under another topology's name is damaged.
+    entry = json.dumps({"sha256": _sha256([path.stem, content]), "content": content})
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
         handle, aside = tempfile.mkstemp(dir=path.parent, suffix=".aside")

@@ -67,6 +67,8 @@ def library(own: Iterable[Path] = ()) -> dict[str, Topology]:
     for path in [*sorted(resources.topologies().glob("*.toml")), *own]:
         topology = read(path)
         if topology.name in found:
+            if topology.content_hash() == found[topology.name].content_hash():
+                raise InputError(f"{path}: topology '{topology.name}' is known already; leave the file out of the job")
             raise InputError(
                 f"{path}: the name '{topology.name}' is taken by {found[topology.name].source}; rename the topology"
             )

@@ -86,10 +86,6 @@ class MultiAffine:
         """Greatest common divisor of the coefficients, 0 for the zero polynomial."""
         return gcd(*self.terms.values()) if self.terms else 0
 
-    def divided_by(self, divisor: int) -> MultiAffine:
-        """All coefficients divided by an integer that divides each of them."""
-        return MultiAffine({mask: value // divisor for mask, value in self.terms.items()})
-
     def split(self, symbol: int) -> tuple[MultiAffine, MultiAffine]:
         """What does not hold the symbol of the mask `symbol`, and the coefficient of that symbol."""
         without: dict[int, int] = {}
@@ -216,6 +212,14 @@ def _point(index: int) -> int:
     return pow(3, 1_000_003 * index * index + 17, _MODULUS)
 
 
+MOST_FORMED = 2_000_000
+"""Products that the expansion of a determinant may form; a network that needs more is too meshed to be read."""
+
+
+class TooLargeError(ArithmeticError):
+    """A determinant with more products than `MOST_FORMED`."""
+
+
 Row = Mapping[int, MultiAffine]
 """A sparse row of a matrix: column -> entry."""
 
@@ -226,14 +230,21 @@ def determinant(rows: Sequence[Row], columns: Sequence[int]) -> MultiAffine:
     Expansion along one row after the other, with every minor remembered under its set of columns; no
     division. Squares of symbols are dropped, which is exact if the determinant is multi-affine, as it is
     where each symbol enters the matrix with rank one.
+
+    Raises
+    ------
+    TooLargeError
+        If the expansion would form more than `MOST_FORMED` products.
     """
     place = {column: position for position, column in enumerate(columns)}
     # Sparse rows first: fewer sets of columns are left to visit. A permutation of rows changes the sign only.
     order = sorted(range(len(rows)), key=lambda row: (sum(column in place for column in rows[row]), row))
     minors: dict[int, MultiAffine] = {0: MultiAffine.constant(1)}
+    formed = 0
 
     def minor(remaining: int) -> MultiAffine:
         """Determinant of the last rows in the columns whose places are in the mask `remaining`."""
+        nonlocal formed
         if remaining not in minors:
             row = rows[order[len(rows) - remaining.bit_count()]]
             total = MultiAffine({})
@@ -241,7 +252,11 @@ def determinant(rows: Sequence[Row], columns: Sequence[int]) -> MultiAffine:
                 bit = 1 << place[column] if column in place else 0
                 if remaining & bit:
                     before = (remaining & (bit - 1)).bit_count()
-                    product = entry.times(minor(remaining ^ bit))
+                    cofactor = minor(remaining ^ bit)
+                    formed += len(entry.terms) * len(cofactor.terms)
+                    if formed > MOST_FORMED:
+                        raise TooLargeError
+                    product = entry.times(cofactor)
                     total = total - product if before % 2 else total + product
             minors[remaining] = total
         return minors[remaining]

@@ -17,8 +17,11 @@ from typing import Self
 
 from gainassay.errors import InputError
 from gainassay.forms.departures import DEPARTURES
-from gainassay.forms.multiaffine import MultiAffine, determinant
+from gainassay.forms.multiaffine import MultiAffine, TooLargeError, determinant
 from gainassay.forms.topology import GROUND, Topology, driven_by_voltage, output_is_current
+
+MOST_PRODUCTS = 5_000
+"""Products of symbols in a determinant; beyond, forms take minutes to find and nobody can read them."""
 
 RIGHT_HAND_SIDE = -1
 """Column of the sources in the rows of the nodal system."""
@@ -85,10 +88,10 @@ def derive(topology: Topology) -> Gain:
     held = driven_by_voltage(topology)
     potential = {GROUND: 0} | (drive if held else {})
     rows, columns = _equations(topology, names, potential, {} if held else drive)
-    whole = determinant(rows, columns)
+    whole = _determinant(topology, rows, columns)
     if not whole:
         raise InputError(
-            f"{topology.source}: topology '{topology.name}': its nodal equations have no unique solution; "
+            f"{topology.where()}: its nodal equations have no unique solution; "
             "look for a node that nothing holds, or an amplifier without feedback"
         )
 
@@ -97,7 +100,7 @@ def derive(topology: Topology) -> Gain:
         if node in potential:
             return whole.times(MultiAffine.constant(potential[node]))
         column = _column(topology, node)
-        return determinant(rows, [RIGHT_HAND_SIDE if c == column else c for c in columns])
+        return _determinant(topology, rows, [RIGHT_HAND_SIDE if c == column else c for c in columns])
 
     if output_is_current(topology):
         first, second = topology.element(topology.output).between
@@ -107,6 +110,26 @@ def derive(topology: Topology) -> Gain:
     else:
         numerator = voltage(topology.output)
     return Gain(names.elements, names.departures, numerator, whole.times(MultiAffine.constant(scale)))
+
+
+def _determinant(topology: Topology, rows: list[dict[int, MultiAffine]], columns: list[int]) -> MultiAffine:
+    """The determinant, if it is of a size that can be worked with.
+
+    Raises
+    ------
+    InputError
+        If it has more products than `MOST_PRODUCTS`.
+    """
+    try:
+        found = determinant(rows, columns)
+    except TooLargeError:
+        found = None
+    if found is None or len(found.terms) > MOST_PRODUCTS:
+        raise InputError(
+            f"{topology.where()}: its elements are meshed too densely: the determinant of its nodal equations has more "
+            f"than {MOST_PRODUCTS:,} products; split the network into stages"
+        )
+    return found
 
 
 def input_impedance(topology: Topology) -> Impedance:
@@ -140,7 +163,7 @@ def _driving_point(topology: Topology, potential: Mapping[str, int], first: str,
     names = _Names.of(topology)
     test = MultiAffine.symbol(len(names.elements) + len(names.departures))
     rows, columns = _equations(topology, names, potential, {}, (first, second, test))
-    is_open, is_short = determinant(rows, columns).split(1 << (len(names.elements) + len(names.departures)))
+    is_open, is_short = _determinant(topology, rows, columns).split(1 << (len(names.elements) + len(names.departures)))
     return Impedance(names.elements, names.departures, is_short, is_open)
 
 

@@ -7,11 +7,16 @@ from collections.abc import Iterable
 
 from gainassay.contracts import tables
 from gainassay.errors import InputError
+from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form, Ratio
 from gainassay.forms.topology import GROUND, Amplifier, Topology, driven_by_voltage, output_is_current
 
-RESERVED = ("a", "g_id", "r_id", "r_o", "s")
+RESERVED = ("s", *(name for departure in DEPARTURES for name in (departure.symbol, departure.quantity)))
 """Names that a formula gives to an amplifier's own quantities and to the complex frequency."""
+
+
+MOST_AMPLIFIERS = 3
+"""Amplifiers in a stage: with each one more, a form has about five times as many terms."""
 
 
 def statement(topology: Topology) -> None:
@@ -31,6 +36,10 @@ def statement(topology: Topology) -> None:
     for element in topology.elements:
         if element.between[0] == element.between[1]:
             raise InputError(f"{where}: {element.name} joins node '{element.between[0]}' to itself")
+    if len(topology.amplifiers) > MOST_AMPLIFIERS:
+        raise InputError(
+            f"{where}: it has {len(topology.amplifiers)} amplifiers; a stage has {MOST_AMPLIFIERS} at most"
+        )
     drivers: dict[str, str] = {}
     for amplifier in topology.amplifiers:
         if amplifier.plus == amplifier.minus:

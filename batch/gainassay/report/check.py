@@ -2,40 +2,37 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import asdict
 from typing import Any
 
 from gainassay.report.text import table
 from gainassay.service import Prepared
-from gainassay.tables.rejects import Reject
+from gainassay.tables.parts import PartTable
+from gainassay.tables.stages import StageTable
 
 MOST_LISTED = 20
 
 
 def text(prepared: Prepared) -> list[str]:
-    """Rows found and used, stages of each topology, and the rejected cells."""
-    stages, parts = prepared.stages, prepared.parts
+    """Rows found and used, stages of each topology, and the rejected cells of each table."""
+    tables: dict[str, StageTable | PartTable] = {"stages": prepared.stages, "parts": prepared.parts}
     lines = table(
         ["table", "rows", "used", "rejected", "source"],
-        [
-            ["stages", *_counts(stages.found, stages.count(), stages.rejects), stages.source],
-            ["parts", *_counts(parts.found, len(parts.names), parts.rejects), parts.source],
-        ],
+        [[name, f"{t.rows:,}", f"{t.used():,}", f"{t.rejected_rows():,}", t.source] for name, t in tables.items()],
         right=[1, 2, 3],
     )
-    lines += ["", *table(["topology", "stages"], [[g.topology.name, f"{len(g.names):,}"] for g in stages.groups], [1])]
-    rejects = [*stages.rejects, *parts.rejects]
-    if rejects:
-        lines += ["", "Rejected cells"]
-        lines += table(
-            ["  row", "column", "value", "reason", "source"],
-            [[f"  {r.row}", r.column, repr(r.value), r.reason, r.source] for r in rejects[:MOST_LISTED]],
-        )
-    if len(rejects) > MOST_LISTED:
-        lines.append(
-            f"  and {len(rejects) - MOST_LISTED:,} more; --json lists all, and a run keeps them in rejected.csv"
-        )
+    rows = [[group.topology.name, f"{len(group.names):,}"] for group in prepared.stages.groups]
+    lines += ["", *table(["topology", "stages"], rows, right=[1])]
+    for one in tables.values():
+        if one.rejects:
+            lines += ["", f"Rejected cells of {one.source}"]
+            lines += table(
+                ["  row", "column", "value", "reason"],
+                [[f"  {r.row}", r.column, repr(r.value), r.reason] for r in one.rejects[:MOST_LISTED]],
+            )
+        if len(one.rejects) > MOST_LISTED:
+            more = len(one.rejects) - MOST_LISTED
+            lines.append(f"  and {more:,} more; --json lists all, and a run keeps them in rejected.csv")
     return lines
 
 
@@ -43,14 +40,10 @@ def data(prepared: Prepared) -> dict[str, Any]:
     """The same, whole."""
     stages, parts = prepared.stages, prepared.parts
     return {
-        "stages": {"source": stages.source, "rows": stages.found, "used": stages.count()},
-        "parts": {"source": parts.source, "rows": parts.found, "used": len(parts.names)},
+        "stages": {"source": stages.source, "rows": stages.rows, "used": stages.used()},
+        "parts": {"source": parts.source, "rows": parts.rows, "used": parts.used()},
         "topologies": {group.topology.name: len(group.names) for group in stages.groups},
         "not_modelled": parts.not_modelled(),
         "warnings": prepared.warnings(),
         "rejected": [asdict(reject) for reject in (*stages.rejects, *parts.rejects)],
     }
-
-
-def _counts(found: int, used: int, rejects: Sequence[Reject]) -> list[str]:
-    return [f"{found:,}", f"{used:,}", f"{len({reject.row for reject in rejects}):,}"]

@@ -138,6 +138,15 @@ def _number(value: float) -> str:
     return "-" if np.isnan(value) else f"{value + 0.0:.6g}"
 
 
+def listing(topologies: Sequence[Topology]) -> list[str]:
+    """Name and summary of each topology, and below them the columns of its elements."""
+    lines = []
+    for topology in topologies:
+        columns = " ".join(e.name if e.absent == "error" else f"[{e.name}]" for e in topology.elements)
+        lines += [f"{topology.name}: {topology.summary}", f"    {columns}"]
+    return lines
+
+
 def page(topologies: Sequence[Topology]) -> list[str]:
     """A page of Markdown with every topology, its elements and its formulas."""
     lines = [

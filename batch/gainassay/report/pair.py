@@ -51,13 +51,14 @@ def text(found: Explanation) -> list[str]:
         "",
         "Part",
         *table(
-            ["  quantity", "nominal", "limit taken", "evidence", ""],
+            ["  quantity", "nominal", "limit taken", "evidence", "at the worst corner", ""],
             [
                 [
                     f"  {f.quantity}",
                     quantity(f.nominal, f.unit),
                     quantity(f.worst, f.unit),
                     f.evidence,
+                    f.at_worst,
                     "" if f.matters else "does not matter to this stage",
                 ]
                 for f in found.figures

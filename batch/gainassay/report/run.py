@@ -22,10 +22,10 @@ def summary(manifest: Mapping[str, Any], folder: Path, hopeless: Sequence[str]) 
     lines += table(
         ["", "", ""], [[f"  {name}", f"{count:,}", percent_of(count, pairs)] for name, count in common], right=[1, 2]
     )[1:]
-    lines += ["", f"Stages that no part passes: {len(hopeless)}"]
+    lines += ["", f"Stages that no part passes: {len(hopeless):,}"]
     lines += [f"  {name}" for name in hopeless[:MOST_LISTED]]
     if len(hopeless) > MOST_LISTED:
-        lines.append(f"  and {len(hopeless) - MOST_LISTED} more: those with pass = 0 in {folder / 'stages.parquet'}")
+        lines.append(f"  and {len(hopeless) - MOST_LISTED:,} more: those with pass = 0 in {folder / 'stages.parquet'}")
     lines += ["", "Tables"]
     lines += table(
         ["", "", "", "", ""],

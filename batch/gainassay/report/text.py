@@ -6,6 +6,9 @@ import math
 from collections.abc import Sequence
 
 PREFIXES = {-12: "p", -9: "n", -6: "u", -3: "m", 0: "", 3: "k", 6: "M", 9: "G", 12: "T"}
+SMALLEST_PPM = 1e-12
+"""Below this an error is shown as 0: it is rounding."""
+
 ELEMENT_UNITS = {"resistor": "ohm", "capacitor": "F", "inductor": "H"}
 
 
@@ -54,16 +57,16 @@ def quantity(value: float, unit: str) -> str:
 
 
 def ppm(value: float) -> str:
-    """An error in ppm, signed, to four significant digits at least.
+    """An error in ppm, signed, three decimals aligned; what is smaller shows its power of ten.
 
-    >>> [ppm(value) for value in (-1234.56, 0.00012345, 0.0, float("nan"))]
-    ['-1234.56', '+0.0001234', '0', 'no finite bound']
+    >>> [ppm(value) for value in (-1234567.891, 0.5, -0.00012345, 1e-13, 0.0, float("nan"))]
+    ['-1,234,567.891', '+0.500', '-1.2e-04', '0', '0', 'no finite bound']
     """
     if math.isnan(value):
         return "no finite bound"
-    if value == 0.0:
+    if abs(value) < SMALLEST_PPM:
         return "0"
-    return f"{value:+.2f}" if abs(value) >= 100 else f"{value:+.4g}"
+    return f"{value:+,.3f}" if abs(value) >= 0.001 else f"{value:+.1e}"
 
 
 def percent_of(count: int, whole: int) -> str:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -10,7 +11,33 @@ import pyarrow as pa
 
 from gainassay.runs.tables import PPM, summary_table
 from gainassay.screen.blocks import Group, Tally
+from gainassay.screen.corners import term_names
 from gainassay.screen.verdicts import VERDICTS
+
+
+@dataclass(frozen=True)
+class Counts:
+    """Pairs of a run.
+
+    Attributes
+    ----------
+    verdicts, dominant_terms : dict[str, int]
+        Pairs by verdict; pairs by dominant term, the most frequent first.
+    """
+
+    verdicts: dict[str, int]
+    dominant_terms: dict[str, int]
+
+
+def counts(groups: Sequence[Group], tallies: Sequence[Tally]) -> Counts:
+    """Pairs by verdict and by dominant term."""
+    verdicts = sum((tally.by_stage.sum(axis=0) for tally in tallies), np.zeros(len(VERDICTS), np.int64))
+    dominant: dict[str, int] = {}
+    for tally in tallies:
+        for name, count in zip(term_names(groups[tally.chunk.group].form), tally.dominant.tolist(), strict=True):
+            dominant[name] = dominant.get(name, 0) + count
+    common = sorted(((name, count) for name, count in dominant.items() if count), key=lambda item: (-item[1], item[0]))
+    return Counts(dict(zip(VERDICTS, verdicts.tolist(), strict=True)), dict(common))
 
 
 def stage_summary(groups: Sequence[Group], tallies: Sequence[Tally]) -> pa.Table:

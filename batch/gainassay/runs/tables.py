@@ -147,9 +147,18 @@ def _harmless(column: pa.ChunkedArray) -> pa.Array:
         return pa.DictionaryArray.from_arrays(whole.indices, harmless).cast(pa.string())
     if not pa.types.is_string(whole.type):
         return whole
-    return pa.array(
-        [f"'{text}" if text and text.startswith(FORMULA_STARTS) else text for text in whole.to_pylist()], pa.string()
-    )
+    return pa.array([f"'{text}" if _is_formula(text) else text for text in whole.to_pylist()], pa.string())
+
+
+def _is_formula(text: str | None) -> bool:
+    """Whether a spreadsheet would take the text for a formula; a number is none."""
+    if not text or not text.startswith(FORMULA_STARTS):
+        return False
+    try:
+        float(text)
+    except ValueError:
+        return True
+    return False
 
 
 def sync(path: Path) -> None:

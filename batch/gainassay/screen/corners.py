@@ -164,6 +164,7 @@ def stage_side(form: Form, box: StageBox) -> StageSide:
             & np.isfinite(loadings).all(axis=(0, 1))
             & np.isfinite(corner_gain).all(axis=0)
             & (np.sign(corner_gain) == np.sign(nominal.gain_ideal)).all(axis=0)
+            & np.isfinite((corner_gain - reference) / reference).all(axis=0)
             & (loadings[:, list(form.loops())] >= 0.0).all(axis=(0, 1))
         )
         return StageSide(

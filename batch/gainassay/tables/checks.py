@@ -11,6 +11,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from gainassay.contracts import tables
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.quantities import Numbers, numbers, text_of
 from gainassay.contracts.tables import Column
@@ -94,6 +95,10 @@ class Checking:
                     self.refuse(place, column, f"stands more than once: also in row {listed}; which is meant?")
         return names
 
+    def rejected_names(self, names: NDArray[np.object_]) -> dict[str, int]:
+        """Row in the file of each name that was rejected."""
+        return {names[position]: int(self.raw.rows[position]) for position in sorted(self.rejects.positions)}
+
     def good(self) -> NDArray[np.bool_]:
         """Rows without a reject."""
         mask = np.ones(len(self.raw.rows), dtype=bool)
@@ -111,6 +116,24 @@ def _repeated(names: NDArray[np.object_]) -> dict[str, list[int]]:
     for position, name in enumerate(names):
         places.setdefault(name, []).append(position)
     return {name: positions for name, positions in places.items() if len(positions) > 1}
+
+
+def require_columns(raw: RawTable, table: str) -> None:
+    """Raise if a column that each row must fill is missing.
+
+    Raises
+    ------
+    InputError
+        With the column, the nearest that is there, and a guess at what separates the cells if it is no comma.
+    """
+    for column in tables.columns(table):
+        if column.required and column.name not in raw.columns:
+            hint = nearest(column.name, raw.columns)
+            only = next(iter(raw.columns)) if len(raw.columns) == 1 else ""
+            for mark, name in ((";", "semicolons"), ("\t", "tabs"), ("|", "bars")):
+                if mark in only:
+                    hint = f"; its cells look separated by {name}: save it with commas, and points in numbers"
+            raise InputError(f"{raw.source}: the column '{column.name}' is missing{hint}")
 
 
 def unknown_columns(raw: RawTable, known: Iterable[str]) -> tuple[str, ...]:

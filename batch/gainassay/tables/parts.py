@@ -10,7 +10,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
-from gainassay.contracts.documents import nearest
 from gainassay.contracts.evidence import ASSUMED, GUARANTEED, MISSING, TYPICAL
 from gainassay.contracts.quantities import Numbers
 from gainassay.contracts.tables import Column
@@ -19,8 +18,8 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
 from gainassay.job import StandIn
 from gainassay.tables import sources
-from gainassay.tables.checks import Checking, nothing_left, unknown_columns
-from gainassay.tables.rejects import Reject
+from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.rejects import Reject, rejected_rows
 
 
 @dataclass(frozen=True)
@@ -29,7 +28,7 @@ class PartTable:
 
     Attributes
     ----------
-    found : int
+    rows : int
         Rows in the file, blank ones apart.
     names : ndarray of str, shape (parts,)
         Names.
@@ -42,18 +41,29 @@ class PartTable:
     modelled : tuple[bool, ...]
         Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
         evidence GUARANTEED, since nothing is claimed about it.
+    rejected_names : Mapping[str, int]
+        Row in the file of each name that was rejected.
     """
 
     source: str
     sha256: str
-    found: int
+    rows: int
     names: NDArray[np.str_]
     nominal: FloatArray
     worst: FloatArray
     evidence: NDArray[np.uint8]
     modelled: tuple[bool, ...]
     rejects: tuple[Reject, ...]
+    rejected_names: Mapping[str, int]
     warnings: tuple[str, ...]
+
+    def used(self) -> int:
+        """Parts that can be screened."""
+        return len(self.names)
+
+    def rejected_rows(self) -> int:
+        """Rows that were left out."""
+        return rejected_rows(self.rejects)
 
     def not_modelled(self) -> tuple[str, ...]:
         """Quantities that the table says nothing about."""
@@ -77,8 +87,7 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
     """
     raw = sources.read(path)
     known = tables.columns("parts")
-    if "part" not in raw.columns:
-        raise InputError(f"{path}: the column 'part' is missing{nearest('part', raw.columns)}")
+    require_columns(raw, "parts")
     gain_columns = [column.name for column in known if column.name.startswith(OPEN_LOOP_GAIN.quantity)]
     if not set(gain_columns) & set(raw.columns):
         raise InputError(f"{path}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
@@ -89,19 +98,20 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
 
     kept = np.flatnonzero(checking.good())
     order = kept[np.argsort(names[kept].astype(np.str_))]
-    found = len(raw.rows) + len(raw.ragged)
+    rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
-        raise InputError(nothing_left(path, found, checking.found(), "part"))
+        raise InputError(nothing_left(path, rows, checking.found(), "part"))
     return PartTable(
         source=raw.source,
         sha256=raw.sha256,
-        found=found,
+        rows=rows,
         names=names[order].astype(np.str_),
         nominal=nominal[:, order],
         worst=worst[:, order],
         evidence=evidence[:, order].astype(np.uint8),
         modelled=tuple(r[3] for r in read),
         rejects=checking.found(),
+        rejected_names=checking.rejected_names(names),
         warnings=unknown_columns(raw, [column.name for column in known]),
     )
 

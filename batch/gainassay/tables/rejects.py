@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections import Counter
 from dataclasses import dataclass, field
 
 
@@ -39,7 +38,6 @@ class Rejects:
         self.found.append(Reject(self.source, row, column, value, reason))
 
 
-def by_reason(rejects: tuple[Reject, ...]) -> list[tuple[str, str, int]]:
-    """(column, reason, how many), the most frequent first."""
-    counted = Counter((reject.column, reject.reason) for reject in rejects)
-    return [(column, reason, count) for (column, reason), count in sorted(counted.items(), key=lambda i: (-i[1], i[0]))]
+def rejected_rows(rejects: tuple[Reject, ...]) -> int:
+    """How many rows of one table the rejects leave out."""
+    return len({reject.row for reject in rejects})

@@ -87,7 +87,9 @@ def _csv(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reje
 
     quotes = _utf_8(path)
     header = _header(path)
+    places = [str(place) for place in range(len(header))]
     ragged: list[Reject] = []
+    swallowing: list[int] = []
 
     def keep_aside(row: pacsv.InvalidRow) -> str:
         cells = f"the row has {row.actual_columns} cells, the header has {row.expected_columns}"
@@ -95,22 +97,31 @@ def _csv(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reje
             text = row.text
         except UnicodeDecodeError:
             return "error"
+        if "\n" in text or "\r" in text:
+            swallowing.append(row.number)
+            return "error"
         ragged.append(Reject(str(path), row.number, "", shown(text), f"{cells}; look for a stray comma or quote"))
         return "skip"
 
     try:
         table = pacsv.read_csv(
             path,
-            # One thread: only then does the reader say the number of a row it sets aside.
-            read_options=pacsv.ReadOptions(use_threads=False),
+            # One thread: only then does the reader say the number of a row it sets aside. Columns go by their
+            # place until all is read, since a header may name several of them nothing.
+            read_options=pacsv.ReadOptions(use_threads=False, skip_rows=1, column_names=places),
             parse_options=pacsv.ParseOptions(
                 newlines_in_values=True, ignore_empty_lines=False, invalid_row_handler=keep_aside
             ),
             convert_options=pacsv.ConvertOptions(
-                column_types={name: pa.string() for name in header}, strings_can_be_null=False
+                column_types={place: pa.string() for place in places}, strings_can_be_null=False
             ),
         )
     except (pa.ArrowInvalid, pa.ArrowKeyError, UnicodeDecodeError) as error:
+        if swallowing:
+            raise InputError(
+                f"{path}: row {swallowing[0]}: a quote runs over the end of the line, and the row does not have the "
+                "header's number of cells; close or remove the quote"
+            ) from None
         raise InputError(f"{path}: cannot be read as CSV in UTF-8: {str(error).splitlines()[0]}") from None
     if quotes % 2 and table.num_rows and any("\n" in (column[-1].as_py() or "") for column in table.columns):
         row = 1 + table.num_rows + len(ragged)
@@ -118,7 +129,14 @@ def _csv(path: Path) -> tuple[dict[str, pa.Array], NDArray[np.int64], tuple[Reje
     aside = {reject.row for reject in ragged}
     numbers = np.arange(2, 2 + table.num_rows + len(aside))
     rows = numbers[~np.isin(numbers, list(aside))] if aside else numbers
-    return {name: _whole(table.column(name)) for name in header}, rows, tuple(ragged)
+    columns = {}
+    for place, name in enumerate(header):
+        cells = _whole(table.column(place))
+        if name:
+            columns[name] = cells
+        elif _filled({"": cells}, len(cells)).any():
+            raise InputError(f"{path}: column {place + 1} has no name in row 1, but cells that are filled; name it")
+    return columns, rows, tuple(ragged)
 
 
 def _utf_8(path: Path) -> int:
@@ -137,6 +155,7 @@ def _utf_8(path: Path) -> int:
 
 
 def _header(path: Path) -> list[str]:
+    """Names of the columns, without surrounding white space; empty where a column has none."""
     try:
         with path.open(encoding="utf-8-sig", newline="") as file:
             header = next(csv.reader(file), [])
@@ -144,9 +163,12 @@ def _header(path: Path) -> list[str]:
         raise InputError(f"{path}: is not UTF-8 text (byte {error.start}); save it as CSV in UTF-8") from None
     except csv.Error as error:
         raise InputError(f"{path}: row 1: cannot be read as CSV: {error}") from None
-    if not any(name.strip() for name in header):
+    header = [name.strip() for name in header]
+    if not any(header):
         raise InputError(f"{path}: row 1 holds no column names")
-    _refuse_repeated(path, header)
+    if any("\n" in name or "\r" in name for name in header):
+        raise InputError(f"{path}: row 1: a column's name runs over the end of the line; close or remove the quote")
+    _refuse_repeated(path, [name for name in header if name])
     return header
 
 

@@ -19,8 +19,8 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology
 from gainassay.tables import sources
-from gainassay.tables.checks import Checking, nothing_left, unknown_columns
-from gainassay.tables.rejects import Reject
+from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.rejects import Reject, rejected_rows
 
 BLANK = {
     ("resistor", "open"): np.inf,
@@ -68,22 +68,29 @@ class StageTable:
 
     Attributes
     ----------
-    found : int
+    rows : int
         Rows in the file, blank ones apart.
     groups : tuple[StageGroup, ...]
         By name of the topology.
+    rejected_names : Mapping[str, int]
+        Row in the file of each name that was rejected.
     """
 
     source: str
     sha256: str
-    found: int
+    rows: int
     groups: tuple[StageGroup, ...]
     rejects: tuple[Reject, ...]
+    rejected_names: Mapping[str, int]
     warnings: tuple[str, ...]
 
-    def count(self) -> int:
+    def used(self) -> int:
         """Stages that can be screened."""
         return sum(len(group.names) for group in self.groups)
+
+    def rejected_rows(self) -> int:
+        """Rows that were left out."""
+        return rejected_rows(self.rejects)
 
 
 def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
@@ -98,7 +105,9 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
     raw = sources.read(path)
     kinds = {element.name: element.kind for topology in library.values() for element in topology.elements}
     elements = sorted(kinds)
-    _require_columns(raw, path)
+    require_columns(raw, "stages")
+    if not {"accuracy_pct", "accuracy_ppm"} & set(raw.columns):
+        raise InputError(f"{path}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?")
     checking = Checking.of(raw)
     names = checking.names("stage")
     chosen = _topologies(checking, library)
@@ -132,27 +141,20 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         kept = np.flatnonzero(checking.good()[members])
         if len(kept):
             groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
-    found = len(raw.rows) + len(raw.ragged)
+    rows = len(raw.rows) + len(raw.ragged)
     if not groups:
-        raise InputError(nothing_left(path, found, checking.found(), "stage"))
+        raise InputError(nothing_left(path, rows, checking.found(), "stage"))
     return StageTable(
         source=raw.source,
         sha256=raw.sha256,
-        found=found,
+        rows=rows,
         groups=tuple(groups),
         rejects=checking.found(),
+        rejected_names=checking.rejected_names(names),
         warnings=unknown_columns(
             raw, [*tables.reserved_stage_columns(), *elements, *(f"{name}_tol_pct" for name in elements)]
         ),
     )
-
-
-def _require_columns(raw: sources.RawTable, path: Path) -> None:
-    for name in ("stage", "topology"):
-        if name not in raw.columns:
-            raise InputError(f"{path}: the column '{name}' is missing{nearest(name, raw.columns)}")
-    if not {"accuracy_pct", "accuracy_ppm"} & set(raw.columns):
-        raise InputError(f"{path}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?")
 
 
 def _topologies(checking: Checking, library: Mapping[str, Topology]) -> NDArray[np.object_]:
@@ -237,28 +239,22 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
     finite: NDArray[np.bool_] = np.isfinite(np.concatenate([found.contrasts, found.loadings])).all(axis=0)
     positive = np.logical_or.reduce(found.loadings[list(group.form.loops())] < 0.0, axis=0)
     good = checking.good()
+    elements = ", ".join(name for name in group.form.elements if name in checking.raw.columns) or "topology"
     for index, position in enumerate(members):
         if not good[position]:
             continue
         gain = found.gain_ideal[index]
         if gain == 0.0:
-            checking.refuse(int(position), "topology", "these element values make the ideal gain at 0 Hz zero")
+            reason = "these values make the ideal gain at 0 Hz zero"
         elif not np.isfinite(gain):
-            checking.refuse(
-                int(position), "topology", "these element values make the ideal gain at 0 Hz infinite or undefined"
-            )
+            reason = "these values make the ideal gain at 0 Hz infinite or undefined"
         elif not finite[index]:
-            checking.refuse(
-                int(position),
-                "topology",
-                "these element values make the gain undefined; look for a 0 ohm across a source",
-            )
+            reason = "these values make the gain undefined; look for a 0 ohm across a source"
         elif positive[index]:
-            checking.refuse(
-                int(position),
-                "topology",
-                "these element values make the feedback positive: the output would run to its limit",
-            )
+            reason = "these values make the feedback positive: the output would run to its limit"
+        else:
+            continue
+        checking.refuse(int(position), elements, reason)
 
 
 def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:

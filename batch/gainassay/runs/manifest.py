@@ -1,0 +1,64 @@
+"""The manifest of a run: what went in, what came out, and what made it."""
+
+from __future__ import annotations
+
+import platform
+from collections.abc import Sequence
+from dataclasses import asdict
+from datetime import UTC, datetime
+from importlib.metadata import version
+from typing import Any
+
+from gainassay.cautions import CAUTIONS
+from gainassay.forms.cache import content_hash
+from gainassay.job import Job
+from gainassay.runs.folder import File
+from gainassay.runs.summaries import Counts
+from gainassay.tables.parts import PartTable
+from gainassay.tables.stages import StageTable
+
+PACKAGES = ("gainassay", "dask", "numpy", "pyarrow", "sympy")
+"""Packages whose versions a manifest records."""
+
+
+def manifest(
+    *,
+    run: str,
+    started: datetime,
+    job: Job,
+    stages: StageTable,
+    parts: PartTable,
+    warnings: Sequence[str],
+    counts: Counts,
+    files: Sequence[File],
+) -> dict[str, Any]:
+    """What `run.json` says. `seconds` counts from `started`, when the job was opened, to now."""
+    tables: dict[str, StageTable | PartTable] = {"stages": stages, "parts": parts}
+    return {
+        "run": run,
+        "started": started.isoformat(timespec="seconds"),
+        "seconds": round((datetime.now(UTC) - started).total_seconds(), 3),
+        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
+        "job": {"file": str(job.path), "content": dict(job.document)},
+        "inputs": {
+            name: {
+                "source": table.source,
+                "sha256": table.sha256,
+                "rows": table.rows,
+                "used": table.used(),
+                "rejected": table.rejected_rows(),
+            }
+            for name, table in tables.items()
+        },
+        "forms": {
+            group.topology.name: {"topology": group.topology.content_hash(), "form": content_hash(group.form)}
+            for group in stages.groups
+        },
+        "not_modelled": list(parts.not_modelled()),
+        "warnings": list(warnings),
+        "pairs": sum(counts.verdicts.values()),
+        "verdicts": counts.verdicts,
+        "dominant_terms": counts.dominant_terms,
+        "cautions": list(CAUTIONS),
+        "files": [asdict(file) for file in sorted(files, key=lambda file: file.path)],
+    }

@@ -20,6 +20,82 @@ Values = Mapping[str, mpmath.mpf]
 """By the names that formulas use: impedances of elements, and A, r_id, r_o of amplifiers."""
 
 
+UNSEEN = {
+    "bridged T feedback": oracle.network(
+        {
+            "r1": ("in", "sum"),
+            "r2": ("sum", "tee"),
+            "r3": ("tee", "ground"),
+            "r4": ("tee", "out"),
+            "r5": ("sum", "out"),
+            "r_load": ("out", "ground"),
+        },
+        [("ground", "sum", "out")],
+    ),
+    "bridge in the feedback": oracle.network(
+        {
+            "r1": ("out", "a"),
+            "r2": ("out", "b"),
+            "r3": ("a", "b"),
+            "r4": ("a", "ground"),
+            "r5": ("b", "ground"),
+            "r6": ("b", "minus"),
+            "r7": ("minus", "ground"),
+        },
+        [("in", "minus", "out")],
+    ),
+    "cascade with interstage loading": oracle.network(
+        {"r1": ("a", "ground"), "r2": ("a", "mid"), "r3": ("mid", "b"), "r4": ("b", "out")},
+        [("in", "a", "mid"), ("ground", "b", "out")],
+    ),
+    "composite": oracle.network(
+        {"r1": ("a", "ground"), "r2": ("a", "out"), "r3": ("b", "ground"), "r4": ("b", "out")},
+        [("in", "a", "mid"), ("mid", "b", "out")],
+    ),
+    "two-amplifier instrumentation stage": oracle.network(
+        {"r1": ("ground", "a"), "r2": ("a", "mid"), "r3": ("mid", "b"), "r4": ("b", "out"), "r_g": ("a", "b")},
+        [("in_n", "a", "mid"), ("in_p", "b", "out")],
+        source=("in_p", "in_n"),
+    ),
+    "improved current pump": oracle.network(
+        {
+            "r1": ("ground", "minus"),
+            "r2": ("minus", "drive"),
+            "r3": ("in", "plus"),
+            "r4": ("plus", "load"),
+            "r5": ("drive", "load"),
+            "r_load": ("load", "ground"),
+        },
+        [("plus", "minus", "drive")],
+        output="r_load",
+        gain="transconductance",
+    ),
+    "current amplifier": oracle.network(
+        {"r1": ("in", "mid"), "r2": ("mid", "ground"), "load": ("mid", "out")},
+        [("ground", "in", "out")],
+        output="load",
+        gain="current",
+    ),
+    "bridge between both inputs": oracle.network(
+        {
+            "r1": ("in", "minus"),
+            "r2": ("in", "plus"),
+            "r3": ("minus", "plus"),
+            "r4": ("plus", "ground"),
+            "r5": ("minus", "out"),
+        },
+        [("plus", "minus", "out")],
+    ),
+    "current into a load": oracle.network(
+        {"r1": ("sense", "ground"), "load": ("out", "sense")},
+        [("in", "sense", "out")],
+        output="load",
+        gain="transconductance",
+    ),
+}
+"""Stages of kinds that the library has not, or not in this shape."""
+
+
 def random_network(rng: random.Random, amplifiers: int, extra: int = 3) -> Topology:
     """A network of 2 to 7 nodes: a random tree of elements to ground, more elements, and amplifiers."""
     nodes = ["in", "out", "n1", "n2", "n3", "n4", "n5"][: rng.randint(max(2, amplifiers + 1), 7)]

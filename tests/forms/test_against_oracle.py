@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 import oracle
+from forms import networks
 from gainassay.errors import InputError
 from gainassay.forms import soundness
 from gainassay.forms.form import Form, derive
@@ -20,57 +21,6 @@ from gainassay.screen.kernel import nominal_account, screen
 
 POINTS = 200
 LIBRARY = library()
-
-NEVER_SEEN = {
-    "bridged T feedback": oracle.network(
-        {
-            "r1": ("in", "sum"),
-            "r2": ("sum", "tee"),
-            "r3": ("tee", "ground"),
-            "r4": ("tee", "out"),
-            "r5": ("sum", "out"),
-            "r6": ("out", "ground"),
-        },
-        [("ground", "sum", "out")],
-    ),
-    "bridge between both inputs": oracle.network(
-        {
-            "r1": ("in", "minus"),
-            "r2": ("in", "plus"),
-            "r3": ("minus", "plus"),
-            "r4": ("plus", "ground"),
-            "r5": ("minus", "out"),
-        },
-        [("plus", "minus", "out")],
-    ),
-    "two stages in cascade": oracle.network(
-        {
-            "r1": ("in", "sum"),
-            "r2": ("sum", "mid"),
-            "r3": ("mid", "sum2"),
-            "r4": ("sum2", "out"),
-            "r5": ("mid", "ground"),
-        },
-        [("ground", "sum", "mid"), ("ground", "sum2", "out")],
-    ),
-    "two-amplifier difference": oracle.network(
-        {"r1": ("ground", "a"), "r2": ("a", "mid"), "r3": ("mid", "b"), "r4": ("b", "out"), "rg": ("a", "b")},
-        [("in_n", "a", "mid"), ("in_p", "b", "out")],
-        source=("in_p", "in_n"),
-    ),
-    "current into a load": oracle.network(
-        {"r1": ("sense", "ground"), "load": ("out", "sense")},
-        [("in", "sense", "out")],
-        output="load",
-        gain="transconductance",
-    ),
-    "current amplifier": oracle.network(
-        {"r1": ("in", "mid"), "r2": ("mid", "ground"), "load": ("mid", "out")},
-        [("ground", "in", "out")],
-        output="load",
-        gain="current",
-    ),
-}
 
 
 def account(
@@ -89,7 +39,7 @@ def account(
 
 
 @pytest.mark.oracle
-@pytest.mark.parametrize("topology", [*LIBRARY.values(), *NEVER_SEEN.values()], ids=[*LIBRARY, *NEVER_SEEN])
+@pytest.mark.parametrize("topology", [*LIBRARY.values(), *networks.UNSEEN.values()], ids=[*LIBRARY, *networks.UNSEEN])
 def test_error_and_account(topology: Topology) -> None:
     rng = random.Random(topology.content_hash())
     form = derive(topology)

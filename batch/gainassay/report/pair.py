@@ -16,7 +16,7 @@ def text(found: Explanation) -> list[str]:
     """The explanation, a section for each question."""
     unit = found.gain_unit
     return [
-        f"{found.stage} with {found.part}: {found.verdict}",
+        f"{found.stage} with {found.part}: {found.verdict}, {found.reason}",
         f"{found.topology}: {found.summary}",
         "",
         *table(

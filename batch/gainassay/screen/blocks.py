@@ -25,7 +25,7 @@ from gainassay.screen.corners import (
     term_names,
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
-from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, judge
+from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
 
 Written = TypeVar("Written")
 
@@ -137,13 +137,13 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
     return tuple(found)
 
 
-def screen_chunk(groups: Sequence[Group], chunk: Chunk, block: int = PAIRS_PER_BLOCK) -> Screened:
+def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK) -> Screened:
     """Screen one chunk."""
     one = groups[chunk.group]
     stages = stage_side(one.form, one.box.part(chunk.stages))
     parts = one.parts.part(chunk.parts)
     outcome = screen(stages, parts, one.active_sets, block)
-    return Screened(chunk, one, stages, parts, outcome, judge(stages, parts, outcome))
+    return Screened(chunk, one, stages, parts, outcome, judge(stages, parts, outcome, rules))
 
 
 def tally(screened: Screened) -> Tally:
@@ -175,6 +175,7 @@ def tally(screened: Screened) -> Tally:
 
 def run(
     groups: Sequence[Group],
+    rules: Rules,
     keep: Callable[[int, Screened], Written],
     workers: int,
     block: int = PAIRS_PER_BLOCK,
@@ -184,6 +185,8 @@ def run(
 
     Parameters
     ----------
+    rules : Rules
+        The decision rule.
     keep : callable
         Called in the task with the chunk's place and the screened chunk; writes it down.
     workers : int
@@ -202,7 +205,7 @@ def run(
     planned = chunks(groups)
 
     def task(place: int) -> tuple[Written, Tally]:
-        screened = screen_chunk(groups, planned[place], block)
+        screened = screen_chunk(groups, planned[place], rules, block)
         return keep(place, screened), tally(screened)
 
     def done(key: object, result: object, *_: object) -> None:

@@ -16,7 +16,7 @@ from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks
-from gainassay.screen.blocks import Chunk, Group, Screened
+from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
@@ -180,7 +180,7 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
         reason=REASONS[int(judgement.reason[0, 0])],
         evidence=leaning.evidence,
         leans_on=leaning.leans_on,
-        dominant_term=names[int(outcome.dominant[0, 0])],
+        dominant_term="" if outcome.dominant[0, 0] == NO_TERM else names[int(outcome.dominant[0, 0])],
         elements=tuple(
             ElementValue(name, kind, float(nominal), float(tolerance), float(at_worst))
             for name, kind, nominal, tolerance, at_worst in zip(

@@ -52,7 +52,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         return pa.array(values, mask=~np.isfinite(values))
 
     def words(codes: NDArray[np.integer], meanings: Sequence[str]) -> pa.Array:
-        return pa.DictionaryArray.from_arrays(pa.array(codes.astype(np.int32)), pa.array(meanings, pa.string()))
+        places = pa.array(codes.astype(np.int32), mask=codes < 0)
+        return pa.DictionaryArray.from_arrays(places, pa.array(meanings, pa.string()))
 
     evidences = list(dict.fromkeys(leaning.evidence for leaning in LEANINGS))
     evidence_of = np.array([evidences.index(leaning.evidence) for leaning in LEANINGS])

@@ -33,6 +33,9 @@ PAIRS_PER_CHUNK = 1_000_000
 """Pairs in a chunk at most, and so rows of a verdict file at most. Part of the output format: do not tune it."""
 
 
+NO_TERM = -1
+"""Stands for the dominant term where no term differs from 0."""
+
 RANK = {PASS: 0, UNPROVEN: 1, FAIL: 2}
 """Which verdict makes a better part for a stage."""
 
@@ -143,7 +146,10 @@ def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int
     stages = stage_side(one.form, one.box.part(chunk.stages))
     parts = one.parts.part(chunk.parts)
     outcome = screen(stages, parts, one.active_sets, block)
-    return Screened(chunk, one, stages, parts, outcome, judge(stages, parts, outcome, rules))
+    judgement = judge(stages, parts, outcome, rules)
+    # No term decides where all are 0, as with a part of which nothing is known.
+    outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
+    return Screened(chunk, one, stages, parts, outcome, judgement)
 
 
 def tally(screened: Screened) -> Tally:
@@ -163,7 +169,10 @@ def tally(screened: Screened) -> Tally:
         chunk=screened.chunk,
         by_stage=is_verdict.sum(axis=2).T,
         by_part=is_verdict.sum(axis=1).T,
-        dominant=np.bincount(screened.outcome.dominant.ravel(), minlength=len(term_names(screened.group.form))),
+        # NO_TERM is -1, counted in the first place and left out.
+        dominant=np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(term_names(screened.group.form)) + 1)[
+            1:
+        ],
         best_part=np.where(found, best + screened.chunk.parts.start, -1),
         best_rank=best_rank,
         best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),

@@ -210,7 +210,7 @@ def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> It
         for element, ohms in zip(topology.elements, values, strict=True)
         if element.absent != "error" and (ohms == 0.0 or np.isinf(ohms))
     }
-    formulas = formulas_of(topology, absent)
+    formulas = formulas_of(topology, {**absent, **topology.at_dc()})
     figures = {element.name: np.float64(ohms) for element, ohms in zip(topology.elements, values, strict=True)}
     with np.errstate(all="ignore"):
         for index, quantity in enumerate(formulas.quantities[len(topology.elements) :]):

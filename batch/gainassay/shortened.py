@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from gainassay.contracts.documents import nearest
+from gainassay.contracts.evidence import MISSING
 from gainassay.errors import InputError
 from gainassay.forms import coefficients
 from gainassay.forms.cache import formulas_of
@@ -34,7 +35,7 @@ class ShortForm:
     Attributes
     ----------
     absent : dict[str, str]
-        Elements that no stage of the job has, each `open` or `short`.
+        Elements that no stage of the job has, and what is open or short at 0 Hz.
     exact : Expression
         The gain before it was shortened.
     found : Shortened
@@ -43,6 +44,8 @@ class ShortForm:
         The pair in which the deviation occurs.
     pairs : int
         Pairs over which it was verified, each with the part's nominal figures and with its limits.
+    parts_with_gaps : int
+        Parts of which a figure is missing; it is taken as ideal.
     """
 
     topology: Topology
@@ -53,6 +56,7 @@ class ShortForm:
     part: str
     stages: int
     pairs: int
+    parts_with_gaps: int
     within: float
 
 
@@ -72,13 +76,14 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         names = [g.topology.name for g in prepared.stages.groups]
         hint = nearest(topology.name, names) or f"; there are stages of {', '.join(names)}"
         raise InputError(f"{prepared.stages.source}: no usable stage has the topology '{topology.name}'{hint}")
-    absent = _absent_everywhere(group)
+    absent = {**_absent_everywhere(group), **topology.at_dc()}
     formulas = formulas_of(topology, absent)
+    unknown = int((prepared.parts.evidence == MISSING).any(axis=0).sum())
     found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, formulas))
+    stage, part = str(group.names[found.deviation.stage]), str(prepared.parts.names[found.deviation.part])
     if not found.deviation.share <= within:
         raise InputError(
-            f"the gain of topology '{topology.name}' has no finite value for stage "
-            f"{group.names[found.deviation.stage]!r} with part {prepared.parts.names[found.deviation.part]!r}, "
+            f"the gain of topology '{topology.name}' has no finite value for stage {stage!r} with part {part!r}, "
             "so nothing can be verified over this job"
         )
     return ShortForm(
@@ -86,10 +91,11 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         absent=absent,
         exact=formulas.gain.whole,
         found=found,
-        stage=str(group.names[found.deviation.stage]),
-        part=str(prepared.parts.names[found.deviation.part]),
+        stage=stage,
+        part=part,
         stages=len(group.names),
         pairs=len(group.names) * len(prepared.parts.names),
+        parts_with_gaps=unknown,
         within=within,
     )
 

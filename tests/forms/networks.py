@@ -76,6 +76,12 @@ UNSEEN = {
         output="load",
         gain="current",
     ),
+    "current into a pair": oracle.network(
+        {"r1": ("inp", "out"), "r2": ("inn", "ground"), "r3": ("inp", "inn")},
+        [("inn", "inp", "out")],
+        source=("inp", "inn"),
+        gain="transresistance",
+    ),
     "bridge between both inputs": oracle.network(
         {
             "r1": ("in", "minus"),

@@ -189,3 +189,11 @@ def test_open_and_short_may_be_put_in() -> None:
     gain = derive(LIBRARY["non_inverting"]).gain
     values = {"r1": 1e3, "r2": 1e4, "r_source": 0.0, "r_load": float("inf"), "A": float("inf"), "r_id": 1e6, "r_o": 0.0}
     assert value(gain.whole, values) == 11.0
+
+
+def test_a_sum_that_is_subtracted_keeps_its_parentheses() -> None:
+    ratio = product([R1], [R2])
+    formula = total([ratio, product([total([ONE, product([R3], [R4])])], coefficient=-1)])
+    assert text(formula) == "r1/r2 - (1 + r3/r4)"
+    assert "".join(lines(formula, 12)).replace(" ", "") == "r1/r2-(1+r3/r4)"
+    assert r"- \left(1" in latex(formula)

@@ -96,6 +96,11 @@ BAD_NETWORKS = [
         "no feedback: nothing leads from the output of u1 back to its inputs",
     ),
     ({**INVERTING, "r3": ("in", "ground")}, [STAGE], "r3 never influences the gain"),
+    (
+        {**INVERTING, "r3": ("ground", "b"), "r4": ("b", "c")},
+        [STAGE, ("ground", "b", "c")],
+        "never influences the gain",
+    ),
     (INVERTING, [("sum", "ground", "out")], "the feedback around u1 is positive for all element values"),
     (
         {"r1": ("in", "a"), "r2": ("a", "mid"), "r3": ("mid", "b"), "r4": ("b", "out")},

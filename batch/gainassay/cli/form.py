@@ -86,8 +86,9 @@ def _for_job(name: str, job: Path, within: float, kind: str) -> None:
 
 
 def _at(topology: Topology, given: tuple[str, ...], kind: str) -> None:
-    absent, numbers = filled_in(topology, formulas_of(topology), given)
+    absent, numbers = filled_in(topology, given)
     formulas = formulas_of(topology, absent)
+    shared.warn(report.feedback_warnings(topology, absent, numbers))
     if kind == "json":
         shared.data(report.numbers_data(topology, formulas, numbers))
     else:

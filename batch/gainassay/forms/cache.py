@@ -28,7 +28,7 @@ Derived = TypeVar("Derived")
 FORM_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "soundness.py", "topology.py")
 """Files of this room whose change makes every kept form stale."""
 
-FORMULA_CODE = (*FORM_CODE, "expression.py", "meaningful.py", "proof.py", "simplest.py")
+FORMULA_CODE = (*FORM_CODE, "expression.py", "meaningful.py", "proof.py", "render.py", "simplest.py")
 """Files of this room whose change makes every kept formula stale."""
 
 
@@ -68,7 +68,7 @@ def formulas_of(topology: Topology, absent: Mapping[str, str] | None = None) -> 
     Parameters
     ----------
     absent : Mapping[str, str], optional
-        Elements that are left out, each `open` or `short`.
+        What is left out, by name of the quantity: elements `open` or `short`, amplifiers' quantities `ideal`.
 
     Raises
     ------

@@ -72,8 +72,9 @@ class Form:
     def loops(self) -> tuple[int, ...]:
         """Places of the monomials that are products of 1/A_OL alone.
 
-        Above an amplifier's first pole 1/A_OL grows with s, so their loadings are the coefficients of the
-        characteristic polynomial: where one of them is negative, feedback is positive and the stage unstable.
+        Above an amplifier's first pole 1/A_OL grows with s, so their loadings make up the coefficients of the
+        characteristic polynomial. Where one of them is negative, feedback is positive and the stage unstable; with
+        several amplifiers, for some ratio of their bandwidths at least.
         """
         return tuple(
             place

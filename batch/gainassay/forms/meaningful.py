@@ -129,6 +129,8 @@ class Formulas:
     def to_tree(self) -> dict[str, Any]:
         """The formulas as dictionaries and lists, for JSON; `from_tree` reads them back."""
         return {
+            # Formulas are made by `derive` alone, which proves each; an entry without this is none.
+            "proved": "identity of polynomials",
             "quantities": [render.tree(quantity) for quantity in self.quantities],
             "gain": _trees(self.gain),
             "input_impedance": None if self.input_impedance is None else _trees(self.input_impedance),
@@ -145,6 +147,8 @@ class Formulas:
         ValueError, KeyError, TypeError
             If it is no such tree.
         """
+        if found["proved"] != "identity of polynomials":
+            raise ValueError("formulas that are not proved")
         impedances = [
             None if found[which] is None else BlackmanFormula(**_expressions(found[which]))
             for which in ("input_impedance", "output_impedance")
@@ -190,18 +194,21 @@ def derive(topology: Topology, absent: Mapping[str, str] | None = None) -> Formu
     Parameters
     ----------
     absent : Mapping[str, str], optional
-        Elements that are left out, each `open` or `short`.
+        What is left out, by name of the quantity: elements `open` or `short`, amplifiers' quantities `ideal`.
 
     Raises
     ------
     InputError
         If the topology has no unique gain, or its ideal gain is zero or infinite.
     """
-    states = absent or {}
     found = quantities(topology)
-    gain = nodal.derive(topology).without_elements(states)
-    seen_by_source = nodal.input_impedance(topology).without_elements(states)
-    seen_by_load = nodal.output_impedance(topology).without_elements(states)
+    gain = nodal.derive(topology)
+    names: list[str | tuple[str, str]] = [*gain.elements, *gain.departures]
+    named = {quantity.name: name for quantity, name in zip(found, names, strict=True)}
+    states = {named[name]: state for name, state in (absent or {}).items()}
+    gain = gain.without(states)
+    seen_by_source = nodal.input_impedance(topology).without(states)
+    seen_by_load = nodal.output_impedance(topology).without(states)
     writer = writer_for(found)
     try:
         gain_found = gain_formula(gain, found, writer)

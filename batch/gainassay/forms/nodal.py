@@ -50,17 +50,18 @@ class NetworkFunction:
         """Mask of the departures' symbols."""
         return ((1 << len(self.departures)) - 1) << len(self.elements)
 
-    def without_elements(self, states: Mapping[str, str]) -> Self:
-        """The function of the network in which some elements are absent, `open` or `short`.
+    def without(self, states: Mapping[str | tuple[str, str], str]) -> Self:
+        """The function of the network in which elements are `open` or `short`, or departures `ideal`.
 
-        An open element has admittance 0; for a short one, admittance infinite, the leading coefficients stay.
-        Where both polynomials vanish, both are divided by the admittance first.
+        An open element has admittance 0 and an ideal departure is 0; for a short element, admittance infinite,
+        the leading coefficients stay. Where both polynomials vanish, both are divided by the symbol first.
         """
         numerator, denominator = self.numerator, self.denominator
+        names: list[str | tuple[str, str]] = [*self.elements, *self.departures]
         for name, state in states.items():
-            bit = 1 << self.elements.index(name)
+            bit = 1 << names.index(name)
             rests, leads = zip(numerator.split(bit), denominator.split(bit), strict=True)
-            kept, other = (rests, leads) if state == "open" else (leads, rests)
+            kept, other = (leads, rests) if state == "short" else (rests, leads)
             numerator, denominator = kept if any(kept) else other
         return replace(self, numerator=numerator, denominator=denominator)
 
@@ -82,10 +83,10 @@ def derive(topology: Topology) -> Gain:
         If the nodal equations have no unique solution even with a real amplifier.
     """
     names = _Names.of(topology)
-    scale = len(topology.input)
-    # A balanced pair is driven with +1 and -1 in place of +1/2 and -1/2, so that coefficients stay integers.
-    drive = dict(zip(topology.input, (1, -1), strict=False))
     held = driven_by_voltage(topology)
+    drive = dict(zip(topology.input, (1, -1), strict=False))
+    # A balanced pair of voltages is +1 and -1 in place of +1/2 and -1/2, so that coefficients stay integers.
+    scale = len(topology.input) if held else 1
     potential = {GROUND: 0} | (drive if held else {})
     rows, columns = _equations(topology, names, potential, {} if held else drive)
     whole = _determinant(topology, rows, columns)
@@ -151,7 +152,7 @@ def output_impedance(topology: Topology) -> Impedance:
     if not output_is_current(topology):
         return _driving_point(topology, dead, topology.output, GROUND)
     first, second = topology.element(topology.output).between
-    return _driving_point(topology, dead, first, second).without_elements({topology.output: "open"})
+    return _driving_point(topology, dead, first, second).without({topology.output: "open"})
 
 
 def _driving_point(topology: Topology, potential: Mapping[str, int], first: str, second: str) -> Impedance:

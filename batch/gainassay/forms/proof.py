@@ -155,7 +155,7 @@ class _Evaluation:
         }
         content, found = factors(MultiAffine(masks))
         lifted = Counter(self.lift(factor) for factor in found)
-        if len(found) > 1 and self._product(lifted.items()).mul_ground(content) != polynomial:
+        if self._product(lifted.items()).mul_ground(content) != polynomial:
             return _Powers(Fraction(1), Counter({polynomial: 1}))
         return _Powers(Fraction(content), lifted)
 

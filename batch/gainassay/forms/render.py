@@ -162,7 +162,10 @@ def _piece(expression: Expression, notation: Notation) -> Piece:
             shown = _piece(parts[0], notation).shown
             for part in parts[1:]:
                 operator = "-" if is_negative(part) else "+"
-                shown = notation.joined([shown, _piece(_magnitude(part), notation).shown], operator)
+                # After a minus a sum needs its parentheses, though it binds as loosely as the sum around it.
+                magnitude = _magnitude(part)
+                piece = _bound(magnitude, notation, _PARALLEL) if operator == "-" else _piece(magnitude, notation)
+                shown = notation.joined([shown, piece.shown], operator)
             return Piece(shown, _SUM)
         case Parallel(parts):
             return Piece(notation.joined([_bound(part, notation, _PRODUCT).shown for part in parts], "||"), _PARALLEL)
@@ -271,7 +274,8 @@ def _broken(expression: Expression, notation: Notation, width: int) -> list[str]
     found: list[str] = []
     outer = _piece(expression, notation).binding
     for sign, part in marked:
-        loose = _piece(part, notation).binding < (_PRODUCT if isinstance(expression, Product) else outer)
+        needed = _PRODUCT if isinstance(expression, Product) else _PARALLEL if sign.endswith("- ") else outer
+        loose = _piece(part, notation).binding < needed
         inner = width - len(sign) - 2 * loose
         first, *rest = _broken(part, notation, max(inner, 20))
         indent = " " * (len(sign) + loose)

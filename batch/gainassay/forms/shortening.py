@@ -55,11 +55,14 @@ class Dropped:
         The piece, and the sum or connection that it was dropped from.
     alone : Deviation
         What dropping it, and nothing else, does.
+    together : Deviation
+        What dropping it and all that was dropped before it does.
     """
 
     piece: Expression
     of: Expression
     alone: Deviation
+    together: Deviation
 
 
 @dataclass(frozen=True)
@@ -103,11 +106,11 @@ def shorten(formula: Expression, within: float, measure: Callable[[Expression], 
             # What lay inside a piece that goes now was dropped for nothing.
             order = [other for other in order if other[: len(path)] != path] + [path]
             gone, kept = frozenset(order), found
-    return Shortened(
-        formula=without(formula, gone),
-        dropped=tuple(Dropped(at(formula, path), at(formula, path[:-1]), alone[path]) for path in order),
-        deviation=kept,
+    dropped = tuple(
+        Dropped(at(formula, p), at(formula, p[:-1]), alone[p], measure(without(formula, frozenset(order[: i + 1]))))
+        for i, p in enumerate(order)
     )
+    return Shortened(without(formula, gone), dropped, kept)
 
 
 def pieces(expression: Expression) -> Iterator[Path]:

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections import Counter
 from collections.abc import Iterable
 
 from gainassay.contracts import tables
 from gainassay.errors import InputError
+from gainassay.forms import nodal
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form, Ratio
+from gainassay.forms.multiaffine import factors
 from gainassay.forms.topology import GROUND, Amplifier, Topology, driven_by_voltage, output_is_current
 
 RESERVED = ("s", *(name for departure in DEPARTURES for name in (departure.symbol, departure.quantity)))
@@ -95,7 +96,10 @@ def network(topology: Topology) -> None:
     joined = _joined(topology)
     for node in topology.nodes():
         if len(joined[node]) == 1:
-            raise InputError(f"{where}: node '{node}' is joined to {joined[node][0]} alone; join it or leave that out")
+            raise InputError(
+                f"{where}: node '{node}' is joined to {joined[node][0]} alone; "
+                "join it to something else, a load that may be blank perhaps, or leave that out"
+            )
     floating = set(topology.nodes()) - _reached(topology, _anchors(topology), set())
     if floating:
         named = ", ".join(f"'{node}'" for node in topology.nodes() if node in floating)
@@ -171,12 +175,18 @@ def function(topology: Topology, form: Form) -> None:
         With the culprit and what to do.
     """
     where = topology.where()
-    used = Counter[int]()
-    for ratio in (form.gain_ideal, *form.contrasts, *form.loadings):
-        used.update(index for index, degree in enumerate(ratio.degrees()) if degree)
-    for index, element in enumerate(form.elements):
-        if not used[index]:
+    gain = nodal.derive(topology)
+    over, under = ({*factors(polynomial)[1]} for polynomial in (gain.numerator, gain.denominator))
+    support = 0
+    for factor in over ^ under:
+        support |= factor.support()
+    for index, element in enumerate(gain.elements):
+        if not support >> index & 1:
             raise InputError(f"{where}: {element} never influences the gain; leave it out")
+    for amplifier in topology.amplifiers:
+        own = [len(gain.elements) + i for i, (name, _) in enumerate(gain.departures) if name == amplifier.name]
+        if not any(support >> index & 1 for index in own):
+            raise InputError(f"{where}: {amplifier.name} never influences the gain; leave it out")
     for place in form.loops():
         if sign(form.loadings[place]) < 0:
             amplifiers = " and ".join(form.departures[departure][0] for departure in form.monomials[place])

@@ -82,6 +82,11 @@ class Topology:
         """The element of that name."""
         return next(element for element in self.elements if element.name == name)
 
+    def at_dc(self) -> dict[str, str]:
+        """What is left out at 0 Hz: capacitors are open, inductors short."""
+        states = {"capacitor": "open", "inductor": "short"}
+        return {element.name: states[element.kind] for element in self.elements if element.kind in states}
+
     def where(self) -> str:
         """How messages name it."""
         return f"{self.source}: topology '{self.name}'"

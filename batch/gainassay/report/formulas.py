@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from gainassay.forms import nodal, render
+from gainassay.forms import coefficients, nodal, render
 from gainassay.forms.cache import content_hash, form_of, formulas_of
 from gainassay.forms.evaluation import ratios
 from gainassay.forms.meaningful import Formulas, Stated
@@ -103,12 +103,25 @@ def data(topology: Topology, formulas: Formulas) -> dict[str, Any]:
 def numbers(topology: Topology, formulas: Formulas, values: Mapping[str, float], unicode: bool) -> list[str]:
     """The formulas with the value of each ratio in front, so that a person sees which ratio matters."""
     lines = [f"{topology.name}: {topology.summary}"]
+    if topology.at_dc():
+        lines.append(f"At 0 Hz: {', '.join(f'{name} is {state}' for name, state in topology.at_dc().items())}")
     for formula in formulas.stated():
         (whole, value), *inner = _ratios(formula, values, unicode)
         rows = [[f"  {_number(value)}", f"{formula.symbol} = {whole}"]]
         rows += [[f"  {_number(value)}", f"  {shown}"] for shown, value in inner]
         lines += ["", _meaning(topology, formula), *table(["", ""], rows)[1:]]
     return lines
+
+
+def feedback_warnings(topology: Topology, absent: Mapping[str, str], values: Mapping[str, float]) -> list[str]:
+    """A warning if the elements' values make the feedback positive at 0 Hz."""
+    form = form_of(topology)
+    blank = {"open": np.inf, "short": 0.0}
+    ohms = np.array([[blank[absent[name]] if name in absent else values[name]] for name in form.elements])
+    loadings = coefficients.evaluate(form, coefficients.at_dc(form, ohms)).loadings
+    if (loadings[list(form.loops())] < 0.0).any():
+        return ["these values make the feedback positive: the output would run to its limit"]
+    return []
 
 
 def numbers_data(topology: Topology, formulas: Formulas, values: Mapping[str, float]) -> dict[str, Any]:

@@ -156,8 +156,8 @@ def test_tolerances_shares_are_alike_for_elements_that_play_the_same_part() -> N
     values = np.array([[1e4], [1e4], [1e5], [np.inf]])
     box = StageBox(values, np.array([[0.01], [0.0], [0.01], [0.0]]), np.ones(1), np.array([np.nan]))
     side = stage_side(form, box)
-    assert side.corner_terms.sum(axis=1) + side.set_point == pytest.approx(side.corner_error, abs=1e-15)
-    up_down = int(side.corner_error[:, 0].argmax())
-    low, _, high, _ = side.corner_terms[up_down, :, 0]
+    assert side.corner_terms.sum(axis=0) + side.set_point == pytest.approx(side.corner_error, abs=1e-15)
+    up_down = int(side.corner_error.argmax())
+    low, _, high, _ = side.corner_terms[:, up_down]
     # r1 down by 1 % and r_f up by 1 % weigh nearly the same: their exact ratio is 1.01/0.99 / 1.01 apart.
     assert low == pytest.approx(high, rel=0.02)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import io
+import signal
 import subprocess
 import sys
 from collections.abc import Iterator, Mapping, Sequence
@@ -114,8 +115,16 @@ class CommandLine:
         return Ended(done.returncode, done.stdout, done.stderr)
 
     def start(self, *arguments: str | Path, stdout: int = subprocess.PIPE) -> subprocess.Popen[bytes]:
-        """Start it, to be watched or disturbed."""
-        return subprocess.Popen([*self.program, *map(str, arguments)], stdout=stdout, stderr=subprocess.PIPE)
+        """Start it, to be watched or disturbed.
+
+        It listens to interrupts, even where the tests themselves run in a shell's background and do not.
+        """
+        return subprocess.Popen(
+            [*self.program, *map(str, arguments)],
+            stdout=stdout,
+            stderr=subprocess.PIPE,
+            preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),
+        )
 
 
 @pytest.fixture(scope="session")

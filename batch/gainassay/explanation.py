@@ -16,10 +16,10 @@ from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks
-from gainassay.screen.blocks import Chunk, Group, Screened
+from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
-from gainassay.screen.verdicts import LEANINGS, VERDICTS
+from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageTable
 
@@ -102,6 +102,7 @@ class Explanation:
     limit_ppm: float
     limit_used: float
     verdict: str
+    reason: str
     evidence: str
     leans_on: str
     dominant_term: str
@@ -111,7 +112,9 @@ class Explanation:
     ports: tuple[PortFigure, ...]
 
 
-def explain(stages: StageTable, parts: PartTable, groups: tuple[Group, ...], stage: str, part: str) -> Explanation:
+def explain(
+    stages: StageTable, parts: PartTable, groups: tuple[Group, ...], rules: Rules, stage: str, part: str
+) -> Explanation:
     """Explain one pair.
 
     Raises
@@ -125,7 +128,7 @@ def explain(stages: StageTable, parts: PartTable, groups: tuple[Group, ...], sta
     place = next(index for index, group in enumerate(groups) if stage in group.stage_names)
     s = int(np.searchsorted(groups[place].stage_names, stage))
     p = int(np.searchsorted(groups[place].part_names, part))
-    screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)))
+    screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules)
     return _explanation(screened, stages.groups[place].topology, stage, parts, p)
 
 
@@ -174,9 +177,10 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
         limit_ppm=float(side.limits[0]) * PPM,
         limit_used=float(judgement.limit_used[0, 0]),
         verdict=VERDICTS[int(judgement.verdict[0, 0])],
+        reason=REASONS[int(judgement.reason[0, 0])],
         evidence=leaning.evidence,
         leans_on=leaning.leans_on,
-        dominant_term=names[int(outcome.dominant[0, 0])],
+        dominant_term="" if outcome.dominant[0, 0] == NO_TERM else names[int(outcome.dominant[0, 0])],
         elements=tuple(
             ElementValue(name, kind, float(nominal), float(tolerance), float(at_worst))
             for name, kind, nominal, tolerance, at_worst in zip(

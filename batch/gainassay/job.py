@@ -28,6 +28,22 @@ class StandIn:
 
 
 @dataclass(frozen=True)
+class Judge:
+    """The decision rule.
+
+    Attributes
+    ----------
+    guard_band_pct : float
+        Share of the required accuracy that a pass keeps free [%].
+    basis : str
+        The weakest evidence that a pass may rest on: `guaranteed` or `typical`.
+    """
+
+    guard_band_pct: float
+    basis: str
+
+
+@dataclass(frozen=True)
 class Results:
     """Where results go and what they hold."""
 
@@ -57,6 +73,7 @@ class Job:
     parts: Path
     topologies: tuple[Path, ...]
     assume: Mapping[str, StandIn]
+    judge: Judge
     results: Results
 
 
@@ -80,6 +97,7 @@ def read(path: Path) -> Job:
         parts=here / document["parts"]["from"],
         topologies=tuple(here / name for name in document.get("topologies", [])),
         assume={quantity: StandIn(**given) for quantity, given in document.get("assume", {}).items()},
+        judge=Judge(**{**_defaults("judge"), **document.get("judge", {})}),
         results=Results(
             folder=here / results["folder"],
             rows=results["rows"],

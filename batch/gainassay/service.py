@@ -12,6 +12,7 @@ from typing import Any
 import pyarrow.compute as pc
 
 from gainassay import job as jobs
+from gainassay.contracts.evidence import EVIDENCE
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.job import Job, Results
@@ -23,6 +24,7 @@ from gainassay.runs.manifest import manifest
 from gainassay.screen import blocks
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.corners import StageBox, term_names
+from gainassay.screen.verdicts import Rules
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
 from gainassay.tables.parts import PartTable
@@ -102,6 +104,11 @@ def groups_of(stages: StageTable, parts: PartTable) -> tuple[Group, ...]:
     )
 
 
+def rules_of(job: Job) -> Rules:
+    """The decision rule that a job asks for."""
+    return Rules(guard_band=job.judge.guard_band_pct / 100.0, basis=EVIDENCE.index(job.judge.basis))
+
+
 def usable_cores() -> int:
     """Processors that this process may use."""
     return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
@@ -132,7 +139,7 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         def keep(place: int, screened: Screened) -> list[File]:
             return _write_verdicts(unfinished.folder, place, screened, results, terms)
 
-        done = blocks.run(groups, keep, workers or usable_cores(), after_each=after_each)
+        done = blocks.run(groups, rules_of(job), keep, workers or usable_cores(), after_each=after_each)
         tallies = [tally for _, tally in done]
         stages = summaries.stage_summary(groups, tallies)
         rejects = [*prepared.stages.rejects, *prepared.parts.rejects]

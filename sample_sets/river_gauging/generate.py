@@ -4,6 +4,8 @@ Everything here is invented: the maker of gauging stations, its stages and every
 shaped after what such tables look like in general, not after anybody's data:
 
 - A station is built from subsystems; each channel of a subsystem has the same few stages, at its own values.
+- The stages are of every built-in topology that has a gain at 0 Hz. Capacitors and inductors count for nothing
+  there, so theirs are any usual values, without a tolerance.
 - Resistors are preferred values of IEC 60063. The wanted gain is a round number, the resistors come as near
   to it as the series allows, and only some rows say the wanted gain, so some have a set-point error.
 - The required accuracy of most stages is what the resistors spend already and some room for the op-amp,
@@ -22,7 +24,7 @@ import csv
 import math
 import sys
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import product
 from pathlib import Path
 from random import Random
@@ -35,9 +37,10 @@ SEED_PARTS = 70_211
 PARTS = 800
 
 STAGE_COLUMNS = (
-    *("stage", "topology", "r_source", "r_source_n", "r_source_p", "r_shunt", "r1", "r2", "r3", "r4", "r_f"),
-    *("r_load", "accuracy_pct", "accuracy_ppm", "target_gain", "tol_pct"),
-    *("r_source_tol_pct", "r1_tol_pct", "r2_tol_pct", "r_load_tol_pct"),
+    *("stage", "topology", "r_source", "r_source_n", "r_source_p", "r_shunt", "r1", "r2", "r3", "r4", "r5", "r6"),
+    *("r_f", "r_gain", "r_mid", "r_iso", "r_load", "c1", "c2", "c_source", "c_load", "l1"),
+    *("accuracy_pct", "accuracy_ppm", "target_gain", "tol_pct"),
+    *("r_source_tol_pct", "r1_tol_pct", "r2_tol_pct", "r3_tol_pct", "r4_tol_pct", "r_gain_tol_pct", "r_load_tol_pct"),
 )
 PART_COLUMNS = (
     *("part", "family", "a_ol_min", "a_ol_typ", "a_ol_db_min", "a_ol_db_typ"),
@@ -67,15 +70,19 @@ class Role:
     topologies : tuple[str, ...]
         One row for each, all of the same circuit: a summer has a row for each input.
     gains : tuple[float, ...]
-        Wanted gains, in magnitude; of a transimpedance stage in V/A.
+        Wanted gains, in magnitude; of a transimpedance stage in V/A, of a current source in A/V.
     base : Range
-        Between which values r1 lies (of a follower and a transimpedance stage: no meaning) [ohm].
+        Between which values r1 lies, or what `DESIGNS` calls the base (0: the stage has none) [ohm].
     room : Range
         What the required accuracy leaves for the op-amp, from and to [ppm].
     tolerances : tuple[str, ...]
         tol_pct of the resistors.
     sources, loads, shunts : tuple[float, ...]
         Values of the source, load and shunt resistors; 0: left blank [ohm].
+    toleranced : tuple[str, ...]
+        The only elements with a tolerance; none named: all resistors.
+    reactive : Mapping[str, tuple[str, ...]]
+        Values of each capacitor and inductor as the table writes them; empty: left blank [F, H].
     """
 
     name: str
@@ -87,15 +94,23 @@ class Role:
     sources: tuple[float, ...] = (0,)
     loads: tuple[float, ...] = (0,)
     shunts: tuple[float, ...] = (0,)
+    toleranced: tuple[str, ...] = ()
+    reactive: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
 
 
 COARSE = ("1", "1", "0.5", "0.1")
 USUAL = ("0.1", "0.1", "0.05", "0.5", "0.25")
 FINE = ("0.01", "0.02", "0.02", "0.05", "0", "")
 TRIMMED = ("0", "", "0.01", "0.01")
+MATCHED = ("0.01", "0.02", "0.05")
 
 SUM_OF_TWO = ("summing_2_in1", "summing_2_in2")
 SUM_OF_THREE = ("summing_3_in1", "summing_3_in2", "summing_3_in3")
+SUM_NOT_INVERTED = ("summing_non_inverting_in1", "summing_non_inverting_in2")
+
+PICOFARADS = ("4p7", "10p", "22p", "47p")
+NANOFARADS = ("1n", "2n2", "4n7", "10n")
+MICROFARADS = ("100n", "220n", "470n", "1u")
 
 SUBSYSTEMS: tuple[tuple[str, int, tuple[Role, ...]], ...] = (
     # Pressure bridges at the river bed: small signals, so high gains and fine resistors.
@@ -171,6 +186,66 @@ SUBSYSTEMS: tuple[tuple[str, int, tuple[Role, ...]], ...] = (
              sources=(2e3, 1e4), loads=(0, 620)),
         Role("-trim", ("non_inverting",), (1.1, 1.2, 1.5), (1e4, 1e5), (4, 200), USUAL, loads=(0, 2e3)),
     )),
+    # Gauges on piles and sluices. Behind several op-amps few resistors are free: the others are trimmed networks.
+    ("strain", 2, (
+        Role(" instrumentation", ("instrumentation_3",), (50, 100, 200), (5e3, 2e4), (200, 5000), MATCHED,
+             loads=(0, 1e4), toleranced=("r_gain", "r1", "r2")),
+        Role(" low-pass", ("low_pass_2",), (1.5, 2, 2.5), (1e4, 5e4), (8, 300), USUAL, loads=(0, 2e3),
+             reactive={"c1": MICROFARADS, "c2": MICROFARADS}),
+    )),
+    ("seepage", 2, (
+        Role(" instrumentation", ("instrumentation_2",), (5, 10, 20, 50), (1e4, 5e4), (60, 2000), MATCHED,
+             loads=(0, 1e4), toleranced=("r1", "r2", "r3", "r4")),
+        Role(" pore pressure", ("difference_filtered",), (10, 20, 50), (1e3, 1e4), (40, 1500), FINE,
+             reactive={"c1": NANOFARADS, "c2": NANOFARADS}),
+    )),
+    # Outputs to the control room, 4 mA to 20 mA. The sources into grounded loads are balanced.
+    ("loop", 2, (
+        Role(" current output", ("current_pump_improved",), (2e-3, 4e-3, 5e-3), (1e4, 5e4), (40, 900), MATCHED,
+             loads=(51, 100, 250)),
+        Role(" test current", ("current_pump",), (1e-4, 2e-4, 5e-4), (1e4, 5e4), (2, 60), MATCHED,
+             loads=(51, 100, 150)),
+        Role(" display current", ("voltage_to_current",), (1e-3, 2e-3, 5e-3), (0, 0), (10, 300), USUAL,
+             loads=(100, 250, 499)),
+    )),
+    # Search coils beside the electrodes, and what drives the field.
+    ("flow", 2, (
+        Role(" coil current", ("current_amplifier",), (5, 10, 20), (5e1, 2e2), (20, 800), USUAL,
+             sources=(0, 1e5, 1e6), loads=(51, 100)),
+        Role(" coil", ("inverting_coil",), (10, 20, 50), (3e2, 2e3), (50, 2000), COARSE, loads=(0, 1e4),
+             reactive={"l1": ("0.047", "0.15", "0.33"), "c1": ("", "1n", "2n2")}),
+    )),
+    ("wave", 2, (
+        Role(" low-pass", ("low_pass_2_inverting",), (1, 2, 5), (5e3, 5e4), (8, 300), USUAL, loads=(0, 1e4),
+             reactive={"c1": MICROFARADS, "c2": NANOFARADS}),
+        Role(" mean", ("integrator",), (1, 2, 4, 10), (1e4, 1e5), (10, 300), USUAL, reactive={"c1": MICROFARADS}),
+        Role(" phase", ("all_pass",), (1,), (1e4, 5e4), (6, 200), COARSE, loads=(0, 2e3),
+             reactive={"c1": NANOFARADS}),
+    )),
+    ("sediment", 2, (
+        Role(" light detector", ("transimpedance_filtered",), (1e6, 2.2e6, 1e7), (0, 0), (5, 300), TRIMMED,
+             sources=(0, 1e8, 1e7), reactive={"c_source": ("", *PICOFARADS), "c1": PICOFARADS}),
+        Role(" faint light detector", ("transimpedance_t",), (1e7, 2e7, 5e7), (5e5, 2e6), (60, 3000), USUAL,
+             sources=(0, 1e8)),
+    )),
+    # A listening post under water: it hears the gravel move.
+    ("bedload", 2, (
+        Role(" preamplifier", ("non_inverting_filtered",), (10, 20, 50), (1e3, 1e4), (40, 1500), USUAL,
+             sources=(0, 1e4, 1e5), reactive={"c1": PICOFARADS}),
+        Role("-gain", ("non_inverting_t",), (20, 50, 100), (1e4, 5e4), (60, 2000), USUAL, loads=(0, 1e4)),
+        Role(" filter gain", ("inverting_bridged_t",), (10, 20, 50), (1e4, 1e5), (40, 1500), USUAL),
+    )),
+    ("siren", 2, (
+        Role(" cable driver", ("follower_isolated",), (1,), (2e3, 1e4), (10, 600), COARSE,
+             sources=(0, 1e3), loads=(150, 330, 620), reactive={"c1": ("", *PICOFARADS), "c_load": ("", *NANOFARADS)}),
+        Role(" tone sum", SUM_NOT_INVERTED, (1, 2), (1e4, 1e5), (10, 300), USUAL, loads=(0, 1e4)),
+    )),
+    ("reference", 2, (
+        Role(" amplifier", ("composite",), (2, 4, 5, 10), (1e3, 1e4), (10, 300), MATCHED,
+             sources=(0, 1e3), loads=(0, 150, 620), toleranced=("r1", "r2")),
+        Role(" range", ("cascade_inverting",), (100, 200, 400), (2e3, 1e4), (60, 2000), MATCHED,
+             loads=(0, 1e4), toleranced=("r1", "r2", "r3", "r4")),
+    )),
 )  # fmt: skip
 
 HOPELESS = 0.06
@@ -214,8 +289,11 @@ def _circuit(rng: Random, name: str, role: Role) -> list[dict[str, str]]:
     elements = _elements(rng, role, wanted)
     tolerance = _pick(rng, role.tolerances)
     own = _own_tolerances(rng, role, elements, tolerance)
+    if role.toleranced:
+        tolerance, own = "", dict.fromkeys(role.toleranced, tolerance)
     in_codes = rng.random() < 0.7
     written = {element: _ohm(rng, value, in_codes) for element, value in elements.items()}
+    written |= {element: _pick(rng, values) for element, values in role.reactive.items()}
     rows = []
     for topology in role.topologies:
         suffix = f" {topology.rpartition('_')[2]}" if len(role.topologies) > 1 else ""
@@ -235,6 +313,8 @@ def _elements(rng: Random, role: Role, gain: float) -> dict[str, float]:
     source, load, shunt = (_pick(rng, values) for values in (role.sources, role.loads, role.shunts))
     scatter = rng.random(), rng.random()
     match role.topologies[0]:
+        case topology if topology in DESIGNS:
+            elements = {"r_source": source} | DESIGNS[topology](gain, base)
         case "follower":
             elements = {"r_source": source, "r2": source if source and scatter[0] < 0.4 else 0.0}
         case "inverting":
@@ -321,8 +401,12 @@ def _inverting(r: Mapping[str, float]) -> float:
     return -r["r2"] / (r.get("r_source", 0) + r["r1"])
 
 
+def _tee(r: Mapping[str, float]) -> float:
+    return r["r2"] + r["r4"] + r["r2"] * r["r4"] / r["r3"]
+
+
 def _inverting_t(r: Mapping[str, float]) -> float:
-    return -(r["r2"] + r["r4"] + r["r2"] * r["r4"] / r["r3"]) / r["r1"]
+    return -_tee(r) / r["r1"]
 
 
 def _non_inverting(r: Mapping[str, float]) -> float:
@@ -334,6 +418,29 @@ def _difference(r: Mapping[str, float]) -> float:
     down = r["r2"] / (r.get("r_source_n", 0) + r["r1"])
     up = r["r4"] / (r.get("r_source_p", 0) + r["r3"] + r["r4"]) * (1 + down)
     return (up + down) / 2
+
+
+def _current_pump(r: Mapping[str, float]) -> float:
+    unbalance = 1 / r["r1"] - r["r4"] / r["r3"] / r["r2"]
+    return 1 / r["r1"] / (1 + r["r_load"] * unbalance)
+
+
+def _current_pump_improved(r: Mapping[str, float]) -> float:
+    from_plus = (1 + r["r4"] / r["r3"]) / r["r5"] + 1 / r["r2"]
+    input_share = r["r2"] / (r["r1"] + r["r2"])
+    unbalance = 1 / r["r5"] + 1 / r["r2"] - (1 - input_share) * from_plus
+    return input_share * from_plus / (1 + r["r_load"] * unbalance)
+
+
+def _instrumentation_2(r: Mapping[str, float]) -> float:
+    mid = -0.5 - r["r2"] * (0.5 / r["r1"] + 1 / r["r_gain"])
+    return 0.5 + r["r4"] * ((0.5 - mid) / r["r3"] + 1 / r["r_gain"])
+
+
+def _instrumentation_3(r: Mapping[str, float]) -> float:
+    mid1, mid2 = -0.5 - r["r1"] / r["r_gain"], 0.5 + r["r2"] / r["r_gain"]
+    down = r["r4"] / r["r3"]
+    return mid2 * r["r6"] / (r["r5"] + r["r6"]) * (1 + down) - mid1 * down
 
 
 def _summing(element: str) -> Callable[[Mapping[str, float]], float]:
@@ -349,7 +456,77 @@ IDEAL_GAINS: dict[str, Callable[[Mapping[str, float]], float]] = {
     "difference": _difference,
     "transimpedance": lambda r: -r["r2"],
     **{name: _summing(f"r{name[-1]}") for name in (*SUM_OF_TWO, *SUM_OF_THREE)},
+    "all_pass": lambda _: 1.0,
+    "cascade_inverting": lambda r: r["r2"] / r["r1"] * r["r4"] / r["r3"],
+    "composite": _non_inverting,
+    "current_amplifier": lambda r: 1 + r["r1"] / r["r2"],
+    "current_pump": _current_pump,
+    "current_pump_improved": _current_pump_improved,
+    "difference_filtered": _difference,
+    "follower_isolated": lambda _: 1.0,
+    "instrumentation_2": _instrumentation_2,
+    "instrumentation_3": _instrumentation_3,
+    "integrator": _inverting,
+    "inverting_bridged_t": lambda r: -1 / (1 / r["r5"] + 1 / _tee(r)) / r["r1"],
+    "inverting_coil": _inverting,
+    "low_pass_2": lambda r: 1 + r["r4"] / r["r3"],
+    "low_pass_2_inverting": _inverting,
+    "non_inverting_filtered": _non_inverting,
+    "non_inverting_t": lambda r: 1 + (_tee(r) + r["r1"] * r["r4"] / r["r3"]) / r["r1"],
+    "summing_non_inverting_in1": lambda r: (1 + r["r4"] / r["r3"]) * r["r2"] / (r["r1"] + r["r2"]),
+    "summing_non_inverting_in2": lambda r: (1 + r["r4"] / r["r3"]) * r["r1"] / (r["r1"] + r["r2"]),
+    "transimpedance_filtered": lambda r: -r["r2"],
+    "transimpedance_t": lambda r: -_tee(r),
+    "voltage_to_current": lambda r: 1 / r["r1"],
 }
+
+DESIGNS: dict[str, Callable[[float, float], dict[str, float]]] = {
+    "all_pass": lambda _, base: {"r1": base, "r2": base, "r3": base / 2},
+    "cascade_inverting": lambda gain, base: {
+        **{"r1": base, "r2": math.sqrt(gain) * base, "r_mid": 2 * base},
+        **{"r3": base, "r4": math.sqrt(gain) * base},
+    },
+    "composite": lambda gain, base: {"r1": base, "r2": (gain - 1) * base, "r3": base, "r4": base},
+    "current_amplifier": lambda gain, base: {"r1": (gain - 1) * base, "r2": base},
+    "current_pump": lambda gain, base: {"r1": 1 / gain, "r2": 1 / gain, "r3": base, "r4": base},
+    # Balanced where r4/r3 is (r2 + r5)/r1.
+    "current_pump_improved": lambda gain, base: {
+        **{"r1": base, "r2": base - 1 / gain, "r3": base, "r4": base},
+        "r5": 1 / gain,
+    },
+    "difference_filtered": lambda gain, base: {"r1": base, "r2": gain * base, "r3": base, "r4": gain * base},
+    "follower_isolated": lambda _, base: {"r_iso": base / 100, "r2": base},
+    "instrumentation_2": lambda gain, base: {
+        **{"r1": base, "r2": base, "r3": base, "r4": base},
+        "r_gain": 2 * base / (gain - 2),
+    },
+    "instrumentation_3": lambda gain, base: {
+        **{"r_gain": 2 * base / (gain - 1), "r1": base, "r2": base},
+        **{"r3": base, "r4": base, "r5": base, "r6": base},
+    },
+    "integrator": lambda gain, base: {"r1": base, "r2": gain * base},
+    # A quarter of the feedback current flows through r5.
+    "inverting_bridged_t": lambda gain, base: {
+        **{"r1": base, "r2": base, "r3": base * 0.1 / (gain * 4 / 3 - 1.1), "r4": base / 10},
+        "r5": 4 * gain * base,
+    },
+    "inverting_coil": lambda gain, base: {"r1": base, "r2": gain * base},
+    "low_pass_2": lambda gain, base: {"r1": base, "r2": base, "r3": base, "r4": (gain - 1) * base},
+    "low_pass_2_inverting": lambda gain, base: {"r1": base, "r2": gain * base, "r3": base / 2},
+    "non_inverting_filtered": lambda gain, base: {"r1": base, "r2": (gain - 1) * base},
+    "non_inverting_t": lambda gain, base: {
+        **{"r1": base, "r2": 2 * base, "r3": base * 0.6 / (gain - 3.2), "r4": base / 5},
+    },
+    "summing_non_inverting_in1": lambda gain, base: {
+        **{"r1": base, "r2": base, "r3": base, "r4": (2 * gain - 1) * base},
+    },
+    "transimpedance_filtered": lambda gain, _: {"r2": gain},
+    "transimpedance_t": lambda gain, base: {
+        **{"r2": base, "r3": base * 0.01 / (gain / base - 1.01), "r4": base / 100},
+    },
+    "voltage_to_current": lambda gain, _: {"r1": 1 / gain},
+}
+"""Elements that give the wanted gain, before they become preferred values, from the gain and the base."""
 
 # ----------------------------------------------------------------------------------------------- parts
 

@@ -4,7 +4,7 @@
 
 Prints, from one run on one machine, for each topology: elements, amplifiers, terms of numerator and denominator of
 the gain; milliseconds for the determinants, for the gain's formula with its proof, for all formulas, and for reading
-them back from the cache; and the length of the gain's formula in quantities and numbers. Import of sympy is timed apart.
+them back from the cache; and the length of the gain's formula. Import of sympy is timed apart.
 """
 
 from __future__ import annotations

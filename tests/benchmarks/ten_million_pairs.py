@@ -111,7 +111,7 @@ def main() -> None:
         alone = {}
         for workers in sorted({1, service.usable_cores()}):
             start = perf_counter()
-            blocks.run(groups, lambda place, screened: None, workers)
+            blocks.run(groups, service.rules_of(prepared.job), lambda place, screened: None, workers)
             alone[workers] = perf_counter() - start
         nodal, matrices = nodal_seconds(prepared, groups)
     print(f"pairs                                {pairs:,}")

@@ -12,21 +12,23 @@ from gainassay.forms.form import derive
 from gainassay.forms.library import library
 from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
 from gainassay.screen.kernel import screen
-from gainassay.screen.verdicts import LEANINGS, VERDICTS, judge
+from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules, judge
 
+PLAIN = Rules()
 FORM = derive(library()["inverting"])
 
 
-def judged(evidence: tuple[int, int, int], limit: float, a_ol: float = 1e5) -> tuple[str, str, str, float]:
+def judged(evidence: tuple[int, int, int], limit: float, rules: Rules = PLAIN) -> tuple[str, str, str, float, str]:
     values = np.array([[0.0], [1e4], [1e5], [np.inf]])
     stages = stage_side(FORM, StageBox(values, np.zeros_like(values), np.array([limit]), np.array([np.nan])))
-    limits = np.array([[1.0 / a_ol], [1e-7], [50.0]])
+    limits = np.array([[1e-5], [1e-7], [50.0]])
     parts = part_side(FORM, limits, limits, np.array(evidence, np.uint8)[:, None])
     outcome = screen(stages, parts, active_sets(FORM))
-    judgement = judge(stages, parts, outcome)
+    judgement = judge(stages, parts, outcome, rules)
     leaning = LEANINGS[int(judgement.leaning[0, 0])]
     used = float(judgement.limit_used[0, 0])
-    return VERDICTS[int(judgement.verdict[0, 0])], leaning.evidence, leaning.leans_on, used
+    reason = REASONS[int(judgement.reason[0, 0])]
+    return VERDICTS[int(judgement.verdict[0, 0])], leaning.evidence, leaning.leans_on, used, reason
 
 
 @pytest.mark.parametrize(
@@ -51,6 +53,29 @@ def test_an_error_equal_to_the_limit_is_inside() -> None:
     assert judged((0, 0, 0), np.nextafter(used, 0.0))[0] == "fail"
 
 
+USED = judged((0, 0, 0), 1.0)[3]
+"""Worst error of the stage under test, as a fraction."""
+
+
+@pytest.mark.parametrize(
+    ("evidence", "limit", "rules", "verdict", "reason"),
+    [
+        (GUARANTEED, USED / 0.79, Rules(guard_band=0.2), "pass", "inside the limit"),
+        (GUARANTEED, USED / 0.81, Rules(guard_band=0.2), "fail", "inside the limit, but in its guard band"),
+        (GUARANTEED, USED / 1.01, Rules(guard_band=0.2), "fail", "outside the limit"),
+        (TYPICAL, USED / 0.79, Rules(guard_band=0.2), "unproven", "inside the limit, but leans on a_ol typical"),
+        (TYPICAL, USED / 0.79, Rules(0.2, TYPICAL), "pass", "inside the limit"),
+        (TYPICAL, USED / 0.81, Rules(0.2, TYPICAL), "fail", "inside the limit, but in its guard band"),
+        (ASSUMED, USED / 0.79, Rules(0.2, TYPICAL), "unproven", "inside the limit, but leans on a_ol assumed"),
+        (MISSING, USED / 0.79, Rules(0.2, TYPICAL), "unproven", "inside the limit, but leans on a_ol missing"),
+        (MISSING, USED / 1.01, Rules(0.2, TYPICAL), "fail", "outside the limit"),
+    ],
+)
+def test_guard_band_and_basis(evidence: int, limit: float, rules: Rules, verdict: str, reason: str) -> None:
+    found = judged((evidence, GUARANTEED, GUARANTEED), limit, rules)
+    assert (found[0], found[4]) == (verdict, reason)
+
+
 def test_what_does_not_matter_to_a_stage_is_not_leaned_on() -> None:
     values = np.array([[0.0], [1e4], [1e5], [np.inf]])
     stages = stage_side(FORM, StageBox(values, np.zeros_like(values), np.array([1e-2]), np.array([np.nan])))
@@ -59,8 +84,8 @@ def test_what_does_not_matter_to_a_stage_is_not_leaned_on() -> None:
     outcome = screen(stages, parts, active_sets(FORM))
     without = replace(stages, matters=np.array([[True], [False], [True]]))
     assert stages.matters.all()
-    assert VERDICTS[int(judge(stages, parts, outcome).verdict[0, 0])] == "unproven"
-    assert VERDICTS[int(judge(without, parts, outcome).verdict[0, 0])] == "pass"
+    assert VERDICTS[int(judge(stages, parts, outcome, Rules()).verdict[0, 0])] == "unproven"
+    assert VERDICTS[int(judge(without, parts, outcome, Rules()).verdict[0, 0])] == "pass"
 
 
 def test_every_leaning_has_its_weakest_evidence() -> None:

@@ -23,7 +23,7 @@ def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
     groups = service.groups_of(prepared.stages, prepared.parts)
-    found = explanation.explain(prepared.stages, prepared.parts, groups, stage, part)
+    found = explanation.explain(prepared.stages, prepared.parts, groups, service.rules_of(prepared.job), stage, part)
     if as_json:
         shared.data({**asdict(found), "cautions": CAUTIONS})
     else:

@@ -16,7 +16,7 @@ def text(found: Explanation) -> list[str]:
     """The explanation, a section for each question."""
     unit = found.gain_unit
     return [
-        f"{found.stage} with {found.part}: {found.verdict}",
+        f"{found.stage} with {found.part}: {found.verdict}, {found.reason}",
         f"{found.topology}: {found.summary}",
         "",
         *table(
@@ -24,7 +24,7 @@ def text(found: Explanation) -> list[str]:
             [
                 ["ideal gain", f"{found.gain_ideal:.9g} {unit}", ""],
                 ["target gain", f"{found.target_gain:.9g} {unit}", ""],
-                ["nominal gain", _gain(found.gain_nominal, unit), f"{ppm(found.error_nominal_ppm)} ppm"],
+                ["nominal gain", _gain(found.gain_nominal, unit), _nominal(found.error_nominal_ppm, " ppm")],
                 ["worst case", _gain(found.gain_worst, unit), _error(found.error_worst_ppm)],
                 ["limit", "", f"{found.limit_ppm:.6g} ppm"],
                 ["limit used", "", "-" if math.isnan(found.limit_used) else f"{found.limit_used:.4g}"],
@@ -82,6 +82,11 @@ def _gain(value: float, unit: str) -> str:
     return "-" if math.isnan(value) else f"{value:.9g} {unit}"
 
 
+def _nominal(value: float, unit: str = "") -> str:
+    """A nominal error; a dash where there is none."""
+    return "-" if math.isnan(value) else f"{ppm(value)}{unit}"
+
+
 def _error(value: float) -> str:
     return ppm(value) if math.isnan(value) else f"{ppm(value)} ppm"
 
@@ -91,13 +96,13 @@ def _terms(found: Explanation) -> list[str]:
     rows = [
         [
             f"  {t.name}",
-            ppm(t.nominal_ppm),
+            _nominal(t.nominal_ppm),
             "-" if math.isnan(t.worst_ppm) else ppm(t.worst_ppm),
             _bar(t.worst_ppm, longest),
         ]
         for t in found.terms
     ]
-    rows.append(["  sum", ppm(found.error_nominal_ppm), ppm(found.error_worst_ppm), ""])
+    rows.append(["  sum", _nominal(found.error_nominal_ppm), ppm(found.error_worst_ppm), ""])
     return table(["  term", "nominal", "worst case", ""], rows, right=[1, 2])
 
 

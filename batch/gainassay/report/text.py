@@ -50,6 +50,8 @@ def quantity(value: float, unit: str) -> str:
     """
     if math.isnan(value):
         return "-"
+    if math.isinf(value):
+        return "infinite"
     if unit not in ELEMENT_UNITS.values() or value == 0.0:
         return f"{value:.6g} {unit}"
     power = min(max(3 * math.floor(math.log10(abs(value)) / 3), min(PREFIXES)), max(PREFIXES))

@@ -14,7 +14,7 @@ from gainassay.contracts import tables
 from gainassay.screen.blocks import Screened
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account
-from gainassay.screen.verdicts import LEANINGS, VERDICTS
+from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
 from gainassay.tables.rejects import Reject
 
 PPM = 1e6
@@ -23,7 +23,8 @@ FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 """A spreadsheet takes a cell that starts with one of these for a formula."""
 
 REPEATED = (
-    "stage", "part", "topology", "verdict", "evidence", "leans_on", "gain_ideal", "limit_ppm", "dominant_term",
+    "stage", "part", "topology", "verdict", "reason", "evidence", "leans_on",
+    "gain_ideal", "limit_ppm", "dominant_term",
 )  # fmt: skip
 """Columns of the verdict table with few different values, which are stored as a dictionary."""
 
@@ -51,7 +52,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         return pa.array(values, mask=~np.isfinite(values))
 
     def words(codes: NDArray[np.integer], meanings: Sequence[str]) -> pa.Array:
-        return pa.DictionaryArray.from_arrays(pa.array(codes.astype(np.int32)), pa.array(meanings, pa.string()))
+        places = pa.array(codes.astype(np.int32), mask=codes < 0)
+        return pa.DictionaryArray.from_arrays(places, pa.array(meanings, pa.string()))
 
     evidences = list(dict.fromkeys(leaning.evidence for leaning in LEANINGS))
     evidence_of = np.array([evidences.index(leaning.evidence) for leaning in LEANINGS])
@@ -60,6 +62,7 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         "part": words(part, screened.group.part_names[screened.chunk.parts].tolist()),
         "topology": words(np.zeros(len(kept), np.int32), [screened.group.form.topology]),
         "verdict": words(verdict[kept], VERDICTS),
+        "reason": words(screened.judgement.reason.ravel()[kept], REASONS),
         "evidence": words(evidence_of[leaning], evidences),
         "leans_on": words(leaning, [leaning.leans_on for leaning in LEANINGS]),
         "gain_ideal": number(sides.gain_ideal[stage]),

@@ -27,13 +27,16 @@ from gainassay.screen.corners import (
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
 from gainassay.screen.signs import Reach, reach
-from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, judge
+from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
 
 Written = TypeVar("Written")
 
 PAIRS_PER_CHUNK = 1_000_000
 """Pairs in a chunk at most, and so rows of a verdict file at most. Part of the output format: do not tune it."""
 
+
+NO_TERM = -1
+"""Stands for the dominant term where no term differs from 0."""
 
 RANK = {PASS: 0, UNPROVEN: 1, FAIL: 2}
 """Which verdict makes a better part for a stage."""
@@ -150,13 +153,16 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
     return tuple(found)
 
 
-def screen_chunk(groups: Sequence[Group], chunk: Chunk, block: int = PAIRS_PER_BLOCK) -> Screened:
+def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK) -> Screened:
     """Screen one chunk."""
     one = groups[chunk.group]
     stages = stage_side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
     outcome = screen(stages, parts, one.active_sets, block)
-    return Screened(chunk, one, stages, parts, outcome, judge(stages, parts, outcome))
+    judgement = judge(stages, parts, outcome, rules)
+    # No term decides where all are 0, as with a part of which nothing is known.
+    outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
+    return Screened(chunk, one, stages, parts, outcome, judgement)
 
 
 def tally(screened: Screened) -> Tally:
@@ -174,7 +180,10 @@ def tally(screened: Screened) -> Tally:
         chunk=screened.chunk,
         by_stage=is_verdict.sum(axis=2).T,
         by_part=is_verdict.sum(axis=1).T,
-        dominant=np.bincount(screened.outcome.dominant.ravel(), minlength=len(term_names(screened.group.form))),
+        # NO_TERM is -1, counted in the first place and left out.
+        dominant=np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(term_names(screened.group.form)) + 1)[
+            1:
+        ],
         best_part=np.where(found, best + screened.chunk.parts.start, -1),
         best_rank=best_rank,
         best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),
@@ -186,6 +195,7 @@ def tally(screened: Screened) -> Tally:
 
 def run(
     groups: Sequence[Group],
+    rules: Rules,
     keep: Callable[[int, Screened], Written],
     workers: int,
     block: int = PAIRS_PER_BLOCK,
@@ -195,6 +205,8 @@ def run(
 
     Parameters
     ----------
+    rules : Rules
+        The decision rule.
     keep : callable
         Called in the task with the chunk's place and the screened chunk; writes it down.
     workers : int
@@ -213,7 +225,7 @@ def run(
     planned = chunks(groups)
 
     def task(place: int) -> tuple[Written, Tally]:
-        screened = screen_chunk(groups, planned[place], block)
+        screened = screen_chunk(groups, planned[place], rules, block)
         return keep(place, screened), tally(screened)
 
     def done(key: object, result: object, *_: object) -> None:

@@ -63,7 +63,8 @@ class Plan:
     stages : ndarray of int
         Their places.
     corners : tuple[tuple[int, int], ...]
-        Each a corner of the stage, counted from the stage's first, and the place of a set in `active_sets`.
+        Each a corner of the stage, counted from the stage's first, and the place of a set in `active_sets`; none
+        for stages that are not regular.
     """
 
     stages: NDArray[np.intp]
@@ -186,6 +187,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             & np.isfinite(corner_error)
             & (at_corners.loadings[list(form.loops())] >= 0.0).all(axis=0)
         )
+        regular = np.logical_and.reduceat(is_regular, visited.first)
         return StageSide(
             gain_ideal=nominal.gain_ideal,
             reference=reference,
@@ -199,8 +201,8 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             corner_loadings=at_corners.loadings,
             corner_error=corner_error,
             corner_terms=terms,
-            plans=visited.plans,
-            regular=np.logical_and.reduceat(is_regular, visited.first),
+            plans=_with_a_bound(visited.plans, regular),
+            regular=regular,
             matters=_matters(form, box.values, tolerances, at_corners, visited.first),
         )
 
@@ -250,6 +252,12 @@ def _visited(form: Form, values: FloatArray, tolerances: FloatArray, reached: Re
         first,
         tuple(Plan(np.sort(np.concatenate(members)), corners) for corners, members in plans.items()),
     )
+
+
+def _with_a_bound(plans: tuple[Plan, ...], regular: NDArray[np.bool_]) -> tuple[Plan, ...]:
+    """The plans of regular stages, and one without corners for the others: no part gives these a bound."""
+    kept = [Plan(plan.stages[regular[plan.stages]], plan.corners) for plan in plans]
+    return tuple(plan for plan in (*kept, Plan(np.flatnonzero(~regular), ())) if len(plan.stages))
 
 
 def _everywhere(form: Form, tolerances: FloatArray) -> NDArray[np.int8]:

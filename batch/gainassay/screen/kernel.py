@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
-from gainassay.screen.corners import PartSide, StageSide
+from gainassay.screen.corners import PartSide, Plan, StageSide
 
 PAIRS_PER_BLOCK = 65_536
 """Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
@@ -71,16 +71,43 @@ def screen(
         np.empty(shape, np.int16),
         np.empty(shape),
     )
-    width = max(1, min(shape[1], block))
-    height = max(1, block // width)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan in stages.plans:
-            for top in range(0, len(plan.stages), height):
-                rows = plan.stages[top : top + height]
-                for left in range(0, shape[1], width):
-                    columns = slice(left, min(left + width, shape[1]))
-                    _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
+        for plan, rows, columns in _blocks(stages, shape[1], block):
+            _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
     return outcome
+
+
+def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BLOCK) -> FloatArray:
+    """The `error_nominal` of `screen` alone."""
+    found = np.empty((len(stages.limits), parts.worst.shape[1]))
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        for _, rows, columns in _blocks(stages, found.shape[1], block):
+            found[rows, columns] = _nominal(stages, parts, rows, columns)
+    return found
+
+
+def worst_errors(
+    stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], block: int = PAIRS_PER_BLOCK
+) -> tuple[FloatArray, NDArray[np.int32]]:
+    """The `error_worst` and the `corner` of `screen` alone; where the corner is `UNBOUNDED` the error is nan."""
+    found = np.empty((len(stages.limits), parts.worst.shape[1]))
+    corner = np.empty(found.shape, np.int32)
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        for plan, rows, columns in _blocks(stages, found.shape[1], block):
+            found[rows, columns], corner[rows, columns] = _worst(
+                stages, parts, active_sets, plan.corners, rows, columns
+            )
+    return found, corner
+
+
+def _blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
+    """Blocks of pairs whose stages visit the same corners."""
+    width = max(1, min(parts, block))
+    height = max(1, block // width)
+    for plan in stages.plans:
+        for top in range(0, len(plan.stages), height):
+            for left in range(0, parts, width):
+                yield plan, plan.stages[top : top + height], slice(left, min(left + width, parts))
 
 
 def _screen_block(
@@ -97,10 +124,8 @@ def _screen_block(
     dominant, value = _dominant(stages, parts, active_sets, corners, rows, columns, corner)
     unbounded = corner == UNBOUNDED
     if unbounded.any():
-        undoing = _undoing(stages, parts, rows, columns)
-        dominant = np.where(unbounded, undoing, dominant)
+        dominant = np.where(unbounded, _undoing(stages, parts, rows, columns), dominant)
         value[unbounded] = np.nan
-        worst[unbounded] = np.nan
     outcome.error_worst[rows, columns] = worst
     outcome.corner[rows, columns] = corner
     outcome.dominant[rows, columns] = dominant
@@ -141,11 +166,13 @@ def _worst(
     """The error of largest magnitude over the corners, and the first corner that gives it."""
     products = parts.worst[:, columns]
     shape = (len(rows), products.shape[1])
+    if not corners:
+        return np.full(shape, np.nan), np.full(shape, UNBOUNDED, np.int32)
     worst, magnitude = np.empty(shape), np.empty(shape)
     corner = np.empty(shape, np.int32)
     numerator, denominator, scratch = np.empty(shape), np.empty(shape), np.empty(shape)
     larger = np.empty(shape, dtype=bool)
-    bounded = np.repeat(stages.regular[rows, None], shape[1], axis=1)
+    bounded: NDArray[np.bool_] | None = None  # where it matters
 
     for place, (j, q) in enumerate(corners):
         active = list(active_sets[q])
@@ -158,7 +185,7 @@ def _worst(
             _add_products(contrasts, loadings, products[active], numerator, denominator)
             # 1 + sum d m stays positive by itself where no loading is negative.
             if (loadings < 0.0).any():
-                bounded &= denominator > 0.0
+                bounded = denominator > 0.0 if bounded is None else bounded & (denominator > 0.0)
             numerator /= denominator
             numerator *= 1.0 + e
             numerator += e
@@ -172,7 +199,12 @@ def _worst(
             np.copyto(corner, code, where=larger)
         else:
             magnitude[:], worst[:], corner[:] = size, error, code
-    corner[~bounded | ~np.isfinite(magnitude)] = UNBOUNDED
+    unbounded = ~np.isfinite(magnitude)
+    if bounded is not None:
+        unbounded |= ~bounded
+    if unbounded.any():
+        worst[unbounded] = np.nan
+        corner[unbounded] = UNBOUNDED
     return worst, corner
 
 

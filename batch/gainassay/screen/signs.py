@@ -196,6 +196,8 @@ def _directions(reached: Reach, values: FloatArray, tolerances: FloatArray) -> D
         of = np.empty((len(reached.signs), values.shape[1]), np.int8)
         of[:] = reached.signs[:, None]
         for place, polynomial in reached.slopes:
+            if not (tolerances[place].any() if place < count else reached.moved[place - count]):
+                continue  # it has one value anyway
             least, most = bounds(polynomial, low, high)
             of[place] = np.where(least >= 0.0, RISES, np.where(most <= 0.0, FALLS, OPEN))
         # A resistance moves the gain against its admittance.

@@ -1,14 +1,18 @@
 """From errors to verdicts: one written rule, and the evidence it rests on.
 
-| |error_worst| against the limit | evidence | verdict |
-|---|---|---|
-| no finite bound | any | fail |
-| above | any | fail |
-| at or below | guaranteed | pass |
-| at or below | typical, assumed or missing | unproven |
+With L the required accuracy and g the guard band (JCGM 106: the acceptance limit lies inside the tolerance limit),
 
-A number that is missing is left out of the account, as 0. Its true value could only widen the box, so that
-`fail` stands, and whatever is inside the limit is `unproven`.
+| |error_worst| | evidence | verdict | reason |
+|---|---|---|---|
+| no finite bound | any | fail | no finite bound |
+| above L | any | fail | outside the limit |
+| above L (1 - g), up to L | any | fail | inside the limit, but in its guard band |
+| up to L (1 - g) | as strong as the basis asks | pass | inside the limit |
+| up to L (1 - g) | weaker | unproven | inside the limit, but leans on ... |
+
+The basis is `guaranteed` or `typical`; what is assumed or missing never proves a pass. A number that is missing
+is left out of the account, as 0. Its true value could only widen the box, so that `fail` stands, and whatever
+is inside the limit is `unproven`.
 """
 
 from __future__ import annotations
@@ -27,8 +31,33 @@ from gainassay.screen.kernel import Outcome
 VERDICTS = ("pass", "fail", "unproven")
 PASS, FAIL, UNPROVEN = range(3)
 
+UNBOUNDED_REASON, OUTSIDE, GUARD_BAND, INSIDE, LEANING = range(5)
+_REASONS = (
+    "no finite bound",
+    "outside the limit",
+    "inside the limit, but in its guard band",
+    "inside the limit",
+    "inside the limit, but leans on",
+)
+
 BITS = 2
 """Bits that hold the evidence for one departure in a leaning."""
+
+
+@dataclass(frozen=True)
+class Rules:
+    """The decision rule of a job.
+
+    Attributes
+    ----------
+    guard_band : float
+        Share of the required accuracy that a pass keeps free.
+    basis : int
+        Place, in `EVIDENCE`, of the weakest evidence that a pass may rest on.
+    """
+
+    guard_band: float = 0.0
+    basis: int = 0
 
 
 @dataclass(frozen=True)
@@ -39,13 +68,16 @@ class Judgement:
     ----------
     verdict : ndarray of uint8
         Place in `VERDICTS`.
+    reason : ndarray of int
+        Place in `REASONS` of the verdict's reason in words.
     leaning : ndarray of int
         The evidence for each departure that matters to the stage, packed; `LEANINGS` says what it means.
     limit_used : ndarray
-        |error_worst| / limit; nan where there is no finite bound.
+        |error_worst| / required accuracy, the guard band not taken off; nan where there is no finite bound.
     """
 
     verdict: NDArray[np.uint8]
+    reason: NDArray[np.int32]
     leaning: NDArray[np.int16]
     limit_used: FloatArray
 
@@ -59,7 +91,7 @@ class Leaning:
 
 
 def _leaning(code: int) -> Leaning:
-    codes = [code >> BITS * index & (1 << BITS) - 1 for index in range(len(DEPARTURES))]
+    codes = [(code >> BITS * index) & ((1 << BITS) - 1) for index in range(len(DEPARTURES))]
     weak = [f"{d.quantity} {EVIDENCE[c]}" for d, c in zip(DEPARTURES, codes, strict=True) if c]
     return Leaning(EVIDENCE[max(codes)], ", ".join(weak))
 
@@ -67,11 +99,18 @@ def _leaning(code: int) -> Leaning:
 LEANINGS = tuple(_leaning(code) for code in range(1 << BITS * len(DEPARTURES)))
 """Meaning of every packed leaning."""
 
-_IS_GUARANTEED = np.array([leaning.evidence == EVIDENCE[0] for leaning in LEANINGS])
+REASONS = tuple(
+    f"{words} {leaning.leans_on}" if place == LEANING else words
+    for place, words in enumerate(_REASONS)
+    for leaning in LEANINGS
+)
+"""Reason in words, for each kind of reason and, within it, each packed leaning."""
+
+_WEAKEST = np.array([EVIDENCE.index(leaning.evidence) for leaning in LEANINGS])
 
 
-def judge(stages: StageSide, parts: PartSide, outcome: Outcome) -> Judgement:
-    """Verdict, evidence and share of the limit used, for each pair."""
+def judge(stages: StageSide, parts: PartSide, outcome: Outcome, rules: Rules) -> Judgement:
+    """Verdict, reason, evidence and share of the limit used, for each pair."""
     weights = 1 << BITS * np.arange(len(DEPARTURES))
     of_part = (parts.evidence.astype(np.int16) * weights[:, None].astype(np.int16)).sum(axis=0, dtype=np.int16)
     seen = (stages.matters * (weights * ((1 << BITS) - 1))[:, None]).sum(axis=0).astype(np.int16)
@@ -79,6 +118,10 @@ def judge(stages: StageSide, parts: PartSide, outcome: Outcome) -> Judgement:
     limits = stages.limits[:, None]
     magnitude = np.abs(outcome.error_worst)
     # nan, where there is no finite bound, compares as outside.
-    inside = magnitude <= limits
-    verdict = np.where(inside, np.where(_IS_GUARANTEED[leaning], PASS, UNPROVEN), FAIL).astype(np.uint8)
-    return Judgement(verdict, leaning, magnitude / limits)
+    kind = np.where(
+        magnitude <= limits * (1.0 - rules.guard_band),
+        np.where(_WEAKEST[leaning] <= rules.basis, INSIDE, LEANING),
+        np.where(magnitude <= limits, GUARD_BAND, np.where(np.isnan(magnitude), UNBOUNDED_REASON, OUTSIDE)),
+    )
+    verdict = np.array([FAIL, FAIL, FAIL, PASS, UNPROVEN], np.uint8)[kind]
+    return Judgement(verdict, (kind * len(LEANINGS) + leaning).astype(np.int32), leaning, magnitude / limits)

@@ -15,6 +15,7 @@ from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
 from gainassay.screen.kernel import UNBOUNDED, Outcome, account, screen
+from gainassay.screen.signs import reach
 
 LIBRARY = library()
 INSIDE = 2_000
@@ -55,8 +56,8 @@ def screened(
     values = np.array([[ohms[name]] for name in form.elements])
     present = np.isfinite(values) & (values > 0)
     box = StageBox(values, np.where(present, tolerance, 0.0), np.ones(1), np.array([target]))
-    stages = stage_side(form, box)
     limits = np.array([[1.0 / part.a_ol], [1.0 / part.r_id], [part.r_o]])
+    stages = stage_side(form, box, reach(form, limits))
     parts = part_side(form, limits, limits, np.zeros((3, 1), np.uint8))
     outcome = screen(stages, parts, active_sets(form))
     terms = account(stages, parts, active_sets(form), ALL, ALL, outcome.corner)
@@ -133,8 +134,9 @@ def test_no_bit_depends_on_the_block(block: int) -> None:
     box, limits = several(3, 23, 41)
     parts = part_side(form, limits / 3, limits, np.zeros(limits.shape, np.uint8))
     sets = active_sets(form)
-    whole = screen(stage_side(form, box), parts, sets)
-    cut = screen(stage_side(form, box), parts, sets, block)
+    reached = reach(form, limits)
+    whole = screen(stage_side(form, box, reached), parts, sets)
+    cut = screen(stage_side(form, box, reached), parts, sets, block)
     for name in ("error_nominal", "error_worst", "corner", "dominant", "dominant_value"):
         assert getattr(whole, name).tobytes() == getattr(cut, name).tobytes(), name
 
@@ -144,9 +146,10 @@ def test_no_bit_depends_on_the_company() -> None:
     form = derive(LIBRARY["inverting_t"])
     box, limits = several(5, 12, 9)
     parts = part_side(form, limits / 3, limits, np.zeros(limits.shape, np.uint8))
-    together = screen(stage_side(form, box), parts, active_sets(form))
+    reached = reach(form, limits)
+    together = screen(stage_side(form, box, reached), parts, active_sets(form))
     for index in range(12):
-        alone = screen(stage_side(form, box.part(slice(index, index + 1))), parts, active_sets(form))
+        alone = screen(stage_side(form, box.part(slice(index, index + 1)), reached), parts, active_sets(form))
         for name in ("error_nominal", "error_worst", "dominant", "dominant_value"):
             assert getattr(alone, name).tobytes() == getattr(together, name)[index : index + 1].tobytes(), name
 

@@ -78,6 +78,22 @@ def test_equals_the_visit_of_every_corner(topology: Topology, seed: int) -> None
     assert (corners(few) <= corners(every)).all()
 
 
+def test_a_stage_of_three_amplifiers_needs_few_corners_and_equals_the_visit_of_every_one() -> None:
+    """Its slopes are too long to form: leading terms are bounded, the others by their magnitudes."""
+    form, rng = derive(LIBRARY["instrumentation_3"]), np.random.default_rng(0)
+    assert not all(slope.is_whole for slope in form.slopes)
+    box = boxes(LIBRARY["instrumentation_3"], rng, 6, (3.0, 5.5), [1e-3])
+    for column in box.tolerances.T:  # every corner of eight elements would take too long to visit
+        column[rng.permutation(8)[:4]] = 0.0
+    limits = np.array([[1e-4, 1e-6], [1e-6, 1e-9], [100.0, 20.0]])
+    few, every = stage_side(form, box, reach(form, limits)), stage_side(form, box)
+    found, whole = screened(form, few, limits), screened(form, every, limits)
+    assert found.error_worst == pytest.approx(whole.error_worst, rel=1e-12)
+    assert (few.matters == every.matters).all()
+    assert corners(few).max() <= 20
+    assert corners(every).min() > 500
+
+
 def random_network(rng: random.Random) -> Topology:
     """Two to five nodes, one amplifier, resistors anywhere; many make no sense, and say so."""
     nodes = ["in", "out", *(f"n{i}" for i in range(rng.randint(0, 3)))]
@@ -208,7 +224,7 @@ def test_bounds_hold_everywhere_inside() -> None:
     low, high = (coefficients.Pairs(pairs.y, pairs.z * (1.0 + end * box.tolerances)) for end in (-1.0, 1.0))
     reached = reach(form, limits)
     assert reached.slopes
-    for place, polynomial in reached.slopes:
+    for place, polynomial, _ in reached.slopes:
         least, most = bounds(polynomial, low, high)
         terms = form.slopes[place].terms
         for _ in range(20):

@@ -159,7 +159,9 @@ def _form(data: dict[str, Any]) -> Form:
         loadings=tuple(_ratio(ratio) for ratio in data["loadings"]),
         numerator=_polynomial(data["numerator"]),
         denominator=_polynomial(data["denominator"]),
-        slopes=tuple(Slope(int(slope["sign"]), _polynomial(slope["terms"])) for slope in data["slopes"]),
+        slopes=tuple(
+            Slope(int(slope["sign"]), _polynomial(slope["terms"]), bool(slope["is_whole"])) for slope in data["slopes"]
+        ),
     )
 
 

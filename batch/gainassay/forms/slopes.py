@@ -16,7 +16,7 @@ Polynomial = tuple[tuple[int, tuple[int, ...]], ...]
 """Terms (coefficient, exponent of each variable), in a fixed order."""
 
 MOST_PRODUCTS = 20_000
-"""Products of terms that a slope may take to form; beyond it forming and bounding it costs more than it saves."""
+"""Products of terms that a slope may take to form whole; beyond it forming and bounding it costs more than it saves."""
 
 
 @dataclass(frozen=True)
@@ -31,10 +31,15 @@ class Slope:
     terms : tuple
         Where the sign depends on the values, the slope divided by the departures that divide all its terms, in
         the order of the products of departures; empty where nothing is known.
+    is_whole : bool
+        Whether `terms` are all terms. Where these are too many to form, only those without any departure are,
+        N_1 and D_1 being divided by the departures that all their terms share: the others are small beside them,
+        and their magnitudes bound them.
     """
 
     sign: int
     terms: Polynomial
+    is_whole: bool
 
 
 def slopes(numerator: MultiAffine, denominator: MultiAffine, elements: int, departures: int) -> tuple[Slope, ...]:
@@ -50,16 +55,35 @@ def polynomial(multiaffine: MultiAffine, variables: int) -> Polynomial:
 def _slope(numerator: MultiAffine, denominator: MultiAffine, variable: int, elements: int, departures: int) -> Slope:
     (n_0, n_1), (d_0, d_1) = numerator.split(variable), denominator.split(variable)
     if len(n_1.terms) * len(d_0.terms) + len(n_0.terms) * len(d_1.terms) > MOST_PRODUCTS:
-        return Slope(0, ())
-    # Keyed by what is in both factors, so a square, and what is in any.
+        return _leading(n_0, n_1, d_0, d_1, elements, departures)
+    terms = _difference(n_1, d_0, n_0, d_1)
+    signs = {value > 0 for value in terms.values()}
+    if len(signs) < 2:
+        return Slope(-1 if signs == {False} else 1, (), True)
+    return Slope(0, _ordered(terms, elements, departures), True)
+
+
+def _leading(
+    n_0: MultiAffine, n_1: MultiAffine, d_0: MultiAffine, d_1: MultiAffine, elements: int, departures: int
+) -> Slope:
+    mask = ((1 << departures) - 1) << elements
+    shared = mask
+    for term in (*n_1.terms, *d_1.terms):
+        shared &= term
+
+    def ideal(polynomial: MultiAffine, product: int) -> MultiAffine:
+        return polynomial.collect(mask).get(product, MultiAffine({}))
+
+    terms = _difference(ideal(n_1, shared), ideal(d_0, 0), ideal(n_0, 0), ideal(d_1, shared))
+    return Slope(0, _ordered(terms, elements, departures), False) if terms else Slope(0, (), False)
+
+
+def _difference(n_1: MultiAffine, d_0: MultiAffine, n_0: MultiAffine, d_1: MultiAffine) -> dict[tuple[int, int], int]:
+    """N_1 D_0 - N_0 D_1: coefficients by what is in both factors, so a square, and what is in any."""
     found: dict[tuple[int, int], int] = {}
     for square, union, value in (*_products(n_1, d_0), *_products(-n_0, d_1)):
         found[square, union] = found.get((square, union), 0) + value
-    terms = {key: value for key, value in found.items() if value}
-    signs = {value > 0 for value in terms.values()}
-    if len(signs) < 2:
-        return Slope(-1 if signs == {False} else 1, ())
-    return Slope(0, _ordered(terms, elements, departures))
+    return {key: value for key, value in found.items() if value}
 
 
 def _products(left: MultiAffine, right: MultiAffine) -> Iterator[tuple[int, int, int]]:

@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 from gainassay.forms.coefficients import FloatArray
 from gainassay.screen.corners import PartSide, Plan, StageSide
 
-PAIRS_PER_BLOCK = 65536
+PAIRS_PER_BLOCK = 32_768
 """Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
 
 UNBOUNDED = -1

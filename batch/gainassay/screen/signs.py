@@ -54,6 +54,20 @@ class Bounded:
 
 
 @dataclass(frozen=True)
+class Remainder:
+    """Magnitudes of what a slope that is not whole leaves out: N_1 D_0 and N_0 D_1 without their leading terms.
+
+    Attributes
+    ----------
+    factors : tuple
+        For each of the two products its two factors, each as (terms without departures, all others), with all
+        coefficients positive, and N_1 and D_1 divided by the departures that all their terms share.
+    """
+
+    factors: tuple[tuple[tuple[Bounded, Bounded], tuple[Bounded, Bounded]], ...]
+
+
+@dataclass(frozen=True)
 class Reach:
     """What the signs of a form's slopes can be proved from, once a parts table says how far departures reach.
 
@@ -63,7 +77,7 @@ class Reach:
     signs : ndarray of int8, shape (elements + departures,)
         What is known of each slope whatever the values.
     slopes : tuple
-        For the others: place among the variables, and the polynomial.
+        For the others: place among the variables, the polynomial, and what it leaves out.
     moved : ndarray of bool, shape (departures,)
         Whether any part has the departure at all.
     ideal, whole : Bounded
@@ -77,7 +91,7 @@ class Reach:
 
     form: Form
     signs: NDArray[np.int8]
-    slopes: tuple[tuple[int, Bounded], ...]
+    slopes: tuple[tuple[int, Bounded, Remainder | None], ...]
     moved: NDArray[np.bool_]
     ideal: Bounded
     whole: Bounded
@@ -127,7 +141,13 @@ def reach(form: Form, worst: FloatArray) -> Reach:
         form=form,
         signs=np.array([slope.sign for slope in form.slopes], np.int8),
         slopes=tuple(
-            (index, _bounded(slope.terms, limits, _degrees(slope.terms, count)))
+            (index, _bounded(slope.terms, limits, _degrees(slope.terms, count)), None)
+            if slope.is_whole
+            else (
+                index,
+                _bounded(slope.terms, limits, 2 * _others(degrees, index)),
+                _remainder(form, index, limits, degrees),
+            )
             for index, slope in enumerate(form.slopes)
             if slope.terms
         ),
@@ -137,6 +157,32 @@ def reach(form: Form, worst: FloatArray) -> Reach:
         loops=tuple(_bounded(_without_departures(by_product[mask], count), limits, degrees) for mask in open_loops),
         usable=bool(_decades(limits).max(axis=1, initial=0.0).sum() <= DECADES),
     )
+
+
+def _others(degrees: NDArray[np.intp], place: int) -> NDArray[np.intp]:
+    """Degrees without that of the variable itself, which is in no factor of its slope."""
+    return np.where(np.arange(len(degrees)) == place, 0, degrees)
+
+
+def _remainder(form: Form, place: int, limits: FloatArray, degrees: NDArray[np.intp]) -> Remainder:
+    count = len(form.elements)
+    held = [term for term in (*form.numerator, *form.denominator) if term[1][place]]
+    shared = [min(column) for column in zip(*(exponents for _, exponents in held), strict=True)]
+    # The variable itself, and the departures that stand beside it in every term.
+    taken = [share if i == place or i >= count else 0 for i, share in enumerate(shared)]
+
+    def factor(terms: Polynomial, is_held: bool) -> tuple[Bounded, Bounded]:
+        sides: tuple[list[tuple[int, tuple[int, ...]]], ...] = ([], [])
+        for value, exponents in terms:
+            if bool(exponents[place]) == is_held:
+                left = tuple(e - t for e, t in zip(exponents, taken, strict=True)) if is_held else exponents
+                sides[any(left[count:])].append((abs(value), left))
+        ideal, others = (_bounded(side, limits, _others(degrees, place)) for side in sides)
+        return ideal, others
+
+    n_0, n_1 = (factor(form.numerator, is_held) for is_held in (False, True))
+    d_0, d_1 = (factor(form.denominator, is_held) for is_held in (False, True))
+    return Remainder(((n_1, d_0), (n_0, d_1)))
 
 
 def _without_departures(terms: Polynomial | list[tuple[int, tuple[int, ...]]], elements: int) -> Polynomial:
@@ -195,10 +241,13 @@ def _directions(reached: Reach, values: FloatArray, tolerances: FloatArray) -> D
         low, high = (coefficients.Pairs(nominal.y, nominal.z * (1.0 + end * tolerances)) for end in (-1.0, 1.0))
         of = np.empty((len(reached.signs), values.shape[1]), np.int8)
         of[:] = reached.signs[:, None]
-        for place, polynomial in reached.slopes:
+        for place, polynomial, remainder in reached.slopes:
             if not (tolerances[place].any() if place < count else reached.moved[place - count]):
                 continue  # it has one value anyway
             least, most = bounds(polynomial, low, high)
+            if remainder is not None:
+                left_out = _largest(remainder, low, high)
+                least, most = least - left_out, most + left_out
             of[place] = np.where(least >= 0.0, RISES, np.where(most <= 0.0, FALLS, OPEN))
         # A resistance moves the gain against its admittance.
         of[:count] *= -1
@@ -212,6 +261,17 @@ def _directions(reached: Reach, values: FloatArray, tolerances: FloatArray) -> D
             least, most = bounds(polynomial, low, high)
             proved &= np.where(of_whole > 0, least >= 0.0, most <= 0.0)
     return Directions(of, proved)
+
+
+def _largest(remainder: Remainder, low: coefficients.Pairs, high: coefficients.Pairs) -> FloatArray:
+    """Not below the magnitude of any value of what a slope leaves out."""
+    total = np.zeros(low.y.shape[1])
+    for product in remainder.factors:
+        (left, more), (right, further) = (
+            tuple(bounds(polynomial, low, high)[1] for polynomial in factor) for factor in product
+        )
+        total += left * further + more * (right + further)
+    return total * (1.0 + ROUNDING)
 
 
 def _decades(values: FloatArray) -> FloatArray:

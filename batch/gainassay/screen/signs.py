@@ -27,7 +27,8 @@ DECADES = 100
 """Decades that elements may be away from 1 ohm, all together, and departures from 1: so no product of two of each
 overflows or underflows, and a bound that comes out as 0 is 0."""
 
-STAGES_AT_A_TIME = 4096
+STAGES_AT_A_TIME = 1024
+"""So that the terms of a long slope for all of them take some megabytes; no bit depends on it."""
 
 RISES, FALLS, OPEN, FIXED = 1, -1, 0, 2
 """The gain as a function of one variable: it does not fall; it does not rise; not known; the variable has one value."""
@@ -159,6 +160,15 @@ def reach(form: Form, worst: FloatArray) -> Reach:
     )
 
 
+def _largest_product(limits: FloatArray, powers: NDArray[np.intp]) -> float:
+    """By multiplication: pow() may differ between machines and with the place of a part in the table."""
+    found = np.ones(limits.shape[1])
+    for limit, power in zip(limits, powers.tolist(), strict=True):
+        for _ in range(power):
+            found = found * limit
+    return float(found.max())
+
+
 def _others(degrees: NDArray[np.intp], place: int) -> NDArray[np.intp]:
     """Degrees without that of the variable itself, which is in no factor of its slope."""
     return np.where(np.arange(len(degrees)) == place, 0, degrees)
@@ -202,7 +212,7 @@ def _bounded(terms: Sequence[tuple[int, tuple[int, ...]]], limits: FloatArray, d
     for end in range(1, len(ordered) + 1):
         if end == len(ordered) or ordered[end][1][elements:] != ordered[start][1][elements:]:
             powers = exponents[start, elements:]
-            largest = float(np.prod(limits ** powers[:, None], axis=0).max())
+            largest = _largest_product(limits, powers)
             products.append((slice(start, end), 0.0 if powers.any() else 1.0, largest))
             start = end
     return Bounded(

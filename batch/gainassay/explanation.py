@@ -161,7 +161,7 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
     worst = float(outcome.error_worst[0, 0])
     values = screened.group.box.values[:, screened.chunk.stages][:, 0]
     tolerances = screened.group.box.tolerances[:, screened.chunk.stages][:, 0]
-    at_corner = values if unbounded else side.corner_values[corner // len(sets), :, 0]
+    at_corner = values if unbounded else side.corner_values[:, corner // len(sets)]
     return Explanation(
         stage=stage,
         part=str(parts.names[p]),

@@ -71,11 +71,12 @@ def nodal_seconds(prepared: service.Prepared, groups: tuple[blocks.Group, ...]) 
     seconds = matrices = pairs = 0.0
     for one, stages in zip(groups, prepared.stages.groups, strict=True):
         side = stage_side(one.form, one.box)
+        end = np.append(side.first[1:], side.corner_values.shape[1])
         count = max(1, SAMPLE * len(stages.names) // prepared.stages.used())
         for s, p in zip(
             rng.integers(len(stages.names), size=count), rng.integers(len(one.part_names), size=count), strict=True
         ):
-            corners = side.corner_values[:, :, s]
+            corners = side.corner_values[:, side.first[s] : end[s]].T
             departures = np.array(np.meshgrid([0.0, 1.0], [0.0, 1.0], [0.0, 1.0])).reshape(3, -1)
             ends = prepared.parts.worst[:, p, None] * departures
             values = np.repeat(corners, ends.shape[1], axis=0)

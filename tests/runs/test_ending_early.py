@@ -14,7 +14,7 @@ import pytest
 if TYPE_CHECKING:
     from conftest import CommandLine
 
-STAGES, PARTS = 600, 4000
+STAGES, PARTS = 1500, 6000
 
 
 @pytest.fixture

@@ -15,6 +15,7 @@ from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
 from gainassay.screen.kernel import UNBOUNDED, Outcome, account, screen
+from gainassay.screen.signs import reach
 
 LIBRARY = library()
 INSIDE = 2_000
@@ -55,8 +56,8 @@ def screened(
     values = np.array([[ohms[name]] for name in form.elements])
     present = np.isfinite(values) & (values > 0)
     box = StageBox(values, np.where(present, tolerance, 0.0), np.ones(1), np.array([target]))
-    stages = stage_side(form, box)
     limits = np.array([[1.0 / part.a_ol], [1.0 / part.r_id], [part.r_o]])
+    stages = stage_side(form, box, reach(form, limits))
     parts = part_side(form, limits, limits, np.zeros((3, 1), np.uint8))
     outcome = screen(stages, parts, active_sets(form))
     terms = account(stages, parts, active_sets(form), ALL, ALL, outcome.corner)
@@ -133,8 +134,9 @@ def test_no_bit_depends_on_the_block(block: int) -> None:
     box, limits = several(3, 23, 41)
     parts = part_side(form, limits / 3, limits, np.zeros(limits.shape, np.uint8))
     sets = active_sets(form)
-    whole = screen(stage_side(form, box), parts, sets)
-    cut = screen(stage_side(form, box), parts, sets, block)
+    reached = reach(form, limits)
+    whole = screen(stage_side(form, box, reached), parts, sets)
+    cut = screen(stage_side(form, box, reached), parts, sets, block)
     for name in ("error_nominal", "error_worst", "corner", "dominant", "dominant_value"):
         assert getattr(whole, name).tobytes() == getattr(cut, name).tobytes(), name
 
@@ -144,9 +146,10 @@ def test_no_bit_depends_on_the_company() -> None:
     form = derive(LIBRARY["inverting_t"])
     box, limits = several(5, 12, 9)
     parts = part_side(form, limits / 3, limits, np.zeros(limits.shape, np.uint8))
-    together = screen(stage_side(form, box), parts, active_sets(form))
+    reached = reach(form, limits)
+    together = screen(stage_side(form, box, reached), parts, active_sets(form))
     for index in range(12):
-        alone = screen(stage_side(form, box.part(slice(index, index + 1))), parts, active_sets(form))
+        alone = screen(stage_side(form, box.part(slice(index, index + 1)), reached), parts, active_sets(form))
         for name in ("error_nominal", "error_worst", "dominant", "dominant_value"):
             assert getattr(alone, name).tobytes() == getattr(together, name)[index : index + 1].tobytes(), name
 
@@ -156,8 +159,8 @@ def test_tolerances_shares_are_alike_for_elements_that_play_the_same_part() -> N
     values = np.array([[1e4], [1e4], [1e5], [np.inf]])
     box = StageBox(values, np.array([[0.01], [0.0], [0.01], [0.0]]), np.ones(1), np.array([np.nan]))
     side = stage_side(form, box)
-    assert side.corner_terms.sum(axis=1) + side.set_point == pytest.approx(side.corner_error, abs=1e-15)
-    up_down = int(side.corner_error[:, 0].argmax())
-    low, _, high, _ = side.corner_terms[up_down, :, 0]
+    assert side.corner_terms.sum(axis=0) + side.set_point == pytest.approx(side.corner_error, abs=1e-15)
+    up_down = int(side.corner_error.argmax())
+    low, _, high, _ = side.corner_terms[:, up_down]
     # r1 down by 1 % and r_f up by 1 % weigh nearly the same: their exact ratio is 1.01/0.99 / 1.01 apart.
     assert low == pytest.approx(high, rel=0.02)

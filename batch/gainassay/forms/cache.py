@@ -19,13 +19,14 @@ from platformdirs import user_cache_path
 from gainassay.forms import meaningful, soundness
 from gainassay.forms.form import Form, Ratio, derive
 from gainassay.forms.meaningful import Formulas
+from gainassay.forms.slopes import Polynomial, Slope
 from gainassay.forms.topology import Topology
 
 log = logging.getLogger(__name__)
 
 Derived = TypeVar("Derived")
 
-FORM_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "soundness.py", "topology.py")
+FORM_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "slopes.py", "soundness.py", "topology.py")
 """Files of this room whose change makes every kept form stale."""
 
 FORMULA_CODE = (*FORM_CODE, "expression.py", "meaningful.py", "proof.py", "render.py", "simplest.py")
@@ -156,11 +157,17 @@ def _form(data: dict[str, Any]) -> Form:
         gain_ideal=_ratio(data["gain_ideal"]),
         contrasts=tuple(_ratio(ratio) for ratio in data["contrasts"]),
         loadings=tuple(_ratio(ratio) for ratio in data["loadings"]),
+        numerator=_polynomial(data["numerator"]),
+        denominator=_polynomial(data["denominator"]),
+        slopes=tuple(
+            Slope(int(slope["sign"]), _polynomial(slope["terms"]), bool(slope["is_whole"])) for slope in data["slopes"]
+        ),
     )
 
 
 def _ratio(data: dict[str, Any]) -> Ratio:
-    def polynomial(terms: list[Any]) -> tuple[tuple[int, tuple[int, ...]], ...]:
-        return tuple((int(value), tuple(int(e) for e in exponents)) for value, exponents in terms)
+    return Ratio(_polynomial(data["numerator"]), _polynomial(data["denominator"]))
 
-    return Ratio(polynomial(data["numerator"]), polynomial(data["denominator"]))
+
+def _polynomial(terms: list[Any]) -> Polynomial:
+    return tuple((int(value), tuple(int(e) for e in exponents)) for value, exponents in terms)

@@ -12,7 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from gainassay.forms.form import Form, Polynomial, Ratio
+from gainassay.forms.form import Form, Ratio
+from gainassay.forms.slopes import Polynomial
 
 FloatArray = NDArray[np.float64]
 
@@ -91,6 +92,28 @@ def evaluate(form: Form, pairs: Pairs) -> Coefficients:
         return np.array([_ratio(ratio, pairs) for ratio in ratios]).reshape(len(ratios), count)
 
     return Coefficients(gain_ideal(form, pairs), table(form.contrasts), table(form.loadings))
+
+
+def occur(form: Form, pairs: Pairs) -> NDArray[np.bool_]:
+    """Which terms occur at all: some product of elements in n_k - d_k or d_k is not 0, even if their sum is.
+
+    Returns
+    -------
+    ndarray, shape (terms, stages)
+    """
+    magnitudes = [
+        [
+            Ratio(tuple((abs(value), exponents) for value, exponents in ratio.numerator), ratio.denominator)
+            for ratio in ratios
+        ]
+        for ratios in (form.contrasts, form.loadings)
+    ]
+    count = pairs.y.shape[1]
+    found = np.zeros((len(form.monomials), count), dtype=bool)
+    for ratios in magnitudes:
+        for k, ratio in enumerate(ratios):
+            found[k] |= _ratio(ratio, pairs) != 0.0
+    return found
 
 
 def gain_ideal(form: Form, pairs: Pairs) -> FloatArray:

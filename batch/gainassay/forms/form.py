@@ -18,10 +18,8 @@ from gainassay.errors import InputError
 from gainassay.forms import nodal
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure, term_name
 from gainassay.forms.multiaffine import MultiAffine
+from gainassay.forms.slopes import Polynomial, Slope, polynomial, slopes
 from gainassay.forms.topology import Topology
-
-Polynomial = tuple[tuple[int, tuple[int, ...]], ...]
-"""Terms (coefficient, exponent of each element's admittance), in a fixed order."""
 
 
 @dataclass(frozen=True)
@@ -57,6 +55,10 @@ class Form:
         G_ideal [gain unit].
     contrasts, loadings : tuple[Ratio, ...]
         n_k - d_k and d_k, one for each monomial [1/unit of m_k].
+    numerator, denominator : Polynomial
+        N and D in the elements' admittances and the departures.
+    slopes : tuple[Slope, ...]
+        Numerators of the gain's partial derivatives in each element's admittance, then in each departure.
     """
 
     topology: str
@@ -68,6 +70,9 @@ class Form:
     gain_ideal: Ratio
     contrasts: tuple[Ratio, ...]
     loadings: tuple[Ratio, ...]
+    numerator: Polynomial
+    denominator: Polynomial
+    slopes: tuple[Slope, ...]
 
     def loops(self) -> tuple[int, ...]:
         """Places of the monomials that are products of 1/A_OL alone.
@@ -124,6 +129,9 @@ def derive(topology: Topology) -> Form:
         gain_ideal=ratio.reduced(n_0, d_0),
         contrasts=tuple(contrast for _, contrast, _ in kept),
         loadings=tuple(loading for _, _, loading in kept),
+        numerator=polynomial(gain.numerator, len(gain.elements) + len(gain.departures)),
+        denominator=polynomial(gain.denominator, len(gain.elements) + len(gain.departures)),
+        slopes=slopes(gain.numerator, gain.denominator, len(gain.elements), len(gain.departures)),
     )
 
 

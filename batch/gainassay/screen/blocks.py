@@ -20,11 +20,13 @@ from gainassay.screen.corners import (
     StageBox,
     StageSide,
     active_sets,
+    elements_error,
     part_side,
     stage_side,
     term_names,
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
+from gainassay.screen.signs import Reach, reach
 from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
 
 Written = TypeVar("Written")
@@ -50,6 +52,8 @@ class Group:
         Ordered.
     part_names : ndarray of str, shape (parts,)
         Ordered.
+    reach : Reach
+        Of all parts: what a chunk leaves out must not depend on which parts are in it.
     """
 
     form: Form
@@ -58,6 +62,7 @@ class Group:
     box: StageBox
     parts: PartSide
     active_sets: tuple[tuple[int, ...], ...]
+    reach: Reach
 
 
 @dataclass(frozen=True)
@@ -122,7 +127,15 @@ def group(
     evidence: NDArray[np.uint8],
 ) -> Group:
     """Stages of one form and all parts; `nominal`, `worst` and `evidence` have shape (departures, parts)."""
-    return Group(form, stage_names, part_names, box, part_side(form, nominal, worst, evidence), active_sets(form))
+    return Group(
+        form,
+        stage_names,
+        part_names,
+        box,
+        part_side(form, nominal, worst, evidence),
+        active_sets(form),
+        reach(form, worst),
+    )
 
 
 def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
@@ -143,7 +156,7 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
 def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK) -> Screened:
     """Screen one chunk."""
     one = groups[chunk.group]
-    stages = stage_side(one.form, one.box.part(chunk.stages))
+    stages = stage_side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
     outcome = screen(stages, parts, one.active_sets, block)
     judgement = judge(stages, parts, outcome, rules)
@@ -163,8 +176,6 @@ def tally(screened: Screened) -> Tally:
     candidate = np.where(bounded_rank == best_rank[:, None], np.nan_to_num(used, nan=np.inf), np.inf)
     best = candidate.argmin(axis=1)
     found = best_rank < len(VERDICTS)
-    errors = screened.stage_side.corner_error
-    farthest = np.abs(np.nan_to_num(errors, nan=np.inf)).argmax(axis=0)
     return Tally(
         chunk=screened.chunk,
         by_stage=is_verdict.sum(axis=2).T,
@@ -178,7 +189,7 @@ def tally(screened: Screened) -> Tally:
         best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),
         gain_ideal=screened.stage_side.gain_ideal,
         limits=screened.stage_side.limits,
-        elements_error=errors[farthest, np.arange(errors.shape[1])],
+        elements_error=elements_error(screened.stage_side),
     )
 
 

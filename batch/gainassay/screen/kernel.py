@@ -13,14 +13,15 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
-from gainassay.screen.corners import PartSide, StageSide
+from gainassay.screen.corners import PartSide, Plan, StageSide
 
-PAIRS_PER_BLOCK = 65_536
+PAIRS_PER_BLOCK = 32_768
 """Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
 
 UNBOUNDED = -1
@@ -71,91 +72,141 @@ def screen(
         np.empty(shape, np.int16),
         np.empty(shape),
     )
-    width = max(1, min(shape[1], block))
-    height = max(1, block // width)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for top in range(0, shape[0], height):
-            rows = slice(top, min(top + height, shape[0]))
-            for left in range(0, shape[1], width):
-                columns = slice(left, min(left + width, shape[1]))
-                _screen_block(stages, parts, active_sets, rows, columns, outcome)
+        for plan, rows, columns in _blocks(stages, shape[1], block):
+            _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
     return outcome
+
+
+def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BLOCK) -> FloatArray:
+    """The `error_nominal` of `screen` alone."""
+    found = np.empty((len(stages.limits), parts.worst.shape[1]))
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        for _, rows, columns in _blocks(stages, found.shape[1], block):
+            found[rows, columns] = _nominal(stages, parts, rows, columns)
+    return found
+
+
+def worst_errors(
+    stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], block: int = PAIRS_PER_BLOCK
+) -> tuple[FloatArray, NDArray[np.int32]]:
+    """The `error_worst` and the `corner` of `screen` alone; where the corner is `UNBOUNDED` the error is nan."""
+    found = np.empty((len(stages.limits), parts.worst.shape[1]))
+    corner = np.empty(found.shape, np.int32)
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        for plan, rows, columns in _blocks(stages, found.shape[1], block):
+            found[rows, columns], corner[rows, columns] = _worst(
+                stages, parts, active_sets, plan.corners, rows, columns
+            )
+    return found, corner
+
+
+def _blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
+    """Blocks of pairs whose stages visit the same corners."""
+    width = max(1, min(parts, block))
+    height = max(1, block // width)
+    for plan in stages.plans:
+        for top in range(0, len(plan.stages), height):
+            for left in range(0, parts, width):
+                yield plan, plan.stages[top : top + height], slice(left, min(left + width, parts))
 
 
 def _screen_block(
     stages: StageSide,
     parts: PartSide,
     active_sets: Sequence[Sequence[int]],
-    rows: slice,
+    corners: Sequence[tuple[int, int]],
+    rows: NDArray[np.intp],
     columns: slice,
     outcome: Outcome,
 ) -> None:
     outcome.error_nominal[rows, columns] = _nominal(stages, parts, rows, columns)
-    worst, corner = _worst(stages, parts, active_sets, rows, columns)
-    dominant, value = _dominant(account(stages, parts, active_sets, rows, columns, corner))
+    worst, corner = _worst(stages, parts, active_sets, corners, rows, columns)
+    dominant, value = _dominant(stages, parts, active_sets, corners, rows, columns, corner)
     unbounded = corner == UNBOUNDED
     if unbounded.any():
-        undoing = _undoing(stages, parts, active_sets, rows, columns)
-        dominant = np.where(unbounded, undoing, dominant)
+        dominant = np.where(unbounded, _undoing(stages, parts, rows, columns), dominant)
         value[unbounded] = np.nan
-        worst[unbounded] = np.nan
     outcome.error_worst[rows, columns] = worst
     outcome.corner[rows, columns] = corner
     outcome.dominant[rows, columns] = dominant
     outcome.dominant_value[rows, columns] = value
 
 
-def _nominal(stages: StageSide, parts: PartSide, rows: slice, columns: slice) -> FloatArray:
-    monomials = parts.nominal[:, columns]
-    numerator = _sum_of_products(stages.contrasts[:, rows], monomials)
-    denominator = 1.0 + _sum_of_products(stages.loadings[:, rows], monomials)
+def _nominal(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns: slice) -> FloatArray:
+    products = parts.nominal[:, columns]
+    numerator, denominator = np.zeros((2, len(rows), products.shape[1]))
+    denominator += 1.0
+    _add_products(stages.contrasts[:, rows], stages.loadings[:, rows], products, numerator, denominator)
+    may_vanish = bool((stages.loadings[:, rows] < 0.0).any())
     e = stages.set_point[rows, None]
-    return np.where(denominator > 0.0, e + (1.0 + e) * (numerator / denominator), np.nan)
+    error = e + (1.0 + e) * (numerator / denominator)
+    return np.where(denominator > 0.0, error, np.nan) if may_vanish else error
 
 
-def _sum_of_products(left: FloatArray, right: FloatArray) -> FloatArray:
-    """sum_k left[k, :, None] * right[k, None, :], in the order of k."""
-    total = np.zeros((left.shape[1], right.shape[1]))
-    for row, column in zip(left, right, strict=True):
-        total += row[:, None] * column
-    return total
+def _add_products(
+    contrasts: FloatArray, loadings: FloatArray, products: FloatArray, numerator: FloatArray, denominator: FloatArray
+) -> None:
+    """Add sum_k contrasts[k, :, None] * products[k] to the numerator, and so for the loadings, in the order of k."""
+    scratch = np.empty_like(numerator)
+    for contrast, loading, factor in zip(contrasts, loadings, products, strict=True):
+        if contrast.any():
+            numerator += np.multiply(contrast[:, None], factor, out=scratch)
+        if loading.any():
+            denominator += np.multiply(loading[:, None], factor, out=scratch)
 
 
 def _worst(
-    stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], rows: slice, columns: slice
+    stages: StageSide,
+    parts: PartSide,
+    active_sets: Sequence[Sequence[int]],
+    corners: Sequence[tuple[int, int]],
+    rows: NDArray[np.intp],
+    columns: slice,
 ) -> tuple[FloatArray, NDArray[np.int32]]:
-    """The error of largest magnitude over all corners, and the first corner that gives it."""
-    monomials = parts.worst[:, columns]
-    contrasts, loadings = stages.corner_contrasts[:, :, rows], stages.corner_loadings[:, :, rows]
-    errors = stages.corner_error[:, rows, None]
-    shape = (errors.shape[1], monomials.shape[1])
-    magnitude, worst = np.full(shape, -1.0), np.zeros(shape)
-    corner = np.zeros(shape, np.int32)
+    """The error of largest magnitude over the corners, and the first corner that gives it."""
+    products = parts.worst[:, columns]
+    shape = (len(rows), products.shape[1])
+    if not corners:
+        return np.full(shape, np.nan), np.full(shape, UNBOUNDED, np.int32)
+    worst, magnitude = np.empty(shape), np.empty(shape)
+    corner, mark = np.empty(shape, np.int32), np.empty(shape, np.int32)
     numerator, denominator, scratch = np.empty(shape), np.empty(shape), np.empty(shape)
     larger = np.empty(shape, dtype=bool)
-    bounded = np.repeat(stages.regular[rows, None], shape[1], axis=1)
-    # 1 + sum d m stays positive by itself where no loading is negative.
-    may_vanish = bool((loadings < 0.0).any())
+    bounded: NDArray[np.bool_] | None = None  # where it matters
 
-    for j in range(len(errors)):
-        e = errors[j]
-        for q, active in enumerate(active_sets):
+    for place, (j, q) in enumerate(corners):
+        active = list(active_sets[q])
+        at = stages.first[rows] + j
+        e = stages.corner_error[at, None]
+        if active:
+            contrasts, loadings = stages.corner_contrasts[active][:, at], stages.corner_loadings[active][:, at]
             numerator[:] = 0.0
             denominator[:] = 1.0
-            for k in active:
-                numerator += np.multiply(contrasts[j, k][:, None], monomials[k], out=scratch)
-                denominator += np.multiply(loadings[j, k][:, None], monomials[k], out=scratch)
-            if may_vanish:
-                bounded &= denominator > 0.0
+            _add_products(contrasts, loadings, products[active], numerator, denominator)
+            # 1 + sum d m stays positive by itself where no loading is negative.
+            if (loadings < 0.0).any():
+                bounded = denominator > 0.0 if bounded is None else bounded & (denominator > 0.0)
             numerator /= denominator
             numerator *= 1.0 + e
             numerator += e
-            np.abs(numerator, out=scratch)
-            np.greater(scratch, magnitude, out=larger)
-            np.maximum(magnitude, scratch, out=magnitude)  # nan stays: a corner that overflows bounds nothing
-            np.copyto(worst, numerator, where=larger)
-            np.copyto(corner, j * len(active_sets) + q, where=larger)
-    corner[~bounded | ~np.isfinite(magnitude)] = UNBOUNDED
+        error = numerator if active else e
+        size = np.abs(error, out=scratch) if active else np.abs(e)
+        code = j * len(active_sets) + q
+        if place:
+            np.greater(size, magnitude, out=larger)
+            np.maximum(magnitude, size, out=magnitude)  # nan stays: a corner that overflows bounds nothing
+            _put(worst, error, larger)
+            # Codes rise from corner to corner: the largest is the last that exceeded all before it.
+            np.maximum(corner, np.multiply(larger.view(np.int8), np.int32(code), out=mark), out=corner)
+        else:
+            magnitude[:], worst[:], corner[:] = size, error, code
+    unbounded = ~np.isfinite(magnitude)
+    if bounded is not None:
+        unbounded |= ~bounded
+    if unbounded.any():
+        worst[unbounded] = np.nan
+        corner[unbounded] = UNBOUNDED
     return worst, corner
 
 
@@ -174,56 +225,126 @@ def account(
     """
     j, q = np.divmod(np.maximum(corner, 0), len(active_sets))
     s = np.arange(*rows.indices(len(stages.limits)))[:, None]
+    at = stages.first[s] + j
     yield np.broadcast_to(stages.set_point[s], corner.shape)
-    for element in range(stages.corner_terms.shape[1]):
-        yield stages.corner_terms[j, element, s]
+    for shares in stages.corner_terms:
+        yield shares[at]
 
-    is_active = np.zeros((len(active_sets), len(parts.worst)))
+    is_active = np.zeros((len(parts.worst), len(active_sets)))
     for place, active in enumerate(active_sets):
-        is_active[place, list(active)] = 1.0
-    monomials = parts.worst[:, columns]
+        is_active[list(active), place] = 1.0
+    products = parts.worst[:, columns]
     denominator = np.ones(corner.shape)
-    for k, monomial in enumerate(monomials):
-        denominator += stages.corner_loadings[j, k, s] * (is_active[q, k] * monomial)
-    lift = (1.0 + stages.corner_error[j, s]) / denominator
-    for k, monomial in enumerate(monomials):
-        yield lift * (stages.corner_contrasts[j, k, s] * (is_active[q, k] * monomial))
+    for k, factor in enumerate(products):
+        denominator += stages.corner_loadings[k][at] * (is_active[k][q] * factor)
+    lift = (1.0 + stages.corner_error[at]) / denominator
+    for k, factor in enumerate(products):
+        yield lift * (stages.corner_contrasts[k][at] * (is_active[k][q] * factor))
 
 
 def nominal_account(stages: StageSide, parts: PartSide) -> Iterator[FloatArray]:
     """The terms of each pair's nominal error, each of shape (stages, parts), in the order of `account`."""
     shape = (len(stages.limits), parts.nominal.shape[1])
     yield np.broadcast_to(stages.set_point[:, None], shape)
-    for _ in range(stages.corner_terms.shape[1]):
+    for _ in stages.corner_terms:
         yield np.zeros(shape)
-    denominator = 1.0 + _sum_of_products(stages.loadings, parts.nominal)
+    numerator, denominator = np.zeros(shape), np.ones(shape)
+    _add_products(stages.contrasts, stages.loadings, parts.nominal, numerator, denominator)
     lift = (1.0 + stages.set_point[:, None]) / denominator
-    for contrast, monomial in zip(stages.contrasts, parts.nominal, strict=True):
-        yield lift * (contrast[:, None] * monomial)
+    for contrast, factor in zip(stages.contrasts, parts.nominal, strict=True):
+        yield lift * (contrast[:, None] * factor)
 
 
-def _dominant(terms: Iterator[FloatArray]) -> tuple[NDArray[np.int16], FloatArray]:
-    """Place and value of the term of largest magnitude, the first of equals."""
-    value = next(terms).copy()
-    magnitude = np.abs(value)
-    dominant = np.zeros(value.shape, np.int16)
-    for place, term in enumerate(terms, start=1):
-        larger = np.abs(term) > magnitude
-        np.copyto(magnitude, np.abs(term), where=larger)
-        np.copyto(value, term, where=larger)
-        np.copyto(dominant, place, where=larger)
+def _dominant(
+    stages: StageSide,
+    parts: PartSide,
+    active_sets: Sequence[Sequence[int]],
+    corners: Sequence[tuple[int, int]],
+    rows: NDArray[np.intp],
+    columns: slice,
+    corner: NDArray[np.int32],
+) -> tuple[NDArray[np.int16], FloatArray]:
+    """Place, in the account, and value of the term of largest magnitude at each pair's corner, the first of equals.
+
+    The same numbers as `account` gives, one corner after the other: there each coefficient is the same for a
+    whole row, and those of set-point and tolerances do not depend on the part.
+    """
+    dominant, value = np.zeros(corner.shape, np.int16), np.zeros(corner.shape)
+    for j, q in corners:
+        is_here = corner == j * len(active_sets) + q
+        if is_here.any():
+            at = stages.first[rows] + j
+            place, largest = _dominant_at(stages, parts, list(active_sets[q]), at, stages.set_point[rows], columns)
+            if is_here.all():
+                return place, largest
+            _put(dominant, place, is_here)
+            _put(value, largest, is_here)
     return dominant, value
 
 
-def _undoing(
-    stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], rows: slice, columns: slice
-) -> NDArray[np.int16]:
+def _dominant_at(
+    stages: StageSide,
+    parts: PartSide,
+    active: list[int],
+    at: NDArray[np.intp],
+    set_point: FloatArray,
+    columns: slice,
+) -> tuple[NDArray[np.int16], FloatArray]:
+    """The dominant terms of some stages if every pair were at the corner `at`, with these products active."""
+    products = parts.worst[:, columns]
+    shape = (len(at), products.shape[1])
+    # Terms that do not depend on the part stand first in the account: each row begins with the largest of them.
+    constant = np.vstack([set_point, stages.corner_terms[:, at]])
+    first = np.abs(constant).argmax(axis=0)
+    start = constant[first, np.arange(len(at))]
+    if not active:
+        places, values = np.empty(shape, np.int16), np.empty(shape)
+        places[:], values[:] = first[:, None], start[:, None]
+        return places, values
+
+    contrasts, loadings = stages.corner_contrasts[active][:, at], stages.corner_loadings[active][:, at]
+    lift, size, larger = np.ones(shape), np.empty(shape), np.empty(shape, dtype=bool)
+    for k, loading in zip(active, loadings, strict=True):
+        if loading.any():
+            lift += np.multiply(loading[:, None], products[k], out=size)
+    raised = 1.0 + stages.corner_error[at]
+    np.divide(np.abs(raised)[:, None], lift, out=lift)
+    magnitude, found, mark = np.empty(shape), np.empty(shape, np.int16), np.empty(shape, np.int16)
+    magnitude[:] = np.abs(start)[:, None]
+    # A term's sign is the same along a row; it is carried as the last bit of the term's place.
+    found[:] = (2 * first + np.signbit(start))[:, None]
+    for k, contrast in zip(active, contrasts, strict=True):
+        if contrast.any():
+            np.multiply(np.abs(contrast)[:, None], products[k], out=size)
+            np.multiply(lift, size, out=size)
+            np.greater(size, magnitude, out=larger)
+            np.maximum(magnitude, size, out=magnitude)
+            code = 2 * (1 + len(stages.corner_terms) + k) + np.signbit(contrast * raised)
+            # Places rise: the largest is the last that exceeded all before it, so the first of the largest.
+            np.maximum(found, np.multiply(larger.view(np.int8), code.astype(np.int16)[:, None], out=mark), out=found)
+    np.multiply(magnitude, 1 - 2 * (found & 1), out=magnitude)
+    return found >> 1, magnitude
+
+
+def _put(target: NDArray[Any], source: NDArray[Any], where: NDArray[np.bool_]) -> None:
+    """target[where] = source[where], without branches: for an irregular mask several times as fast as copying."""
+    integer = {2: np.int16, 8: np.int64}[target.itemsize]
+    bits = target.view(integer)
+    change = np.bitwise_xor(bits, source.view(integer))
+    change &= np.negative(where.view(np.int8)).astype(integer)
+    bits ^= change
+
+
+def _undoing(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns: slice) -> NDArray[np.int16]:
     """Place of the term whose loading pulls the denominator furthest below one."""
-    first = 1 + stages.corner_terms.shape[1]
-    lowest = np.zeros((rows.stop - rows.start, columns.stop - columns.start))
+    first = 1 + len(stages.corner_terms)
+    end = np.append(stages.first[1:], stages.corner_loadings.shape[1])
+    lowest_loading = np.array([stages.corner_loadings[:, stages.first[s] : end[s]].min(axis=1) for s in rows]).T
+    products = parts.worst[:, columns]
+    lowest = np.zeros((len(rows), products.shape[1]))
     place = np.full(lowest.shape, first, np.int16)
-    for k, monomial in enumerate(parts.worst[:, columns]):
-        pull = stages.corner_loadings[:, k, rows].min(axis=0)[:, None] * monomial
+    for k, (loading, factor) in enumerate(zip(lowest_loading, products, strict=True)):
+        pull = loading[:, None] * factor
         lower = pull < lowest
         np.copyto(lowest, pull, where=lower)
         np.copyto(place, first + k, where=lower)

@@ -160,6 +160,13 @@ def input_impedance(topology: Topology, values: Values) -> mpmath.mpf:
     return voltages[first] - voltages[second]
 
 
+def input_impedance_at(topology: Topology, values: Values, node: str) -> mpmath.mpf:
+    """Seen at one node of a pair, the other source dead."""
+    is_held = topology.gain in ("voltage", "transconductance")
+    held = {other: 0 for other in topology.input if other != node} if is_held else {}
+    return _solve(topology, values, held=held, injected={node: 1})[node]
+
+
 def output_impedance(topology: Topology, values: Values) -> mpmath.mpf:
     """Seen by a load; the source is dead."""
     held = dict.fromkeys(topology.input, 0) if topology.gain in ("voltage", "transconductance") else {}

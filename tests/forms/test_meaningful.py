@@ -39,6 +39,8 @@ def solved(topology: Topology, values: networks.Values, formula: Stated) -> mpma
             return networks.input_impedance(topology, values)
         case "z_out":
             return networks.output_impedance(topology, values)
+        case symbol if symbol.startswith("z_"):
+            return networks.input_impedance_at(topology, values, symbol.removeprefix("z_"))
         case _:
             return networks.return_ratio(topology, values, formula.meaning.split()[-1])
 

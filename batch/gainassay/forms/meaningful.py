@@ -100,6 +100,8 @@ class Formulas:
         The closed-loop gain.
     input_impedance, output_impedance : BlackmanFormula | None
         Seen by the source and by the load; None where it is infinite, zero or not defined by the network.
+    inputs : tuple[tuple[str, BlackmanFormula], ...]
+        For a pair, each node and its impedance to ground, the other source dead.
     return_ratios : tuple[tuple[str, Expression], ...]
         Each amplifier's name and return ratio.
     """
@@ -107,6 +109,7 @@ class Formulas:
     quantities: tuple[Quantity, ...]
     gain: GainFormula
     input_impedance: BlackmanFormula | None
+    inputs: tuple[tuple[str, BlackmanFormula], ...]
     output_impedance: BlackmanFormula | None
     return_ratios: tuple[tuple[str, Expression], ...]
 
@@ -119,6 +122,9 @@ class Formulas:
         blackman = "amplifiers dead x (1 + T shorted)/(1 + T open)"
         if self.input_impedance:
             found.append(Stated("z_in", f"input impedance: {blackman}", self.input_impedance.whole))
+        for node, formula in self.inputs:
+            meaning = f"input impedance at {node}, the other source dead: {blackman}"
+            found.append(Stated(f"z_{node}", meaning, formula.whole))
         if self.output_impedance:
             found.append(Stated("z_out", f"output impedance: {blackman}", self.output_impedance.whole))
         for amplifier, ratio in self.return_ratios:
@@ -134,6 +140,7 @@ class Formulas:
             "quantities": [render.tree(quantity) for quantity in self.quantities],
             "gain": _trees(self.gain),
             "input_impedance": None if self.input_impedance is None else _trees(self.input_impedance),
+            "inputs": {node: _trees(formula) for node, formula in self.inputs},
             "output_impedance": None if self.output_impedance is None else _trees(self.output_impedance),
             "return_ratios": {name: render.tree(ratio) for name, ratio in self.return_ratios},
         }
@@ -157,6 +164,7 @@ class Formulas:
             quantities=tuple(_quantity(entry) for entry in found["quantities"]),
             gain=GainFormula(**_expressions(found["gain"])),
             input_impedance=impedances[0],
+            inputs=tuple((node, BlackmanFormula(**_expressions(entry))) for node, entry in found["inputs"].items()),
             output_impedance=impedances[1],
             return_ratios=tuple((name, render.expression_of(ratio)) for name, ratio in found["return_ratios"].items()),
         )
@@ -208,6 +216,8 @@ def derive(topology: Topology, absent: Mapping[str, str] | None = None) -> Formu
     states = {named[name]: state for name, state in (absent or {}).items()}
     gain = gain.without(states)
     seen_by_source = nodal.input_impedance(topology).without(states)
+    pair = topology.input if len(topology.input) > 1 else ()
+    at_inputs = [(node, nodal.input_impedance_at(topology, node).without(states)) for node in pair]
     seen_by_load = nodal.output_impedance(topology).without(states)
     writer = writer_for(found)
     try:
@@ -218,6 +228,11 @@ def derive(topology: Topology, absent: Mapping[str, str] | None = None) -> Formu
         quantities=found,
         gain=gain_found,
         input_impedance=blackman_formula(seen_by_source, found, writer),
+        inputs=tuple(
+            (node, formula)
+            for node, impedance in at_inputs
+            if (formula := blackman_formula(impedance, found, writer)) is not None
+        ),
         output_impedance=blackman_formula(seen_by_load, found, writer),
         return_ratios=tuple(
             (amplifier.name, ratio)

@@ -142,6 +142,12 @@ def input_impedance(topology: Topology) -> Impedance:
     return _driving_point(topology, {GROUND: 0}, first, second)
 
 
+def input_impedance_at(topology: Topology, node: str) -> Impedance:
+    """The impedance between one node of an input pair and ground, the source of the other node dead."""
+    others = [other for other in topology.input if other != node] if driven_by_voltage(topology) else []
+    return _driving_point(topology, dict.fromkeys((GROUND, *others), 0), node, GROUND)
+
+
 def output_impedance(topology: Topology) -> Impedance:
     """The impedance that a load sees at the output, the source dead.
 

@@ -22,8 +22,8 @@ LONGEST_ON_PAGE = 1_000
 
 def _meaning(topology: Topology, formula: Stated) -> str:
     """What a formula is, with its unit."""
-    units = {"G": gain_unit(topology), "gain": gain_unit(topology), "z_in": "ohm", "z_out": "ohm"}
-    unit = units.get(formula.symbol)
+    is_gain = formula.symbol in ("G", "gain")
+    unit = gain_unit(topology) if is_gain else "ohm" if formula.symbol.startswith("z_") else ""
     return f"{formula.meaning} [{unit}]" if unit else formula.meaning
 
 

@@ -21,7 +21,7 @@ from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
 from gainassay.tables.parts import PartTable
-from gainassay.tables.stages import StageTable
+from gainassay.tables.stages import StageTable, left_out
 
 PPM = 1e6
 
@@ -205,17 +205,10 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
 
 def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> Iterator[PortFigure]:
     """Closed-loop input and output impedance, and return ratios, from the proved formulas."""
-    absent = {
-        element.name: element.absent
-        for element, ohms in zip(topology.elements, values, strict=True)
-        if element.absent != "error" and (ohms == 0.0 or np.isinf(ohms))
-    }
-    formulas = formulas_of(topology, {**absent, **topology.at_dc()})
+    formulas = formulas_of(topology, left_out(topology, values[:, None]))
     figures = {element.name: np.float64(ohms) for element, ohms in zip(topology.elements, values, strict=True)}
     with np.errstate(all="ignore"):
-        for index, quantity in enumerate(formulas.quantities[len(topology.elements) :]):
-            departure = np.float64(departures[index % len(DEPARTURES)])
-            figures[quantity.name] = 1.0 / departure if quantity.reciprocal else departure
+        figures |= formulas.data_sheet(departures)
         for formula in formulas.stated()[2:]:
             unit = "ohm" if formula.symbol.startswith("z") else ""
             meaning = formula.meaning.partition(":")[0]

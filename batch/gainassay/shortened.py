@@ -10,20 +10,18 @@ import numpy as np
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.evidence import MISSING
 from gainassay.errors import InputError
-from gainassay.forms import coefficients
 from gainassay.forms.cache import formulas_of
-from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.evaluation import value
 from gainassay.forms.expression import Expression
 from gainassay.forms.meaningful import Formulas
 from gainassay.forms.shortening import Deviation, Shortened
 from gainassay.forms.shortening import shorten as shorten_formula
 from gainassay.forms.topology import Topology
-from gainassay.screen.corners import part_side
+from gainassay.screen.corners import StageBox, part_side, stage_side
+from gainassay.screen.kernel import nominal_errors
 from gainassay.service import Prepared
 from gainassay.tables.parts import PartTable
-from gainassay.tables.stages import StageGroup
+from gainassay.tables.stages import StageGroup, left_out
 
 PAIRS_AT_A_TIME = 200_000
 
@@ -61,7 +59,7 @@ class ShortForm:
 
 
 def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
-    """The shortest form whose verified deviation stays within a share of the required accuracy.
+    """A form shortened as far as its verified deviation stays within a share of the required accuracy.
 
     Deviations are those of the gain at the nominal elements, with the parts' nominal figures and with their
     limits, against the exact gain from the form's coefficient functions.
@@ -76,7 +74,7 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         names = [g.topology.name for g in prepared.stages.groups]
         hint = nearest(topology.name, names) or f"; there are stages of {', '.join(names)}"
         raise InputError(f"{prepared.stages.source}: no usable stage has the topology '{topology.name}'{hint}")
-    absent = {**_absent_everywhere(group), **topology.at_dc()}
+    absent = left_out(topology, group.values)
     formulas = formulas_of(topology, absent)
     unknown = int((prepared.parts.evidence == MISSING).any(axis=0).sum())
     found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, formulas))
@@ -100,21 +98,16 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
     )
 
 
-def _absent_everywhere(group: StageGroup) -> dict[str, str]:
-    absent = {}
-    for element, values in zip(group.topology.elements, group.values, strict=True):
-        if element.absent != "error" and (np.isinf(values) | (values == 0.0)).all() and len(set(values.tolist())) == 1:
-            absent[element.name] = element.absent
-    return absent
-
-
 def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callable[[Expression], Deviation]:
     """A function that gives the deviation of a formula over all pairs of a job."""
-    at = coefficients.evaluate(group.form, coefficients.at_dc(group.form, group.values))
-    figures = []
-    for departures in (parts.nominal, parts.worst):
-        products = part_side(group.form, departures, departures, parts.evidence).nominal
-        figures.append((departures, products))
+    none = np.full(len(group.names), np.nan)
+    stages = stage_side(group.form, StageBox(group.values, np.zeros_like(group.values), group.limits, none))
+    # The exact gains are the same for every formula that is tried.
+    exact = [
+        (departures, stages.gain_ideal[:, None] * (1.0 + nominal_errors(stages, products)))
+        for departures in (parts.nominal, parts.worst)
+        for products in [part_side(group.form, departures, departures, parts.evidence)]
+    ]
     height = max(1, PAIRS_AT_A_TIME // len(parts.names))
 
     def deviation(formula: Expression) -> Deviation:
@@ -122,11 +115,10 @@ def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callabl
         with np.errstate(all="ignore"):
             for top in range(0, len(group.names), height):
                 rows = slice(top, top + height)
-                for departures, products in figures:
-                    error = _sum(at.contrasts[:, rows], products) / (1.0 + _sum(at.loadings[:, rows], products))
-                    exact = at.gain_ideal[rows, None] * (1.0 + error)
-                    values = _values(group, formulas, rows, departures)
-                    share = np.abs(value(formula, values) / exact - 1.0) / group.limits[rows, None]
+                elements = {name: row[rows, None] for name, row in zip(group.form.elements, group.values, strict=True)}
+                for departures, gains in exact:
+                    found = value(formula, {**elements, **formulas.data_sheet(departures[:, None])})
+                    share = np.abs(found / gains[rows] - 1.0) / group.limits[rows, None]
                     share = np.where(np.isnan(share), np.inf, share)
                     stage, part = (int(i) for i in np.unravel_index(int(share.argmax()), share.shape))
                     if share[stage, part] > worst.share:
@@ -134,21 +126,3 @@ def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callabl
         return worst
 
     return deviation
-
-
-def _sum(left: FloatArray, right: FloatArray) -> FloatArray:
-    """sum_k left[k, :, None] * right[k, None, :]."""
-    return np.asarray(np.einsum("ks,kp->sp", left, right))
-
-
-def _values(group: StageGroup, formulas: Formulas, rows: slice, departures: FloatArray) -> dict[str, FloatArray]:
-    """Values of all quantities of a formula: elements of shape (stages, 1), data-sheet quantities (1, parts)."""
-    elements = {name: row[rows, None] for name, row in zip(group.form.elements, group.values, strict=True)}
-    amplifiers = formulas.quantities[len(elements) :]
-    own = {
-        quantity.name: 1.0 / departures[None, i % len(DEPARTURES)]
-        if quantity.reciprocal
-        else departures[None, i % len(DEPARTURES)]
-        for i, quantity in enumerate(amplifiers)
-    }
-    return {**elements, **own}

@@ -18,7 +18,6 @@ from gainassay.report import check as report
 def check(job: Path, fail_on: tuple[str, ...], as_json: bool) -> None:
     """Read the tables of JOB and say what is in them: rows, rejected cells, unknown columns. Nothing is written."""
     prepared = service.prepare(job)
-    service.groups_of(prepared.stages, prepared.parts)
     shared.warn(prepared.warnings())
     if as_json:
         shared.data(report.data(prepared))

@@ -9,7 +9,6 @@ from pathlib import Path
 
 import click
 
-from gainassay import service, shortened
 from gainassay.cli import shared
 from gainassay.contracts.documents import nearest
 from gainassay.errors import InputError
@@ -18,8 +17,6 @@ from gainassay.forms.cache import formulas_of
 from gainassay.forms.meaningful import Formulas
 from gainassay.forms.topology import Topology
 from gainassay.report import formulas as report
-from gainassay.report import shortened as short_report
-from gainassay.report.values import filled_in
 
 KINDS = ("text", "latex", "mathml", "json")
 
@@ -77,6 +74,10 @@ def form(
 
 
 def _for_job(name: str, job: Path, within: float, kind: str) -> None:
+    # Tables and their libraries are needed here alone.
+    from gainassay import service, shortened
+    from gainassay.report import shortened as short_report
+
     prepared = service.prepare(job)
     found = shortened.shorten(prepared, _chosen(name, prepared.topologies), within)
     if kind == "json":
@@ -86,6 +87,8 @@ def _for_job(name: str, job: Path, within: float, kind: str) -> None:
 
 
 def _at(topology: Topology, given: tuple[str, ...], kind: str) -> None:
+    from gainassay.report.values import filled_in
+
     absent, numbers = filled_in(topology, given)
     formulas = formulas_of(topology, absent)
     shared.warn(report.feedback_warnings(topology, absent, numbers))

@@ -116,6 +116,14 @@ def occur(form: Form, pairs: Pairs) -> NDArray[np.bool_]:
     return found
 
 
+def is_feedback_positive(form: Form, at: Coefficients) -> NDArray[np.bool_]:
+    """Whether a loading of products of 1/A_OL alone is negative, so that the output would run to its limit.
+
+    Shape (stages,).
+    """
+    return np.asarray(np.logical_or.reduce(at.loadings[list(form.loops())] < 0.0, axis=0))
+
+
 def gain_ideal(form: Form, pairs: Pairs) -> FloatArray:
     """The ideal gain alone [gain unit], shape (stages,)."""
     return _ratio(form.gain_ideal, pairs)

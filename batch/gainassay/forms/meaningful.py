@@ -11,8 +11,9 @@ output impedance are written as Blackman did, Z = Z_dead (1 + T_short)/(1 + T_op
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, fields
+from itertools import cycle
 from typing import Any
 
 from gainassay.errors import InputError
@@ -112,6 +113,20 @@ class Formulas:
     inputs: tuple[tuple[str, BlackmanFormula], ...]
     output_impedance: BlackmanFormula | None
     return_ratios: tuple[tuple[str, Expression], ...]
+
+    def data_sheet(self, departures: Iterable[Any]) -> dict[str, Any]:
+        """Values of the amplifiers' quantities by name, one part serving all, from its departures.
+
+        Parameters
+        ----------
+        departures : iterable
+            In the order of `DEPARTURES`; numpy numbers or arrays, so that 1/0 is infinity.
+        """
+        amplifiers = [q for q in self.quantities if q.kind not in ("resistor", "capacitor", "inductor")]
+        return {
+            quantity.name: 1.0 / value if quantity.reciprocal else value
+            for quantity, value in zip(amplifiers, cycle(departures), strict=False)
+        }
 
     def stated(self) -> tuple[Stated, ...]:
         """Every formula there is, in the order in which a person reads them."""

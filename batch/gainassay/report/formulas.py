@@ -118,8 +118,8 @@ def feedback_warnings(topology: Topology, absent: Mapping[str, str], values: Map
     form = form_of(topology)
     blank = {"open": np.inf, "short": 0.0}
     ohms = np.array([[blank[absent[name]] if name in absent else values[name]] for name in form.elements])
-    loadings = coefficients.evaluate(form, coefficients.at_dc(form, ohms)).loadings
-    if (loadings[list(form.loops())] < 0.0).any():
+    at = coefficients.evaluate(form, coefficients.at_dc(form, ohms))
+    if coefficients.is_feedback_positive(form, at).any():
         return ["these values make the feedback positive: the output would run to its limit"]
     return []
 

@@ -176,14 +176,13 @@ def tally(screened: Screened) -> Tally:
     candidate = np.where(bounded_rank == best_rank[:, None], np.nan_to_num(used, nan=np.inf), np.inf)
     best = candidate.argmin(axis=1)
     found = best_rank < len(VERDICTS)
+    # NO_TERM is -1, counted in the first place and left out.
+    by_place = np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(term_names(screened.group.form)) + 1)
     return Tally(
         chunk=screened.chunk,
         by_stage=is_verdict.sum(axis=2).T,
         by_part=is_verdict.sum(axis=1).T,
-        # NO_TERM is -1, counted in the first place and left out.
-        dominant=np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(term_names(screened.group.form)) + 1)[
-            1:
-        ],
+        dominant=by_place[1:],
         best_part=np.where(found, best + screened.chunk.parts.start, -1),
         best_rank=best_rank,
         best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),

@@ -185,7 +185,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             & np.isfinite(at_corners.gain_ideal)
             & (np.sign(at_corners.gain_ideal) == np.sign(nominal.gain_ideal[stage]))
             & np.isfinite(corner_error)
-            & (at_corners.loadings[list(form.loops())] >= 0.0).all(axis=0)
+            & ~coefficients.is_feedback_positive(form, at_corners)
         )
         regular = np.logical_and.reduceat(is_regular, visited.first)
         return StageSide(

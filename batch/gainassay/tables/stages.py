@@ -93,6 +93,22 @@ class StageTable:
         return rejected_rows(self.rejects)
 
 
+def left_out(topology: Topology, values: FloatArray) -> dict[str, str]:
+    """What a formula for some stages at 0 Hz may leave out: optional elements that none has, and reactive ones.
+
+    Parameters
+    ----------
+    values : ndarray, shape (elements, stages)
+        As in `StageGroup`.
+    """
+    absent = {
+        element.name: element.absent
+        for element, row in zip(topology.elements, values, strict=True)
+        if element.absent != "error" and (row == row[0]).all() and (row[0] == 0.0 or np.isinf(row[0]))
+    }
+    return {**absent, **topology.at_dc()}
+
+
 def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
     """Read and check a stage table.
 
@@ -237,7 +253,7 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
         return
     found = coefficients.evaluate(group.form, coefficients.at_dc(group.form, group.values))
     finite: NDArray[np.bool_] = np.isfinite(np.concatenate([found.contrasts, found.loadings])).all(axis=0)
-    positive = np.logical_or.reduce(found.loadings[list(group.form.loops())] < 0.0, axis=0)
+    positive = coefficients.is_feedback_positive(group.form, found)
     good = checking.good()
     elements = ", ".join(name for name in group.form.elements if name in checking.raw.columns) or "topology"
     for index, position in enumerate(members):

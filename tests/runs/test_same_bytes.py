@@ -14,6 +14,7 @@ import pyarrow.parquet as pq
 import pytest
 
 from gainassay import resources, service
+from gainassay.runs.tables import REPEATED
 from gainassay.screen import blocks
 
 if TYPE_CHECKING:
@@ -113,6 +114,16 @@ def test_numbers_in_csv_or_in_parquet(write_job: JobWriter) -> None:
     for name, table in tables.items():
         pq.write_table(table, in_parquet.parent / f"{name}.parquet")
     assert files(in_csv) == files(in_parquet)
+
+
+def test_words_are_stored_as_a_dictionary(usual: dict[str, bytes]) -> None:
+    """One with repeated words pyarrow stores as plain text, its missing cells as whatever lay in memory."""
+    for name, content in usual.items():
+        described = pq.read_metadata(pa.BufferReader(content)).row_group(0)
+        columns = [described.column(place) for place in range(described.num_columns)]
+        for column in columns:
+            if column.path_in_schema in REPEATED:
+                assert "RLE_DICTIONARY" in column.encodings, (name, column.path_in_schema)
 
 
 def written(row: Mapping[str, object]) -> dict[str, str]:

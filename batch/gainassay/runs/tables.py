@@ -52,8 +52,15 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         return pa.array(values, mask=~np.isfinite(values))
 
     def words(codes: NDArray[np.integer], meanings: Sequence[str]) -> pa.Array:
-        places = pa.array(codes.astype(np.int32), mask=codes < 0)
-        return pa.DictionaryArray.from_arrays(places, pa.array(meanings, pa.string()))
+        """Coded words as a dictionary that holds each once: pyarrow writes one with repeats as plain text, whose
+        missing cells are whatever lay in memory."""
+        once = list(dict.fromkeys(meanings))
+        place = np.array(
+            [once.index(meaning) for meaning in meanings] if len(once) < len(meanings) else range(len(once))
+        )
+        return pa.DictionaryArray.from_arrays(
+            pa.array(place[codes].astype(np.int32), mask=codes < 0), pa.array(once, pa.string())
+        )
 
     evidences = list(dict.fromkeys(leaning.evidence for leaning in LEANINGS))
     evidence_of = np.array([evidences.index(leaning.evidence) for leaning in LEANINGS])

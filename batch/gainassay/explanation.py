@@ -21,7 +21,8 @@ from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
 from gainassay.tables.parts import PartTable
-from gainassay.tables.stages import StageTable, left_out
+from gainassay.tables.spreads import Spreads
+from gainassay.tables.stages import StageGroup, StageTable, left_out
 
 PPM = 1e6
 
@@ -50,12 +51,23 @@ class Figure:
 
 @dataclass(frozen=True)
 class ElementValue:
-    """An element: nominal value and value at the worst corner [ohm, F, H]; a blank one is 0 or inf."""
+    """An element: nominal value and value at the worst corner [ohm, F, H]; a blank one is 0 or inf.
+
+    Attributes
+    ----------
+    tolerance, temperature, drift : float
+        How far each may take it, up or down, as a fraction.
+    tracks : str
+        The elements that it tracks, if its network's ratios are used.
+    """
 
     name: str
     kind: str
     nominal: float
     tolerance: float
+    temperature: float
+    drift: float
+    tracks: str
     at_worst: float
 
 
@@ -129,7 +141,7 @@ def explain(
     s = int(np.searchsorted(groups[place].stage_names, stage))
     p = int(np.searchsorted(groups[place].part_names, part))
     screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules)
-    return _explanation(screened, stages.groups[place].topology, stage, parts, p)
+    return _explanation(screened, stages.groups[place], s, parts, p)
 
 
 def _require(name: str, known: list[str], kind: str, table: StageTable | PartTable) -> None:
@@ -143,7 +155,8 @@ def _require(name: str, known: list[str], kind: str, table: StageTable | PartTab
     raise InputError(f"{table.source}: there is no usable {kind} {name!r}{hint}")
 
 
-def _explanation(screened: Screened, topology: Topology, stage: str, parts: PartTable, p: int) -> Explanation:
+def _explanation(screened: Screened, of: StageGroup, s: int, parts: PartTable, p: int) -> Explanation:
+    topology, spreads = of.topology, of.spreads
     side, outcome, judgement = screened.stage_side, screened.outcome, screened.judgement
     sets = screened.group.active_sets
     one = slice(0, 1)
@@ -152,7 +165,7 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
     at_nominal = [float(term[0, 0]) * PPM for term in nominal_account(side, screened.part_side)]
     at_worst = [
         np.nan if unbounded else float(term[0, 0]) * PPM
-        for term in account(side, screened.part_side, sets, one, one, outcome.corner)
+        for term in account(side, screened.part_side, sets, one, one, outcome)
     ]
     names = term_names(screened.group.form)
     terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
@@ -160,10 +173,9 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
     reference = float(side.reference[0])
     worst = float(outcome.error_worst[0, 0])
     values = screened.group.box.values[:, screened.chunk.stages][:, 0]
-    tolerances = screened.group.box.tolerances[:, screened.chunk.stages][:, 0]
     at_corner = values if unbounded else side.corner_values[:, corner // len(sets)]
     return Explanation(
-        stage=stage,
+        stage=str(of.names[s]),
         part=str(parts.names[p]),
         topology=topology.name,
         summary=topology.summary,
@@ -181,17 +193,7 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
         evidence=leaning.evidence,
         leans_on=leaning.leans_on,
         dominant_term="" if outcome.dominant[0, 0] == NO_TERM else names[int(outcome.dominant[0, 0])],
-        elements=tuple(
-            ElementValue(name, kind, float(nominal), float(tolerance), float(at_worst))
-            for name, kind, nominal, tolerance, at_worst in zip(
-                screened.group.form.elements,
-                screened.group.form.kinds,
-                values,
-                tolerances,
-                at_corner,
-                strict=True,
-            )
-        ),
+        elements=tuple(_elements(screened, spreads.of(np.array([s])), values, at_corner)),
         figures=tuple(_figures(parts, p, side.matters[:, 0].tolist(), _at_limit(screened.group, corner))),
         terms=tuple(
             sorted(
@@ -201,6 +203,29 @@ def _explanation(screened: Screened, topology: Topology, stage: str, parts: Part
         ),
         ports=tuple(_ports(topology, values, parts.nominal[:, p])),
     )
+
+
+def _elements(
+    screened: Screened, spreads: Spreads, values: FloatArray, at_corner: FloatArray
+) -> Iterator[ElementValue]:
+    form, network = screened.group.form, spreads.network[:, 0]
+    for index, name in enumerate(form.elements):
+        fellows = [
+            other
+            for place, other in enumerate(form.elements)
+            if network[place] == network[index] >= 0 and place != index and not screened.stage_side.untied[0]
+        ]
+        tolerance, temperature, drift = spreads.own[:, index, 0].tolist()
+        yield ElementValue(
+            name=name,
+            kind=form.kinds[index],
+            nominal=float(values[index]),
+            tolerance=tolerance,
+            temperature=temperature,
+            drift=drift,
+            tracks=", ".join(fellows),
+            at_worst=float(at_corner[index]),
+        )
 
 
 def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> Iterator[PortFigure]:

@@ -21,10 +21,16 @@ class StandIn:
         The worst case takes the typical figure times this where there is no limit.
     value : float or None
         Stands in where there is neither limit nor typical figure [unit of the quantity].
+    hot_times : float
+        Over a range of temperatures the worst case takes its figure times this where there is no limit for it.
+    change_pct : float or None
+        Change of the quantity after a calibration, up or down, where a part does not give it [%].
     """
 
     typical_times: float = 1.0
     value: float | None = None
+    hot_times: float = 1.0
+    change_pct: float | None = None
 
 
 @dataclass(frozen=True)

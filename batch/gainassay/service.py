@@ -21,14 +21,15 @@ from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
 from gainassay.runs.folder import File, write
 from gainassay.runs.manifest import manifest
-from gainassay.screen import blocks
+from gainassay.screen import blocks, boxes
 from gainassay.screen.blocks import Group, Screened
-from gainassay.screen.corners import StageBox, term_names
+from gainassay.screen.boxes import StageBox
+from gainassay.screen.corners import moving_terms
 from gainassay.screen.verdicts import Rules
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
 from gainassay.tables.parts import PartTable
-from gainassay.tables.stages import StageTable
+from gainassay.tables.stages import StageGroup, StageTable
 
 
 @dataclass(frozen=True)
@@ -94,14 +95,20 @@ def groups_of(stages: StageTable, parts: PartTable) -> tuple[Group, ...]:
         blocks.group(
             group.form,
             group.names,
-            StageBox(group.values, group.tolerances, group.limits, group.targets),
+            box_of(group),
             parts.names,
             parts.nominal,
-            parts.worst,
-            parts.evidence,
+            parts.worst_hot if group.hot else parts.worst,
+            parts.evidence_hot if group.hot else parts.evidence,
         )
         for group in stages.groups
     )
+
+
+def box_of(group: StageGroup) -> StageBox:
+    """The stages of a group with their boxes."""
+    spreads = group.spreads
+    return boxes.box(group.values, spreads.own, group.limits, group.targets, spreads.network, spreads.ratios)
 
 
 def rules_of(job: Job) -> Rules:
@@ -131,7 +138,11 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
     """
     job, results = prepared.job, prepared.job.results
     groups = groups_of(prepared.stages, prepared.parts)
-    terms = tuple(dict.fromkeys(name for group in groups for name in term_names(group.form))) if results.terms else ()
+    terms = (
+        tuple(dict.fromkeys(name for group in groups for name in moving_terms(group.form, group.box)))
+        if results.terms
+        else ()
+    )
     fingerprint = f"{prepared.stages.sha256} {prepared.parts.sha256} {job.document}"
     with run_folder.begin(results.folder, prepared.started, fingerprint) as unfinished:
         (unfinished.folder / "verdicts").mkdir()
@@ -162,6 +173,11 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         committed = unfinished.commit(content)
     hopeless = stages.column("stage").filter(pc.equal(stages.column("pass"), 0)).to_pylist()
     return Done(committed, content, tuple(hopeless))
+
+
+def _terms(groups: Sequence[Group]) -> tuple[str, ...]:
+    """Terms that any stage of a screen can have, in the order of the accounts."""
+    return tuple(dict.fromkeys(name for group in groups for name in moving_terms(group.form, group.box)))
 
 
 def _write_verdicts(folder: Path, place: int, screened: Screened, results: Results, terms: Sequence[str]) -> list[File]:

@@ -17,7 +17,8 @@ from gainassay.forms.meaningful import Formulas
 from gainassay.forms.shortening import Deviation, Shortened
 from gainassay.forms.shortening import shorten as shorten_formula
 from gainassay.forms.topology import Topology
-from gainassay.screen.corners import StageBox, part_side, stage_side
+from gainassay.screen.boxes import with_tolerances
+from gainassay.screen.corners import part_side, stage_side
 from gainassay.screen.kernel import nominal_errors
 from gainassay.service import Prepared
 from gainassay.tables.parts import PartTable
@@ -101,7 +102,7 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
 def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callable[[Expression], Deviation]:
     """A function that gives the deviation of a formula over all pairs of a job."""
     none = np.full(len(group.names), np.nan)
-    stages = stage_side(group.form, StageBox(group.values, np.zeros_like(group.values), group.limits, none))
+    stages = stage_side(group.form, with_tolerances(group.values, np.zeros_like(group.values), group.limits, none))
     # The exact gains are the same for every formula that is tried.
     exact = [
         (departures, stages.gain_ideal[:, None] * (1.0 + nominal_errors(stages, products)))

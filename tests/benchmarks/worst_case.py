@@ -21,7 +21,8 @@ from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.screen import kernel
-from gainassay.screen.corners import PartSide, StageBox, StageSide, active_sets, part_side, stage_side
+from gainassay.screen.boxes import StageBox, with_tolerances
+from gainassay.screen.corners import PartSide, StageSide, active_sets, part_side, stage_side
 from gainassay.screen.signs import reach
 
 REPEATS = 3
@@ -35,7 +36,7 @@ def stages_of(topology: Topology, count: int) -> StageBox:
         if element.absent != "error":
             row[rng.random(count) < 0.5] = {"open": np.inf, "short": 0.0}[element.absent]
     tolerances = np.where(np.isfinite(values) & (values > 0.0), 1e-3, 0.0)
-    return StageBox(values, tolerances, np.full(count, 1e-3), np.full(count, np.nan))
+    return with_tolerances(values, tolerances, np.full(count, 1e-3), np.full(count, np.nan))
 
 
 def parts_of(form: Form, count: int) -> tuple[PartSide, np.ndarray]:

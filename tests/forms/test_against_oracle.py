@@ -16,7 +16,8 @@ from gainassay.forms import soundness
 from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
-from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
+from gainassay.screen.boxes import with_tolerances
+from gainassay.screen.corners import active_sets, part_side, stage_side
 from gainassay.screen.kernel import nominal_account, screen
 
 POINTS = 200
@@ -29,7 +30,7 @@ def account(
     """E and its terms, shape (terms, points), of stage i with part i, as the screen computes them; and G_ideal."""
     values = np.array([[point[name] for point in ohms] for name in form.elements])
     none = np.full(len(ohms), np.nan)
-    stages = stage_side(form, StageBox(values, np.zeros_like(values), np.ones(len(ohms)), none))
+    stages = stage_side(form, with_tolerances(values, np.zeros_like(values), np.ones(len(ohms)), none))
     departures = np.array([[1.0 / part.a_ol, 1.0 / part.r_id, part.r_o] for part in parts]).T
     side = part_side(form, departures, departures, np.zeros(departures.shape, np.uint8))
     outcome = screen(stages, side, active_sets(form))

@@ -17,7 +17,8 @@ from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.slopes import Polynomial
 from gainassay.forms.topology import Topology
-from gainassay.screen.corners import StageBox, StageSide, active_sets, elements_error, part_side, stage_side
+from gainassay.screen.boxes import StageBox, with_tolerances
+from gainassay.screen.corners import StageSide, active_sets, elements_error, part_side, stage_side
 from gainassay.screen.kernel import UNBOUNDED, Outcome, screen
 from gainassay.screen.signs import bounds, reach
 
@@ -38,7 +39,7 @@ def boxes(
         if element.absent != "error":
             row[rng.random(count) < 0.4] = {"open": np.inf, "short": 0.0}[element.absent]
     chosen = np.where(np.isfinite(values) & (values > 0.0), rng.choice(tolerances, values.shape), 0.0)
-    return StageBox(values, chosen, np.full(count, 1e-3), np.full(count, np.nan))
+    return with_tolerances(values, chosen, np.full(count, 1e-3), np.full(count, np.nan))
 
 
 def wide_parts(rng: np.random.Generator, count: int) -> Array:
@@ -83,8 +84,10 @@ def test_a_stage_of_three_amplifiers_needs_few_corners_and_equals_the_visit_of_e
     form, rng = derive(LIBRARY["instrumentation_3"]), np.random.default_rng(0)
     assert not all(slope.is_whole for slope in form.slopes)
     box = boxes(LIBRARY["instrumentation_3"], rng, 6, (3.0, 5.5), [1e-3])
-    for column in box.tolerances.T:  # every corner of eight elements would take too long to visit
+    tolerances = tolerances_of(box)
+    for column in tolerances.T:  # every corner of eight elements would take too long to visit
         column[rng.permutation(8)[:4]] = 0.0
+    box = with_tolerances(box.values, tolerances, box.limits, box.targets)
     limits = np.array([[1e-4, 1e-6], [1e-6, 1e-9], [100.0, 20.0]])
     few, every = stage_side(form, box, reach(form, limits)), stage_side(form, box)
     found, whole = screened(form, few, limits), screened(form, every, limits)
@@ -101,6 +104,10 @@ def random_network(rng: random.Random) -> Topology:
     chosen = rng.sample(pairs, min(len(pairs), rng.randint(2, 6)))
     amplifiers = [(rng.choice(["ground", *nodes]), rng.choice(nodes), "out")]
     return oracle.network({f"r{i}": pair for i, pair in enumerate(chosen)}, amplifiers)
+
+
+def tolerances_of(box: StageBox) -> Array:
+    return box.ends()[1] - 1.0
 
 
 def oracle_worst(topology: Topology, values: Array, tolerances: Array, limits: Array) -> tuple[float, float]:
@@ -140,7 +147,7 @@ def test_random_networks_with_wide_boxes_and_several_parts() -> None:
         outcome = screened(form, side, limits)
         fewer += int((corners(side) < corners(stage_side(form, box)))[side.regular].sum())
         for s, p in np.argwhere(outcome.corner != UNBOUNDED).tolist():
-            worst, inside = oracle_worst(topology, box.values[:, s], box.tolerances[:, s], limits[:, p])
+            worst, inside = oracle_worst(topology, box.values[:, s], tolerances_of(box)[:, s], limits[:, p])
             found = abs(float(outcome.error_worst[s, p]))
             assert found == pytest.approx(worst, rel=1e-8, abs=1e-10), (topology, box.values[:, s], limits[:, p])
             assert inside <= found * (1.0 + 1e-8) + 1e-10, (topology, box.values[:, s], limits[:, p])
@@ -221,14 +228,14 @@ def test_bounds_hold_everywhere_inside() -> None:
     limits = wide_parts(rng, 4)
     box = boxes(topology, rng, 30, (1.0, 6.0), [0.0, 0.05, 0.3])
     pairs = coefficients.at_dc(form, box.values)
-    low, high = (coefficients.Pairs(pairs.y, pairs.z * (1.0 + end * box.tolerances)) for end in (-1.0, 1.0))
+    low, high = (coefficients.Pairs(pairs.y, pairs.z * (1.0 + end * tolerances_of(box))) for end in (-1.0, 1.0))
     reached = reach(form, limits)
     assert reached.slopes
     for place, polynomial, _ in reached.slopes:
         least, most = bounds(polynomial, low, high)
         terms = form.slopes[place].terms
         for _ in range(20):
-            z = pairs.z * (1.0 + box.tolerances * rng.uniform(-1, 1, pairs.z.shape))
+            z = pairs.z * (1.0 + tolerances_of(box) * rng.uniform(-1, 1, pairs.z.shape))
             departures = limits[:, rng.integers(4)] * rng.choice([0.0, 1.0, rng.uniform()], 3)
             found = np.zeros(30)
             for value, exponents in terms:
@@ -255,6 +262,6 @@ def test_a_table_with_poorer_parts_changes_no_number_beyond_rounding() -> None:
 def test_numbers_beyond_all_use_are_not_leaned_on() -> None:
     form = derive(LIBRARY["inverting"])
     values = np.array([[0.0], [1e-160], [1e5], [np.inf]])
-    box = StageBox(values, np.array([[0.0], [0.1], [0.1], [0.0]]), np.ones(1), np.array([np.nan]))
+    box = with_tolerances(values, np.array([[0.0], [0.1], [0.1], [0.0]]), np.ones(1), np.array([np.nan]))
     limits = np.array([[1e-5], [1e-7], [50.0]])
     assert corners(stage_side(form, box, reach(form, limits)))[0] == corners(stage_side(form, box))[0]

@@ -10,7 +10,8 @@ import pytest
 from gainassay.contracts.evidence import ASSUMED, EVIDENCE, GUARANTEED, MISSING, TYPICAL
 from gainassay.forms.form import derive
 from gainassay.forms.library import library
-from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
+from gainassay.screen.boxes import with_tolerances
+from gainassay.screen.corners import active_sets, part_side, stage_side
 from gainassay.screen.kernel import screen
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules, judge
 
@@ -20,7 +21,7 @@ FORM = derive(library()["inverting"])
 
 def judged(evidence: tuple[int, int, int], limit: float, rules: Rules = PLAIN) -> tuple[str, str, str, float, str]:
     values = np.array([[0.0], [1e4], [1e5], [np.inf]])
-    stages = stage_side(FORM, StageBox(values, np.zeros_like(values), np.array([limit]), np.array([np.nan])))
+    stages = stage_side(FORM, with_tolerances(values, np.zeros_like(values), np.array([limit]), np.array([np.nan])))
     limits = np.array([[1e-5], [1e-7], [50.0]])
     parts = part_side(FORM, limits, limits, np.array(evidence, np.uint8)[:, None])
     outcome = screen(stages, parts, active_sets(FORM))
@@ -78,7 +79,7 @@ def test_guard_band_and_basis(evidence: int, limit: float, rules: Rules, verdict
 
 def test_what_does_not_matter_to_a_stage_is_not_leaned_on() -> None:
     values = np.array([[0.0], [1e4], [1e5], [np.inf]])
-    stages = stage_side(FORM, StageBox(values, np.zeros_like(values), np.array([1e-2]), np.array([np.nan])))
+    stages = stage_side(FORM, with_tolerances(values, np.zeros_like(values), np.array([1e-2]), np.array([np.nan])))
     limits = np.array([[1e-5], [0.0], [50.0]])
     parts = part_side(FORM, limits, limits, np.array([[GUARANTEED], [MISSING], [GUARANTEED]], np.uint8))
     outcome = screen(stages, parts, active_sets(FORM))

@@ -13,7 +13,8 @@ from gainassay.forms import soundness
 from gainassay.forms.form import derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
-from gainassay.screen.corners import StageBox, active_sets, part_side, stage_side
+from gainassay.screen.boxes import StageBox, with_tolerances
+from gainassay.screen.corners import active_sets, part_side, stage_side, term_names
 from gainassay.screen.kernel import UNBOUNDED, Outcome, account, screen
 from gainassay.screen.signs import reach
 
@@ -55,12 +56,12 @@ def screened(
     form = derive(topology)
     values = np.array([[ohms[name]] for name in form.elements])
     present = np.isfinite(values) & (values > 0)
-    box = StageBox(values, np.where(present, tolerance, 0.0), np.ones(1), np.array([target]))
+    box = with_tolerances(values, np.where(present, tolerance, 0.0), np.ones(1), np.array([target]))
     limits = np.array([[1.0 / part.a_ol], [1.0 / part.r_id], [part.r_o]])
     stages = stage_side(form, box, reach(form, limits))
     parts = part_side(form, limits, limits, np.zeros((3, 1), np.uint8))
     outcome = screen(stages, parts, active_sets(form))
-    terms = account(stages, parts, active_sets(form), ALL, ALL, outcome.corner)
+    terms = account(stages, parts, active_sets(form), ALL, ALL, outcome)
     return outcome, np.array([float(term[0, 0]) for term in terms])
 
 
@@ -121,7 +122,7 @@ def several(seed: int, stages: int, parts: int) -> tuple[StageBox, NDArray[np.fl
     values[form.elements.index("r_source"), ::2] = 0.0
     values[form.elements.index("r_load"), ::3] = np.inf
     tolerances = np.where(np.isfinite(values) & (values > 0), rng.choice([0.0, 1e-3, 1e-2], values.shape), 0.0)
-    box = StageBox(values, tolerances, np.full(stages, 1e-3), np.full(stages, np.nan))
+    box = with_tolerances(values, tolerances, np.full(stages, 1e-3), np.full(stages, np.nan))
     limits = np.array(
         [1e-6 * 10 ** rng.uniform(0, 3, parts), 10 ** -rng.uniform(5, 9, parts), 10 ** rng.uniform(0, 3, parts)]
     )
@@ -157,10 +158,11 @@ def test_no_bit_depends_on_the_company() -> None:
 def test_tolerances_shares_are_alike_for_elements_that_play_the_same_part() -> None:
     form = derive(LIBRARY["summing_2_in1"])
     values = np.array([[1e4], [1e4], [1e5], [np.inf]])
-    box = StageBox(values, np.array([[0.01], [0.0], [0.01], [0.0]]), np.ones(1), np.array([np.nan]))
+    box = with_tolerances(values, np.array([[0.01], [0.0], [0.01], [0.0]]), np.ones(1), np.array([np.nan]))
     side = stage_side(form, box)
     assert side.corner_terms.sum(axis=0) + side.set_point == pytest.approx(side.corner_error, abs=1e-15)
     up_down = int(side.corner_error.argmax())
-    low, _, high, _ = side.corner_terms[:, up_down]
+    shares = dict(zip(term_names(form)[1:], side.corner_terms[:, up_down], strict=False))
+    low, high = shares["r1.tolerance"], shares["r_f.tolerance"]
     # r1 down by 1 % and r_f up by 1 % weigh nearly the same: their exact ratio is 1.01/0.99 / 1.01 apart.
     assert low == pytest.approx(high, rel=0.02)

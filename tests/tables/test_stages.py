@@ -13,6 +13,7 @@ import pyarrow.parquet as pq
 import pytest
 
 from gainassay import job as jobs
+from gainassay.contracts.moves import TOLERANCE
 from gainassay.errors import InputError
 from gainassay.forms.topology import Topology
 from gainassay.tables import stages
@@ -176,7 +177,7 @@ def test_an_elements_own_tolerance_comes_first(
     write_job: JobWriter, load: Load, cells: dict[str, str], wanted: Sequence[float]
 ) -> None:
     (group,) = load(write_job(stages=[GOOD | cells])).groups
-    assert group.tolerances[:, 0].tolist() == pytest.approx(wanted, rel=1e-15)
+    assert group.spreads.own[TOLERANCE, :, 0].tolist() == pytest.approx(wanted, rel=1e-15)
 
 
 @pytest.mark.parametrize(

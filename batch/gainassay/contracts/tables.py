@@ -13,9 +13,12 @@ from gainassay import resources
 ELEMENT = "<element>"
 """Stands in a column's name for any element of the stage's topology."""
 
+NETWORK = "<network>"
+"""Stands in a column's name for any network of resistors that a stage names."""
+
 _PLACEHOLDER = re.compile("<[a-z]+>")
 
-ELEMENT_SUFFIXES = ("_tol_pct",)
+ELEMENT_SUFFIXES = ("_tol_pct", "_tc_ppm_k", "_drift_pct", "_network")
 """What may follow an element's name in a column of the stage table."""
 
 

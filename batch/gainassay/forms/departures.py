@@ -38,6 +38,16 @@ class Departure:
         """Column of the data-sheet limit that bounds the departure."""
         return f"{self.quantity}_{'min' if self.reciprocal else 'max'}"
 
+    @property
+    def hot_column(self) -> str:
+        """Column of the limit that holds over temperature."""
+        return f"{self.limit_column}_hot"
+
+    @property
+    def change_column(self) -> str:
+        """Column of the quantity's change over temperature and supply after a calibration."""
+        return f"{self.quantity}_change_pct"
+
 
 DEPARTURES = (
     Departure("a", "a_ol", True, "open_loop_gain", "V/V"),

@@ -7,8 +7,11 @@ polynomials, such a difference keeps its sign; subtracted as floating-point prod
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
 
 from gainassay.forms.multiaffine import MultiAffine
 
@@ -17,6 +20,9 @@ Polynomial = tuple[tuple[int, tuple[int, ...]], ...]
 
 MOST_PRODUCTS = 20_000
 """Products of terms that a slope may take to form whole; beyond it forming and bounding it costs more than it saves."""
+
+MOST_SCALED = 4_000_000
+"""Products of terms that the slope of a common factor may take."""
 
 
 @dataclass(frozen=True)
@@ -45,6 +51,43 @@ class Slope:
 def slopes(numerator: MultiAffine, denominator: MultiAffine, elements: int, departures: int) -> tuple[Slope, ...]:
     """Slopes of numerator / denominator in each element's admittance, then in each departure."""
     return tuple(_slope(numerator, denominator, 1 << i, elements, departures) for i in range(elements + departures))
+
+
+def of_common_factor(numerator: Polynomial, denominator: Polynomial, members: Sequence[bool]) -> Polynomial | None:
+    """Numerator of the gain's derivative in the logarithm of a factor common to the admittances of some elements.
+
+    With x the sum of y_i d/dy_i over these elements, a product's x is the product times the number of members in it;
+    the numerator is (x N) D - N (x D), in which all pairs of products with as many members cancel. So what leaves the
+    elements' ratios alone moves an ideal gain of ratios not at all, exactly.
+
+    Parameters
+    ----------
+    members : sequence of bool
+        For each element whether it is one.
+
+    Returns
+    -------
+    Polynomial or None
+        None where it would take more than `MOST_SCALED` products of terms.
+    """
+    if len(numerator) * len(denominator) > MOST_SCALED:
+        return None
+    variables = len(denominator[0][1])
+    chosen = sum(1 << i for i, member in enumerate(members) if member)
+    (top, over), (bottom, under) = (_masks(polynomial) for polynomial in (numerator, denominator))
+    counts = [np.bitwise_count(masks & chosen).astype(np.int64) for masks in (top, bottom)]
+    left, right = np.nonzero(counts[0][:, None] != counts[1])
+    keys = ((top[left] & bottom[right]) << 32) | top[left] | bottom[right]
+    products, place = np.unique(keys, return_inverse=True)
+    sums = np.zeros(len(products), np.int64)
+    np.add.at(sums, place, over[left] * under[right] * (counts[0][left] - counts[1][right]))
+    found = zip(products.tolist(), sums.tolist(), strict=True)
+    return tuple((value, _exponents(key >> 32, key & 0xFFFFFFFF, variables)) for key, value in found if value)
+
+
+def _masks(polynomial: Polynomial) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    masks = [sum(e << i for i, e in enumerate(exponents)) for _, exponents in polynomial]
+    return np.array(masks, np.int64), np.array([value for value, _ in polynomial], np.int64)
 
 
 def polynomial(multiaffine: MultiAffine, variables: int) -> Polynomial:

@@ -37,13 +37,14 @@ def text(found: Explanation) -> list[str]:
         "",
         "Elements",
         *table(
-            ["  element", "nominal", "tolerance", "at the worst corner"],
+            ["  element", "nominal", "tolerance", "temperature", "drift", "at the worst corner", ""],
             [
                 [
                     f"  {e.name}",
                     element(e.nominal, e.kind),
-                    f"{e.tolerance * 100:.6g} %" if e.tolerance else "-",
+                    *(f"{spread * 100:.6g} %" if spread else "-" for spread in (e.tolerance, e.temperature, e.drift)),
                     element(e.at_worst, e.kind),
+                    f"tracks {e.tracks}" if e.tracks else "",
                 ]
                 for e in found.elements
             ],

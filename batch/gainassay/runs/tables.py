@@ -83,7 +83,7 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
     }
     if terms:
         whole = [slice(0, length) for length in shape]
-        found = account(sides, screened.part_side, screened.group.active_sets, whole[0], whole[1], outcome.corner)
+        found = account(sides, screened.part_side, screened.group.active_sets, whole[0], whole[1], outcome)
         values = {name: term.ravel()[kept] for name, term in zip(names, found, strict=True) if name in terms}
         nothing = np.full(len(kept), np.nan)
         for name in terms:

@@ -15,9 +15,9 @@ from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
+from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import (
     PartSide,
-    StageBox,
     StageSide,
     active_sets,
     elements_error,
@@ -134,7 +134,7 @@ def group(
         box,
         part_side(form, nominal, worst, evidence),
         active_sets(form),
-        reach(form, worst),
+        reach(form, worst, box.memberships()),
     )
 
 

@@ -1,8 +1,9 @@
 """The two sides of a screen before they meet: stages at every corner of their tolerances, parts at their limits.
 
-A corner of a pair is a corner of the stage (each toleranced element at its lower or upper end) together with
-a corner of the part (each departure at 0 or at its limit). At a corner of the part the products m_k are either
-what the limits give or 0, so its corners come down to sets of *active* products, most of them shared.
+A corner of a pair is a corner of the stage (each element, and what the elements of a network have in common, at its
+lower or upper end) together with a corner of the part (each departure at 0 or at its limit). At a corner of the
+part the products m_k are either what the limits give or 0, so its corners come down to sets of *active* products,
+most of them shared.
 
 Where `signs` proves in which direction a variable moves the gain, only the end is visited at which the gain is
 largest and the one at which it is smallest; of the other variables every combination of ends. What is visited
@@ -18,40 +19,23 @@ from itertools import product
 import numpy as np
 from numpy.typing import NDArray
 
+from gainassay.contracts.moves import MOVES
 from gainassay.errors import InputError
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import Coefficients, FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
+from gainassay.screen.boxes import StageBox, of_members
+from gainassay.screen.boxes import product as product_of_moves
 from gainassay.screen.signs import FALLS, FIXED, OPEN, RISES, Reach, directions
+from gainassay.screen.tracking import Slack, slack
 
 MOST_OPEN_ELEMENTS = 14
 """Beyond this the corners of one stage, two to that power, are too many to visit."""
 
 SET_POINT = "set_point"
-TOLERANCE = "{}.tolerance"
-
-
-@dataclass(frozen=True)
-class StageBox:
-    """Stages of one topology with their tolerances.
-
-    Attributes
-    ----------
-    values, tolerances : ndarray, shape (elements, stages)
-        Nominal values [ohm] and tolerances as fractions.
-    limits, targets : ndarray, shape (stages,)
-        Required accuracy as a fraction; target gain [gain unit] or nan.
-    """
-
-    values: FloatArray
-    tolerances: FloatArray
-    limits: FloatArray
-    targets: FloatArray
-
-    def part(self, stages: slice) -> StageBox:
-        """Some of the stages."""
-        return StageBox(self.values[:, stages], self.tolerances[:, stages], self.limits[stages], self.targets[stages])
+TRACKING = "tracking"
+"""The term of what the members of networks do together."""
 
 
 @dataclass(frozen=True)
@@ -90,14 +74,19 @@ class StageSide:
         n_k - d_k and d_k at each corner.
     corner_error : ndarray, shape (corners,)
         (ideal gain at the corner - reference)/reference.
-    corner_terms : ndarray, shape (elements, corners)
-        Share of each element's tolerance in that; with `set_point` they sum to it.
+    corner_terms : ndarray, shape (moves x elements + 1, corners)
+        Share of each of `MOVES` of each element, then of what the members of all networks do together, in that; with
+        `set_point` they sum to it.
     plans : tuple[Plan, ...]
         Which corners to visit; every stage is in one of them.
     regular : ndarray of bool, shape (stages,)
         Whether, at every corner, all is finite, the ideal gain keeps its sign and the feedback is negative.
     matters : ndarray of bool, shape (departures, stages)
         Whether a departure, of any amplifier, has a coefficient that is not zero.
+    untied : ndarray of bool, shape (stages,)
+        Whether networks are taken not to track, since nothing bounds the gain between the ends of their common factor.
+    slack : Slack or None
+        How far it may lie beyond the ends; none if no stage has a network that tracks.
     """
 
     gain_ideal: FloatArray
@@ -115,6 +104,8 @@ class StageSide:
     plans: tuple[Plan, ...]
     regular: NDArray[np.bool_]
     matters: NDArray[np.bool_]
+    untied: NDArray[np.bool_]
+    slack: Slack | None
 
 
 @dataclass(frozen=True)
@@ -125,22 +116,32 @@ class PartSide:
     ----------
     nominal, worst : ndarray, shape (terms, parts)
         The products m_k at the nominal figures, and with every departure at its limit.
+    limits : ndarray, shape (departures, parts)
+        The departures at their limits, in the order of `DEPARTURES`.
     evidence : ndarray of uint8, shape (departures, parts)
         What each limit rests on.
     """
 
     nominal: FloatArray
     worst: FloatArray
+    limits: FloatArray
     evidence: NDArray[np.uint8]
 
     def part(self, parts: slice) -> PartSide:
         """Some of the parts."""
-        return PartSide(self.nominal[:, parts], self.worst[:, parts], self.evidence[:, parts])
+        return PartSide(self.nominal[:, parts], self.worst[:, parts], self.limits[:, parts], self.evidence[:, parts])
 
 
 def term_names(form: Form) -> tuple[str, ...]:
-    """Names of all terms of a row's account, in the order of every account: set-point, tolerances, departures."""
-    return (SET_POINT, *(TOLERANCE.format(element) for element in form.elements), *form.terms)
+    """Names of all terms of a row's account, in its order: set-point, elements, networks, departures."""
+    return (SET_POINT, *(f"{name}.{move}" for name in form.elements for move in MOVES), TRACKING, *form.terms)
+
+
+def moving_terms(form: Form, box: StageBox) -> tuple[str, ...]:
+    """Names of the terms that are not 0 from the outset for all of these stages."""
+    own = (box.own.low < box.own.high).any(axis=2).T
+    moves: list[bool] = [True, *own.ravel().tolist(), bool(box.common.moves().any()), *(True for _ in form.terms)]
+    return tuple(name for name, moving in zip(term_names(form), moves, strict=True) if moving)
 
 
 def active_sets(form: Form) -> tuple[tuple[int, ...], ...]:
@@ -167,16 +168,15 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
     InputError
         If more elements have a tolerance than can be visited corner by corner.
     """
-    # At 0 Hz no tolerance of a capacitor or an inductor matters.
-    is_resistor = np.array([kind == "resistor" for kind in form.kinds])
-    tolerances = np.where(is_resistor[:, None], box.tolerances, 0.0)
+    box = box.at_dc(form.kinds)
     nominal = coefficients.evaluate(form, coefficients.at_dc(form, box.values))
     reference = np.where(np.isnan(box.targets), nominal.gain_ideal, box.targets)
-    visited = _visited(form, box.values, tolerances, reached)
-    stage = visited.stage
-    values = box.values[:, stage] * (1.0 + np.where(visited.is_upper, 1.0, -1.0) * tolerances[:, stage])
+    visited = _visited(form, box, reached)
+    stage, box = visited.stage, visited.box
+    factors = _factors(box, visited)
+    values = box.values[:, stage] * product_of_moves(factors.own) * product_of_moves(factors.together)
     at_corners = coefficients.evaluate(form, coefficients.at_dc(form, values))
-    terms = _tolerance_terms(form, box.values[:, stage], values, tolerances, reference[stage])
+    terms = _elements_terms(form, box.values[:, stage], factors, reference[stage])
     with np.errstate(invalid="ignore"):
         corner_error = (at_corners.gain_ideal - reference[stage]) / reference[stage]
         is_regular = (
@@ -203,7 +203,9 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             corner_terms=terms,
             plans=_with_a_bound(visited.plans, regular),
             regular=regular,
-            matters=_matters(form, box.values, tolerances, at_corners, visited.first),
+            matters=_matters(form, box, at_corners, visited.first),
+            untied=visited.untied,
+            slack=visited.slack,
         )
 
 
@@ -214,24 +216,38 @@ class _Visited:
     Attributes
     ----------
     stage : ndarray of int, shape (corners,)
-    is_upper : ndarray of bool, shape (elements, corners)
-        Whether an element is at the upper end of its tolerance; elements without one are not.
+    is_upper : ndarray of bool, shape (elements + networks, corners)
+        Whether an element, or what a network has in common, is at its upper end; what does not move is not.
     first : ndarray of int, shape (stages,)
+    box : StageBox
+        The stages' box, in which the networks of `untied` stages do not track.
     """
 
     stage: NDArray[np.intp]
     is_upper: NDArray[np.bool_]
     first: NDArray[np.intp]
     plans: tuple[Plan, ...]
+    box: StageBox
+    untied: NDArray[np.bool_]
+    slack: Slack | None
 
 
-def _visited(form: Form, values: FloatArray, tolerances: FloatArray, reached: Reach | None) -> _Visited:
+def _visited(form: Form, box: StageBox, reached: Reach | None) -> _Visited:
     sets = active_sets(form)
-    everywhere = _everywhere(form, tolerances)
-    known = everywhere
-    if reached is not None:
-        found = directions(reached, values, tolerances)
-        known = np.where(found.proved, found.of, everywhere)
+    untied = np.zeros(len(box.limits), dtype=bool)
+    room: Slack | None = None
+    if reached is None:
+        known = _everywhere(form, box)
+    else:
+        found = directions(reached, box)
+        tracks = box.common.moves().any(axis=0)
+        if tracks.any():
+            room = slack(reached, box)
+            untied = tracks & ~(found.proved & np.isfinite(room.rises + room.falls).all(axis=(0, 1)))
+            if untied.any():
+                box, room = box.untied(untied), room.without(untied)
+                found = directions(reached, box)
+        known = np.where(found.proved, found.of, _everywhere(form, box))
     # Two of the same pattern visit the same corners; there are few patterns.
     patterns, pattern_of = np.unique(known, axis=1, return_inverse=True)
     pattern_of = pattern_of.reshape(-1)
@@ -239,19 +255,47 @@ def _visited(form: Form, values: FloatArray, tolerances: FloatArray, reached: Re
     counts = np.array([len(recipe.ends) for recipe in recipes], np.intp)[pattern_of]
     first = np.concatenate([[0], np.cumsum(counts)[:-1]])
     stage = np.repeat(np.arange(len(counts)), counts)
-    is_upper = np.empty((len(form.elements), len(stage)), dtype=bool)
+    is_upper = np.empty((len(known) - len(form.departures), len(stage)), dtype=bool)
     plans: dict[tuple[tuple[int, int], ...], list[NDArray[np.intp]]] = {}
     for place, recipe in enumerate(recipes):
         members = np.flatnonzero(pattern_of == place)
         plans.setdefault(recipe.corners, []).append(members)
         for j, ends in enumerate(recipe.ends):
-            is_upper[:, first[members] + j] = np.array(ends)[:, None]
+            is_upper[:, first[members] + j] = np.array(ends, dtype=bool)[:, None]
     return _Visited(
         stage,
         is_upper,
         first,
         tuple(Plan(np.sort(np.concatenate(members)), corners) for corners, members in plans.items()),
+        box,
+        untied,
+        room,
     )
+
+
+@dataclass(frozen=True)
+class _Factors:
+    """Factors on the nominal values at some corners, each of shape (moves, elements, corners).
+
+    Attributes
+    ----------
+    own, together : ndarray
+        By which each element moves alone, and with its network.
+    """
+
+    own: FloatArray
+    together: FloatArray
+
+
+def _factors(box: StageBox, visited: _Visited) -> _Factors:
+    elements = len(box.values)
+
+    def at_ends(low: FloatArray, high: FloatArray, is_upper: NDArray[np.bool_]) -> FloatArray:
+        return np.where(is_upper, high[:, :, visited.stage], low[:, :, visited.stage])
+
+    own = at_ends(box.own.low, box.own.high, visited.is_upper[:elements])
+    common = at_ends(box.common.low, box.common.high, visited.is_upper[elements:])
+    return _Factors(own, of_members(box.network[:, visited.stage], common))
 
 
 def _with_a_bound(plans: tuple[Plan, ...], regular: NDArray[np.bool_]) -> tuple[Plan, ...]:
@@ -260,11 +304,11 @@ def _with_a_bound(plans: tuple[Plan, ...], regular: NDArray[np.bool_]) -> tuple[
     return tuple(plan for plan in (*kept, Plan(np.flatnonzero(~regular), ())) if len(plan.stages))
 
 
-def _everywhere(form: Form, tolerances: FloatArray) -> NDArray[np.int8]:
+def _everywhere(form: Form, box: StageBox) -> NDArray[np.int8]:
     """Directions that leave no corner out."""
-    known = np.full((len(form.elements) + len(form.departures), tolerances.shape[1]), OPEN, np.int8)
-    known[: len(form.elements)][tolerances == 0.0] = FIXED
-    return known
+    moves = np.concatenate([box.own.moves(), box.common.moves()])
+    departures = np.full((len(form.departures), len(box.limits)), OPEN, np.int8)
+    return np.concatenate([np.where(moves, np.int8(OPEN), np.int8(FIXED)), departures])
 
 
 @dataclass(frozen=True)
@@ -274,7 +318,7 @@ class _Recipe:
     Attributes
     ----------
     ends : tuple[tuple[bool, ...], ...]
-        The corners of the stage, the lower ends first: which elements are at their upper ends.
+        The corners of the stage, the lower ends first: which elements and networks are at their upper ends.
     corners : tuple[tuple[int, int], ...]
         As in `Plan`.
     """
@@ -285,11 +329,11 @@ class _Recipe:
 
 def _recipe(form: Form, sets: tuple[tuple[int, ...], ...], pattern: NDArray[np.int8]) -> _Recipe:
     """For the largest and for the smallest gain, all ends of the variables of open direction."""
-    count = len(form.elements)
+    count = len(pattern) - len(form.departures)
     is_open = (pattern == OPEN).tolist()
     if sum(is_open[:count]) > MOST_OPEN_ELEMENTS:
         raise InputError(
-            f"topology '{form.topology}': {sum(is_open[:count])} elements of a stage have a tolerance that may move "
+            f"topology '{form.topology}': {sum(is_open[:count])} elements of a stage may each move "
             f"the gain either way; at most {MOST_OPEN_ELEMENTS} can be taken to every corner"
         )
     place = {active: q for q, active in enumerate(sets)}
@@ -347,56 +391,61 @@ def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDAr
                 found[k] *= values[kinds[departure]]
         return found
 
-    return PartSide(products(nominal), products(worst), evidence)
+    return PartSide(products(nominal), products(worst), worst, evidence)
 
 
-def _tolerance_terms(
-    form: Form, nominal: FloatArray, values: FloatArray, tolerances: FloatArray, reference: FloatArray
-) -> FloatArray:
-    """Share of each element's tolerance in the ideal gain's error at each corner.
+def _elements_terms(form: Form, nominal: FloatArray, factors: _Factors, reference: FloatArray) -> FloatArray:
+    """Share of what moves each element, and all networks, in the ideal gain's error at each corner.
 
-    The elements are moved from nominal to the corner one after the other, once in their order and once in the
-    reverse order, and each gets the mean of its two steps. The shares sum to the whole exactly, and two
-    elements that play the same part get the same share.
+    The elements are moved from nominal to the corner one step after the other, once in their order and once in the
+    reverse order, and each step's share is the mean of the two. The shares sum to the whole, and two elements that
+    play the same part get the same share.
 
     Parameters
     ----------
-    nominal, values : ndarray, shape (elements, corners)
+    nominal : ndarray, shape (elements, corners)
     reference : ndarray, shape (corners,)
 
     Returns
     -------
-    ndarray, shape (elements, corners)
+    ndarray, shape (moves x elements + 1, corners)
     """
-    shares = np.zeros_like(values)
-    toleranced = np.flatnonzero((tolerances > 0.0).any(axis=1)).tolist()
-    for order in (toleranced, toleranced[::-1]):
+    elements = len(nominal)
+    shares = np.zeros((len(MOVES) * elements + 1, nominal.shape[1]))
+    steps = [
+        (element * len(MOVES) + move, slice(element, element + 1), factors.own[move, element])
+        for element in range(elements)
+        for move in range(len(MOVES))
+    ]
+    steps.append((elements * len(MOVES), slice(0, elements), product_of_moves(factors.together)))
+    steps = [step for step in steps if (step[2] != 1.0).any()]
+    for order in (steps, steps[::-1]):
         moved = nominal.copy()
         before = coefficients.gain_ideal(form, coefficients.at_dc(form, moved))
-        for element in order:
-            moved[element] = values[element]
+        for row, which, factor in order:
+            moved[which] *= factor
             after = coefficients.gain_ideal(form, coefficients.at_dc(form, moved))
             with np.errstate(invalid="ignore"):
-                shares[element] += (after - before) / reference / 2.0
+                shares[row] += (after - before) / reference / 2.0
             before = after
     return shares
 
 
-def _matters(
-    form: Form, values: FloatArray, tolerances: FloatArray, at_corners: Coefficients, first: NDArray[np.intp]
-) -> NDArray[np.bool_]:
+def _matters(form: Form, box: StageBox, at_corners: Coefficients, first: NDArray[np.intp]) -> NDArray[np.bool_]:
     """Whether a departure has a coefficient that is not 0 at every corner of the stage, visited or not."""
+    values, moves = box.values, box.own.moves() | (box.network >= 0)
     used = np.logical_or.reduceat(_used(at_corners), first, axis=1)
     # A coefficient may vanish by balance at the corners visited, and not at others.
     doubtful = ~used & coefficients.occur(form, coefficients.at_dc(form, values))
-    for s in np.flatnonzero(doubtful.any(axis=0) & (tolerances > 0.0).any(axis=0)).tolist():
-        moved = np.flatnonzero(tolerances[:, s])
+    ends = np.stack(box.ends())
+    for s in np.flatnonzero(doubtful.any(axis=0) & moves.any(axis=0)).tolist():
+        moved = np.flatnonzero(moves[:, s])
         if len(moved) > MOST_OPEN_ELEMENTS:
             used[:, s] |= doubtful[:, s]
             continue
-        is_upper = np.array(list(product((-1.0, 1.0), repeat=len(moved)))).T
+        is_upper = np.array(list(product((0, 1), repeat=len(moved)))).T
         corners = np.repeat(values[:, s, None], is_upper.shape[1], axis=1)
-        corners[moved] *= 1.0 + is_upper * tolerances[moved, s, None]
+        corners[moved] *= ends[is_upper, moved[:, None], s]
         used[:, s] |= _used(coefficients.evaluate(form, coefficients.at_dc(form, corners))).any(axis=1)
     matters = np.zeros((len(DEPARTURES), values.shape[1]), dtype=bool)
     for index, departure in enumerate(DEPARTURES):

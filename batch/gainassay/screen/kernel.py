@@ -12,7 +12,7 @@ that).
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
 from gainassay.screen.corners import PartSide, Plan, StageSide
+from gainassay.screen.tracking import excess
 
 PAIRS_PER_BLOCK = 32_768
 """Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
@@ -43,6 +44,8 @@ class Outcome:
         Place, in the account, of the term of largest magnitude at that corner.
     dominant_value : ndarray
         That term as a fraction; nan where there is no finite bound.
+    beyond : ndarray or None
+        The part of the error by which it may lie beyond that corner, since networks track; none for all pairs.
     """
 
     error_nominal: FloatArray
@@ -50,6 +53,7 @@ class Outcome:
     corner: NDArray[np.int32]
     dominant: NDArray[np.int16]
     dominant_value: FloatArray
+    beyond: FloatArray | None = None
 
 
 def screen(
@@ -75,7 +79,28 @@ def screen(
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         for plan, rows, columns in _blocks(stages, shape[1], block):
             _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
-    return outcome
+    return outcome if stages.slack is None else _beyond_corners(stages, parts, active_sets, outcome)
+
+
+def _beyond_corners(
+    stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], outcome: Outcome
+) -> Outcome:
+    """The outcome with the errors that may lie between the ends of networks' common factors.
+
+    Not below what either the largest or the smallest gain may go beyond its corner: the error of smaller magnitude is
+    that of a gain nearer to the target.
+    """
+    assert stages.slack is not None
+    size = np.abs(outcome.error_worst)
+    beyond = np.copysign((1.0 + size) * np.expm1(excess(stages.slack, parts.limits)), outcome.error_worst)
+    widened = replace(outcome, error_worst=outcome.error_worst + beyond, beyond=beyond)
+    every = slice(None)
+    for place, term in enumerate(account(stages, parts, active_sets, every, every, widened)):
+        larger = np.abs(term) > (np.abs(widened.dominant_value) if place else -1.0)
+        larger &= outcome.corner != UNBOUNDED
+        np.copyto(widened.dominant, place, where=larger)
+        np.copyto(widened.dominant_value, term, where=larger)
+    return widened
 
 
 def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BLOCK) -> FloatArray:
@@ -216,19 +241,22 @@ def account(
     active_sets: Sequence[Sequence[int]],
     rows: slice,
     columns: slice,
-    corner: NDArray[np.int32],
+    outcome: Outcome,
 ) -> Iterator[FloatArray]:
     """The terms of each pair's error at its corner, one array of shape (rows, columns) after the other.
 
     They come in the order of `corners.term_names` and sum to the error. Where the corner is `UNBOUNDED` they
     mean nothing.
     """
+    corner = outcome.corner[rows, columns]
     j, q = np.divmod(np.maximum(corner, 0), len(active_sets))
     s = np.arange(*rows.indices(len(stages.limits)))[:, None]
     at = stages.first[s] + j
     yield np.broadcast_to(stages.set_point[s], corner.shape)
-    for shares in stages.corner_terms:
+    *alone, together = stages.corner_terms
+    for shares in alone:
         yield shares[at]
+    yield together[at] if outcome.beyond is None else together[at] + outcome.beyond[rows, columns]
 
     is_active = np.zeros((len(parts.worst), len(active_sets)))
     for place, active in enumerate(active_sets):

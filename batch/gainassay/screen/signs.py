@@ -7,7 +7,7 @@ that variable are visited.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,8 +17,9 @@ from gainassay.forms import coefficients
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
-from gainassay.forms.slopes import Polynomial
+from gainassay.forms.slopes import Polynomial, of_common_factor
 from gainassay.forms.soundness import sign
+from gainassay.screen.boxes import StageBox
 
 ROUNDING = 1e-12
 """Share of a polynomial's magnitudes that bounds its rounding error: thousands of terms of some tens of factors."""
@@ -27,8 +28,8 @@ DECADES = 100
 """Decades that elements may be away from 1 ohm, all together, and departures from 1: so no product of two of each
 overflows or underflows, and a bound that comes out as 0 is 0."""
 
-STAGES_AT_A_TIME = 1024
-"""So that the terms of a long slope for all of them take some megabytes; no bit depends on it."""
+TERMS_AT_A_TIME = 4_000_000
+"""So that the terms of a long slope, for some stages at a time, take some megabytes; no bit depends on it."""
 
 RISES, FALLS, OPEN, FIXED = 1, -1, 0, 2
 """The gain as a function of one variable: it does not fall; it does not rise; not known; the variable has one value."""
@@ -46,12 +47,15 @@ class Bounded:
         To which the polynomial is homogeneous in each element's pair.
     products : tuple
         For each product of departures: its terms, and its least and largest value over the parts.
+    powers : ndarray of int, shape (products, departures)
+        Its exponents.
     """
 
     coefficients: FloatArray
     exponents: NDArray[np.intp]
     degrees: NDArray[np.intp]
     products: tuple[tuple[slice, float, float], ...]
+    powers: NDArray[np.intp]
 
 
 @dataclass(frozen=True)
@@ -75,10 +79,17 @@ class Reach:
     Attributes
     ----------
     form : Form
+    limits : ndarray, shape (departures, parts)
+        The departures of the form at their limits.
     signs : ndarray of int8, shape (elements + departures,)
         What is known of each slope whatever the values.
     slopes : tuple
         For the others: place among the variables, the polynomial, and what it leaves out.
+    networks : Mapping
+        For each set of elements that make up a network in some stage, the gain's slope in the logarithm of their
+        common factor; None where it is too long to form.
+    numerator : Bounded
+        N.
     moved : ndarray of bool, shape (departures,)
         Whether any part has the departure at all.
     ideal, whole : Bounded
@@ -91,8 +102,11 @@ class Reach:
     """
 
     form: Form
+    limits: FloatArray
     signs: NDArray[np.int8]
     slopes: tuple[tuple[int, Bounded, Remainder | None], ...]
+    networks: Mapping[tuple[bool, ...], Bounded | None]
+    numerator: Bounded
     moved: NDArray[np.bool_]
     ideal: Bounded
     whole: Bounded
@@ -106,8 +120,8 @@ class Directions:
 
     Attributes
     ----------
-    of : ndarray of int8, shape (elements + departures, stages)
-        `RISES`, `FALLS`, `OPEN` or `FIXED`; elements by their resistance.
+    of : ndarray of int8, shape (elements + networks + departures, stages)
+        `RISES`, `FALLS`, `OPEN` or `FIXED`; elements, and what a network's have in common, by their resistance.
     proved : ndarray of bool, shape (stages,)
         Whether ideal gain and denominator keep their signs, and no loading of a loop is negative, over the box:
         only then do the directions give the worst case.
@@ -117,13 +131,15 @@ class Directions:
     proved: NDArray[np.bool_]
 
 
-def reach(form: Form, worst: FloatArray) -> Reach:
+def reach(form: Form, worst: FloatArray, networks: Iterable[tuple[bool, ...]] = ()) -> Reach:
     """How far the departures of a parts table reach in a form.
 
     Parameters
     ----------
     worst : ndarray, shape (departures, parts)
         The departures at their limits, in the order of `DEPARTURES`.
+    networks : iterable
+        The sets of elements that make up a network in some stage.
     """
     place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
     limits = worst[[place[symbol] for _, symbol in form.departures]]
@@ -140,6 +156,7 @@ def reach(form: Form, worst: FloatArray) -> Reach:
     degrees = np.array(fraction, np.intp).max(axis=0)
     return Reach(
         form=form,
+        limits=limits,
         signs=np.array([slope.sign for slope in form.slopes], np.int8),
         slopes=tuple(
             (index, _bounded(slope.terms, limits, _degrees(slope.terms, count)), None)
@@ -152,6 +169,8 @@ def reach(form: Form, worst: FloatArray) -> Reach:
             for index, slope in enumerate(form.slopes)
             if slope.terms
         ),
+        networks={members: _of_network(form, members, limits, degrees) for members in networks},
+        numerator=_bounded(form.numerator, limits, degrees),
         moved=(limits != 0.0).any(axis=1),
         ideal=_bounded([term for term in form.numerator if term[1][count:] == nothing], limits, degrees),
         whole=_bounded(form.denominator, limits, degrees),
@@ -160,8 +179,16 @@ def reach(form: Form, worst: FloatArray) -> Reach:
     )
 
 
-def _largest_product(limits: FloatArray, powers: NDArray[np.intp]) -> float:
-    """By multiplication: pow() may differ between machines and with the place of a part in the table."""
+def _of_network(form: Form, members: tuple[bool, ...], limits: FloatArray, degrees: NDArray[np.intp]) -> Bounded | None:
+    slope = of_common_factor(form.numerator, form.denominator, members)
+    return None if slope is None else _bounded(slope, limits, 2 * degrees)
+
+
+def largest_product(limits: FloatArray, powers: NDArray[np.intp]) -> float:
+    """The largest product of powers of departures over the parts.
+
+    By multiplication: pow() may differ between machines and with the place of a part in the table.
+    """
     found = np.ones(limits.shape[1])
     for limit, power in zip(limits, powers.tolist(), strict=True):
         for _ in range(power):
@@ -212,7 +239,7 @@ def _bounded(terms: Sequence[tuple[int, tuple[int, ...]]], limits: FloatArray, d
     for end in range(1, len(ordered) + 1):
         if end == len(ordered) or ordered[end][1][elements:] != ordered[start][1][elements:]:
             powers = exponents[start, elements:]
-            largest = _largest_product(limits, powers)
+            largest = largest_product(limits, powers)
             products.append((slice(start, end), 0.0 if powers.any() else 1.0, largest))
             start = end
     return Bounded(
@@ -220,57 +247,80 @@ def _bounded(terms: Sequence[tuple[int, tuple[int, ...]]], limits: FloatArray, d
         exponents=exponents[:, :elements],
         degrees=degrees,
         products=tuple(products),
+        powers=exponents[[terms.start for terms, _, _ in products], elements:],
     )
 
 
-def directions(reached: Reach, values: FloatArray, tolerances: FloatArray) -> Directions:
-    """What is proved of some stages.
+def stages_at_a_time(polynomials: Sequence[Bounded]) -> int:
+    """How many stages to bound polynomials for at a time; no bit depends on it."""
+    longest = max((len(polynomial.coefficients) for polynomial in polynomials), default=1)
+    return max(1, min(1024, TERMS_AT_A_TIME // max(1, longest)))
 
-    Parameters
-    ----------
-    values, tolerances : ndarray, shape (elements, stages)
-        Nominal values [ohm, F, H] and tolerances as fractions.
-    """
+
+def at_ends(form: Form, box: StageBox) -> tuple[coefficients.Pairs, coefficients.Pairs]:
+    """The elements at the lower and at the upper ends of their ranges, on one scale so that bounds of terms compare."""
+    nominal = coefficients.at_dc(form, box.values)
+    low, high = (coefficients.Pairs(nominal.y, nominal.z * factor) for factor in box.ends())
+    return low, high
+
+
+def directions(reached: Reach, box: StageBox) -> Directions:
+    """What is proved of some stages."""
+    polynomials = [polynomial for _, polynomial, _ in reached.slopes]
+    polynomials += [slope for slope in reached.networks.values() if slope is not None]
+    step = stages_at_a_time(polynomials)
     blocks = [
-        _directions(
-            reached, values[:, start : start + STAGES_AT_A_TIME], tolerances[:, start : start + STAGES_AT_A_TIME]
-        )
-        for start in range(0, values.shape[1], STAGES_AT_A_TIME)
+        _directions(reached, box.part(slice(start, start + step))) for start in range(0, box.values.shape[1], step)
     ]
     return Directions(
         np.concatenate([block.of for block in blocks], axis=1), np.concatenate([block.proved for block in blocks])
     )
 
 
-def _directions(reached: Reach, values: FloatArray, tolerances: FloatArray) -> Directions:
+def _directions(reached: Reach, box: StageBox) -> Directions:
     form = reached.form
-    count = len(form.elements)
+    count, networks = len(form.elements), box.common.low.shape[1]
+    own, common = box.own.moves(), box.common.moves()
     with np.errstate(over="ignore", invalid="ignore", under="ignore"):
-        nominal = coefficients.at_dc(form, values)
-        # One scale for both ends, so that bounds of terms compare.
-        low, high = (coefficients.Pairs(nominal.y, nominal.z * (1.0 + end * tolerances)) for end in (-1.0, 1.0))
-        of = np.empty((len(reached.signs), values.shape[1]), np.int8)
+        low, high = at_ends(form, box)
+        of = np.empty((len(reached.signs), box.values.shape[1]), np.int8)
         of[:] = reached.signs[:, None]
         for place, polynomial, remainder in reached.slopes:
-            if not (tolerances[place].any() if place < count else reached.moved[place - count]):
+            if not (own[place].any() if place < count else reached.moved[place - count]):
                 continue  # it has one value anyway
             least, most = bounds(polynomial, low, high)
             if remainder is not None:
                 left_out = _largest(remainder, low, high)
                 least, most = least - left_out, most + left_out
-            of[place] = np.where(least >= 0.0, RISES, np.where(most <= 0.0, FALLS, OPEN))
+            of[place] = _direction(least, most)
         # A resistance moves the gain against its admittance.
         of[:count] *= -1
-        of[:count][tolerances == 0.0] = FIXED
+        of[:count][~own] = FIXED
         of[count:][~reached.moved] = FIXED
-        decades = _decades(np.where(nominal.y * nominal.z == 0.0, 1.0, values))
-        proved = reached.usable & (decades.sum(axis=0) <= DECADES) & (tolerances < 1.0).all(axis=0)
+        together = np.full((networks, box.values.shape[1]), OPEN, np.int8)
+        for members, slope in reached.networks.items():
+            is_network = networks_of(box, members)
+            if slope is not None and is_network.any():
+                together = np.where(is_network, -_direction(*bounds(slope, low, high)), together)
+        together[~common] = FIXED
+        decades = _decades(np.where(low.y * high.z == 0.0, 1.0, box.values))
+        proved = reached.usable & (decades.sum(axis=0) <= DECADES) & (box.ends()[0] > 0.0).all(axis=0)
         of_ideal, of_whole = (_sign(*bounds(polynomial, low, high)) for polynomial in (reached.ideal, reached.whole))
         proved &= (of_ideal != 0) & (of_whole != 0)
         for polynomial in reached.loops:
             least, most = bounds(polynomial, low, high)
             proved &= np.where(of_whole > 0, least >= 0.0, most <= 0.0)
-    return Directions(of, proved)
+    return Directions(np.concatenate([of[:count], together, of[count:]]), proved)
+
+
+def _direction(least: FloatArray, most: FloatArray) -> NDArray[np.int8]:
+    return np.where(least >= 0.0, RISES, np.where(most <= 0.0, FALLS, OPEN)).astype(np.int8)
+
+
+def networks_of(box: StageBox, members: tuple[bool, ...]) -> NDArray[np.bool_]:
+    """Which networks of the stages have just these members; shape (networks, stages)."""
+    places = np.arange(box.common.low.shape[1])[:, None, None]
+    return np.asarray(((box.network == places) == np.array(members)[:, None]).all(axis=1))
 
 
 def _largest(remainder: Remainder, low: coefficients.Pairs, high: coefficients.Pairs) -> FloatArray:
@@ -304,20 +354,28 @@ def bounds(polynomial: Bounded, low: coefficients.Pairs, high: coefficients.Pair
     tuple of ndarray, shape (stages,)
         Not above and not below any value. Exactly 0 where the elements that are open or short leave nothing.
     """
+    least, most = np.zeros(low.y.shape[1]), np.zeros(low.y.shape[1])
+    bounded = bounds_by_product(polynomial, low, high)
+    for (below, above), (_, smallest, largest) in zip(bounded, polynomial.products, strict=True):
+        least += below * np.where(below < 0.0, largest, smallest)
+        most += above * np.where(above > 0.0, largest, smallest)
+    return least, most
+
+
+def bounds_by_product(
+    polynomial: Bounded, low: coefficients.Pairs, high: coefficients.Pairs
+) -> Iterator[tuple[FloatArray, FloatArray]]:
+    """Bounds of what stands with each product of departures, in the order of `polynomial.products`."""
     at_low, at_high = (_terms(polynomial, pairs) for pairs in (low, high))
     weights = polynomial.coefficients[:, None]
     # z falls as an admittance rises, but terms are products of y and z >= 0: all of them grow with z.
     falls = weights < 0.0
     lower, upper = weights * np.where(falls, at_high, at_low), weights * np.where(falls, at_low, at_high)
     size = np.abs(weights) * at_high
-    least, most = np.zeros(at_low.shape[1]), np.zeros(at_low.shape[1])
-    for terms, smallest, largest in polynomial.products:
+    for terms, _, _ in polynomial.products:
         # accumulate() adds one term after the other whatever the number of stages; sum() does not.
         below, above, slack = (np.add.accumulate(table[terms], axis=0)[-1] for table in (lower, upper, size))
-        below, above = below - ROUNDING * slack, above + ROUNDING * slack
-        least += below * np.where(below < 0.0, largest, smallest)
-        most += above * np.where(above > 0.0, largest, smallest)
-    return least, most
+        yield below - ROUNDING * slack, above + ROUNDING * slack
 
 
 def _terms(polynomial: Bounded, pairs: coefficients.Pairs) -> FloatArray:

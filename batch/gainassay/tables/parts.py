@@ -21,6 +21,8 @@ from gainassay.tables import sources
 from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
 from gainassay.tables.rejects import Reject, rejected_rows
 
+PER_PCT = 1e-2
+
 
 @dataclass(frozen=True)
 class PartTable:
@@ -38,6 +40,13 @@ class PartTable:
         Its upper bound in the worst case; the lower bound is 0.
     evidence : ndarray of uint8, shape (departures, parts)
         What `worst` rests on, a place in `EVIDENCE`. MISSING: nothing is known, and 0 stands there.
+    worst_hot, evidence_hot : ndarray, shape (departures, parts)
+        The same for stages that work over a range of temperatures.
+    change : ndarray, shape (departures, parts)
+        How much the quantity, not the departure, may change after a calibration, up or down as a fraction; inf where
+        nothing is known of it.
+    evidence_change : ndarray of uint8, shape (departures, parts)
+        What `change` rests on; GUARANTEED where nothing is known of it, since nothing is claimed.
     modelled : tuple[bool, ...]
         Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
         evidence GUARANTEED, since nothing is claimed about it.
@@ -52,6 +61,10 @@ class PartTable:
     nominal: FloatArray
     worst: FloatArray
     evidence: NDArray[np.uint8]
+    worst_hot: FloatArray
+    evidence_hot: NDArray[np.uint8]
+    change: FloatArray
+    evidence_change: NDArray[np.uint8]
     modelled: tuple[bool, ...]
     rejects: tuple[Reject, ...]
     rejected_names: Mapping[str, int]
@@ -88,14 +101,12 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
     raw = sources.read(path)
     known = tables.columns("parts")
     require_columns(raw, "parts")
-    gain_columns = [column.name for column in known if column.name.startswith(OPEN_LOOP_GAIN.quantity)]
+    gain_columns = _figure_columns(OPEN_LOOP_GAIN)
     if not set(gain_columns) & set(raw.columns):
         raise InputError(f"{path}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
     checking = Checking.of(raw)
     names = checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
-    nominal, worst, evidence = (np.array(arrays) for arrays in zip(*(r[:3] for r in read), strict=True))
-
     kept = np.flatnonzero(checking.good())
     order = kept[np.argsort(names[kept].astype(np.str_))]
     rows = len(raw.rows) + len(raw.ragged)
@@ -106,51 +117,96 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
         sha256=raw.sha256,
         rows=rows,
         names=names[order].astype(np.str_),
-        nominal=nominal[:, order],
-        worst=worst[:, order],
-        evidence=evidence[:, order].astype(np.uint8),
-        modelled=tuple(r[3] for r in read),
+        nominal=np.array([one.nominal[order] for one in read]),
+        worst=np.array([one.worst[order] for one in read]),
+        evidence=np.array([one.evidence[order] for one in read], np.uint8),
+        worst_hot=np.array([one.worst_hot[order] for one in read]),
+        evidence_hot=np.array([one.evidence_hot[order] for one in read], np.uint8),
+        change=np.array([one.change[order] for one in read]),
+        evidence_change=np.array([one.evidence_change[order] for one in read], np.uint8),
+        modelled=tuple(one.modelled for one in read),
         rejects=checking.found(),
         rejected_names=checking.rejected_names(names),
         warnings=unknown_columns(raw, [column.name for column in known]),
     )
 
 
-def _departure(
-    checking: Checking, departure: Departure, stand_in: StandIn
-) -> tuple[FloatArray, FloatArray, NDArray[np.int64], bool]:
-    """Nominal, worst, evidence of one departure, each of shape (rows,), and whether it is modelled."""
+def _figure_columns(departure: Departure) -> list[str]:
+    """The columns that may give a departure's quantity."""
+    return [
+        column.name
+        for column in tables.columns("parts")
+        if column.name.startswith(f"{departure.quantity}_") and column.name != departure.change_column
+    ]
+
+
+@dataclass(frozen=True)
+class _Read:
+    """One departure of all rows, as `PartTable` has them; arrays of shape (rows,)."""
+
+    nominal: FloatArray
+    worst: FloatArray
+    evidence: NDArray[np.int64]
+    worst_hot: FloatArray
+    evidence_hot: NDArray[np.int64]
+    change: FloatArray
+    evidence_change: NDArray[np.int64]
+    modelled: bool
+
+
+def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _Read:
+    """Read one departure of all rows."""
     limit_column, typical_column = departure.limit_column, f"{departure.quantity}_typ"
     limit, limit_given = _figure(checking, limit_column)
     typical, typical_given = _figure(checking, typical_column)
-    crossed = typical < limit if departure.reciprocal else typical > limit
-    for position in np.flatnonzero(crossed):
-        named = (
-            f"{_filled_column(checking, limit_column, position)}, {_filled_column(checking, typical_column, position)}"
-        )
-        relation = "the minimum lies above" if departure.reciprocal else "the maximum lies below"
-        checking.refuse(int(position), named, f"{relation} the typical figure")
+    hot, hot_given = _figure(checking, departure.hot_column)
+    _refuse_crossed(checking, departure, limit_column, limit, typical_column, typical)
+    _refuse_crossed(checking, departure, departure.hot_column, hot, typical_column, typical)
+    change, evidence_change = _change(checking, departure, stand_in)
 
-    has_column = any(
-        column.name in checking.raw.columns and column.name.startswith(f"{departure.quantity}_")
-        for column in tables.columns("parts")
-    )
-    if not has_column and stand_in.value is None:
-        nothing = np.zeros(len(limit))
-        return nothing, nothing, np.full(len(limit), GUARANTEED), False
+    if not set(_figure_columns(departure)) & set(checking.raw.columns) and stand_in.value is None:
+        nothing, certain = np.zeros(len(limit)), np.full(len(limit), GUARANTEED)
+        return _Read(nothing, nothing, certain, nothing, certain, change, evidence_change, False)
     assumed = np.nan if stand_in.value is None else stand_in.value
     figure = np.where(limit_given, limit, np.where(typical_given, typical * stand_in.typical_times, assumed))
-    nominal = np.where(typical_given, typical, np.where(limit_given, limit, assumed))
+    nominal = np.where(typical_given, typical, np.where(limit_given, limit, np.where(hot_given, hot, assumed)))
     evidence = np.where(
         limit_given, GUARANTEED, np.where(typical_given, TYPICAL, MISSING if np.isnan(assumed) else ASSUMED)
     )
-    missing = evidence == MISSING
-    return (
-        _as_departure(nominal, missing, departure),
-        _as_departure(figure, missing, departure),
-        evidence,
-        True,
+    # A limit over temperature holds at 25 degrees Celsius too.
+    only_hot = hot_given & ~limit_given
+    figure, evidence = np.where(only_hot, hot, figure), np.where(only_hot, GUARANTEED, evidence)
+    worst = _as_departure(figure, evidence == MISSING, departure)
+    over_temperature = np.where(hot_given, hot, figure * stand_in.hot_times)
+    weaker = np.where(evidence == MISSING, MISSING, ASSUMED) if stand_in.hot_times != 1.0 else evidence
+    return _Read(
+        nominal=_as_departure(nominal, np.isnan(nominal), departure),
+        worst=worst,
+        evidence=evidence,
+        worst_hot=np.maximum(worst, _as_departure(over_temperature, evidence == MISSING, departure)),
+        evidence_hot=np.where(hot_given, GUARANTEED, weaker),
+        change=change,
+        evidence_change=evidence_change,
+        modelled=True,
     )
+
+
+def _refuse_crossed(
+    checking: Checking, departure: Departure, limit_column: str, limit: FloatArray, column: str, typical: FloatArray
+) -> None:
+    crossed = typical < limit if departure.reciprocal else typical > limit
+    for position in np.flatnonzero(crossed):
+        named = f"{_filled_column(checking, limit_column, position)}, {_filled_column(checking, column, position)}"
+        relation = "the minimum lies above" if departure.reciprocal else "the maximum lies below"
+        checking.refuse(int(position), named, f"{relation} the typical figure")
+
+
+def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tuple[FloatArray, NDArray[np.int64]]:
+    """Change after a calibration as a fraction, and what it rests on."""
+    cells = checking.column(tables.column("parts", departure.change_column))
+    assumed = np.inf if stand_in.change_pct is None else stand_in.change_pct * PER_PCT
+    evidence = np.where(cells.blank & np.isfinite(assumed), ASSUMED, GUARANTEED)
+    return np.where(cells.blank, assumed, cells.values * PER_PCT), evidence
 
 
 def _as_departure(figure: FloatArray, missing: NDArray[np.bool_], departure: Departure) -> FloatArray:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from gainassay.contracts import tables
 from gainassay.contracts.documents import nearest
+from gainassay.contracts.moves import TEMPERATURE
 from gainassay.contracts.quantities import Numbers, text_of
 from gainassay.errors import InputError
 from gainassay.forms import coefficients
@@ -18,9 +19,10 @@ from gainassay.forms.cache import form_of
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology
-from gainassay.tables import sources
+from gainassay.tables import sources, spreads
 from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
 from gainassay.tables.rejects import Reject, rejected_rows
+from gainassay.tables.spreads import SpreadColumns, Spreads
 
 BLANK = {
     ("resistor", "open"): np.inf,
@@ -37,7 +39,7 @@ PER_PCT, PER_PPM = 1e-2, 1e-6
 
 @dataclass(frozen=True)
 class StageGroup:
-    """The stages of one topology, ordered by name.
+    """The stages of one topology that work under the same conditions, ordered by name.
 
     Attributes
     ----------
@@ -45,8 +47,12 @@ class StageGroup:
         Names.
     values : ndarray, shape (elements, stages)
         Nominal values [ohm, F, H]; a blank one is 0 or inf. Order of the form's elements.
-    tolerances : ndarray, shape (elements, stages)
-        Tolerance, plus or minus, as a fraction.
+    spreads : Spreads
+        How far the elements may lie from their nominal values.
+    hot : bool
+        Whether they work over a range of temperatures.
+    calibrated : bool
+        Whether their gain is trimmed at 25 degrees Celsius, so that only what moves afterwards counts.
     limits : ndarray, shape (stages,)
         Required accuracy as a fraction.
     targets : ndarray, shape (stages,)
@@ -57,7 +63,9 @@ class StageGroup:
     form: Form
     names: NDArray[np.str_]
     values: FloatArray
-    tolerances: FloatArray
+    spreads: Spreads
+    hot: bool
+    calibrated: bool
     limits: FloatArray
     targets: FloatArray
 
@@ -128,35 +136,37 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
     names = checking.names("stage")
     chosen = _topologies(checking, library)
     general = {
-        name: checking.column(tables.column("stages", name))
-        for name in ("accuracy_pct", "accuracy_ppm", "target_gain", "tol_pct")
+        name: checking.column(tables.column("stages", name)) for name in ("accuracy_pct", "accuracy_ppm", "target_gain")
     }
     limits = _limits(checking, general["accuracy_pct"], general["accuracy_ppm"])
-    known = [name for name in elements if name in raw.columns or f"{name}_tol_pct" in raw.columns]
+    known = [name for name in elements if name in raw.columns]
     values = {name: checking.column(tables.column("stages", f"<{kinds[name]}>").of(name)) for name in known}
-    own_tolerances = {
-        name: checking.column(tables.column("stages", f"{tables.ELEMENT}_tol_pct").of(name)) for name in known
-    }
+    moving = spreads.read(checking, elements)
+    is_hot, is_calibrated = ~np.isnan(moving.excursion), _calibrated(checking)
 
     groups = []
     for name in sorted(set(chosen) & set(library)):
-        topology = library[name]
-        members = np.flatnonzero(chosen == name)
-        form = form_of(topology)
-        nominal = _values(checking, topology, members, values)
-        group = StageGroup(
-            topology=topology,
-            form=form,
-            names=names[members].astype(np.str_),
-            values=nominal,
-            tolerances=_tolerances(topology, members, nominal, general["tol_pct"], own_tolerances),
-            limits=limits[members],
-            targets=general["target_gain"].values[members],
-        )
-        _refuse_without_form(checking, group, members)
-        kept = np.flatnonzero(checking.good()[members])
-        if len(kept):
-            groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
+        for calibrated, hot in ((False, False), (False, True), (True, False), (True, True)):
+            members = np.flatnonzero((chosen == name) & (is_hot == hot) & (is_calibrated == calibrated))
+            if not len(members):
+                continue
+            topology = library[name]
+            nominal = _values(checking, topology, members, values)
+            group = StageGroup(
+                topology=topology,
+                form=form_of(topology),
+                names=names[members].astype(np.str_),
+                values=nominal,
+                spreads=spreads.of(moving, checking, topology, members, nominal),
+                hot=hot,
+                calibrated=calibrated,
+                limits=limits[members],
+                targets=general["target_gain"].values[members],
+            )
+            _refuse_without_form(checking, group, members)
+            kept = np.flatnonzero(checking.good()[members])
+            if len(kept):
+                groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
     rows = len(raw.rows) + len(raw.ragged)
     if not groups:
         raise InputError(nothing_left(path, rows, checking.found(), "stage"))
@@ -167,10 +177,44 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         groups=tuple(groups),
         rejects=checking.found(),
         rejected_names=checking.rejected_names(names),
-        warnings=unknown_columns(
-            raw, [*tables.reserved_stage_columns(), *elements, *(f"{name}_tol_pct" for name in elements)]
+        warnings=(
+            *unknown_columns(
+                raw,
+                [
+                    *tables.reserved_stage_columns(),
+                    *elements,
+                    *(f"{name}{suffix}" for name in elements for suffix in tables.ELEMENT_SUFFIXES),
+                    *moving.names(),
+                ],
+            ),
+            *_idle_coefficients(raw.source, moving, is_hot),
         ),
     )
+
+
+def _idle_coefficients(source: str, moving: SpreadColumns, is_hot: NDArray[np.bool_]) -> tuple[str, ...]:
+    """A warning where temperature coefficients stand beside no temperatures."""
+    cells = (moving.common[TEMPERATURE], *moving.own[TEMPERATURE].values())
+    given = np.logical_or.reduce([~numbers.blank & (numbers.values > 0.0) for numbers in cells])
+    count = int((given & ~is_hot).sum())
+    if not count:
+        return ()
+    return (
+        f"{source}: {count:,} rows have a temperature coefficient but neither t_min_c nor t_max_c; they are taken "
+        "at 25 degrees Celsius, where it moves nothing",
+    )
+
+
+def _calibrated(checking: Checking) -> NDArray[np.bool_]:
+    if "calibrated" not in checking.raw.columns:
+        return np.zeros(len(checking.raw.rows), dtype=bool)
+    words = [word.lower() for word in text_of(checking.cells("calibrated")).to_pylist()]
+    for position, word in enumerate(words):
+        if word not in ("yes", "no", ""):
+            checking.refuse(position, "calibrated", "is neither yes nor no; leave it blank for no")
+        if word == "yes":
+            checking.refuse(position, "calibrated", "NOT YET")
+    return np.array([word == "yes" for word in words], dtype=bool)
 
 
 def _topologies(checking: Checking, library: Mapping[str, Topology]) -> NDArray[np.object_]:
@@ -224,29 +268,6 @@ def _values(
     return nominal
 
 
-def _tolerances(
-    topology: Topology,
-    members: NDArray[np.intp],
-    nominal: FloatArray,
-    common: Numbers,
-    own: Mapping[str, Numbers],
-) -> FloatArray:
-    """Tolerances as fractions, shape (elements, members).
-
-    The element's own; else, for a resistor, the common one; else none. What is open or short has no tolerance.
-    """
-    fractions = np.zeros_like(nominal)
-    for index, element in enumerate(topology.elements):
-        shared = np.where(common.blank, 0.0, common.values)[members]
-        pct = shared if element.kind == "resistor" else np.zeros(len(members))
-        if element.name in own:
-            cells = own[element.name]
-            pct = np.where(cells.blank[members], pct, cells.values[members])
-        present = np.isfinite(nominal[index]) & (nominal[index] > 0.0)
-        fractions[index] = np.where(present, pct * PER_PCT, 0.0)
-    return fractions
-
-
 def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray[np.intp]) -> None:
     """Reject stages whose values leave no ideal gain to correct."""
     if not len(members):
@@ -274,12 +295,11 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
 
 
 def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:
-    return StageGroup(
-        topology=group.topology,
-        form=group.form,
+    return replace(
+        group,
         names=group.names[order],
         values=group.values[:, order],
-        tolerances=group.tolerances[:, order],
+        spreads=group.spreads.of(order),
         limits=group.limits[order],
         targets=group.targets[order],
     )

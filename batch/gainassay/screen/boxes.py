@@ -9,6 +9,7 @@ and none added.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -93,6 +94,12 @@ class StageBox:
         )
         common = Range(*(np.where(loose, 1.0, end) for end in _ends(self.common)))
         return replace(self, own=own, common=common, network=np.where(loose, np.int8(-1), self.network))
+
+    def moved_by(self, moves: Sequence[int]) -> StageBox:
+        """The box in which only some of `MOVES` move anything."""
+        is_chosen = np.isin(np.arange(len(MOVES)), moves)[:, None, None]
+        own, common = (Range(*(np.where(is_chosen, end, 1.0) for end in _ends(of))) for of in (self.own, self.common))
+        return replace(self, own=own, common=common)
 
     def at_dc(self, kinds: tuple[str, ...]) -> StageBox:
         """The box at 0 Hz, where nothing that moves a capacitor or an inductor matters."""

@@ -20,39 +20,19 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.contracts.moves import MOVES
-from gainassay.errors import InputError
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import Coefficients, FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
-from gainassay.screen.boxes import StageBox, of_members
+from gainassay.screen.boxes import StageBox
 from gainassay.screen.boxes import product as product_of_moves
-from gainassay.screen.signs import FALLS, FIXED, OPEN, RISES, Reach, directions
-from gainassay.screen.tracking import Slack, slack
-
-MOST_OPEN_ELEMENTS = 14
-"""Beyond this the corners of one stage, two to that power, are too many to visit."""
+from gainassay.screen.signs import Reach
+from gainassay.screen.tracking import Slack
+from gainassay.screen.visits import MOST_OPEN_ELEMENTS, Factors, Plan, factors_at, visit, what_is_known, with_a_bound
 
 SET_POINT = "set_point"
 TRACKING = "tracking"
 """The term of what the members of networks do together."""
-
-
-@dataclass(frozen=True)
-class Plan:
-    """Stages that visit the same corners.
-
-    Attributes
-    ----------
-    stages : ndarray of int
-        Their places.
-    corners : tuple[tuple[int, int], ...]
-        Each a corner of the stage, counted from the stage's first, and the place of a set in `active_sets`; none
-        for stages that are not regular.
-    """
-
-    stages: NDArray[np.intp]
-    corners: tuple[tuple[int, int], ...]
 
 
 @dataclass(frozen=True)
@@ -87,6 +67,8 @@ class StageSide:
         Whether networks are taken not to track, since nothing bounds the gain between the ends of their common factor.
     slack : Slack or None
         How far it may lie beyond the ends; none if no stage has a network that tracks.
+    at_calibration : Coefficients or None
+        The coefficient functions at each corner as they were when the stages were calibrated; none if they are not.
     """
 
     gain_ideal: FloatArray
@@ -106,6 +88,7 @@ class StageSide:
     matters: NDArray[np.bool_]
     untied: NDArray[np.bool_]
     slack: Slack | None
+    at_calibration: Coefficients | None = None
 
 
 @dataclass(frozen=True)
@@ -120,16 +103,25 @@ class PartSide:
         The departures at their limits, in the order of `DEPARTURES`.
     evidence : ndarray of uint8, shape (departures, parts)
         What each limit rests on.
+    changed : ndarray, shape (2, 2, departures, parts), or None
+        For calibrated stages, the departures at and after calibration: once as they fall most, once as they rise most.
     """
 
     nominal: FloatArray
     worst: FloatArray
     limits: FloatArray
     evidence: NDArray[np.uint8]
+    changed: FloatArray | None = None
 
     def part(self, parts: slice) -> PartSide:
         """Some of the parts."""
-        return PartSide(self.nominal[:, parts], self.worst[:, parts], self.limits[:, parts], self.evidence[:, parts])
+        return PartSide(
+            self.nominal[:, parts],
+            self.worst[:, parts],
+            self.limits[:, parts],
+            self.evidence[:, parts],
+            None if self.changed is None else self.changed[..., parts],
+        )
 
 
 def term_names(form: Form) -> tuple[str, ...]:
@@ -171,23 +163,18 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
     box = box.at_dc(form.kinds)
     nominal = coefficients.evaluate(form, coefficients.at_dc(form, box.values))
     reference = np.where(np.isnan(box.targets), nominal.gain_ideal, box.targets)
-    visited = _visited(form, box, reached)
-    stage, box = visited.stage, visited.box
-    factors = _factors(box, visited)
+    places = {active: q for q, active in enumerate(active_sets(form))}
+    known = what_is_known(form, box, reached)
+    visited = visit(form, known.of, lambda at_limit: places[_active(form, at_limit)])
+    stage, box = visited.stage, known.box
+    factors = factors_at(box, stage, visited.is_upper)
     values = box.values[:, stage] * product_of_moves(factors.own) * product_of_moves(factors.together)
     at_corners = coefficients.evaluate(form, coefficients.at_dc(form, values))
-    terms = _elements_terms(form, box.values[:, stage], factors, reference[stage])
+    terms = elements_terms(form, box.values[:, stage], factors, reference[stage])
     with np.errstate(invalid="ignore"):
         corner_error = (at_corners.gain_ideal - reference[stage]) / reference[stage]
-        is_regular = (
-            np.isfinite(at_corners.contrasts).all(axis=0)
-            & np.isfinite(at_corners.loadings).all(axis=0)
-            & np.isfinite(at_corners.gain_ideal)
-            & (np.sign(at_corners.gain_ideal) == np.sign(nominal.gain_ideal[stage]))
-            & np.isfinite(corner_error)
-            & ~coefficients.is_feedback_positive(form, at_corners)
-        )
-        regular = np.logical_and.reduceat(is_regular, visited.first)
+        is_sound = is_regular(form, at_corners, nominal.gain_ideal[stage]) & np.isfinite(corner_error)
+        regular = np.logical_and.reduceat(is_sound, visited.first)
         return StageSide(
             gain_ideal=nominal.gain_ideal,
             reference=reference,
@@ -201,156 +188,23 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             corner_loadings=at_corners.loadings,
             corner_error=corner_error,
             corner_terms=terms,
-            plans=_with_a_bound(visited.plans, regular),
+            plans=with_a_bound(visited.plans, regular),
             regular=regular,
-            matters=_matters(form, box, at_corners, visited.first),
-            untied=visited.untied,
-            slack=visited.slack,
+            matters=matters(form, box, at_corners, visited.first),
+            untied=known.untied,
+            slack=known.slack,
         )
 
 
-@dataclass(frozen=True)
-class _Visited:
-    """The corners that some stages visit, all stages' corners in a row.
-
-    Attributes
-    ----------
-    stage : ndarray of int, shape (corners,)
-    is_upper : ndarray of bool, shape (elements + networks, corners)
-        Whether an element, or what a network has in common, is at its upper end; what does not move is not.
-    first : ndarray of int, shape (stages,)
-    box : StageBox
-        The stages' box, in which the networks of `untied` stages do not track.
-    """
-
-    stage: NDArray[np.intp]
-    is_upper: NDArray[np.bool_]
-    first: NDArray[np.intp]
-    plans: tuple[Plan, ...]
-    box: StageBox
-    untied: NDArray[np.bool_]
-    slack: Slack | None
-
-
-def _visited(form: Form, box: StageBox, reached: Reach | None) -> _Visited:
-    sets = active_sets(form)
-    untied = np.zeros(len(box.limits), dtype=bool)
-    room: Slack | None = None
-    if reached is None:
-        known = _everywhere(form, box)
-    else:
-        found = directions(reached, box)
-        tracks = box.common.moves().any(axis=0)
-        if tracks.any():
-            room = slack(reached, box)
-            untied = tracks & ~(found.proved & np.isfinite(room.rises + room.falls).all(axis=(0, 1)))
-            if untied.any():
-                box, room = box.untied(untied), room.without(untied)
-                found = directions(reached, box)
-        known = np.where(found.proved, found.of, _everywhere(form, box))
-    # Two of the same pattern visit the same corners; there are few patterns.
-    patterns, pattern_of = np.unique(known, axis=1, return_inverse=True)
-    pattern_of = pattern_of.reshape(-1)
-    recipes = [_recipe(form, sets, pattern) for pattern in patterns.T]
-    counts = np.array([len(recipe.ends) for recipe in recipes], np.intp)[pattern_of]
-    first = np.concatenate([[0], np.cumsum(counts)[:-1]])
-    stage = np.repeat(np.arange(len(counts)), counts)
-    is_upper = np.empty((len(known) - len(form.departures), len(stage)), dtype=bool)
-    plans: dict[tuple[tuple[int, int], ...], list[NDArray[np.intp]]] = {}
-    for place, recipe in enumerate(recipes):
-        members = np.flatnonzero(pattern_of == place)
-        plans.setdefault(recipe.corners, []).append(members)
-        for j, ends in enumerate(recipe.ends):
-            is_upper[:, first[members] + j] = np.array(ends, dtype=bool)[:, None]
-    return _Visited(
-        stage,
-        is_upper,
-        first,
-        tuple(Plan(np.sort(np.concatenate(members)), corners) for corners, members in plans.items()),
-        box,
-        untied,
-        room,
+def is_regular(form: Form, at: Coefficients, gain_ideal: FloatArray) -> NDArray[np.bool_]:
+    """Whether all is finite, the ideal gain has its sign and the feedback is negative, at each corner."""
+    return np.asarray(
+        np.isfinite(at.contrasts).all(axis=0)
+        & np.isfinite(at.loadings).all(axis=0)
+        & np.isfinite(at.gain_ideal)
+        & (np.sign(at.gain_ideal) == np.sign(gain_ideal))
+        & ~coefficients.is_feedback_positive(form, at)
     )
-
-
-@dataclass(frozen=True)
-class _Factors:
-    """Factors on the nominal values at some corners, each of shape (moves, elements, corners).
-
-    Attributes
-    ----------
-    own, together : ndarray
-        By which each element moves alone, and with its network.
-    """
-
-    own: FloatArray
-    together: FloatArray
-
-
-def _factors(box: StageBox, visited: _Visited) -> _Factors:
-    elements = len(box.values)
-
-    def at_ends(low: FloatArray, high: FloatArray, is_upper: NDArray[np.bool_]) -> FloatArray:
-        return np.where(is_upper, high[:, :, visited.stage], low[:, :, visited.stage])
-
-    own = at_ends(box.own.low, box.own.high, visited.is_upper[:elements])
-    common = at_ends(box.common.low, box.common.high, visited.is_upper[elements:])
-    return _Factors(own, of_members(box.network[:, visited.stage], common))
-
-
-def _with_a_bound(plans: tuple[Plan, ...], regular: NDArray[np.bool_]) -> tuple[Plan, ...]:
-    """The plans of regular stages, and one without corners for the others: no part gives these a bound."""
-    kept = [Plan(plan.stages[regular[plan.stages]], plan.corners) for plan in plans]
-    return tuple(plan for plan in (*kept, Plan(np.flatnonzero(~regular), ())) if len(plan.stages))
-
-
-def _everywhere(form: Form, box: StageBox) -> NDArray[np.int8]:
-    """Directions that leave no corner out."""
-    moves = np.concatenate([box.own.moves(), box.common.moves()])
-    departures = np.full((len(form.departures), len(box.limits)), OPEN, np.int8)
-    return np.concatenate([np.where(moves, np.int8(OPEN), np.int8(FIXED)), departures])
-
-
-@dataclass(frozen=True)
-class _Recipe:
-    """The corners that follow from the directions of the variables.
-
-    Attributes
-    ----------
-    ends : tuple[tuple[bool, ...], ...]
-        The corners of the stage, the lower ends first: which elements and networks are at their upper ends.
-    corners : tuple[tuple[int, int], ...]
-        As in `Plan`.
-    """
-
-    ends: tuple[tuple[bool, ...], ...]
-    corners: tuple[tuple[int, int], ...]
-
-
-def _recipe(form: Form, sets: tuple[tuple[int, ...], ...], pattern: NDArray[np.int8]) -> _Recipe:
-    """For the largest and for the smallest gain, all ends of the variables of open direction."""
-    count = len(pattern) - len(form.departures)
-    is_open = (pattern == OPEN).tolist()
-    if sum(is_open[:count]) > MOST_OPEN_ELEMENTS:
-        raise InputError(
-            f"topology '{form.topology}': {sum(is_open[:count])} elements of a stage may each move "
-            f"the gain either way; at most {MOST_OPEN_ELEMENTS} can be taken to every corner"
-        )
-    place = {active: q for q, active in enumerate(sets)}
-    found = set()
-    for extreme in (RISES, FALLS):
-        choices = [
-            (False, True) if unknown else (direction == extreme,)
-            for direction, unknown in zip(pattern.tolist(), is_open, strict=True)
-        ]
-        element_ends = list(product(*choices[:count]))
-        departure_sets = {place[_active(form, at_limit)] for at_limit in product(*choices[count:])}
-        found |= {(ends[::-1], q) for ends in element_ends for q in departure_sets}
-    # Ordered by the last element first, as the bits of a number are, then by the set of active products.
-    ordered = sorted(found)
-    stage_corners = sorted({ends for ends, _ in ordered})
-    number = {ends: j for j, ends in enumerate(stage_corners)}
-    return _Recipe(tuple(ends[::-1] for ends in stage_corners), tuple((number[ends], q) for ends, q in ordered))
 
 
 def _active(form: Form, at_limit: Sequence[bool]) -> tuple[int, ...]:
@@ -394,7 +248,7 @@ def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDAr
     return PartSide(products(nominal), products(worst), worst, evidence)
 
 
-def _elements_terms(form: Form, nominal: FloatArray, factors: _Factors, reference: FloatArray) -> FloatArray:
+def elements_terms(form: Form, nominal: FloatArray, factors: Factors, reference: FloatArray) -> FloatArray:
     """Share of what moves each element, and all networks, in the ideal gain's error at each corner.
 
     The elements are moved from nominal to the corner one step after the other, once in their order and once in the
@@ -431,7 +285,7 @@ def _elements_terms(form: Form, nominal: FloatArray, factors: _Factors, referenc
     return shares
 
 
-def _matters(form: Form, box: StageBox, at_corners: Coefficients, first: NDArray[np.intp]) -> NDArray[np.bool_]:
+def matters(form: Form, box: StageBox, at_corners: Coefficients, first: NDArray[np.intp]) -> NDArray[np.bool_]:
     """Whether a departure has a coefficient that is not 0 at every corner of the stage, visited or not."""
     values, moves = box.values, box.own.moves() | (box.network >= 0)
     used = np.logical_or.reduceat(_used(at_corners), first, axis=1)

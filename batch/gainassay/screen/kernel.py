@@ -19,8 +19,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
-from gainassay.screen.corners import PartSide, Plan, StageSide
+from gainassay.screen.corners import PartSide, StageSide
 from gainassay.screen.tracking import excess
+from gainassay.screen.visits import Plan
 
 PAIRS_PER_BLOCK = 32_768
 """Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
@@ -77,22 +78,26 @@ def screen(
         np.empty(shape),
     )
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in _blocks(stages, shape[1], block):
+        for plan, rows, columns in blocks_of(stages, shape[1], block):
             _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
-    return outcome if stages.slack is None else _beyond_corners(stages, parts, active_sets, outcome)
+    return outcome if stages.slack is None else _with_what_lies_beyond(stages, parts, active_sets, outcome)
 
 
-def _beyond_corners(
+def beyond_corners(stages: StageSide, parts: PartSide, error: FloatArray) -> FloatArray:
+    """By how much errors may lie beyond those at the corners, between the ends of networks' common factors.
+
+    Not below what either the largest or the smallest gain may go beyond its corner: of these the one with the smaller
+    error in magnitude is multiplied by no more.
+    """
+    if stages.slack is None:
+        return np.zeros(error.shape)
+    return np.asarray(np.copysign((1.0 + np.abs(error)) * np.expm1(excess(stages.slack, parts.limits)), error))
+
+
+def _with_what_lies_beyond(
     stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], outcome: Outcome
 ) -> Outcome:
-    """The outcome with the errors that may lie between the ends of networks' common factors.
-
-    Not below what either the largest or the smallest gain may go beyond its corner: the error of smaller magnitude is
-    that of a gain nearer to the target.
-    """
-    assert stages.slack is not None
-    size = np.abs(outcome.error_worst)
-    beyond = np.copysign((1.0 + size) * np.expm1(excess(stages.slack, parts.limits)), outcome.error_worst)
+    beyond = beyond_corners(stages, parts, outcome.error_worst)
     widened = replace(outcome, error_worst=outcome.error_worst + beyond, beyond=beyond)
     every = slice(None)
     for place, term in enumerate(account(stages, parts, active_sets, every, every, widened)):
@@ -107,7 +112,7 @@ def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BL
     """The `error_nominal` of `screen` alone."""
     found = np.empty((len(stages.limits), parts.worst.shape[1]))
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for _, rows, columns in _blocks(stages, found.shape[1], block):
+        for _, rows, columns in blocks_of(stages, found.shape[1], block):
             found[rows, columns] = _nominal(stages, parts, rows, columns)
     return found
 
@@ -119,14 +124,14 @@ def worst_errors(
     found = np.empty((len(stages.limits), parts.worst.shape[1]))
     corner = np.empty(found.shape, np.int32)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in _blocks(stages, found.shape[1], block):
+        for plan, rows, columns in blocks_of(stages, found.shape[1], block):
             found[rows, columns], corner[rows, columns] = _worst(
                 stages, parts, active_sets, plan.corners, rows, columns
             )
-    return found, corner
+    return found + beyond_corners(stages, parts, found), corner
 
 
-def _blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
+def blocks_of(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
     """Blocks of pairs whose stages visit the same corners."""
     width = max(1, min(parts, block))
     height = max(1, block // width)
@@ -150,7 +155,7 @@ def _screen_block(
     dominant, value = _dominant(stages, parts, active_sets, corners, rows, columns, corner)
     unbounded = corner == UNBOUNDED
     if unbounded.any():
-        dominant = np.where(unbounded, _undoing(stages, parts, rows, columns), dominant)
+        dominant = np.where(unbounded, undoing(stages, parts, rows, columns), dominant)
         value[unbounded] = np.nan
     outcome.error_worst[rows, columns] = worst
     outcome.corner[rows, columns] = corner
@@ -363,7 +368,7 @@ def _put(target: NDArray[Any], source: NDArray[Any], where: NDArray[np.bool_]) -
     bits ^= change
 
 
-def _undoing(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns: slice) -> NDArray[np.int16]:
+def undoing(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns: slice) -> NDArray[np.int16]:
     """Place of the term whose loading pulls the denominator furthest below one."""
     first = 1 + len(stages.corner_terms)
     end = np.append(stages.first[1:], stages.corner_loadings.shape[1])

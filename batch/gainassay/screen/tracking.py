@@ -50,6 +50,10 @@ class Slack:
     falls: FloatArray
     width: FloatArray
 
+    def over(self, width: FloatArray) -> Slack:
+        """The same over other ranges of the common factors."""
+        return replace(self, width=np.minimum(self.width, width))
+
     def without(self, stages: NDArray[np.bool_]) -> Slack:
         """The same with nothing for some stages."""
         return replace(self, width=np.where(stages, 0.0, self.width))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,6 +20,7 @@ from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
+from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageTable, left_out
 
@@ -113,14 +114,20 @@ class Explanation:
 
 
 def explain(
-    stages: StageTable, parts: PartTable, groups: tuple[Group, ...], rules: Rules, stage: str, part: str
+    stages: StageTable,
+    parts: PartTable,
+    eligibility: Sequence[Eligibility],
+    groups: tuple[Group, ...],
+    rules: Rules,
+    stage: str,
+    part: str,
 ) -> Explanation:
     """Explain one pair.
 
     Raises
     ------
     InputError
-        If the stage or the part is not in its table, or was rejected.
+        If the stage or the part is not in its table, was rejected, or if they are not eligible for each other.
     """
     names = [name for group in groups for name in group.stage_names.tolist()]
     _require(stage, names, "stage", stages)
@@ -128,6 +135,9 @@ def explain(
     place = next(index for index, group in enumerate(groups) if stage in group.stage_names)
     s = int(np.searchsorted(groups[place].stage_names, stage))
     p = int(np.searchsorted(groups[place].part_names, part))
+    objection = eligibility[place].objection(s, p)
+    if objection:
+        raise InputError(f"{stages.source}, {parts.source}: part {part!r} may not serve stage {stage!r}: {objection}")
     screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules)
     return _explanation(screened, stages.groups[place].topology, stage, parts, p)
 

@@ -9,6 +9,7 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pyarrow.compute as pc
 
 from gainassay import job as jobs
@@ -25,21 +26,34 @@ from gainassay.screen import blocks
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.corners import StageBox, term_names
 from gainassay.screen.verdicts import Rules
+from gainassay.tables import eligible
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
+from gainassay.tables.compared import compared
+from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageTable
+
+MOST_LISTED = 3
+"""Stages that a warning names."""
 
 
 @dataclass(frozen=True)
 class Prepared:
-    """A job with its tables read and checked."""
+    """A job with its tables read and checked.
+
+    Attributes
+    ----------
+    eligibility : tuple[Eligibility, ...]
+        Which parts may serve the stages of each group.
+    """
 
     started: datetime
     job: Job
     topologies: Mapping[str, Topology]
     stages: StageTable
     parts: PartTable
+    eligibility: tuple[Eligibility, ...]
 
     def warnings(self) -> tuple[str, ...]:
         """Everything that a user should know before believing the results."""
@@ -47,7 +61,28 @@ class Prepared:
             f"{self.parts.source}: there is no column for {quantity}; it is not modelled"
             for quantity in self.parts.not_modelled()
         )
-        return (*self.stages.warnings, *self.parts.warnings, *unmodelled)
+        unserved = self.unserved()
+        alone = (f"{self.stages.source}: no part is eligible for {_listed(unserved)}",) if unserved else ()
+        return (*self.stages.warnings, *self.parts.warnings, *unmodelled, *alone)
+
+    def pairs(self) -> int:
+        """Pairs to screen."""
+        return sum(one.pairs() for one in self.eligibility)
+
+    def not_eligible(self) -> dict[str, int]:
+        """Pairs that each rule, in the order of the job, is the first to exclude."""
+        counts = sum((one.not_eligible() for one in self.eligibility), np.zeros(len(self.job.eligible), np.int64))
+        return dict(zip((rule.name for rule in self.job.eligible), counts.tolist(), strict=True))
+
+    def never_eligible(self) -> dict[str, int]:
+        """Stages without an eligible part, and parts without an eligible stage."""
+        serving = np.logical_or.reduce([one.serving() for one in self.eligibility])
+        return {"stages": len(self.unserved()), "parts": int((~serving).sum())}
+
+    def unserved(self) -> list[str]:
+        """Stages without an eligible part."""
+        each = zip(self.stages.groups, self.eligibility, strict=True)
+        return sorted(name for group, one in each for name in group.names[~one.served()].tolist())
 
     def rejected_rows(self) -> int:
         """Rows of both tables that were left out."""
@@ -73,6 +108,11 @@ class Done:
     hopeless: tuple[str, ...]
 
 
+def _listed(names: Sequence[str]) -> str:
+    more = len(names) - MOST_LISTED
+    return ", ".join(names[:MOST_LISTED]) + (f" and {more:,} more" if more > 0 else "")
+
+
 def prepare(path: Path) -> Prepared:
     """Read a job and its tables.
 
@@ -84,12 +124,16 @@ def prepare(path: Path) -> Prepared:
     started = datetime.now(UTC)
     job = jobs.read(path)
     topologies = library(job.topologies)
-    stages, parts = stage_tables.load(job.stages, topologies), part_tables.load(job.parts, job.assume)
-    return Prepared(started, job, topologies, stages, parts)
+    of_stages, of_parts = compared(job.eligible, stage_tables.kinds(topologies))
+    stages = stage_tables.load(job.stages, topologies, of_stages)
+    parts = part_tables.load(job.parts, job.assume, of_parts)
+    eligibility = tuple(eligible.relate(job.eligible, group, parts) for group in stages.groups)
+    return Prepared(started, job, topologies, stages, parts, eligibility)
 
 
-def groups_of(stages: StageTable, parts: PartTable) -> tuple[Group, ...]:
-    """The screen of all stages against all parts, one group for each topology."""
+def groups_of(prepared: Prepared) -> tuple[Group, ...]:
+    """The screen of all eligible pairs, one group for each topology."""
+    parts = prepared.parts
     return tuple(
         blocks.group(
             group.form,
@@ -99,8 +143,9 @@ def groups_of(stages: StageTable, parts: PartTable) -> tuple[Group, ...]:
             parts.nominal,
             parts.worst,
             parts.evidence,
+            eligibility.patterns(),
         )
-        for group in stages.groups
+        for group, eligibility in zip(prepared.stages.groups, prepared.eligibility, strict=True)
     )
 
 
@@ -130,7 +175,7 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         If results cannot be written; nothing is left behind then.
     """
     job, results = prepared.job, prepared.job.results
-    groups = groups_of(prepared.stages, prepared.parts)
+    groups = groups_of(prepared)
     terms = tuple(dict.fromkeys(name for group in groups for name in term_names(group.form))) if results.terms else ()
     fingerprint = f"{prepared.stages.sha256} {prepared.parts.sha256} {job.document}"
     with run_folder.begin(results.folder, prepared.started, fingerprint) as unfinished:
@@ -157,6 +202,8 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
             parts=prepared.parts,
             warnings=prepared.warnings(),
             counts=summaries.counts(groups, tallies),
+            not_eligible=prepared.not_eligible(),
+            never_eligible=prepared.never_eligible(),
             files=files,
         )
         committed = unfinished.commit(content)

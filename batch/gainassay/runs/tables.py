@@ -40,7 +40,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         Terms of the account that get a column.
     """
     verdict = screened.judgement.verdict.ravel()
-    kept = np.arange(verdict.size) if rows == "all" else np.flatnonzero(verdict != VERDICTS.index("pass"))
+    is_kept = screened.eligible.ravel() & (rows == "all" or verdict != VERDICTS.index("pass"))
+    kept = np.flatnonzero(is_kept)
     shape = screened.judgement.verdict.shape
     stage, part = kept // shape[1], kept % shape[1]
     sides, outcome, names = screened.stage_side, screened.outcome, term_names(screened.group.form)

@@ -7,7 +7,7 @@ tables. Inside a chunk the kernel cuts as it likes.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
 from typing import TypeVar
 
 import numpy as np
@@ -17,6 +17,7 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.screen.corners import (
     PartSide,
+    Plan,
     StageBox,
     StageSide,
     active_sets,
@@ -25,7 +26,7 @@ from gainassay.screen.corners import (
     stage_side,
     term_names,
 )
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
+from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, screen
 from gainassay.screen.signs import Reach, reach
 from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
 
@@ -54,6 +55,10 @@ class Group:
         Ordered.
     reach : Reach
         Of all parts: what a chunk leaves out must not depend on which parts are in it.
+    pattern : ndarray of int, shape (stages,)
+        Place of each stage's pattern.
+    eligible : ndarray of bool, shape (patterns, parts)
+        The parts that the stages of a pattern are screened against.
     """
 
     form: Form
@@ -63,6 +68,8 @@ class Group:
     parts: PartSide
     active_sets: tuple[tuple[int, ...], ...]
     reach: Reach
+    pattern: NDArray[np.intp]
+    eligible: NDArray[np.bool_]
 
 
 @dataclass(frozen=True)
@@ -76,12 +83,19 @@ class Chunk:
 
 @dataclass(frozen=True)
 class Screened:
-    """A chunk with all that was found."""
+    """A chunk with all that was found.
+
+    Attributes
+    ----------
+    eligible : ndarray of bool, shape (stages, parts)
+        The pairs that were screened; of the others nothing is found, and what stands for them means nothing.
+    """
 
     chunk: Chunk
     group: Group
     stage_side: StageSide
     part_side: PartSide
+    eligible: NDArray[np.bool_]
     outcome: Outcome
     judgement: Judgement
 
@@ -125,8 +139,12 @@ def group(
     nominal: FloatArray,
     worst: FloatArray,
     evidence: NDArray[np.uint8],
+    patterns: tuple[NDArray[np.intp], NDArray[np.bool_]],
 ) -> Group:
-    """Stages of one form and all parts; `nominal`, `worst` and `evidence` have shape (departures, parts)."""
+    """Stages of one form and all parts; `nominal`, `worst` and `evidence` have shape (departures, parts).
+
+    `patterns` says which pairs are screened: `pattern` and `eligible` of the group.
+    """
     return Group(
         form,
         stage_names,
@@ -135,6 +153,7 @@ def group(
         part_side(form, nominal, worst, evidence),
         active_sets(form),
         reach(form, worst),
+        *patterns,
     )
 
 
@@ -158,20 +177,52 @@ def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int
     one = groups[chunk.group]
     stages = stage_side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
-    outcome = screen(stages, parts, one.active_sets, block)
+    pattern, eligible = one.pattern[chunk.stages], one.eligible[:, chunk.parts]
+    outcome = _screen_eligible(stages, parts, one.active_sets, pattern, eligible, block)
     judgement = judge(stages, parts, outcome, rules)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
-    return Screened(chunk, one, stages, parts, outcome, judgement)
+    return Screened(chunk, one, stages, parts, eligible[pattern], outcome, judgement)
+
+
+def _screen_eligible(
+    stages: StageSide,
+    parts: PartSide,
+    active_sets: Sequence[Sequence[int]],
+    pattern: NDArray[np.intp],
+    eligible: NDArray[np.bool_],
+    block: int,
+) -> Outcome:
+    """Screen the stages of each pattern against its parts, and leave all other pairs open."""
+    if eligible.all():
+        return screen(stages, parts, active_sets, block)
+    shape = (len(pattern), eligible.shape[1])
+    nothing = np.full(shape, np.nan)
+    found = Outcome(
+        nothing, nothing.copy(), np.full(shape, UNBOUNDED, np.int32), np.full(shape, NO_TERM, np.int16), nothing.copy()
+    )
+    for place in np.unique(pattern):
+        rows, columns = np.flatnonzero(pattern == place), np.flatnonzero(eligible[place])
+        if len(columns):
+            only = screen(_only(stages, rows), parts.at(columns), active_sets, block)
+            for field in fields(Outcome):
+                getattr(found, field.name)[np.ix_(rows, columns)] = getattr(only, field.name)[rows]
+    return found
+
+
+def _only(stages: StageSide, rows: NDArray[np.intp]) -> StageSide:
+    """The same stages with nothing to visit but for some of them."""
+    plans = [Plan(np.intersect1d(plan.stages, rows), plan.corners) for plan in stages.plans]
+    return replace(stages, plans=tuple(plan for plan in plans if len(plan.stages)))
 
 
 def tally(screened: Screened) -> Tally:
     """What a screened chunk adds to the summaries."""
     verdict, used = screened.judgement.verdict, screened.judgement.limit_used
-    is_verdict = np.stack([verdict == code for code in range(len(VERDICTS))])
+    is_verdict = np.stack([(verdict == code) & screened.eligible for code in range(len(VERDICTS))])
     rank = np.array([RANK[code] for code in range(len(VERDICTS))])[verdict]
     # Lexicographic minimum of (rank, limit_used) along each stage; the first of equals, as parts are ordered.
-    bounded_rank = np.where(np.isnan(used), len(VERDICTS), rank)
+    bounded_rank = np.where(np.isnan(used) | ~screened.eligible, len(VERDICTS), rank)
     best_rank = bounded_rank.min(axis=1)
     candidate = np.where(bounded_rank == best_rank[:, None], np.nan_to_num(used, nan=np.inf), np.inf)
     best = candidate.argmin(axis=1)

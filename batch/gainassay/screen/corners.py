@@ -137,6 +137,14 @@ class PartSide:
         """Some of the parts."""
         return PartSide(self.nominal[:, parts], self.worst[:, parts], self.evidence[:, parts])
 
+    def at(self, parts: NDArray[np.intp]) -> PartSide:
+        """The parts at some places, row after row in memory as the kernel reads them."""
+        return PartSide(
+            np.take(self.nominal, parts, axis=1),
+            np.take(self.worst, parts, axis=1),
+            np.take(self.evidence, parts, axis=1),
+        )
+
 
 def term_names(form: Form) -> tuple[str, ...]:
     """Names of all terms of a row's account, in the order of every account: set-point, tolerances, departures."""

@@ -19,6 +19,7 @@ from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
 from gainassay.job import StandIn
 from gainassay.tables import sources
 from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.rejects import Reject, rejected_rows
 
 
@@ -41,6 +42,8 @@ class PartTable:
     modelled : tuple[bool, ...]
         Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
         evidence GUARANTEED, since nothing is claimed about it.
+    compared : Mapping[str, Cells]
+        The columns that rules compare with the stages'.
     rejected_names : Mapping[str, int]
         Row in the file of each name that was rejected.
     """
@@ -53,6 +56,7 @@ class PartTable:
     worst: FloatArray
     evidence: NDArray[np.uint8]
     modelled: tuple[bool, ...]
+    compared: Mapping[str, Cells]
     rejects: tuple[Reject, ...]
     rejected_names: Mapping[str, int]
     warnings: tuple[str, ...]
@@ -70,7 +74,7 @@ class PartTable:
         return tuple(d.quantity for d, there in zip(DEPARTURES, self.modelled, strict=True) if not there)
 
 
-def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
+def load(path: Path, assume: Mapping[str, StandIn], compared: Compared = NOTHING) -> PartTable:
     """Read and check a parts table.
 
     Parameters
@@ -79,11 +83,13 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
         The file.
     assume : Mapping[str, StandIn]
         What stands in for missing numbers, by data-sheet quantity.
+    compared : Compared
+        What the job's rules compare with the stages.
 
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every part needs, or holds no row that can be used.
+        If the file cannot be read, lacks a column that every part or a rule needs, or holds no row that can be used.
     """
     raw = sources.read(path)
     known = tables.columns("parts")
@@ -94,6 +100,7 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
     checking = Checking.of(raw)
     names = checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
+    cells = read_compared(checking, compared)
     nominal, worst, evidence = (np.array(arrays) for arrays in zip(*(r[:3] for r in read), strict=True))
 
     kept = np.flatnonzero(checking.good())
@@ -110,9 +117,10 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
         worst=worst[:, order],
         evidence=evidence[:, order].astype(np.uint8),
         modelled=tuple(r[3] for r in read),
+        compared={name: column.at(order) for name, column in cells.items()},
         rejects=checking.found(),
         rejected_names=checking.rejected_names(names),
-        warnings=unknown_columns(raw, [column.name for column in known]),
+        warnings=unknown_columns(raw, [*(column.name for column in known), *compared.names()]),
     )
 
 

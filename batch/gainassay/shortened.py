@@ -80,7 +80,7 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         raise InputError(f"{prepared.parts.source}: no part is eligible for a stage of the topology '{topology.name}'")
     absent = left_out(topology, group.values)
     formulas = formulas_of(topology, absent)
-    unknown = int((prepared.parts.evidence == MISSING).any(axis=0).sum())
+    unknown = int(((prepared.parts.evidence == MISSING).any(axis=0) & eligibility.serving()).sum())
     found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, eligibility, formulas))
     stage, part = str(group.names[found.deviation.stage]), str(prepared.parts.names[found.deviation.part])
     if not found.deviation.share <= within:

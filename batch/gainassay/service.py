@@ -108,11 +108,6 @@ class Done:
     hopeless: tuple[str, ...]
 
 
-def _listed(names: Sequence[str]) -> str:
-    more = len(names) - MOST_LISTED
-    return ", ".join(names[:MOST_LISTED]) + (f" and {more:,} more" if more > 0 else "")
-
-
 def prepare(path: Path) -> Prepared:
     """Read a job and its tables.
 
@@ -218,3 +213,8 @@ def _write_verdicts(folder: Path, place: int, screened: Screened, results: Resul
     # Named after the chunk's place, so that the order of the files is the order of the rows.
     name = f"verdicts/{place:05d}-{screened.group.form.topology}"
     return [write(folder, f"{name}.{kind}", table) for kind in results.formats]
+
+
+def _listed(names: Sequence[str]) -> str:
+    more = len(names) - MOST_LISTED
+    return ", ".join(names[:MOST_LISTED]) + (f" and {more:,} more" if more > 0 else "")

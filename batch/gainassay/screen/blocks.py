@@ -17,7 +17,6 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.screen.corners import (
     PartSide,
-    Plan,
     StageBox,
     StageSide,
     active_sets,
@@ -177,12 +176,17 @@ def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int
     one = groups[chunk.group]
     stages = stage_side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
-    pattern, eligible = one.pattern[chunk.stages], one.eligible[:, chunk.parts]
-    outcome = _screen_eligible(stages, parts, one.active_sets, pattern, eligible, block)
+    pattern, of_patterns = one.pattern[chunk.stages], one.eligible[:, chunk.parts]
+    eligible = of_patterns[pattern]
+    outcome = (
+        screen(stages, parts, one.active_sets, block)
+        if eligible.all()
+        else _screen_eligible(stages, parts, one.active_sets, pattern, of_patterns, block)
+    )
     judgement = judge(stages, parts, outcome, rules)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
-    return Screened(chunk, one, stages, parts, eligible[pattern], outcome, judgement)
+    return Screened(chunk, one, stages, parts, eligible, outcome, judgement)
 
 
 def _screen_eligible(
@@ -194,8 +198,6 @@ def _screen_eligible(
     block: int,
 ) -> Outcome:
     """Screen the stages of each pattern against its parts, and leave all other pairs open."""
-    if eligible.all():
-        return screen(stages, parts, active_sets, block)
     shape = (len(pattern), eligible.shape[1])
     nothing = np.full(shape, np.nan)
     found = Outcome(
@@ -212,7 +214,7 @@ def _screen_eligible(
 
 def _only(stages: StageSide, rows: NDArray[np.intp]) -> StageSide:
     """The same stages with nothing to visit but for some of them."""
-    plans = [Plan(np.intersect1d(plan.stages, rows), plan.corners) for plan in stages.plans]
+    plans = [replace(plan, stages=np.intersect1d(plan.stages, rows)) for plan in stages.plans]
     return replace(stages, plans=tuple(plan for plan in plans if len(plan.stages)))
 
 

@@ -80,26 +80,34 @@ def compared(rules: Sequence[Eligible], kinds: Mapping[str, str]) -> tuple[Compa
     kinds : Mapping[str, str]
         Kind of each element of any topology, by name.
     """
-    known = {"stage": tables.stage_columns(kinds), "part": {column.name: column for column in tables.columns("parts")}}
-    return _compared(rules, "stage", "part", known), _compared(rules, "part", "stage", known)
+    of_stages, of_parts = tables.stage_columns(kinds), {column.name: column for column in tables.columns("parts")}
+    comparisons = [comparison for rule in rules for comparison in rule.comparisons()]
+    stages = [(one.stage, one.part, one.relation) for one in comparisons]
+    parts = [(one.part, one.stage, one.relation) for one in comparisons]
+    return (
+        _compared(stages, [rule.stage for rule in rules], of_stages, of_parts),
+        _compared(parts, [rule.part for rule in rules], of_parts, of_stages),
+    )
 
 
-def _compared(rules: Sequence[Eligible], own: str, other: str, known: Mapping[str, Mapping[str, Column]]) -> Compared:
-    partners: dict[str, list[Column]] = {}
-    ordered: set[str] = set()
-    for comparison in (comparison for rule in rules for comparison in rule.comparisons()):
-        name, partner = getattr(comparison, own), known[other].get(getattr(comparison, other))
-        partners.setdefault(name, []).extend([partner] if partner and partner.unit else [])
-        if comparison.relation != "equals":
-            ordered.add(name)
+def _compared(
+    comparisons: Sequence[tuple[str, str, str]],
+    given: Sequence[tuple[str, ...]],
+    own: Mapping[str, Column],
+    others: Mapping[str, Column],
+) -> Compared:
+    """What is compared of one table: `comparisons` hold its column, the other table's and their relation."""
+    ordered = {name for name, _, relation in comparisons if relation != "equals"}
+    # The first of several counts.
+    like = {name: others[other] for name, other, _ in reversed(comparisons) if other in others and others[other].unit}
     columns = [
-        known[own].get(name) or tables.undescribed(name, next(iter(like), None)) for name, like in partners.items()
+        own.get(name) or tables.undescribed(name, like.get(name))
+        for name in dict.fromkeys(name for name, _, _ in comparisons)
     ]
-    ends = dict.fromkeys(getattr(rule, own) for rule in rules if len(getattr(rule, own)) > 1)
     return Compared(
         numbers=tuple(column for column in columns if column.name in ordered),
         words=tuple(column for column in columns if column.name not in ordered),
-        ranges=tuple((low, high) for low, high in ends),
+        ranges=tuple(dict.fromkeys((ends[0], ends[1]) for ends in given if len(ends) > 1)),
     )
 
 

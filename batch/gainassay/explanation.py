@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,14 +12,15 @@ from gainassay.contracts.evidence import EVIDENCE, MISSING
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
 from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import DEPARTURES, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks
 from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened
 from gainassay.screen.corners import term_names
-from gainassay.screen.kernel import UNBOUNDED, account, nominal_account
+from gainassay.screen.kernel import UNBOUNDED, nominal_account
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
+from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.spreads import Spreads
 from gainassay.tables.stages import StageGroup, StageTable, left_out
@@ -36,8 +37,8 @@ class Figure:
     matters : bool
         Whether the stage's gain depends on it at all.
     at_worst : str
-        `limit` or `ideal`: where it stands at the corner that gives the worst error; for several amplifiers of
-        different kind, `limit` with their names. Empty if there is no finite bound.
+        `limit`, of the amplifiers named, or `ideal`: where it stands at the corner that gives the worst error; of a
+        calibrated stage, at calibration and afterwards. Empty if there is no finite bound.
     """
 
     quantity: str
@@ -125,14 +126,20 @@ class Explanation:
 
 
 def explain(
-    stages: StageTable, parts: PartTable, groups: tuple[Group, ...], rules: Rules, stage: str, part: str
+    stages: StageTable,
+    parts: PartTable,
+    eligibility: Sequence[Eligibility],
+    groups: tuple[Group, ...],
+    rules: Rules,
+    stage: str,
+    part: str,
 ) -> Explanation:
     """Explain one pair.
 
     Raises
     ------
     InputError
-        If the stage or the part is not in its table, or was rejected.
+        If the stage or the part is not in its table, was rejected, or if they are not eligible for each other.
     """
     names = [name for group in groups for name in group.stage_names.tolist()]
     _require(stage, names, "stage", stages)
@@ -140,6 +147,9 @@ def explain(
     place = next(index for index, group in enumerate(groups) if stage in group.stage_names)
     s = int(np.searchsorted(groups[place].stage_names, stage))
     p = int(np.searchsorted(groups[place].part_names, part))
+    objection = eligibility[place].objection(s, p)
+    if objection:
+        raise InputError(f"{stages.source}, {parts.source}: part {part!r} may not serve stage {stage!r}: {objection}")
     screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules)
     return _explanation(screened, stages.groups[place], s, parts, p)
 
@@ -158,22 +168,17 @@ def _require(name: str, known: list[str], kind: str, table: StageTable | PartTab
 def _explanation(screened: Screened, of: StageGroup, s: int, parts: PartTable, p: int) -> Explanation:
     topology, spreads = of.topology, of.spreads
     side, outcome, judgement = screened.stage_side, screened.outcome, screened.judgement
-    sets = screened.group.active_sets
-    one = slice(0, 1)
     corner = int(outcome.corner[0, 0])
     unbounded = corner == UNBOUNDED
     at_nominal = [float(term[0, 0]) * PPM for term in nominal_account(side, screened.part_side)]
-    at_worst = [
-        np.nan if unbounded else float(term[0, 0]) * PPM
-        for term in account(side, screened.part_side, sets, one, one, outcome)
-    ]
+    at_worst = [np.nan if unbounded else float(term[0, 0]) * PPM for term in blocks.accounts(screened)]
     names = term_names(screened.group.form)
     terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
     leaning = LEANINGS[int(judgement.leaning[0, 0])]
     reference = float(side.reference[0])
     worst = float(outcome.error_worst[0, 0])
     values = screened.group.box.values[:, screened.chunk.stages][:, 0]
-    at_corner = values if unbounded else side.corner_values[:, corner // len(sets)]
+    at_corner = values if unbounded else side.corner_values[:, screened.group.corner(corner)[0]]
     return Explanation(
         stage=str(of.names[s]),
         part=str(parts.names[p]),
@@ -194,7 +199,7 @@ def _explanation(screened: Screened, of: StageGroup, s: int, parts: PartTable, p
         leans_on=leaning.leans_on,
         dominant_term="" if outcome.dominant[0, 0] == NO_TERM else names[int(outcome.dominant[0, 0])],
         elements=tuple(_elements(screened, spreads.of(np.array([s])), values, at_corner)),
-        figures=tuple(_figures(parts, p, side.matters[:, 0].tolist(), _at_limit(screened.group, corner))),
+        figures=tuple(_figures(screened, parts, p)),
         terms=tuple(
             sorted(
                 (term for term in terms if term.nominal_ppm or term.worst_ppm),
@@ -240,23 +245,46 @@ def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> It
             yield PortFigure(formula.symbol, meaning, unit, float(value(formula.expression, figures)))
 
 
-def _at_limit(group: Group, corner: int) -> list[tuple[str, str]] | None:
-    """The departures (amplifier, symbol) that are not 0 at a corner; None if there is no finite bound."""
-    if corner == UNBOUNDED:
-        return None
-    active = group.active_sets[corner % len(group.active_sets)]
-    return [group.form.departures[i] for i in sorted({i for k in active for i in group.form.monomials[k]})]
-
-
-def _figures(parts: PartTable, p: int, matters: list[bool], at_limit: list[tuple[str, str]] | None) -> Iterator[Figure]:
+def _figures(screened: Screened, parts: PartTable, p: int) -> Iterator[Figure]:
+    side = screened.part_side
     for index, departure in enumerate(DEPARTURES):
         if not parts.modelled[index]:
             continue
-        evidence = EVIDENCE[parts.evidence[index, p]]
+        evidence = EVIDENCE[side.evidence[index, 0]]
+        is_missing = evidence == EVIDENCE[MISSING]
         nominal, worst = (
-            np.nan if evidence == EVIDENCE[MISSING] else 1.0 / float(value) if departure.reciprocal else float(value)
-            for value in (parts.nominal[index, p], parts.worst[index, p])
+            np.nan if is_missing else _quantity(departure, float(value))
+            for value in (parts.nominal[index, p], side.limits[index, 0])
         )
-        amplifiers = [amplifier for amplifier, symbol in at_limit or () if symbol == departure.symbol]
-        at_worst = "" if at_limit is None else f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
-        yield Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters[index], at_worst)
+        matters = bool(screened.stage_side.matters[index, 0])
+        at_worst = _at_worst(screened, index)
+        yield Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters, at_worst)
+
+
+def _quantity(departure: Departure, value: float) -> float:
+    """A departure as the data sheet has it."""
+    if not departure.reciprocal:
+        return value
+    return 1.0 / value if value else np.inf
+
+
+def _at_worst(screened: Screened, index: int) -> str:
+    """Where a departure, of which amplifiers, stands at the corner that gives the worst error."""
+    group, code = screened.group, int(screened.outcome.corner[0, 0])
+    if code == UNBOUNDED:
+        return ""
+    place, departure = group.corner(code)[1], DEPARTURES[index]
+    own = [(i, amplifier) for i, (amplifier, symbol) in enumerate(group.form.departures) if symbol == departure.symbol]
+    if group.calibrated:
+        return "; ".join(f"{amplifier}: {_change(screened, departure, place >> i & 1)}" for i, amplifier in own)
+    active = {i for k in group.active_sets[place] for i in group.form.monomials[k]}
+    amplifiers = [amplifier for i, amplifier in own if i in active]
+    return f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
+
+
+def _change(screened: Screened, departure: Departure, rises: int) -> str:
+    changed = screened.part_side.changed
+    if changed is None:
+        raise ValueError("these parts do not change")
+    before, after = changed[rises, :, DEPARTURES.index(departure), 0].tolist()
+    return f"from {_quantity(departure, before):.6g} to {_quantity(departure, after):.6g} {departure.unit}"

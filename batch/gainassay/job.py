@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -31,6 +31,46 @@ class StandIn:
     value: float | None = None
     hot_times: float = 1.0
     change_pct: float | None = None
+
+
+@dataclass(frozen=True)
+class Comparison:
+    """A column of the part table that must be `at_least`, `at_most` or `equals` one of the stage table."""
+
+    part: str
+    relation: str
+    stage: str
+
+
+@dataclass(frozen=True)
+class Eligible:
+    """A rule that says which parts may serve a stage.
+
+    Attributes
+    ----------
+    name : str
+        What counts and messages call it.
+    part, stage : tuple[str, ...]
+        Columns of the two tables: one, or the low and the high end of a range.
+    relation : str
+        `at_least`, `at_most`, `equals`, `within` or `covers`.
+    """
+
+    name: str
+    part: tuple[str, ...]
+    relation: str
+    stage: tuple[str, ...]
+
+    def comparisons(self) -> tuple[Comparison, ...]:
+        """The comparisons, of one column with one other, that the rule comes down to."""
+        low, high = self.part[0], self.part[-1]
+        match self.relation:
+            case "within":
+                return Comparison(low, "at_least", self.stage[0]), Comparison(low, "at_most", self.stage[1])
+            case "covers":
+                return Comparison(low, "at_most", self.stage[0]), Comparison(high, "at_least", self.stage[-1])
+            case relation:
+                return (Comparison(low, relation, self.stage[0]),)
 
 
 @dataclass(frozen=True)
@@ -71,6 +111,8 @@ class Job:
         The file's content, for the manifest.
     assume : Mapping[str, StandIn]
         By data-sheet quantity: `a_ol`, `r_id`, `r_o`.
+    eligible : tuple[Eligible, ...]
+        Which parts may serve which stages; a part must keep every rule.
     """
 
     path: Path
@@ -79,6 +121,7 @@ class Job:
     parts: Path
     topologies: tuple[Path, ...]
     assume: Mapping[str, StandIn]
+    eligible: tuple[Eligible, ...]
     judge: Judge
     results: Results
 
@@ -89,7 +132,7 @@ def read(path: Path) -> Job:
     Raises
     ------
     InputError
-        If the file cannot be read or does not follow `schemas/job.schema.json`.
+        If the file cannot be read, does not follow `schemas/job.schema.json`, or names two rules alike.
     """
     if not str(path).isprintable():
         raise InputError(f"{str(path)!r}: is not a path in printable UTF-8; rename the folder or the file")
@@ -103,6 +146,7 @@ def read(path: Path) -> Job:
         parts=here / document["parts"]["from"],
         topologies=tuple(here / name for name in document.get("topologies", [])),
         assume={quantity: StandIn(**given) for quantity, given in document.get("assume", {}).items()},
+        eligible=_eligible(path, document.get("eligible", [])),
         judge=Judge(**{**_defaults("judge"), **document.get("judge", {})}),
         results=Results(
             folder=here / results["folder"],
@@ -111,6 +155,24 @@ def read(path: Path) -> Job:
             terms=results["terms"],
         ),
     )
+
+
+def _eligible(path: Path, given: Iterable[Mapping[str, Any]]) -> tuple[Eligible, ...]:
+    rules = tuple(_rule(one) for one in given)
+    names = [rule.name for rule in rules]
+    repeated = next((name for name in names if names.count(name) > 1), None)
+    if repeated is not None:
+        raise InputError(f"{path}: two rules of [[eligible]] are called {repeated!r}; give one of them another name")
+    return rules
+
+
+def _rule(given: Mapping[str, Any]) -> Eligible:
+    relation = next(key for key in given if key not in ("name", "part"))
+    part, stage = (
+        tuple([columns] if isinstance(columns, str) else columns) for columns in (given["part"], given[relation])
+    )
+    name = given.get("name", f"{' to '.join(part)} {relation} {' to '.join(stage)}")
+    return Eligible(name, part, relation, stage)
 
 
 def _defaults(section: str) -> dict[str, Any]:

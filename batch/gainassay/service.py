@@ -9,6 +9,7 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pyarrow.compute as pc
 
 from gainassay import job as jobs
@@ -21,26 +22,39 @@ from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
 from gainassay.runs.folder import File, write
 from gainassay.runs.manifest import manifest
-from gainassay.screen import blocks, boxes
+from gainassay.screen import blocks, boxes, calibrated, corners
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.boxes import StageBox
-from gainassay.screen.corners import moving_terms
+from gainassay.screen.corners import PartSide, moving_terms
 from gainassay.screen.verdicts import Rules
+from gainassay.tables import eligible
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
+from gainassay.tables.compared import compared
+from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageGroup, StageTable
+
+MOST_LISTED = 3
+"""Stages that a warning names."""
 
 
 @dataclass(frozen=True)
 class Prepared:
-    """A job with its tables read and checked."""
+    """A job with its tables read and checked.
+
+    Attributes
+    ----------
+    eligibility : tuple[Eligibility, ...]
+        Which parts may serve the stages of each group.
+    """
 
     started: datetime
     job: Job
     topologies: Mapping[str, Topology]
     stages: StageTable
     parts: PartTable
+    eligibility: tuple[Eligibility, ...]
 
     def warnings(self) -> tuple[str, ...]:
         """Everything that a user should know before believing the results."""
@@ -48,7 +62,28 @@ class Prepared:
             f"{self.parts.source}: there is no column for {quantity}; it is not modelled"
             for quantity in self.parts.not_modelled()
         )
-        return (*self.stages.warnings, *self.parts.warnings, *unmodelled)
+        unserved = self.unserved()
+        alone = (f"{self.stages.source}: no part is eligible for {_listed(unserved)}",) if unserved else ()
+        return (*self.stages.warnings, *self.parts.warnings, *unmodelled, *alone)
+
+    def pairs(self) -> int:
+        """Pairs to screen."""
+        return sum(one.pairs() for one in self.eligibility)
+
+    def not_eligible(self) -> dict[str, int]:
+        """Pairs that each rule, in the order of the job, is the first to exclude."""
+        counts = sum((one.not_eligible() for one in self.eligibility), np.zeros(len(self.job.eligible), np.int64))
+        return dict(zip((rule.name for rule in self.job.eligible), counts.tolist(), strict=True))
+
+    def never_eligible(self) -> dict[str, int]:
+        """Stages without an eligible part, and parts without an eligible stage."""
+        serving = np.logical_or.reduce([one.serving() for one in self.eligibility])
+        return {"stages": len(self.unserved()), "parts": int((~serving).sum())}
+
+    def unserved(self) -> list[str]:
+        """Stages without an eligible part."""
+        each = zip(self.stages.groups, self.eligibility, strict=True)
+        return sorted(name for group, one in each for name in group.names[~one.served()].tolist())
 
     def rejected_rows(self) -> int:
         """Rows of both tables that were left out."""
@@ -85,24 +120,31 @@ def prepare(path: Path) -> Prepared:
     started = datetime.now(UTC)
     job = jobs.read(path)
     topologies = library(job.topologies)
-    stages, parts = stage_tables.load(job.stages, topologies), part_tables.load(job.parts, job.assume)
-    return Prepared(started, job, topologies, stages, parts)
+    of_stages, of_parts = compared(job.eligible, stage_tables.kinds(topologies))
+    stages = stage_tables.load(job.stages, topologies, of_stages)
+    parts = part_tables.load(job.parts, job.assume, of_parts)
+    eligibility = tuple(eligible.relate(job.eligible, group, parts) for group in stages.groups)
+    return Prepared(started, job, topologies, stages, parts, eligibility)
 
 
-def groups_of(stages: StageTable, parts: PartTable) -> tuple[Group, ...]:
-    """The screen of all stages against all parts, one group for each topology."""
+def groups_of(prepared: Prepared) -> tuple[Group, ...]:
+    """The screen of all stages against the parts that may serve them, one group for each topology and condition."""
+    parts = prepared.parts
     return tuple(
         blocks.group(
-            group.form,
-            group.names,
-            box_of(group),
-            parts.names,
-            parts.nominal,
-            parts.worst_hot if group.hot else parts.worst,
-            parts.evidence_hot if group.hot else parts.evidence,
+            group.form, (group.names, box_of(group)), (parts.names, parts_of(group, parts)), eligibility.patterns()
         )
-        for group in stages.groups
+        for group, eligibility in zip(prepared.stages.groups, prepared.eligibility, strict=True)
     )
+
+
+def parts_of(group: StageGroup, parts: PartTable) -> PartSide:
+    """All parts, under the conditions of a group's stages."""
+    limits, evidence = (parts.worst_hot, parts.evidence_hot) if group.hot else (parts.worst, parts.evidence)
+    if not group.calibrated:
+        return corners.part_side(group.form, parts.nominal, limits, evidence)
+    weakest = np.maximum(np.maximum(parts.evidence, evidence), parts.evidence_change)
+    return calibrated.part_side(group.form, parts.worst, limits, parts.change, weakest)
 
 
 def box_of(group: StageGroup) -> StageBox:
@@ -137,12 +179,8 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         If results cannot be written; nothing is left behind then.
     """
     job, results = prepared.job, prepared.job.results
-    groups = groups_of(prepared.stages, prepared.parts)
-    terms = (
-        tuple(dict.fromkeys(name for group in groups for name in moving_terms(group.form, group.box)))
-        if results.terms
-        else ()
-    )
+    groups = groups_of(prepared)
+    terms = _terms(groups) if results.terms else ()
     fingerprint = f"{prepared.stages.sha256} {prepared.parts.sha256} {job.document}"
     with run_folder.begin(results.folder, prepared.started, fingerprint) as unfinished:
         (unfinished.folder / "verdicts").mkdir()
@@ -168,6 +206,8 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
             parts=prepared.parts,
             warnings=prepared.warnings(),
             counts=summaries.counts(groups, tallies),
+            not_eligible=prepared.not_eligible(),
+            never_eligible=prepared.never_eligible(),
             files=files,
         )
         committed = unfinished.commit(content)
@@ -187,3 +227,8 @@ def _write_verdicts(folder: Path, place: int, screened: Screened, results: Resul
     # Named after the chunk's place, so that the order of the files is the order of the rows.
     name = f"verdicts/{place:05d}-{screened.group.form.topology}"
     return [write(folder, f"{name}.{kind}", table) for kind in results.formats]
+
+
+def _listed(names: Sequence[str]) -> str:
+    more = len(names) - MOST_LISTED
+    return ", ".join(names[:MOST_LISTED]) + (f" and {more:,} more" if more > 0 else "")

@@ -21,6 +21,7 @@ from gainassay.screen.boxes import with_tolerances
 from gainassay.screen.corners import part_side, stage_side
 from gainassay.screen.kernel import nominal_errors
 from gainassay.service import Prepared
+from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageGroup, left_out
 
@@ -60,7 +61,7 @@ class ShortForm:
 
 
 def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
-    """A form shortened as far as its verified deviation stays within a share of the required accuracy.
+    """A form shortened as far as its verified deviation, over all eligible pairs, stays within a share of the accuracy.
 
     Deviations are those of the gain at the nominal elements, with the parts' nominal figures and with their
     limits, against the exact gain from the form's coefficient functions.
@@ -68,17 +69,20 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
     Raises
     ------
     InputError
-        If the job has no stage of that topology.
+        If the job has no stage of that topology, or no part that is eligible for one.
     """
-    group = next((g for g in prepared.stages.groups if g.topology == topology), None)
-    if group is None:
+    each = zip(prepared.stages.groups, prepared.eligibility, strict=True)
+    group, eligibility = next(((g, e) for g, e in each if g.topology == topology), (None, None))
+    if group is None or eligibility is None:
         names = [g.topology.name for g in prepared.stages.groups]
         hint = nearest(topology.name, names) or f"; there are stages of {', '.join(names)}"
         raise InputError(f"{prepared.stages.source}: no usable stage has the topology '{topology.name}'{hint}")
+    if not eligibility.pairs():
+        raise InputError(f"{prepared.parts.source}: no part is eligible for a stage of the topology '{topology.name}'")
     absent = left_out(topology, group.values)
     formulas = formulas_of(topology, absent)
-    unknown = int((prepared.parts.evidence == MISSING).any(axis=0).sum())
-    found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, formulas))
+    unknown = int(((prepared.parts.evidence == MISSING).any(axis=0) & eligibility.serving()).sum())
+    found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, eligibility, formulas))
     stage, part = str(group.names[found.deviation.stage]), str(prepared.parts.names[found.deviation.part])
     if not found.deviation.share <= within:
         raise InputError(
@@ -93,14 +97,17 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         stage=stage,
         part=part,
         stages=len(group.names),
-        pairs=len(group.names) * len(prepared.parts.names),
+        pairs=eligibility.pairs(),
         parts_with_gaps=unknown,
         within=within,
     )
 
 
-def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callable[[Expression], Deviation]:
-    """A function that gives the deviation of a formula over all pairs of a job."""
+def _measure(
+    group: StageGroup, parts: PartTable, eligibility: Eligibility, formulas: Formulas
+) -> Callable[[Expression], Deviation]:
+    """A function that gives the deviation of a formula over all eligible pairs of a job."""
+    pattern, eligible = eligibility.patterns()
     none = np.full(len(group.names), np.nan)
     stages = stage_side(group.form, with_tolerances(group.values, np.zeros_like(group.values), group.limits, none))
     # The exact gains are the same for every formula that is tried.
@@ -121,6 +128,7 @@ def _measure(group: StageGroup, parts: PartTable, formulas: Formulas) -> Callabl
                     found = value(formula, {**elements, **formulas.data_sheet(departures[:, None])})
                     share = np.abs(found / gains[rows] - 1.0) / group.limits[rows, None]
                     share = np.where(np.isnan(share), np.inf, share)
+                    share = np.where(eligible[pattern[rows]], share, 0.0)
                     stage, part = (int(i) for i in np.unravel_index(int(share.argmax()), share.shape))
                     if share[stage, part] > worst.share:
                         worst = Deviation(float(share[stage, part]), top + stage, part)

@@ -106,7 +106,7 @@ def main() -> None:
         whole = perf_counter() - start
         peak = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss / 2**20
         prepared = service.prepare(job)
-        groups = service.groups_of(prepared.stages, prepared.parts)
+        groups = service.groups_of(prepared)
         pairs = prepared.stages.used() * len(prepared.parts.names)
         alone = {}
         for workers in sorted({1, service.usable_cores()}):

@@ -116,6 +116,18 @@ def test_numbers_in_csv_or_in_parquet(write_job: JobWriter) -> None:
     assert files(in_csv) == files(in_parquet)
 
 
+def test_rules_leave_rows_out_and_change_no_other(write_job: JobWriter, usual: dict[str, bytes]) -> None:
+    rng = random.Random(4)
+    stages, parts = ([{**row, "grade": rng.choice("123")} for row in rows] for rows in (STAGES, PARTS))
+    job = write_job(f'[[eligible]]\npart = "grade"\nat_least = "grade"\n{RESULTS}', stages=stages, parts=parts)
+    asked, offered = {row["stage"]: row["grade"] for row in stages}, {row["part"]: row["grade"] for row in parts}
+    found = files(job)
+    assert set(found) == set(usual)
+    for name in (name for name in usual if name.startswith("verdicts/")):
+        before, after = (pq.read_table(pa.BufferReader(content[name])).to_pylist() for content in (usual, found))
+        assert after == [row for row in before if offered[row["part"]] >= asked[row["stage"]]]
+
+
 def test_words_are_stored_as_a_dictionary(usual: dict[str, bytes]) -> None:
     """One with repeated words pyarrow stores as plain text, its missing cells as whatever lay in memory."""
     for name, content in usual.items():

@@ -22,8 +22,8 @@ def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
     """Show all that decides STAGE with PART in JOB: gains, every term of the error, the worst corner, the evidence."""
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
-    groups = service.groups_of(prepared.stages, prepared.parts)
-    found = explanation.explain(prepared.stages, prepared.parts, groups, service.rules_of(prepared.job), stage, part)
+    groups, rules = service.groups_of(prepared), service.rules_of(prepared.job)
+    found = explanation.explain(prepared.stages, prepared.parts, prepared.eligibility, groups, rules, stage, part)
     if as_json:
         shared.data({**asdict(found), "cautions": CAUTIONS})
     else:

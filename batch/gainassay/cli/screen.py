@@ -23,7 +23,7 @@ def screen(job: Path, workers: int | None, fail_on: tuple[str, ...], as_json: bo
     """Screen all stages of JOB against all its parts, and commit the verdicts as a new run."""
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
-    with _progress(prepared.stages.used() * prepared.parts.used()) as advance:
+    with _progress(prepared.pairs()) as advance:
         done = service.screen(prepared, workers, advance)
     if as_json:
         shared.data({**done.manifest, "folder": str(done.folder), "stages_without_a_pass": done.hopeless})

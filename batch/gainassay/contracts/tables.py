@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from functools import cache
 from typing import Any
@@ -71,6 +72,23 @@ def columns(table: str) -> tuple[Column, ...]:
 def column(table: str, name: str) -> Column:
     """One column of a table."""
     return next(column for column in columns(table) if column.name == name)
+
+
+def undescribed(name: str, like: Column | None) -> Column:
+    """A column that no schema knows, its numbers written as in another column if there is one."""
+    written = {"unit": like.unit, "letter_code": like.letter_code} if like else {}
+    return _column({"name": name, "description": "", **written})
+
+
+def stage_columns(kinds: Mapping[str, str]) -> dict[str, Column]:
+    """The columns that a stage table may have, by name, for elements of these kinds."""
+    of_elements = [
+        column("stages", template).of(element)
+        for element, kind in sorted(kinds.items())
+        for template in (f"<{kind}>", *(ELEMENT + suffix for suffix in ELEMENT_SUFFIXES))
+    ]
+    general = [column("stages", name) for name in sorted(reserved_stage_columns())]
+    return {found.name: found for found in (*general, *of_elements)}
 
 
 def reserved_stage_columns() -> frozenset[str]:

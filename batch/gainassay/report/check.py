@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import asdict
 from typing import Any
 
+from gainassay.report import eligible
 from gainassay.report.text import table
 from gainassay.service import Prepared
 from gainassay.tables.parts import PartTable
@@ -14,7 +15,7 @@ MOST_LISTED = 20
 
 
 def text(prepared: Prepared) -> list[str]:
-    """Rows found and used, stages of each topology, and the rejected cells of each table."""
+    """Rows found and used, stages of each topology, eligible pairs, and the rejected cells of each table."""
     tables: dict[str, StageTable | PartTable] = {"stages": prepared.stages, "parts": prepared.parts}
     lines = table(
         ["table", "rows", "used", "rejected", "source"],
@@ -23,6 +24,7 @@ def text(prepared: Prepared) -> list[str]:
     )
     rows = [[group.topology.name, f"{len(group.names):,}"] for group in prepared.stages.groups]
     lines += ["", *table(["topology", "stages"], rows, right=[1])]
+    lines += eligible.text(prepared.pairs(), prepared.not_eligible(), prepared.never_eligible())
     for one in tables.values():
         if one.rejects:
             lines += ["", f"Rejected cells of {one.source}"]
@@ -43,6 +45,9 @@ def data(prepared: Prepared) -> dict[str, Any]:
         "stages": {"source": stages.source, "rows": stages.rows, "used": stages.used()},
         "parts": {"source": parts.source, "rows": parts.rows, "used": parts.used()},
         "topologies": {group.topology.name: len(group.names) for group in stages.groups},
+        "pairs": prepared.pairs(),
+        "not_eligible": prepared.not_eligible(),
+        "never_eligible": prepared.never_eligible(),
         "not_modelled": parts.not_modelled(),
         "warnings": prepared.warnings(),
         "rejected": [asdict(reject) for reject in (*stages.rejects, *parts.rejects)],

@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
+from gainassay.report import eligible
 from gainassay.report.text import percent_of, table
 
 MOST_LISTED = 8
@@ -17,6 +18,7 @@ def summary(manifest: Mapping[str, Any], folder: Path, hopeless: Sequence[str]) 
     rows = [["pairs", f"{pairs:,}", ""]]
     rows += [[verdict, f"{count:,}", percent_of(count, pairs)] for verdict, count in verdicts.items()]
     lines = table(["", "", ""], rows, right=[1, 2])[1:]
+    lines += eligible.text(pairs, manifest["not_eligible"], manifest["never_eligible"])
     lines += ["", "Most common dominant terms"]
     common = list(manifest["dominant_terms"].items())[:MOST_LISTED]
     lines += table(

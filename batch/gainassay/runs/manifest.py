@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import platform
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict
 from datetime import UTC, datetime
 from importlib.metadata import version
@@ -30,9 +30,15 @@ def manifest(
     parts: PartTable,
     warnings: Sequence[str],
     counts: Counts,
+    not_eligible: Mapping[str, int],
+    never_eligible: Mapping[str, int],
     files: Sequence[File],
 ) -> dict[str, Any]:
-    """What `run.json` says. `seconds` counts from `started`, when the job was opened, to now."""
+    """What `run.json` says.
+
+    `seconds` counts from `started`, when the job was opened, to now; `not_eligible` the pairs that each rule is the
+    first to exclude, `never_eligible` the stages and the parts that are left without a partner.
+    """
     tables: dict[str, StageTable | PartTable] = {"stages": stages, "parts": parts}
     return {
         "run": run,
@@ -57,6 +63,8 @@ def manifest(
         "not_modelled": list(parts.not_modelled()),
         "warnings": list(warnings),
         "pairs": sum(counts.verdicts.values()),
+        "not_eligible": dict(not_eligible),
+        "never_eligible": dict(never_eligible),
         "verdicts": counts.verdicts,
         "dominant_terms": counts.dominant_terms,
         "cautions": list(CAUTIONS),

@@ -75,7 +75,7 @@ def stage_summary(groups: Sequence[Group], tallies: Sequence[Tally]) -> pa.Table
             "gain_ideal": pa.array([row["gain_ideal"] for row in ordered], pa.float64()),
             "limit_ppm": pa.array([row["limit_ppm"] for row in ordered], pa.float64()),
             "error_elements_ppm": pa.array(errors, mask=~np.isfinite(errors)),
-            **_verdict_columns(np.array([row["verdicts"] for row in ordered])),
+            **_verdict_columns(np.array([row["verdicts"] for row in ordered]), len(groups[0].part_names)),
             "best_part": pa.array([row["best"] for row in ordered], pa.string()),
             "best_limit_used": pa.array(used, mask=~np.isfinite(used)),
         },
@@ -88,8 +88,13 @@ def part_summary(groups: Sequence[Group], tallies: Sequence[Tally]) -> pa.Table:
     counts = np.zeros((len(names), len(VERDICTS)), np.int64)
     for tally in tallies:
         counts[tally.chunk.parts] += tally.by_part
-    return summary_table("part_summary", {"part": pa.array(names.tolist(), pa.string()), **_verdict_columns(counts)})
+    stages = sum(len(group.stage_names) for group in groups)
+    return summary_table(
+        "part_summary", {"part": pa.array(names.tolist(), pa.string()), **_verdict_columns(counts, stages)}
+    )
 
 
-def _verdict_columns(counts: np.ndarray[Any, np.dtype[np.int64]]) -> dict[str, pa.Array]:
-    return {verdict: pa.array(counts[:, code]) for code, verdict in enumerate(VERDICTS)}
+def _verdict_columns(counts: np.ndarray[Any, np.dtype[np.int64]], partners: int) -> dict[str, pa.Array]:
+    """Pairs by verdict, and those of all partners that are not eligible and so have none."""
+    of_verdicts = {verdict: pa.array(counts[:, code]) for code, verdict in enumerate(VERDICTS)}
+    return {**of_verdicts, "not_eligible": pa.array(partners - counts.sum(axis=1))}

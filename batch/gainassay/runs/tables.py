@@ -11,9 +11,9 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
-from gainassay.screen.blocks import Screened
+from gainassay.screen.blocks import Screened, accounts
 from gainassay.screen.corners import term_names
-from gainassay.screen.kernel import UNBOUNDED, account
+from gainassay.screen.kernel import UNBOUNDED
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
 from gainassay.tables.rejects import Reject
 
@@ -40,7 +40,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         Terms of the account that get a column.
     """
     verdict = screened.judgement.verdict.ravel()
-    kept = np.arange(verdict.size) if rows == "all" else np.flatnonzero(verdict != VERDICTS.index("pass"))
+    is_kept = screened.eligible.ravel() & (rows == "all" or verdict != VERDICTS.index("pass"))
+    kept = np.flatnonzero(is_kept)
     shape = screened.judgement.verdict.shape
     stage, part = kept // shape[1], kept % shape[1]
     sides, outcome, names = screened.stage_side, screened.outcome, term_names(screened.group.form)
@@ -82,9 +83,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
     if terms:
-        whole = [slice(0, length) for length in shape]
-        found = account(sides, screened.part_side, screened.group.active_sets, whole[0], whole[1], outcome)
-        values = {name: term.ravel()[kept] for name, term in zip(names, found, strict=True) if name in terms}
+        found = zip(names, accounts(screened), strict=True)
+        values = {name: term.ravel()[kept] for name, term in found if name in terms}
         nothing = np.full(len(kept), np.nan)
         for name in terms:
             columns[f"term_{name}_ppm"] = number(np.where(unbounded, np.nan, values.get(name, nothing)) * PPM)

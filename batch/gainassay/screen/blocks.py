@@ -6,8 +6,8 @@ tables. Inside a chunk the kernel cuts as it likes.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, fields, replace
 from typing import TypeVar
 
 import numpy as np
@@ -15,17 +15,17 @@ from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
+from gainassay.screen import calibrated
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import (
     PartSide,
     StageSide,
     active_sets,
     elements_error,
-    part_side,
     stage_side,
     term_names,
 )
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
+from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, account, screen
 from gainassay.screen.signs import Reach, reach
 from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
 
@@ -52,17 +52,30 @@ class Group:
         Ordered.
     part_names : ndarray of str, shape (parts,)
         Ordered.
+    calibrated : bool
+        Whether only what moves after a calibration counts.
     reach : Reach
         Of all parts: what a chunk leaves out must not depend on which parts are in it.
+    pattern : ndarray of int, shape (stages,)
+        Place of each stage's pattern.
+    eligible : ndarray of bool, shape (patterns, parts)
+        The parts that the stages of a pattern are screened against.
     """
 
     form: Form
     stage_names: NDArray[np.str_]
     part_names: NDArray[np.str_]
     box: StageBox
+    calibrated: bool
     parts: PartSide
     active_sets: tuple[tuple[int, ...], ...]
     reach: Reach
+    pattern: NDArray[np.intp]
+    eligible: NDArray[np.bool_]
+
+    def corner(self, code: int) -> tuple[int, int]:
+        """The stage's and the part's corner that an outcome's `corner` stands for."""
+        return divmod(code, 1 << len(self.form.departures) if self.calibrated else len(self.active_sets))
 
 
 @dataclass(frozen=True)
@@ -76,12 +89,19 @@ class Chunk:
 
 @dataclass(frozen=True)
 class Screened:
-    """A chunk with all that was found."""
+    """A chunk with all that was found.
+
+    Attributes
+    ----------
+    eligible : ndarray of bool, shape (stages, parts)
+        The pairs that were screened; of the others nothing is found, and what stands for them means nothing.
+    """
 
     chunk: Chunk
     group: Group
     stage_side: StageSide
     part_side: PartSide
+    eligible: NDArray[np.bool_]
     outcome: Outcome
     judgement: Judgement
 
@@ -119,22 +139,27 @@ class Tally:
 
 def group(
     form: Form,
-    stage_names: NDArray[np.str_],
-    box: StageBox,
-    part_names: NDArray[np.str_],
-    nominal: FloatArray,
-    worst: FloatArray,
-    evidence: NDArray[np.uint8],
+    stages: tuple[NDArray[np.str_], StageBox],
+    parts: tuple[NDArray[np.str_], PartSide],
+    patterns: tuple[NDArray[np.intp], NDArray[np.bool_]],
 ) -> Group:
-    """Stages of one form and all parts; `nominal`, `worst` and `evidence` have shape (departures, parts)."""
+    """Stages of one form and all parts, each as names and numbers.
+
+    `patterns` says which pairs are screened: `pattern` and `eligible` of the group. Stages are calibrated if the parts
+    say what changes after a calibration.
+    """
+    (stage_names, box), (part_names, side) = stages, parts
     return Group(
-        form,
-        stage_names,
-        part_names,
-        box,
-        part_side(form, nominal, worst, evidence),
-        active_sets(form),
-        reach(form, worst, box.memberships()),
+        form=form,
+        stage_names=stage_names,
+        part_names=part_names,
+        box=box,
+        calibrated=side.changed is not None,
+        parts=side,
+        active_sets=active_sets(form),
+        reach=reach(form, side.limits, box.memberships()),
+        pattern=patterns[0],
+        eligible=patterns[1],
     )
 
 
@@ -156,22 +181,78 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
 def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK) -> Screened:
     """Screen one chunk."""
     one = groups[chunk.group]
-    stages = stage_side(one.form, one.box.part(chunk.stages), one.reach)
+    side = calibrated.stage_side if one.calibrated else stage_side
+    stages = side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
-    outcome = screen(stages, parts, one.active_sets, block)
+    pattern, of_patterns = one.pattern[chunk.stages], one.eligible[:, chunk.parts]
+    eligible = of_patterns[pattern]
+    outcome = (
+        _screen(one, stages, parts, block)
+        if eligible.all()
+        else _screen_eligible(one, stages, parts, pattern, of_patterns, block)
+    )
     judgement = judge(stages, parts, outcome, rules)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
-    return Screened(chunk, one, stages, parts, outcome, judgement)
+    return Screened(chunk, one, stages, parts, eligible, outcome, judgement)
+
+
+def _screen(one: Group, stages: StageSide, parts: PartSide, block: int) -> Outcome:
+    if one.calibrated:
+        return calibrated.screen(one.form, stages, parts, block)
+    return screen(stages, parts, one.active_sets, block)
+
+
+def accounts(screened: Screened) -> Iterator[FloatArray]:
+    """The terms of each pair's error at its corner, as `kernel.account` gives them."""
+    one, every = screened.group, slice(None)
+    if one.calibrated:
+        return calibrated.account(one.form, screened.stage_side, screened.part_side, every, every, screened.outcome)
+    return account(screened.stage_side, screened.part_side, one.active_sets, every, every, screened.outcome)
+
+
+def _screen_eligible(
+    one: Group,
+    stages: StageSide,
+    parts: PartSide,
+    pattern: NDArray[np.intp],
+    eligible: NDArray[np.bool_],
+    block: int,
+) -> Outcome:
+    """Screen the stages of each pattern against its parts, and leave all other pairs open."""
+    shape = (len(pattern), eligible.shape[1])
+    nothing = np.full(shape, np.nan)
+    found = Outcome(
+        nothing,
+        nothing.copy(),
+        np.full(shape, UNBOUNDED, np.int32),
+        np.full(shape, NO_TERM, np.int16),
+        nothing.copy(),
+        None if stages.slack is None else nothing.copy(),
+    )
+    for place in np.unique(pattern):
+        rows, columns = np.flatnonzero(pattern == place), np.flatnonzero(eligible[place])
+        if len(columns):
+            only = _screen(one, _only(stages, rows), parts.at(columns), block)
+            for field in fields(Outcome):
+                if getattr(found, field.name) is not None:
+                    getattr(found, field.name)[np.ix_(rows, columns)] = getattr(only, field.name)[rows]
+    return found
+
+
+def _only(stages: StageSide, rows: NDArray[np.intp]) -> StageSide:
+    """The same stages with nothing to visit but for some of them."""
+    plans = [replace(plan, stages=np.intersect1d(plan.stages, rows)) for plan in stages.plans]
+    return replace(stages, plans=tuple(plan for plan in plans if len(plan.stages)))
 
 
 def tally(screened: Screened) -> Tally:
     """What a screened chunk adds to the summaries."""
     verdict, used = screened.judgement.verdict, screened.judgement.limit_used
-    is_verdict = np.stack([verdict == code for code in range(len(VERDICTS))])
+    is_verdict = np.stack([(verdict == code) & screened.eligible for code in range(len(VERDICTS))])
     rank = np.array([RANK[code] for code in range(len(VERDICTS))])[verdict]
     # Lexicographic minimum of (rank, limit_used) along each stage; the first of equals, as parts are ordered.
-    bounded_rank = np.where(np.isnan(used), len(VERDICTS), rank)
+    bounded_rank = np.where(np.isnan(used) | ~screened.eligible, len(VERDICTS), rank)
     best_rank = bounded_rank.min(axis=1)
     candidate = np.where(bounded_rank == best_rank[:, None], np.nan_to_num(used, nan=np.inf), np.inf)
     best = candidate.argmin(axis=1)

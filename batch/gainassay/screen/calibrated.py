@@ -146,7 +146,7 @@ def screen(form: Form, stages: StageSide, parts: PartSide, block: int = PAIRS_PE
             corner=corner,
             dominant=np.zeros(shape, np.int16),
             dominant_value=np.where(corner == UNBOUNDED, np.nan, 0.0),
-            beyond=beyond,
+            beyond=None if stages.slack is None else beyond,
         )
         every = slice(None)
         for place, term in enumerate(account(form, stages, parts, every, every, found)):

@@ -123,6 +123,16 @@ class PartSide:
             None if self.changed is None else self.changed[..., parts],
         )
 
+    def at(self, places: NDArray[np.intp]) -> PartSide:
+        """The parts at some places, row after row in memory as the kernel reads them."""
+        return PartSide(
+            np.take(self.nominal, places, axis=1),
+            np.take(self.worst, places, axis=1),
+            np.take(self.limits, places, axis=1),
+            np.take(self.evidence, places, axis=1),
+            None if self.changed is None else np.take(self.changed, places, axis=-1),
+        )
+
 
 def term_names(form: Form) -> tuple[str, ...]:
     """Names of all terms of a row's account, in its order: set-point, elements, networks, departures."""

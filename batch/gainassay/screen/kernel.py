@@ -80,7 +80,7 @@ def screen(
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         for plan, rows, columns in blocks_of(stages, shape[1], block):
             _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
-    return outcome if stages.slack is None else _with_what_lies_beyond(stages, parts, active_sets, outcome)
+        return outcome if stages.slack is None else _with_what_lies_beyond(stages, parts, active_sets, outcome)
 
 
 def beyond_corners(stages: StageSide, parts: PartSide, error: FloatArray) -> FloatArray:

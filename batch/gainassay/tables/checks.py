@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
@@ -28,10 +28,17 @@ MOST_LISTED = 3
 
 @dataclass
 class Checking:
-    """A table on its way from raw cells to checked arrays."""
+    """A table on its way from raw cells to checked arrays.
+
+    Attributes
+    ----------
+    read : dict[Column, Numbers]
+        Columns read so far: each is read, and its bad cells rejected, once.
+    """
 
     raw: RawTable
     rejects: Rejects
+    read: dict[Column, Numbers] = field(default_factory=dict)
 
     @staticmethod
     def of(raw: RawTable) -> Checking:
@@ -71,10 +78,11 @@ class Checking:
         count = len(self.raw.rows)
         if column.name not in self.raw.columns:
             return Numbers(np.full(count, np.nan), np.ones(count, dtype=bool), {})
-        found = numbers(self.cells(column.name), column)
-        for position, reason in found.refused.items():
-            self.refuse(position, column.name, reason)
-        return found
+        if column not in self.read:
+            self.read[column] = numbers(self.cells(column.name), column)
+            for position, reason in self.read[column].refused.items():
+                self.refuse(position, column.name, reason)
+        return self.read[column]
 
     def names(self, column: str) -> NDArray[np.object_]:
         """The names in a key column; blank, unprintable and repeated names are rejected."""

@@ -19,6 +19,7 @@ from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
 from gainassay.job import StandIn
 from gainassay.tables import sources
 from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.rejects import Reject, rejected_rows
 
 PER_PCT = 1e-2
@@ -50,6 +51,8 @@ class PartTable:
     modelled : tuple[bool, ...]
         Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
         evidence GUARANTEED, since nothing is claimed about it.
+    compared : Mapping[str, Cells]
+        The columns that rules compare with the stages'.
     rejected_names : Mapping[str, int]
         Row in the file of each name that was rejected.
     """
@@ -66,6 +69,7 @@ class PartTable:
     change: FloatArray
     evidence_change: NDArray[np.uint8]
     modelled: tuple[bool, ...]
+    compared: Mapping[str, Cells]
     rejects: tuple[Reject, ...]
     rejected_names: Mapping[str, int]
     warnings: tuple[str, ...]
@@ -83,7 +87,7 @@ class PartTable:
         return tuple(d.quantity for d, there in zip(DEPARTURES, self.modelled, strict=True) if not there)
 
 
-def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
+def load(path: Path, assume: Mapping[str, StandIn], compared: Compared = NOTHING) -> PartTable:
     """Read and check a parts table.
 
     Parameters
@@ -92,11 +96,13 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
         The file.
     assume : Mapping[str, StandIn]
         What stands in for missing numbers, by data-sheet quantity.
+    compared : Compared
+        What the job's rules compare with the stages.
 
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every part needs, or holds no row that can be used.
+        If the file cannot be read, lacks a column that every part or a rule needs, or holds no row that can be used.
     """
     raw = sources.read(path)
     known = tables.columns("parts")
@@ -107,6 +113,7 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
     checking = Checking.of(raw)
     names = checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
+    cells = read_compared(checking, compared)
     kept = np.flatnonzero(checking.good())
     order = kept[np.argsort(names[kept].astype(np.str_))]
     rows = len(raw.rows) + len(raw.ragged)
@@ -125,9 +132,10 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
         change=np.array([one.change[order] for one in read]),
         evidence_change=np.array([one.evidence_change[order] for one in read], np.uint8),
         modelled=tuple(one.modelled for one in read),
+        compared={name: column.at(order) for name, column in cells.items()},
         rejects=checking.found(),
         rejected_names=checking.rejected_names(names),
-        warnings=unknown_columns(raw, [column.name for column in known]),
+        warnings=unknown_columns(raw, [*(column.name for column in known), *compared.names()]),
     )
 
 

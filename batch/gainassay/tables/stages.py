@@ -21,6 +21,7 @@ from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology
 from gainassay.tables import sources, spreads
 from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.rejects import Reject, rejected_rows
 from gainassay.tables.spreads import SpreadColumns, Spreads
 
@@ -57,6 +58,8 @@ class StageGroup:
         Required accuracy as a fraction.
     targets : ndarray, shape (stages,)
         Target gain [gain unit]; nan where the ideal gain is the target.
+    compared : Mapping[str, Cells]
+        The columns that rules compare with the parts'.
     """
 
     topology: Topology
@@ -68,6 +71,7 @@ class StageGroup:
     calibrated: bool
     limits: FloatArray
     targets: FloatArray
+    compared: Mapping[str, Cells]
 
 
 @dataclass(frozen=True)
@@ -117,18 +121,27 @@ def left_out(topology: Topology, values: FloatArray) -> dict[str, str]:
     return {**absent, **topology.at_dc()}
 
 
-def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
+def kinds(library: Mapping[str, Topology]) -> dict[str, str]:
+    """Kind of each element of any topology, by name."""
+    return {element.name: element.kind for topology in library.values() for element in topology.elements}
+
+
+def load(path: Path, library: Mapping[str, Topology], compared: Compared = NOTHING) -> StageTable:
     """Read and check a stage table.
+
+    Parameters
+    ----------
+    compared : Compared
+        What the job's rules compare with the parts.
 
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every stage needs, names a topology that has no form,
+        If the file cannot be read, lacks a column that every stage or a rule needs, names a topology that has no form,
         or holds no row that can be used.
     """
     raw = sources.read(path)
-    kinds = {element.name: element.kind for topology in library.values() for element in topology.elements}
-    elements = sorted(kinds)
+    kind_of = kinds(library)
     require_columns(raw, "stages")
     if not {"accuracy_pct", "accuracy_ppm"} & set(raw.columns):
         raise InputError(f"{path}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?")
@@ -139,10 +152,11 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         name: checking.column(tables.column("stages", name)) for name in ("accuracy_pct", "accuracy_ppm", "target_gain")
     }
     limits = _limits(checking, general["accuracy_pct"], general["accuracy_ppm"])
-    known = [name for name in elements if name in raw.columns]
-    values = {name: checking.column(tables.column("stages", f"<{kinds[name]}>").of(name)) for name in known}
-    moving = spreads.read(checking, elements)
+    known = [name for name in sorted(kind_of) if name in raw.columns]
+    values = {name: checking.column(tables.column("stages", f"<{kind_of[name]}>").of(name)) for name in known}
+    moving = spreads.read(checking, sorted(kind_of))
     is_hot, is_calibrated = ~np.isnan(moving.excursion), _calibrated(checking)
+    cells = read_compared(checking, compared)
 
     groups = []
     for name in sorted(set(chosen) & set(library)):
@@ -162,6 +176,7 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
                 calibrated=calibrated,
                 limits=limits[members],
                 targets=general["target_gain"].values[members],
+                compared={column: found.at(members) for column, found in cells.items()},
             )
             _refuse_without_form(checking, group, members)
             kept = np.flatnonzero(checking.good()[members])
@@ -178,15 +193,7 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         rejects=checking.found(),
         rejected_names=checking.rejected_names(names),
         warnings=(
-            *unknown_columns(
-                raw,
-                [
-                    *tables.reserved_stage_columns(),
-                    *elements,
-                    *(f"{name}{suffix}" for name in elements for suffix in tables.ELEMENT_SUFFIXES),
-                    *moving.names(),
-                ],
-            ),
+            *unknown_columns(raw, [*tables.stage_columns(kind_of), *moving.names(), *compared.names()]),
             *_idle_coefficients(raw.source, moving, is_hot),
         ),
     )
@@ -212,8 +219,6 @@ def _calibrated(checking: Checking) -> NDArray[np.bool_]:
     for position, word in enumerate(words):
         if word not in ("yes", "no", ""):
             checking.refuse(position, "calibrated", "is neither yes nor no; leave it blank for no")
-        if word == "yes":
-            checking.refuse(position, "calibrated", "NOT YET")
     return np.array([word == "yes" for word in words], dtype=bool)
 
 
@@ -302,4 +307,5 @@ def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:
         spreads=group.spreads.of(order),
         limits=group.limits[order],
         targets=group.targets[order],
+        compared={column: cells.at(order) for column, cells in group.compared.items()},
     )

@@ -170,9 +170,9 @@ def _worst(
     shape = (len(rows), len(range(*columns.indices(parts.worst.shape[1]))))
     worst, corner = np.full(shape, np.nan), np.full(shape, UNBOUNDED, np.int32)
     bounded = np.ones(shape, dtype=bool)
+    products = {q: _products(form, parts, q, columns) for q in {q for _, q in corners}}
     for number, (j, q) in enumerate(corners):
-        at = stages.first[rows] + j
-        error, is_bounded = _error(form, stages, parts, at[:, None], q, columns)
+        error, is_bounded = _error(stages, (stages.first[rows] + j)[:, None], products[q])
         bounded &= is_bounded & np.isfinite(error)
         larger = np.abs(error) > np.abs(worst) if number else np.ones(shape, dtype=bool)
         np.copyto(worst, error, where=larger)
@@ -180,11 +180,9 @@ def _worst(
     return np.where(bounded, worst, np.nan), np.where(bounded, corner, np.int32(UNBOUNDED))
 
 
-def _error(
-    form: Form, stages: StageSide, parts: PartSide, at: NDArray[np.intp], q: int, columns: slice
-) -> tuple[FloatArray, NDArray[np.bool_]]:
+def _error(stages: StageSide, at: NDArray[np.intp], products: FloatArray) -> tuple[FloatArray, NDArray[np.bool_]]:
     """Error at one corner, and whether both denominators are positive there."""
-    before, after = _products(form, parts, q, columns)
+    before, after = products
     was, now = _departing(at_calibration(stages), at, before), _departing(afterwards(stages), at, after)
     e = stages.corner_error[at]
     error = (e + (1.0 + e) * now.error() - was.error()) / (1.0 + was.error())

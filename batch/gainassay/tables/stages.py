@@ -207,8 +207,8 @@ def _idle_coefficients(source: str, moving: SpreadColumns, is_hot: NDArray[np.bo
     if not count:
         return ()
     return (
-        f"{source}: {count:,} rows have a temperature coefficient but neither t_min_c nor t_max_c; they are taken "
-        "at 25 degrees Celsius, where it moves nothing",
+        f"{source}: temperature coefficients without t_min_c and t_max_c, in {count:,} of its rows; these are taken at "
+        "25 degrees Celsius, where they move nothing",
     )
 
 

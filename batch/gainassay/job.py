@@ -51,6 +51,7 @@ class Results:
     rows: str
     formats: tuple[str, ...]
     terms: bool
+    need: bool
 
 
 @dataclass(frozen=True)
@@ -103,6 +104,7 @@ def read(path: Path) -> Job:
             rows=results["rows"],
             formats=tuple(results["formats"]),
             terms=results["terms"],
+            need=results["need"],
         ),
     )
 

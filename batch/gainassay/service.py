@@ -21,7 +21,7 @@ from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
 from gainassay.runs.folder import File, write
 from gainassay.runs.manifest import manifest
-from gainassay.screen import blocks
+from gainassay.screen import blocks, need
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.corners import StageBox, term_names
 from gainassay.screen.verdicts import Rules
@@ -130,16 +130,16 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         If results cannot be written; nothing is left behind then.
     """
     job, results = prepared.job, prepared.job.results
-    groups = groups_of(prepared.stages, prepared.parts)
+    groups, rules = groups_of(prepared.stages, prepared.parts), rules_of(job)
     terms = tuple(dict.fromkeys(name for group in groups for name in term_names(group.form))) if results.terms else ()
     fingerprint = f"{prepared.stages.sha256} {prepared.parts.sha256} {job.document}"
     with run_folder.begin(results.folder, prepared.started, fingerprint) as unfinished:
         (unfinished.folder / "verdicts").mkdir()
 
         def keep(place: int, screened: Screened) -> list[File]:
-            return _write_verdicts(unfinished.folder, place, screened, results, terms)
+            return _write_verdicts(unfinished.folder, place, screened, rules, results, terms)
 
-        done = blocks.run(groups, rules_of(job), keep, workers or usable_cores(), after_each=after_each)
+        done = blocks.run(groups, rules, keep, workers or usable_cores(), after_each=after_each)
         tallies = [tally for _, tally in done]
         stages = summaries.stage_summary(groups, tallies)
         rejects = [*prepared.stages.rejects, *prepared.parts.rejects]
@@ -164,10 +164,18 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
     return Done(committed, content, tuple(hopeless))
 
 
-def _write_verdicts(folder: Path, place: int, screened: Screened, results: Results, terms: Sequence[str]) -> list[File]:
+def _write_verdicts(
+    folder: Path,
+    place: int,
+    screened: Screened,
+    rules: Rules,
+    results: Results,
+    terms: Sequence[str],
+) -> list[File]:
     if results.rows == "none":
         return []
-    table = run_tables.verdict_table(screened, results.rows, terms)
+    needs = need.needed(need.of_chunk(screened, rules)) if results.need else None
+    table = run_tables.verdict_table(screened, results.rows, terms, needs)
     # Named after the chunk's place, so that the order of the files is the order of the rows.
     name = f"verdicts/{place:05d}-{screened.group.form.topology}"
     return [write(folder, f"{name}.{kind}", table) for kind in results.formats]

@@ -11,6 +11,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
+from gainassay.forms.departures import DEPARTURES
 from gainassay.screen.blocks import Screened
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account
@@ -29,7 +30,9 @@ REPEATED = (
 """Columns of the verdict table with few different values, which are stored as a dictionary."""
 
 
-def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Table:
+def verdict_table(
+    screened: Screened, rows: str, terms: Sequence[str], needs: NDArray[np.float64] | None = None
+) -> pa.Table:
     """The rows of the verdict table that a chunk gives, ordered by stage and part.
 
     Parameters
@@ -38,6 +41,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         `all` or `not passing`.
     terms : sequence of str
         Terms of the account that get a column.
+    needs : ndarray, shape (departures, stages, parts), optional
+        What `need.needed` gives for the pairs, a column for each quantity.
     """
     verdict = screened.judgement.verdict.ravel()
     kept = np.arange(verdict.size) if rows == "all" else np.flatnonzero(verdict != VERDICTS.index("pass"))
@@ -81,6 +86,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         "dominant_term": words(outcome.dominant.ravel()[kept], names),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
+    if needs is not None:
+        columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
     if terms:
         whole = [slice(0, length) for length in shape]
         found = account(sides, screened.part_side, screened.group.active_sets, whole[0], whole[1], outcome.corner)

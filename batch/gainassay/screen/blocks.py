@@ -52,6 +52,8 @@ class Group:
         Ordered.
     part_names : ndarray of str, shape (parts,)
         Ordered.
+    worst : ndarray, shape (departures, parts)
+        The departures at their limits, in the order of `DEPARTURES`.
     reach : Reach
         Of all parts: what a chunk leaves out must not depend on which parts are in it.
     """
@@ -60,6 +62,7 @@ class Group:
     stage_names: NDArray[np.str_]
     part_names: NDArray[np.str_]
     box: StageBox
+    worst: FloatArray
     parts: PartSide
     active_sets: tuple[tuple[int, ...], ...]
     reach: Reach
@@ -132,6 +135,7 @@ def group(
         stage_names,
         part_names,
         box,
+        worst,
         part_side(form, nominal, worst, evidence),
         active_sets(form),
         reach(form, worst),

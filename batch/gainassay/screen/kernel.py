@@ -73,7 +73,7 @@ def screen(
         np.empty(shape),
     )
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in _blocks(stages, shape[1], block):
+        for plan, rows, columns in in_blocks(stages, shape[1], block):
             _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
     return outcome
 
@@ -82,7 +82,7 @@ def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BL
     """The `error_nominal` of `screen` alone."""
     found = np.empty((len(stages.limits), parts.worst.shape[1]))
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for _, rows, columns in _blocks(stages, found.shape[1], block):
+        for _, rows, columns in in_blocks(stages, found.shape[1], block):
             found[rows, columns] = _nominal(stages, parts, rows, columns)
     return found
 
@@ -94,14 +94,14 @@ def worst_errors(
     found = np.empty((len(stages.limits), parts.worst.shape[1]))
     corner = np.empty(found.shape, np.int32)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in _blocks(stages, found.shape[1], block):
+        for plan, rows, columns in in_blocks(stages, found.shape[1], block):
             found[rows, columns], corner[rows, columns] = _worst(
                 stages, parts, active_sets, plan.corners, rows, columns
             )
     return found, corner
 
 
-def _blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
+def in_blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
     """Blocks of pairs whose stages visit the same corners."""
     width = max(1, min(parts, block))
     height = max(1, block // width)
@@ -137,14 +137,14 @@ def _nominal(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns
     products = parts.nominal[:, columns]
     numerator, denominator = np.zeros((2, len(rows), products.shape[1]))
     denominator += 1.0
-    _add_products(stages.contrasts[:, rows], stages.loadings[:, rows], products, numerator, denominator)
+    add_products(stages.contrasts[:, rows], stages.loadings[:, rows], products, numerator, denominator)
     may_vanish = bool((stages.loadings[:, rows] < 0.0).any())
     e = stages.set_point[rows, None]
     error = e + (1.0 + e) * (numerator / denominator)
     return np.where(denominator > 0.0, error, np.nan) if may_vanish else error
 
 
-def _add_products(
+def add_products(
     contrasts: FloatArray, loadings: FloatArray, products: FloatArray, numerator: FloatArray, denominator: FloatArray
 ) -> None:
     """Add sum_k contrasts[k, :, None] * products[k] to the numerator, and so for the loadings, in the order of k."""
@@ -183,7 +183,7 @@ def _worst(
             contrasts, loadings = stages.corner_contrasts[active][:, at], stages.corner_loadings[active][:, at]
             numerator[:] = 0.0
             denominator[:] = 1.0
-            _add_products(contrasts, loadings, products[active], numerator, denominator)
+            add_products(contrasts, loadings, products[active], numerator, denominator)
             # 1 + sum d m stays positive by itself where no loading is negative.
             if (loadings < 0.0).any():
                 bounded = denominator > 0.0 if bounded is None else bounded & (denominator > 0.0)
@@ -249,7 +249,7 @@ def nominal_account(stages: StageSide, parts: PartSide) -> Iterator[FloatArray]:
     for _ in stages.corner_terms:
         yield np.zeros(shape)
     numerator, denominator = np.zeros(shape), np.ones(shape)
-    _add_products(stages.contrasts, stages.loadings, parts.nominal, numerator, denominator)
+    add_products(stages.contrasts, stages.loadings, parts.nominal, numerator, denominator)
     lift = (1.0 + stages.set_point[:, None]) / denominator
     for contrast, factor in zip(stages.contrasts, parts.nominal, strict=True):
         yield lift * (contrast[:, None] * factor)

@@ -27,7 +27,7 @@ def need(job: Path, to: Path | None, workers: int | None, fail_on: tuple[str, ..
     is verified by putting it back.
     """
     if to is not None:
-        aside.ending(to)
+        aside.check(to)
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
     groups, rules = service.groups_of(prepared.stages, prepared.parts), service.rules_of(prepared.job)

@@ -12,17 +12,18 @@ from gainassay.runs.folder import WRITERS
 from gainassay.runs.tables import sync
 
 
-def ending(path: Path) -> str:
-    """The ending of a name under which a table can be written.
+def check(path: Path) -> None:
+    """See that a table could be written to a path.
 
     Raises
     ------
     InputError
-        If no table is written under such a name.
+        If no table is written under such a name, or there is no such folder.
     """
     if path.suffix not in WRITERS:
-        raise InputError(f"{path}: the name must end with {' or '.join(sorted(WRITERS))}")
-    return path.suffix
+        raise InputError(f"{path}: the name must end with {' or '.join(WRITERS)}")
+    if not path.parent.is_dir():
+        raise InputError(f"{path}: cannot be written: there is no folder {path.parent}")
 
 
 def write_whole(table: pa.Table, path: Path) -> None:
@@ -33,9 +34,11 @@ def write_whole(table: pa.Table, path: Path) -> None:
     InputError
         If the file cannot be written; what lay there before is left as it was.
     """
+    check(path)
     aside = path.with_name(f".{path.name}.{os.getpid()}")
     try:
-        WRITERS[ending(path)](table, aside)
+        aside.touch()
+        WRITERS[path.suffix](table, aside)
         aside.replace(path)
         sync(path.parent)
     except OSError as error:

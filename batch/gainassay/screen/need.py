@@ -245,7 +245,7 @@ def _first_crossing(sides: FloatArray, upto: FloatArray) -> FloatArray:
         return upto
     if sides.shape[1] == 2:
         start, slope = sides[:, 0], sides[:, 1]
-        return np.asarray(np.minimum.reduce([upto, *np.where(slope > 0.0, -start / slope, np.inf)]))
+        return np.asarray(np.fmin.reduce([upto, *np.where(slope > 0.0, -start / slope, np.inf)]))
     is_outside = ~_is_inside(sides, upto)
     if not is_outside.any():
         return upto

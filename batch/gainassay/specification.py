@@ -53,6 +53,7 @@ def specify(
         "stage": summary.column("stage"),
         "topology": summary.column("topology"),
         "outlook": pa.array(_outlook(summary, np.isnan(found["floor_a_ol"])), pa.string()),
+        "limit_ppm": summary.column("limit_ppm"),
         "allowed_ppm": allowed,
         "error_elements_ppm": summary.column("error_elements_ppm"),
         "excess_ppm": np.where(excess > 0.0, excess, np.nan),
@@ -77,8 +78,8 @@ def counts(table: pa.Table) -> dict[str, int]:
 
 
 def _outlook(summary: pa.Table, is_hopeless: NDArray[np.bool_]) -> list[str]:
-    passing, unproven = (summary.column(verdict).to_numpy() > 0 for verdict in ("pass", "unproven"))
-    place = np.select([passing, unproven, ~is_hopeless], range(3), 3)
+    passes, leans = (summary.column(verdict).to_numpy() > 0 for verdict in ("pass", "unproven"))
+    place = np.select([passes, leans, ~is_hopeless], range(3), 3)
     return [OUTLOOKS[code] for code in place.tolist()]
 
 

@@ -45,6 +45,10 @@ def some_parts(rng: np.random.Generator, count: int) -> Array:
     return np.asarray(10.0 ** np.array(decades))
 
 
+def scaled(box: StageBox, factor: Array) -> StageBox:
+    return replace(box, tolerances=box.tolerances * factor)
+
+
 def as_departure(kind: int, figures: Array) -> Array:
     return np.asarray(1.0 / figures if DEPARTURES[kind].reciprocal else figures)
 
@@ -155,9 +159,10 @@ def test_no_part_can_pass() -> None:
     assert np.isnan(needed(case)).all()
     factor = bearable_spread(case)
     assert 0.0 < factor[0] < 0.1
-    shrunk = replace(case.box, tolerances=case.box.tolerances * factor)
-    assert np.abs(paired_errors(case.form, shrunk, case.others[:, :, 0])) == pytest.approx(1e-3, rel=1e-9)
-    wider = replace(case.box, tolerances=case.box.tolerances * factor * (1.0 + STEP))
+    assert np.abs(paired_errors(case.form, scaled(case.box, factor), case.others[:, :, 0])) == pytest.approx(
+        1e-3, rel=1e-9
+    )
+    wider = scaled(case.box, factor * (1.0 + STEP))
     assert np.abs(paired_errors(case.form, wider, case.others[:, :, 0]))[0] > 1e-3
 
 
@@ -180,10 +185,16 @@ def test_a_gain_that_has_no_bound_has_no_need() -> None:
         {"r1": ("in", "plus"), "r2": ("plus", "out"), "r3": ("minus", "out"), "r4": ("minus", "ground")},
         [("plus", "minus", "out")],
     )
-    form, values = derive(topology), np.array([[1000.0], [990.0], [1000.0], [1000.0]])
-    box = StageBox(values, np.full((4, 1), 0.02), np.ones(1), np.array([-1.0]))
+    form, values = derive(topology), np.array([[1000.0], [1010.0], [1000.0], [1000.0]])
+    box = StageBox(values, np.full((4, 1), 0.02), np.full(1, 5.0), np.array([np.nan]))
     limits = np.array([[1e-6], [0.0], [0.0]])
-    assert np.isnan(needed(Asked(form, box, limits[:, :, None], limits))).all()
+    case = Asked(form, box, limits[:, :, None], limits)
+    assert np.isnan(needed(case)).all()
+    # With smaller tolerances it has a bound, and a need.
+    factor = bearable_spread(case)
+    assert 0.0 < factor[0] < 1.0
+    assert np.abs(paired_errors(form, scaled(box, factor), limits)) == pytest.approx(5.0, rel=1e-9)
+    assert np.isfinite(needed(replace(case, box=scaled(box, factor * 0.9)))).all()
 
 
 def test_what_a_better_table_proves_less_of_is_found_all_the_same() -> None:

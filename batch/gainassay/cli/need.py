@@ -30,6 +30,8 @@ def need(job: Path, to: Path | None, workers: int | None, fail_on: tuple[str, ..
         aside.check(to)
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
+    if rejected := prepared.rejected_rows():
+        shared.warn([f"rows that were rejected: {rejected:,}; `gainassay check {job}` says why"])
     groups, rules = service.groups_of(prepared.stages, prepared.parts), service.rules_of(prepared.job)
     with shared.progress("Screening", prepared.stages.used() * prepared.parts.used()) as advance:
         table = specification.specify(groups, rules, workers or service.usable_cores(), advance)
@@ -39,4 +41,4 @@ def need(job: Path, to: Path | None, workers: int | None, fail_on: tuple[str, ..
         shared.data({"stages": table.to_pylist(), "cautions": CAUTIONS})
     else:
         shared.lines(report.text(table))
-    shared.meet(fail_on, {**specification.counts(table), "rejected": prepared.rejected_rows()})
+    shared.meet(fail_on, {**specification.counts(table), "rejected": rejected})

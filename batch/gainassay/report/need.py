@@ -36,8 +36,7 @@ def text(found: pa.Table) -> list[str]:
     """A need table: how many stages stand how, the specification lines, and the stages that no part can pass."""
     rows = found.to_pylist()
     groups = {outlook: [row for row in rows if row["outlook"] == outlook] for outlook in OUTLOOKS}
-    hopeless = groups["hopeless"]
-    others = [row for row in rows if row not in hopeless]
+    others = [row for row in rows if row["outlook"] != "hopeless"]
     stands = [[outlook, f"{len(groups[outlook]):,}", MEANINGS[outlook]] for outlook in OUTLOOKS]
     lines = table(["", "", ""], stands, right=[1])[1:]
     if others:
@@ -47,9 +46,9 @@ def text(found: pa.Table) -> list[str]:
     if groups["unmet"]:
         lines += ["", "No part of the table is inside the limit"]
         lines += [f"  {row['stage']}: {_with_part(row)}" for row in groups["unmet"]]
-    if hopeless:
+    if groups["hopeless"]:
         lines += ["", "No part can pass"]
-        lines += [f"  {row['stage']}: {_hopeless(row)}" for row in hopeless]
+        lines += [f"  {row['stage']}: {_hopeless(row)}" for row in groups["hopeless"]]
     return [*lines, "", *CAUTIONS]
 
 
@@ -89,8 +88,9 @@ def _figure(departure: Departure, value: float) -> str:
 
 def _hopeless(row: Row) -> str:
     if row["excess_ppm"] is None:
-        return "at a corner of its tolerances the gain has no bound: no part can pass"
-    return f"resistors alone exceed the limit by {row['excess_ppm']:,.4g} ppm: no part can pass; {_remedy(row)}"
+        return f"at a corner of its tolerances the gain has no bound: no part can pass; {_remedy(row)}"
+    limit = "the limit" if row["allowed_ppm"] == row["limit_ppm"] else "the limit, less its guard band,"
+    return f"resistors alone exceed {limit} by {row['excess_ppm']:,.4g} ppm: no part can pass; {_remedy(row)}"
 
 
 def _remedy(row: Row) -> str:

@@ -18,6 +18,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from itertools import product
 
 import numpy as np
 from numpy.typing import NDArray
@@ -29,6 +30,7 @@ from gainassay.forms.form import Form
 from gainassay.screen.blocks import Screened
 from gainassay.screen.corners import (
     MOST_OPEN_ELEMENTS,
+    Plan,
     StageBox,
     StageSide,
     active_sets,
@@ -290,33 +292,52 @@ def bearable_spread(asked: Asked) -> FloatArray:
     ndarray, shape (stages,)
         nan where even exact elements do not pass: the set-point, or the part, is too far off.
     """
+    sets = active_sets(asked.form)
     side = stage_side(asked.form, asked.box, reach(asked.form, asked.table))
+    side = replace(side, plans=_with_lost_ones(side, len(sets)))
     whole = products(asked.form, asked.others)
-    powers, sets, one = [0] * len(whole), active_sets(asked.form), np.ones((len(asked.box.limits), 1))
+    powers, one = [0] * len(whole), np.ones((len(asked.box.limits), 1))
 
     def passes(factor: FloatArray) -> NDArray[np.bool_]:
-        return ~np.isnan(_bearable(_shrunk(asked, side, factor), whole, powers, sets, one)[:, 0])
+        shrunk = _shrunk(asked, side, factor)
+        return shrunk.regular & ~np.isnan(_bearable(shrunk, whole, powers, sets, one)[:, 0])
 
     found = last(passes, np.ones(len(one)))
     return np.where(passes(found), found, np.nan)
 
 
+def _corner_counts(side: StageSide) -> NDArray[np.intp]:
+    return np.diff(np.append(side.first, side.corner_values.shape[1]))
+
+
+def _with_lost_ones(side: StageSide, sets: int) -> tuple[Plan, ...]:
+    """The plans, stages that are not regular visiting every corner: nothing was proved of them, so all are there."""
+    lost = np.flatnonzero(~side.regular)
+    counts = _corner_counts(side)[lost]
+    every = [Plan(lost[counts == count], tuple(product(range(count), range(sets)))) for count in set(counts.tolist())]
+    return (*(plan for plan in side.plans if plan.corners), *every)
+
+
 def _shrunk(asked: Asked, side: StageSide, factor: FloatArray) -> StageSide:
     """The same corners where the elements spread `factor` times as far; what is proved of the whole holds inside."""
-    counts = np.diff(np.append(side.first, side.corner_values.shape[1]))
-    stage = np.repeat(np.arange(len(counts)), counts)
-    nominal = asked.box.values[:, stage]
-    with np.errstate(invalid="ignore"):
-        moved = np.where(np.isfinite(nominal), nominal + factor[stage] * (side.corner_values - nominal), nominal)
-    at = coefficients.evaluate(asked.form, coefficients.at_dc(asked.form, moved))
-    reference = side.reference[stage]
-    return replace(
-        side,
-        corner_values=moved,
-        corner_contrasts=at.contrasts,
-        corner_loadings=at.loadings,
-        corner_error=(at.gain_ideal - reference) / reference,
-    )
+    stage = np.repeat(np.arange(len(factor)), _corner_counts(side))
+    nominal, reference = asked.box.values[:, stage], side.reference[stage]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        values = np.where(np.isfinite(nominal), nominal + factor[stage] * (side.corner_values - nominal), nominal)
+        at = coefficients.evaluate(asked.form, coefficients.at_dc(asked.form, values))
+        is_regular = (
+            (np.sign(at.gain_ideal) == np.sign(side.gain_ideal[stage]))
+            & np.isfinite(at.gain_ideal)
+            & ~coefficients.is_feedback_positive(asked.form, at)
+        )
+        return replace(
+            side,
+            corner_values=values,
+            corner_contrasts=at.contrasts,
+            corner_loadings=at.loadings,
+            corner_error=(at.gain_ideal - reference) / reference,
+            regular=np.logical_and.reduceat(is_regular, side.first),
+        )
 
 
 def paired_errors(form: Form, box: StageBox, worst: FloatArray) -> FloatArray:

@@ -23,6 +23,7 @@ FLOORS = {
     "runs": 6,
     "service": 7,
     "explanation": 7,
+    "specification": 7,
     "shortened": 8,
     "report": 9,
     "cli": 10,

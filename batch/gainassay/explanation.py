@@ -286,5 +286,8 @@ def _change(screened: Screened, departure: Departure, rises: int) -> str:
     changed = screened.part_side.changed
     if changed is None:
         raise ValueError("these parts do not change")
-    before, after = changed[rises, :, DEPARTURES.index(departure), 0].tolist()
-    return f"from {_quantity(departure, before):.6g} to {_quantity(departure, after):.6g} {departure.unit}"
+    before, after = (
+        f"{_quantity(departure, value):.6g} {departure.unit}" if value else "ideal"
+        for value in changed[rises, :, DEPARTURES.index(departure), 0].tolist()
+    )
+    return f"from {before} to {after}"

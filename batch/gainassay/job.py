@@ -97,6 +97,7 @@ class Results:
     rows: str
     formats: tuple[str, ...]
     terms: bool
+    need: bool
 
 
 @dataclass(frozen=True)
@@ -153,6 +154,7 @@ def read(path: Path) -> Job:
             rows=results["rows"],
             formats=tuple(results["formats"]),
             terms=results["terms"],
+            need=results["need"],
         ),
     )
 

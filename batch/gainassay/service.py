@@ -11,9 +11,11 @@ from typing import Any
 
 import numpy as np
 import pyarrow.compute as pc
+from numpy.typing import NDArray
 
 from gainassay import job as jobs
 from gainassay.contracts.evidence import EVIDENCE
+from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.job import Job, Results
@@ -22,7 +24,7 @@ from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
 from gainassay.runs.folder import File, write
 from gainassay.runs.manifest import manifest
-from gainassay.screen import blocks, boxes, calibrated, corners
+from gainassay.screen import blocks, boxes, calibrated, corners, need
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import PartSide, moving_terms
@@ -179,16 +181,16 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         If results cannot be written; nothing is left behind then.
     """
     job, results = prepared.job, prepared.job.results
-    groups = groups_of(prepared)
+    groups, rules = groups_of(prepared), rules_of(job)
     terms = _terms(groups) if results.terms else ()
     fingerprint = f"{prepared.stages.sha256} {prepared.parts.sha256} {job.document}"
     with run_folder.begin(results.folder, prepared.started, fingerprint) as unfinished:
         (unfinished.folder / "verdicts").mkdir()
 
         def keep(place: int, screened: Screened) -> list[File]:
-            return _write_verdicts(unfinished.folder, place, screened, results, terms)
+            return _write_verdicts(unfinished.folder, place, screened, rules, results, terms)
 
-        done = blocks.run(groups, rules_of(job), keep, workers or usable_cores(), after_each=after_each)
+        done = blocks.run(groups, rules, keep, workers or usable_cores(), after_each=after_each)
         tallies = [tally for _, tally in done]
         stages = summaries.stage_summary(groups, tallies)
         rejects = [*prepared.stages.rejects, *prepared.parts.rejects]
@@ -220,10 +222,25 @@ def _terms(groups: Sequence[Group]) -> tuple[str, ...]:
     return tuple(dict.fromkeys(name for group in groups for name in moving_terms(group.form, group.box)))
 
 
-def _write_verdicts(folder: Path, place: int, screened: Screened, results: Results, terms: Sequence[str]) -> list[File]:
+def _needs(screened: Screened, rules: Rules) -> NDArray[np.float64]:
+    """What each pair needs; of calibrated stages nothing is found."""
+    if screened.group.calibrated:
+        return np.full((len(DEPARTURES), *screened.eligible.shape), np.nan)
+    return need.needed(need.of_chunk(screened, rules))
+
+
+def _write_verdicts(
+    folder: Path,
+    place: int,
+    screened: Screened,
+    rules: Rules,
+    results: Results,
+    terms: Sequence[str],
+) -> list[File]:
     if results.rows == "none":
         return []
-    table = run_tables.verdict_table(screened, results.rows, terms)
+    needs = _needs(screened, rules) if results.need else None
+    table = run_tables.verdict_table(screened, results.rows, terms, needs)
     # Named after the chunk's place, so that the order of the files is the order of the rows.
     name = f"verdicts/{place:05d}-{screened.group.form.topology}"
     return [write(folder, f"{name}.{kind}", table) for kind in results.formats]

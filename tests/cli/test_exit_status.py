@@ -125,7 +125,7 @@ def test_explain_says_why_a_stage_was_rejected(here: CommandLineHere, write_job:
     )
 
 
-@pytest.mark.parametrize("command", ["check", "screen", "runs", "explain", "topologies", "form"])
+@pytest.mark.parametrize("command", ["check", "screen", "need", "runs", "explain", "topologies", "form"])
 def test_json_is_json(here: CommandLineHere, write_job: JobWriter, command: str) -> None:
     job = write_job(stages=STAGES + BAD_ROW, parts=PARTS)
     here("screen", job)

@@ -18,6 +18,7 @@ COMMANDS = {
     "check": "Read a job's tables and say what is in them.",
     "explain": "Show all that decides one stage with one part.",
     "form": "Show the gain of a topology as a formula.",
+    "need": "Say what each stage of a job asks of a part.",
     "runs": "List the runs of a job.",
     "sample": "Write a sample set, ready to screen, into a new folder.",
     "screen": "Screen all stages of a job against all its parts.",

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-import sys
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
 from pathlib import Path
 
 import click
@@ -23,20 +20,10 @@ def screen(job: Path, workers: int | None, fail_on: tuple[str, ...], as_json: bo
     """Screen all stages of JOB against all its parts, and commit the verdicts as a new run."""
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
-    with _progress(prepared.pairs()) as advance:
+    with shared.progress("Screening", prepared.pairs()) as advance:
         done = service.screen(prepared, workers, advance)
     if as_json:
         shared.data({**done.manifest, "folder": str(done.folder), "stages_without_a_pass": done.hopeless})
     else:
         shared.lines(run.summary(done.manifest, done.folder, done.hopeless))
     shared.meet(fail_on, {**done.manifest["verdicts"], "rejected": prepared.rejected_rows()})
-
-
-@contextmanager
-def _progress(pairs: int) -> Iterator[Callable[[int], None] | None]:
-    """A bar while a person watches; silence otherwise."""
-    if not sys.stderr.isatty():
-        yield None
-        return
-    with click.progressbar(length=pairs, label="Screening", file=sys.stderr, show_pos=True) as bar:
-        yield bar.update

@@ -5,7 +5,9 @@ from __future__ import annotations
 import json
 import math
 import re
-from collections.abc import Callable, Iterable
+import sys
+from collections.abc import Callable, Iterable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -61,6 +63,16 @@ def warn(warnings: Iterable[str]) -> None:
     """Warnings, on standard error."""
     for warning in warnings:
         click.echo(printable(f"warning: {warning}"), err=True)
+
+
+@contextmanager
+def progress(label: str, pairs: int) -> Iterator[Callable[[int], None] | None]:
+    """A bar on standard error while a person watches; silence otherwise."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    with click.progressbar(length=pairs, label=label, file=sys.stderr, show_pos=True) as bar:
+        yield bar.update
 
 
 def meet(conditions: Iterable[str], counts: dict[str, int]) -> None:

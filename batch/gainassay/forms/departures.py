@@ -25,6 +25,9 @@ class Departure:
         Name of the error term it gives.
     unit : str
         Unit of the data-sheet quantity.
+    poorest : float
+        The poorest figure of the quantity that is looked at when asking how poor a part may be [unit]: that of no
+        op-amp.
     """
 
     symbol: str
@@ -32,6 +35,7 @@ class Departure:
     reciprocal: bool
     term: str
     unit: str
+    poorest: float
 
     @property
     def limit_column(self) -> str:
@@ -50,9 +54,9 @@ class Departure:
 
 
 DEPARTURES = (
-    Departure("a", "a_ol", True, "open_loop_gain", "V/V"),
-    Departure("g_id", "r_id", True, "input_resistance", "ohm"),
-    Departure("r_o", "r_o", False, "output_resistance", "ohm"),
+    Departure("a", "a_ol", True, "open_loop_gain", "V/V", 1.0),
+    Departure("g_id", "r_id", True, "input_resistance", "ohm", 1.0),
+    Departure("r_o", "r_o", False, "output_resistance", "ohm", 1e6),
 )
 
 OPEN_LOOP_GAIN = DEPARTURES[0]

@@ -4,10 +4,14 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from decimal import ROUND_CEILING, ROUND_FLOOR, Context
 
 PREFIXES = {-12: "p", -9: "n", -6: "u", -3: "m", 0: "", 3: "k", 6: "M", 9: "G", 12: "T"}
 SMALLEST_PPM = 1e-12
 """Below this an error is shown as 0: it is rounding."""
+
+DIGITS = 4
+"""Of a number that is rounded to the safe side."""
 
 ELEMENT_UNITS = {"resistor": "ohm", "capacitor": "F", "inductor": "H"}
 
@@ -56,6 +60,15 @@ def quantity(value: float, unit: str) -> str:
         return f"{value:.6g} {unit}"
     power = min(max(3 * math.floor(math.log10(abs(value)) / 3), min(PREFIXES)), max(PREFIXES))
     return f"{value / 10.0**power:.6g} {PREFIXES[power]}{unit}"
+
+
+def outward(value: float, up: bool) -> float:
+    """A number rounded to four digits, up or down.
+
+    >>> [outward(12345.0, True), outward(12345.0, False), outward(0.25, True)]
+    [12350.0, 12340.0, 0.25]
+    """
+    return float(Context(DIGITS, ROUND_CEILING if up else ROUND_FLOOR).create_decimal_from_float(value))
 
 
 def ppm(value: float) -> str:

@@ -30,6 +30,9 @@ NEEDED = {"run", "started", "inputs", "pairs", "verdicts", "files"}
 """Keys without which a file of that name is no manifest."""
 
 ASIDE = ".unfinished-"
+WRITERS = {".csv": write_csv, ".parquet": write_parquet}
+"""What writes a table, by the ending of the file's name."""
+
 RUN = re.compile(r"[0-9]{8}T[0-9]{6}Z-[0-9a-f]{8}")
 """Name of a run's folder."""
 
@@ -121,8 +124,7 @@ def _unwritable(home: Path, error: Exception) -> InputError:
 def write(folder: Path, name: str, table: pa.Table) -> File:
     """Write a table into a run's folder, as Parquet or CSV by the ending of its name."""
     path = folder / name
-    writers = {".parquet": write_parquet, ".csv": write_csv}
-    writers[path.suffix](table, path)
+    WRITERS[path.suffix](table, path)
     return file_of(folder, path, table.num_rows)
 
 

@@ -11,6 +11,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
+from gainassay.forms.departures import DEPARTURES
 from gainassay.screen.blocks import Screened, accounts
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
@@ -29,7 +30,9 @@ REPEATED = (
 """Columns of the verdict table with few different values, which are stored as a dictionary."""
 
 
-def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Table:
+def verdict_table(
+    screened: Screened, rows: str, terms: Sequence[str], needs: NDArray[np.float64] | None = None
+) -> pa.Table:
     """The rows of the verdict table that a chunk gives, ordered by stage and part.
 
     Parameters
@@ -38,6 +41,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         `all` or `not passing`.
     terms : sequence of str
         Terms of the account that get a column.
+    needs : ndarray, shape (departures, stages, parts), optional
+        What `need.needed` gives for the pairs, a column for each quantity.
     """
     verdict = screened.judgement.verdict.ravel()
     is_kept = screened.eligible.ravel() & (rows == "all" or verdict != VERDICTS.index("pass"))
@@ -82,6 +87,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         "dominant_term": words(outcome.dominant.ravel()[kept], names),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
+    if needs is not None:
+        columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
     if terms:
         found = zip(names, accounts(screened), strict=True)
         values = {name: term.ravel()[kept] for name, term in found if name in terms}

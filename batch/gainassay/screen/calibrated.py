@@ -28,7 +28,7 @@ from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.corners import PartSide, StageSide, elements_terms, is_regular, matters
 from gainassay.screen.corners import part_side as limits_side
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, beyond_corners, blocks_of, undoing
+from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, beyond_corners, in_blocks, undoing
 from gainassay.screen.signs import FIXED, OPEN, Reach
 from gainassay.screen.visits import factors_at, visit, what_is_known, with_a_bound
 
@@ -137,9 +137,10 @@ def screen(form: Form, stages: StageSide, parts: PartSide, block: int = PAIRS_PE
     corner = np.full(shape, UNBOUNDED, np.int32)
     error = np.full(shape, np.nan)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in blocks_of(stages, shape[1], block):
+        for plan, rows, columns in in_blocks(stages, shape[1], block):
             error[rows, columns], corner[rows, columns] = _worst(form, stages, parts, plan.corners, rows, columns)
         beyond = beyond_corners(stages, parts, error)
+        np.copyto(corner, UNBOUNDED, where=np.isnan(beyond))
         found = Outcome(
             error_nominal=np.zeros(shape),
             error_worst=error + beyond,

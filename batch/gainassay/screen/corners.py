@@ -245,17 +245,18 @@ def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDAr
     evidence : ndarray of uint8, shape (departures, parts)
         What `worst` rests on.
     """
+    return PartSide(products(form, nominal), products(form, worst), worst, evidence)
+
+
+def products(form: Form, departures: FloatArray) -> FloatArray:
+    """The products m_k, shape (terms, ...), of departures, shape (departures, ...), in the order of `DEPARTURES`."""
     place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
     kinds = [place[symbol] for _, symbol in form.departures]
-
-    def products(values: FloatArray) -> FloatArray:
-        found = np.ones((len(form.monomials), values.shape[1]))
-        for k, monomial in enumerate(form.monomials):
-            for departure in monomial:
-                found[k] *= values[kinds[departure]]
-        return found
-
-    return PartSide(products(nominal), products(worst), worst, evidence)
+    found = np.ones((len(form.monomials), *departures.shape[1:]))
+    for k, monomial in enumerate(form.monomials):
+        for departure in monomial:
+            found[k] *= departures[kinds[departure]]
+    return found
 
 
 def elements_terms(form: Form, nominal: FloatArray, factors: Factors, reference: FloatArray) -> FloatArray:

@@ -78,7 +78,7 @@ def screen(
         np.empty(shape),
     )
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in blocks_of(stages, shape[1], block):
+        for plan, rows, columns in in_blocks(stages, shape[1], block):
             _screen_block(stages, parts, active_sets, plan.corners, rows, columns, outcome)
         return outcome if stages.slack is None else _with_what_lies_beyond(stages, parts, active_sets, outcome)
 
@@ -86,18 +86,22 @@ def screen(
 def beyond_corners(stages: StageSide, parts: PartSide, error: FloatArray) -> FloatArray:
     """By how much errors may lie beyond those at the corners, between the ends of networks' common factors.
 
+    It is nan where nothing bounds them.
     Not below what either the largest or the smallest gain may go beyond its corner: of these the one with the smaller
     error in magnitude is multiplied by no more.
     """
     if stages.slack is None:
         return np.zeros(error.shape)
-    return np.asarray(np.copysign((1.0 + np.abs(error)) * np.expm1(excess(stages.slack, parts.limits)), error))
+    beyond = (1.0 + np.abs(error)) * np.expm1(excess(stages.slack, parts.limits))
+    return np.where(np.isfinite(beyond), np.copysign(beyond, error), np.nan)
 
 
 def _with_what_lies_beyond(
     stages: StageSide, parts: PartSide, active_sets: Sequence[Sequence[int]], outcome: Outcome
 ) -> Outcome:
     beyond = beyond_corners(stages, parts, outcome.error_worst)
+    np.copyto(outcome.corner, UNBOUNDED, where=np.isnan(beyond))
+    np.copyto(outcome.dominant_value, np.nan, where=np.isnan(beyond))
     widened = replace(outcome, error_worst=outcome.error_worst + beyond, beyond=beyond)
     every = slice(None)
     for place, term in enumerate(account(stages, parts, active_sets, every, every, widened)):
@@ -112,7 +116,7 @@ def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BL
     """The `error_nominal` of `screen` alone."""
     found = np.empty((len(stages.limits), parts.worst.shape[1]))
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for _, rows, columns in blocks_of(stages, found.shape[1], block):
+        for _, rows, columns in in_blocks(stages, found.shape[1], block):
             found[rows, columns] = _nominal(stages, parts, rows, columns)
     return found
 
@@ -124,14 +128,15 @@ def worst_errors(
     found = np.empty((len(stages.limits), parts.worst.shape[1]))
     corner = np.empty(found.shape, np.int32)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        for plan, rows, columns in blocks_of(stages, found.shape[1], block):
+        for plan, rows, columns in in_blocks(stages, found.shape[1], block):
             found[rows, columns], corner[rows, columns] = _worst(
                 stages, parts, active_sets, plan.corners, rows, columns
             )
-    return found + beyond_corners(stages, parts, found), corner
+    found += beyond_corners(stages, parts, found)
+    return found, np.where(np.isnan(found), np.int32(UNBOUNDED), corner)
 
 
-def blocks_of(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
+def in_blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
     """Blocks of pairs whose stages visit the same corners."""
     width = max(1, min(parts, block))
     height = max(1, block // width)
@@ -167,14 +172,14 @@ def _nominal(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns
     products = parts.nominal[:, columns]
     numerator, denominator = np.zeros((2, len(rows), products.shape[1]))
     denominator += 1.0
-    _add_products(stages.contrasts[:, rows], stages.loadings[:, rows], products, numerator, denominator)
+    add_products(stages.contrasts[:, rows], stages.loadings[:, rows], products, numerator, denominator)
     may_vanish = bool((stages.loadings[:, rows] < 0.0).any())
     e = stages.set_point[rows, None]
     error = e + (1.0 + e) * (numerator / denominator)
     return np.where(denominator > 0.0, error, np.nan) if may_vanish else error
 
 
-def _add_products(
+def add_products(
     contrasts: FloatArray, loadings: FloatArray, products: FloatArray, numerator: FloatArray, denominator: FloatArray
 ) -> None:
     """Add sum_k contrasts[k, :, None] * products[k] to the numerator, and so for the loadings, in the order of k."""
@@ -213,7 +218,7 @@ def _worst(
             contrasts, loadings = stages.corner_contrasts[active][:, at], stages.corner_loadings[active][:, at]
             numerator[:] = 0.0
             denominator[:] = 1.0
-            _add_products(contrasts, loadings, products[active], numerator, denominator)
+            add_products(contrasts, loadings, products[active], numerator, denominator)
             # 1 + sum d m stays positive by itself where no loading is negative.
             if (loadings < 0.0).any():
                 bounded = denominator > 0.0 if bounded is None else bounded & (denominator > 0.0)
@@ -282,7 +287,7 @@ def nominal_account(stages: StageSide, parts: PartSide) -> Iterator[FloatArray]:
     for _ in stages.corner_terms:
         yield np.zeros(shape)
     numerator, denominator = np.zeros(shape), np.ones(shape)
-    _add_products(stages.contrasts, stages.loadings, parts.nominal, numerator, denominator)
+    add_products(stages.contrasts, stages.loadings, parts.nominal, numerator, denominator)
     lift = (1.0 + stages.set_point[:, None]) / denominator
     for contrast, factor in zip(stages.contrasts, parts.nominal, strict=True):
         yield lift * (contrast[:, None] * factor)

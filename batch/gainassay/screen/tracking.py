@@ -15,39 +15,46 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN
+from gainassay.forms.coefficients import FloatArray, Pairs
+from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.signs import (
     Bounded,
     Reach,
     at_ends,
-    bounds,
     bounds_by_product,
-    largest_product,
     networks_of,
     stages_at_a_time,
 )
 
+Powers = tuple[int, ...]
+"""Exponents of a product of departures, in the order of `DEPARTURES`."""
+
 
 @dataclass(frozen=True)
 class Slack:
-    """Bounds on the slopes of some stages in their networks' common factors, in units that a part's departures fill.
+    """Bounds on the slopes of some stages in their networks' common factors, to be filled with a part's departures.
+
+    The slope of the gain's logarithm is a polynomial in the departures over N D; bounds are of what stands with each
+    product of departures, over the stages' boxes.
 
     Attributes
     ----------
-    products : tuple[tuple[int, ...], ...]
-        Products of departures, each as places in `DEPARTURES`.
+    powers : tuple[Powers, ...]
+        The products in the slopes.
     rises, falls : ndarray, shape (networks, products, stages)
-        Bounds of the slope upwards and downwards, both not negative, for each product.
+        Bounds of the slope upwards and downwards, both not negative.
+    factors : tuple of (tuple[Powers, ...], ndarray of shape (products, stages))
+        For N and for D the products and what they take away from the first, that of no departures, at most.
     width : ndarray, shape (networks, stages)
         Of the range of the common factor's logarithm.
     """
 
-    products: tuple[tuple[int, ...], ...]
+    powers: tuple[Powers, ...]
     rises: FloatArray
     falls: FloatArray
+    factors: tuple[tuple[tuple[Powers, ...], FloatArray], ...]
     width: FloatArray
 
     def over(self, width: FloatArray) -> Slack:
@@ -63,85 +70,92 @@ def slack(reached: Reach, box: StageBox) -> Slack:
     """The slack of stages over their boxes; infinite where no bound is found."""
     step = stages_at_a_time([slope for slope in reached.networks.values() if slope is not None])
     parts = [_slack(reached, box.part(slice(start, start + step))) for start in range(0, len(box.limits), step)]
-    return Slack(
-        parts[0].products,
-        *(np.concatenate([getattr(part, name) for part in parts], axis=-1) for name in ("rises", "falls", "width")),
+    rises, falls, width = (
+        np.concatenate([getattr(part, name) for part in parts], axis=-1) for name in ("rises", "falls", "width")
     )
+    factors = tuple(
+        (powers, np.concatenate([part.factors[place][1] for part in parts], axis=-1))
+        for place, (powers, _) in enumerate(parts[0].factors)
+    )
+    return Slack(parts[0].powers, rises, falls, factors, width)
 
 
 def _slack(reached: Reach, box: StageBox) -> Slack:
-    products = _products(reached.form)
+    slopes = {members: slope for members, slope in reached.networks.items() if slope is not None}
+    powers = tuple(sorted({power for slope in slopes.values() for power in _powers(reached.form, slope)}))
     low, high = at_ends(reached.form, box)
-    networks, stages = box.common.low.shape[1:]
-    rises, falls = np.zeros((2, networks, len(products), stages))
+    # Of a network that `reached` does not know, nothing is known.
+    rises = np.where(box.common.moves()[:, None, :], np.full((1, len(powers), 1), np.inf), 0.0)
+    falls = rises.copy()
     with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
-        # What N D is at least: the slope of the gain's logarithm is that of N/D times N D.
-        least = [_magnitude(*bounds(polynomial, low, high)) for polynomial in (reached.numerator, reached.whole)]
-        over = 1.0 / (least[0] * least[1])
-        for members, slope in reached.networks.items():
+        for members, slope in slopes.items():
             here = networks_of(box, members)
-            if slope is None:
-                rises += np.where(here, np.inf, 0.0)[:, None, :]
-                falls += np.where(here, np.inf, 0.0)[:, None, :]
-            elif here.any():
-                for (below, above), place, rest in zip(
-                    bounds_by_product(slope, low, high), *_shared(slope, reached, products), strict=True
-                ):
-                    rises[:, place] += np.where(here, np.maximum(above, 0.0) * rest * over, 0.0)
-                    falls[:, place] += np.where(here, np.maximum(-below, 0.0) * rest * over, 0.0)
+            rises, falls = (np.where(here[:, None, :], 0.0, bound) for bound in (rises, falls))
+            bounded = bounds_by_product(slope, low, high)
+            for power, (below, above) in zip(_powers(reached.form, slope), bounded, strict=True):
+                place = powers.index(power)
+                rises[:, place] += np.where(here, np.maximum(above, 0.0), 0.0)
+                falls[:, place] += np.where(here, np.maximum(-below, 0.0), 0.0)
+        factors = tuple(
+            (tuple(_powers(reached.form, polynomial)), _least(polynomial, low, high))
+            for polynomial in (reached.numerator, reached.whole)
+        )
         width = np.log(product(box.common.high)) - np.log(product(box.common.low))
-    row = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
-    kinds = [row[symbol] for _, symbol in reached.form.departures]
-    return Slack(tuple(tuple(kinds[i] for i in factors) for factors in products), rises, falls, width)
+    return Slack(powers, rises, falls, factors, width)
 
 
-def _magnitude(least: FloatArray, most: FloatArray) -> FloatArray:
-    """The least magnitude between two bounds."""
-    return np.asarray(np.where(least > 0.0, least, np.where(most < 0.0, -most, 0.0)))
+def _powers(form: Form, polynomial: Bounded) -> list[Powers]:
+    """The exponents of each of its products, those of all amplifiers together."""
+    kinds = [departure.symbol for departure in DEPARTURES]
+    found = np.zeros((len(polynomial.powers), len(kinds)), np.intp)
+    for index, (_, symbol) in enumerate(form.departures):
+        found[:, kinds.index(symbol)] += polynomial.powers[:, index]
+    return [tuple(row) for row in found.tolist()]
 
 
-def _products(form: Form) -> tuple[tuple[int, ...], ...]:
-    """Those of two departures of an amplifier, those of 1/A_OL alone, and that of none, in this order."""
-    symbols = list(enumerate(form.departures))
-    gains = {amplifier: i for i, (amplifier, symbol) in symbols if symbol == OPEN_LOOP_GAIN.symbol}
-    pairs = [(gains[amplifier], i) for i, (amplifier, symbol) in symbols if symbol != OPEN_LOOP_GAIN.symbol]
-    return (*pairs, *((i,) for i in gains.values()), ())
-
-
-def _shared(slope: Bounded, reached: Reach, products: Sequence[tuple[int, ...]]) -> tuple[list[int], list[float]]:
-    """For each product of departures in a slope: the first of `products` that divides it, and the most that the rest
-    comes to over all parts."""
-    places, rests = [], []
-    for powers in slope.powers:
-        place = next(k for k, factors in enumerate(products) if all(powers[i] for i in factors))
-        left = powers.copy()
-        left[list(products[place])] -= 1
-        places.append(place)
-        rests.append(largest_product(reached.limits, left))
-    return places, rests
+def _least(polynomial: Bounded, low: Pairs, high: Pairs) -> FloatArray:
+    """The magnitude of what stands with no departures, at least, then what each product takes away from it at most."""
+    bounded = list(bounds_by_product(polynomial, low, high))
+    (below, above), *others = bounded
+    # The ideal gain's own sign: of the products the one without departures stands first.
+    sign = np.where(below > 0.0, 1.0, np.where(above < 0.0, -1.0, 0.0))
+    first = np.where(sign > 0.0, below, np.where(sign < 0.0, -above, 0.0))
+    return np.array([first, *(np.minimum(0.0, np.minimum(sign * b, sign * a)) for b, a in others)])
 
 
 def excess(of: Slack, limits: FloatArray) -> FloatArray:
-    """By how much the logarithm of a gain may lie beyond its values at the ends, for each pair.
+    """By how much the logarithm of a gain may lie beyond its values at the ends, for each pair; inf: no bound.
 
     Parameters
     ----------
-    limits : ndarray, shape (departures, parts)
+    limits : ndarray, shape (departures, parts) or (departures, stages, parts)
         The departures at their limits, in the order of `DEPARTURES`.
 
     Returns
     -------
     ndarray, shape (stages, parts)
     """
-    total = np.zeros((of.width.shape[1], limits.shape[1]))
+    total = np.zeros((of.width.shape[1], limits.shape[-1]))
+    over = np.ones(total.shape)
+    for powers, least in of.factors:
+        over *= np.maximum(0.0, _filled(powers, least, limits))
     for rises, falls, width in zip(of.rises, of.falls, of.width, strict=True):
-        up, down = np.zeros(total.shape), np.zeros(total.shape)
-        for factors, rise, fall in zip(of.products, rises, falls, strict=True):
-            filled = np.ones(limits.shape[1])
-            for departure in factors:
-                filled = filled * limits[departure]
-            up += rise[:, None] * filled
-            down += fall[:, None] * filled
+        up, down = (_filled(of.powers, slope, limits) for slope in (rises, falls))
         crosses = (width[:, None] > 0.0) & (up > 0.0) & (down > 0.0)
-        total += np.where(crosses, width[:, None] * up * down / np.where(crosses, up + down, 1.0), 0.0)
+        with np.errstate(divide="ignore", over="ignore"):
+            found = width[:, None] * (up * (down / np.where(crosses, up + down, 1.0))) / over
+        total += np.where(crosses, found, 0.0)
+    return total
+
+
+def _filled(powers: Sequence[Powers], of: FloatArray, limits: FloatArray) -> FloatArray:
+    """The sum of what stands with each product times the product; shape (stages, parts)."""
+    total = np.zeros((of.shape[1], limits.shape[-1]))
+    for power, values in zip(powers, of, strict=True):
+        if values.any():
+            filled = np.ones(limits.shape[1:])
+            for departure, exponent in enumerate(power):
+                for _ in range(exponent):
+                    filled = filled * limits[departure]
+            total += values[:, None] * filled
     return total

@@ -18,6 +18,7 @@ from gainassay.contracts.tables import Column
 
 ANY = Column(
     name="any",
+    is_number=True,
     unit="ohm",
     meaning="",
     required=False,
@@ -146,8 +147,8 @@ def test_a_unit_is_read_with_its_prefix(text: str, unit: str, value: float) -> N
         ("10 mohm", "ohm", "milli or mega"),
         ("1 MF", "F", "mega or, in old lists, micro"),
         ("1 mHz", "Hz", "milli or mega"),
-        ("100 dB", "V/V", "decibels have a column of their own"),
-        ("100 V/mV", "dB", "a ratio has a column of its own"),
+        ("100 dB", "V/V", "such figures belong into a column"),
+        ("100 V/mV", "dB", "such figures belong into a column"),
         ("300 K", "degC", "degrees Celsius"),
         ("10 nF", "ohm", "does not take"),
         (">= 100", "ohm", "limit or typical"),

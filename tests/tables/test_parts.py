@@ -47,7 +47,7 @@ def departure(parts: PartTable, quantity: str) -> tuple[float, float, str]:
             {"a_ol_min": "100 dB"},
             "a_ol_min",
             "100 dB",
-            "has 'dB' after the number: decibels have a column of their own",
+            "has 'dB' after the number: such figures belong into a column",
         ),
         ({"a_ol_min": "0"}, "a_ol_min", "0", "must be above 0 V/V"),
         ({"a_ol_min": "-50000"}, "a_ol_min", "-50000", "must be above 0 V/V"),

@@ -127,7 +127,8 @@ def numbers(cells: pa.Array, column: Column, writing: Writing = Writing()) -> Nu
             return _within(column, values, np.asarray(cells.is_null()), {})
         # By way of its shortest text a number gets its power of ten exactly, wherever it comes from.
         return numbers(cells.cast(pa.string()), column, Writing(writing.unit))
-    values, blank, refused = np.empty(len(cells)), np.empty(len(cells), dtype=bool), {}
+    values, blank = np.empty(len(cells)), np.empty(len(cells), dtype=bool)
+    refused: dict[int, str] = {}
     for start in range(0, len(cells), CELLS_AT_A_TIME):
         block = slice(start, start + CELLS_AT_A_TIME)
         values[block], blank[block], reasons = _block(cells[block], column, writing)
@@ -252,14 +253,14 @@ def _reasons(text: pa.Array, column: Column, writing: Writing) -> list[str]:
         say(pc.match_substring_regex(text, pattern), reason)
     after = pc.extract_regex(text, WITH_UNIT).field(2)
     for unit, reason in misread(column.unit).items():
-        say(pc.equal(after, unit), f"has {unit!r} after the number: {reason}")
+        say(pc.equal(after, unit), f"has {unit!r} after the number: {reason}; {_wanted(column)}")
     if writing.unit:
         say(
-            pc.match_substring_regex(text, "^[0-9.]*[a-zA-Z][0-9]*$"),
+            pc.match_substring_regex(text, r"^[0-9.,]*\s?[RkKMGTpnum\x{b5}\x{3bc}][0-9]*$"),
             f"has a letter for its magnitude in a column that the job states in {writing.unit}; which counts?",
         )
     if notation(column.unit).symbols:
-        named = pc.match_substring_regex(after, r"^[A-Za-z%/\x{b0}\x{b5}\x{3a9}\x{2126}]+$")
+        named = pc.match_substring_regex(after, r"^(?:[A-Za-z%/\x{b0}\x{b5}\x{3a9}\x{2126}]{2,}|[%AFHV\x{3a9}])$")
         say(named, f"ends in a unit or word that the column does not take; {_wanted(column)}")
     say(pa.array(found == ""), f"is not a number; {_wanted(column)}")
     return [str(reason) for reason in found]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from functools import cache
 from typing import Any
@@ -27,6 +28,8 @@ class Column:
     ----------
     name : str
         Its name; may hold a placeholder such as `<element>` or `<resistor>`.
+    is_number : bool
+        Whether its cells are numbers.
     unit : str
         Unit, empty for text and counts.
     meaning : str
@@ -38,12 +41,13 @@ class Column:
     nonzero : bool
         Whether zero is refused.
     letter_code : str
-        Which letter code of IEC 60062 its cells may use: `resistance`, `capacitance` or none.
+        Which letter code of IEC 60062 its cells may use: `resistance`, `capacitance`, `tolerance` or none.
     in_place_of : str
         The column whose number it gives in another unit, or nothing.
     """
 
     name: str
+    is_number: bool
     unit: str
     meaning: str
     required: bool
@@ -61,13 +65,40 @@ class Column:
 @cache
 def columns(table: str) -> tuple[Column, ...]:
     """The columns of `schemas/<table>.table.json`, in its order."""
-    document = json.loads((resources.schemas() / f"{table}.table.json").read_text(encoding="utf-8"))
-    return tuple(_column(field) for field in document["fields"])
+    return tuple(_column(field) for field in _document(table)["fields"])
+
+
+def key(table: str) -> str:
+    """The column that names the rows of a table."""
+    return str(_document(table)["primaryKey"][0])
+
+
+@cache
+def _document(table: str) -> dict[str, Any]:
+    found: dict[str, Any] = json.loads((resources.schemas() / f"{table}.table.json").read_text(encoding="utf-8"))
+    return found
 
 
 def column(table: str, name: str) -> Column:
     """One column of a table."""
     return next(column for column in columns(table) if column.name == name)
+
+
+def stage_columns(kinds: Mapping[str, str]) -> dict[str, Column]:
+    """Every column that a stage table may have, by name, for elements of the given kinds.
+
+    Parameters
+    ----------
+    kinds : Mapping[str, str]
+        Kind of each element, by its name.
+    """
+    found: dict[str, Column] = {}
+    for column in columns("stages"):
+        placeholder = _PLACEHOLDER.search(column.name)
+        wanted = placeholder.group()[1:-1] if placeholder else ""
+        names = [name for name, kind in sorted(kinds.items()) if wanted in (kind, "element")] if wanted else [""]
+        found |= {column.of(name).name: column.of(name) for name in names}
+    return found
 
 
 def reserved_stage_columns() -> frozenset[str]:
@@ -79,6 +110,7 @@ def _column(field: dict[str, Any]) -> Column:
     constraints = field.get("constraints", {})
     return Column(
         name=field["name"],
+        is_number=field["type"] != "string",
         unit=field.get("unit", ""),
         meaning=field["description"],
         required=constraints.get("required", False),

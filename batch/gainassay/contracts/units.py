@@ -41,7 +41,7 @@ class Notation:
     foreign: Mapping[str, str] = field(default_factory=dict)
 
 
-OWN_DECIBEL_COLUMN = "decibels have a column of their own, whose name has 'db' in it"
+OWN_DECIBEL_COLUMN = "such figures belong into a column in dB"
 CELSIUS = ("degC", "C", "\u00b0C", "\u2103")
 NO_CELSIUS = "temperatures stand in degrees Celsius"
 
@@ -67,7 +67,7 @@ NOTATIONS = {
     ),
     "dB": Notation(
         symbols=("dB", "db", "DB"),
-        foreign=dict.fromkeys(("V/V", "V/mV"), "a ratio has a column of its own, whose name has no 'db' in it"),
+        foreign=dict.fromkeys(("V/V", "V/mV"), "such figures belong into a column in V/V"),
     ),
     "%": Notation(symbols=("%", "percent", "pct"), others={"ppm": -4, "PPM": -4, "\u2030": -1}),
     "ppm": Notation(symbols=("ppm", "PPM"), others={"%": 4}),

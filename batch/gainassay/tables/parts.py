@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,9 +15,9 @@ from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
-from gainassay.job import StandIn
+from gainassay.job import Source, StandIn
 from gainassay.tables import sources
-from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.rejects import Reject, rejected_rows
 
 
@@ -41,8 +40,8 @@ class PartTable:
     modelled : tuple[bool, ...]
         Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
         evidence GUARANTEED, since nothing is claimed about it.
-    rejected_names : Mapping[str, int]
-        Row in the file of each name that was rejected.
+    columns : ColumnUse
+        What became of the table's columns.
     """
 
     source: str
@@ -54,7 +53,7 @@ class PartTable:
     evidence: NDArray[np.uint8]
     modelled: tuple[bool, ...]
     rejects: tuple[Reject, ...]
-    rejected_names: Mapping[str, int]
+    columns: ColumnUse
     warnings: tuple[str, ...]
 
     def used(self) -> int:
@@ -70,27 +69,27 @@ class PartTable:
         return tuple(d.quantity for d, there in zip(DEPARTURES, self.modelled, strict=True) if not there)
 
 
-def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
+def load(source: Source, assume: Mapping[str, StandIn]) -> PartTable:
     """Read and check a parts table.
 
     Parameters
     ----------
-    path : Path
-        The file.
+    source : Source
+        Where it lies.
     assume : Mapping[str, StandIn]
         What stands in for missing numbers, by data-sheet quantity.
 
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every part needs, or holds no row that can be used.
+        If the table cannot be read, lacks a column that every part needs, or holds no row that can be used.
     """
-    raw = sources.read(path)
-    known = tables.columns("parts")
+    known = {column.name: column for column in tables.columns("parts")}
+    raw = sources.read(source, known)
     require_columns(raw, "parts")
-    gain_columns = [column.name for column in known if column.name.startswith(OPEN_LOOP_GAIN.quantity)]
+    gain_columns = [name for name in known if name.startswith(OPEN_LOOP_GAIN.quantity)]
     if not set(gain_columns) & set(raw.columns):
-        raise InputError(f"{path}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
+        raise InputError(f"{raw.source}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
     checking = Checking.of(raw)
     names = checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
@@ -100,7 +99,7 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
     order = kept[np.argsort(names[kept].astype(np.str_))]
     rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
-        raise InputError(nothing_left(path, rows, checking.found(), "part"))
+        raise InputError(nothing_left(raw.source, rows, checking.found(), "part"))
     return PartTable(
         source=raw.source,
         sha256=raw.sha256,
@@ -111,8 +110,8 @@ def load(path: Path, assume: Mapping[str, StandIn]) -> PartTable:
         evidence=evidence[:, order].astype(np.uint8),
         modelled=tuple(r[3] for r in read),
         rejects=checking.found(),
-        rejected_names=checking.rejected_names(names),
-        warnings=unknown_columns(raw, [column.name for column in known]),
+        columns=column_use(raw, "parts", known),
+        warnings=unknown_columns(raw, known),
     )
 
 

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,8 +17,9 @@ from gainassay.forms.cache import form_of
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology
+from gainassay.job import Source
 from gainassay.tables import sources
-from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.rejects import Reject, rejected_rows
 
 BLANK = {
@@ -72,8 +72,8 @@ class StageTable:
         Rows in the file, blank ones apart.
     groups : tuple[StageGroup, ...]
         By name of the topology.
-    rejected_names : Mapping[str, int]
-        Row in the file of each name that was rejected.
+    columns : ColumnUse
+        What became of the table's columns.
     """
 
     source: str
@@ -81,7 +81,7 @@ class StageTable:
     rows: int
     groups: tuple[StageGroup, ...]
     rejects: tuple[Reject, ...]
-    rejected_names: Mapping[str, int]
+    columns: ColumnUse
     warnings: tuple[str, ...]
 
     def used(self) -> int:
@@ -109,21 +109,23 @@ def left_out(topology: Topology, values: FloatArray) -> dict[str, str]:
     return {**absent, **topology.at_dc()}
 
 
-def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
+def load(source: Source, library: Mapping[str, Topology]) -> StageTable:
     """Read and check a stage table.
 
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every stage needs, names a topology that has no form,
+        If the table cannot be read, lacks a column that every stage needs, names a topology that has no form,
         or holds no row that can be used.
     """
-    raw = sources.read(path)
     kinds = {element.name: element.kind for topology in library.values() for element in topology.elements}
-    elements = sorted(kinds)
+    known = tables.stage_columns(kinds)
+    raw = sources.read(source, known)
     require_columns(raw, "stages")
     if not {"accuracy_pct", "accuracy_ppm"} & set(raw.columns):
-        raise InputError(f"{path}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?")
+        raise InputError(
+            f"{raw.source}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?"
+        )
     checking = Checking.of(raw)
     names = checking.names("stage")
     chosen = _topologies(checking, library)
@@ -132,10 +134,10 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
         for name in ("accuracy_pct", "accuracy_ppm", "target_gain", "tol_pct")
     }
     limits = _limits(checking, general["accuracy_pct"], general["accuracy_ppm"])
-    known = [name for name in elements if name in raw.columns or f"{name}_tol_pct" in raw.columns]
-    values = {name: checking.column(tables.column("stages", f"<{kinds[name]}>").of(name)) for name in known}
+    there = [name for name in sorted(kinds) if name in raw.columns or f"{name}_tol_pct" in raw.columns]
+    values = {name: checking.column(tables.column("stages", f"<{kinds[name]}>").of(name)) for name in there}
     own_tolerances = {
-        name: checking.column(tables.column("stages", f"{tables.ELEMENT}_tol_pct").of(name)) for name in known
+        name: checking.column(tables.column("stages", f"{tables.ELEMENT}_tol_pct").of(name)) for name in there
     }
 
     groups = []
@@ -159,17 +161,15 @@ def load(path: Path, library: Mapping[str, Topology]) -> StageTable:
             groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
     rows = len(raw.rows) + len(raw.ragged)
     if not groups:
-        raise InputError(nothing_left(path, rows, checking.found(), "stage"))
+        raise InputError(nothing_left(raw.source, rows, checking.found(), "stage"))
     return StageTable(
         source=raw.source,
         sha256=raw.sha256,
         rows=rows,
         groups=tuple(groups),
         rejects=checking.found(),
-        rejected_names=checking.rejected_names(names),
-        warnings=unknown_columns(
-            raw, [*tables.reserved_stage_columns(), *elements, *(f"{name}_tol_pct" for name in elements)]
-        ),
+        columns=column_use(raw, "stages", known),
+        warnings=unknown_columns(raw, known),
     )
 
 

@@ -132,6 +132,19 @@ def plain_type(cells: pa.Array) -> pa.Array:
     return text
 
 
+def array_of(values: Iterable[float | str | None]) -> pa.Array:
+    """A column of Python's numbers and texts: numbers if all are, else text, a number as its shortest."""
+    values = list(values)
+    kinds = set(map(type, values)) - {type(None)}
+    if kinds and kinds <= {int, float}:
+        return pa.array([None if value is None else float(value) for value in values], pa.float64())
+    return pa.array([value if value is None else _as_text(value) for value in values], pa.string())
+
+
+def _as_text(value: float | str) -> str:
+    return value if isinstance(value, str) else repr(value).removesuffix(".0")
+
+
 def whole(cells: pa.ChunkedArray) -> pa.Array:
     """A column in one piece."""
     found = cells.combine_chunks()

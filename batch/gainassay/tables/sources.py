@@ -12,20 +12,34 @@ import pyarrow as pa
 from gainassay.contracts import tables
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
-from gainassay.job import Source
-from gainassay.tables import csv_files, parquet_files
+from gainassay.job import Source, is_address
+from gainassay.tables import csv_files, databases, parquet_files, workbooks
 from gainassay.tables.headings import headings
 from gainassay.tables.raw import Piece, RawTable, joined
 
 READERS: Mapping[str, Callable[[Path, Source], Piece]] = {
     "csv": csv_files.read,
     "parquet": lambda path, _: parquet_files.read(path),
+    "workbook": workbooks.read,
+    "database": databases.read_file,
 }
 
-KINDS = {".csv": "csv", ".parquet": "parquet"}
-"""Kinds of files by the ending of their names; a file with a delimiter is CSV, whatever its name."""
+KINDS = {
+    ".csv": "csv",
+    ".parquet": "parquet",
+    ".xlsx": "workbook",
+    ".sqlite": "database",
+    ".sqlite3": "database",
+    ".db": "database",
+}
+"""Kinds of files by the ending of their names; one with a delimiter is CSV, one with a table or query a database."""
 
-OPTIONS = {"csv": {"delimiter", "encoding", "header_row"}, "parquet": set[str]()}
+OPTIONS = {
+    "csv": {"delimiter", "encoding", "header_row"},
+    "parquet": set[str](),
+    "workbook": {"sheet", "header_row"},
+    "database": {"table", "query"},
+}
 """What a job may say of each kind, beside what it may say of all."""
 
 
@@ -64,34 +78,31 @@ def read(source: Source, known: Mapping[str, Column]) -> RawTable:
 
 def _pieces(source: Source) -> list[Piece]:
     """What a source holds: one piece, or one for each file of a folder or pattern."""
+    if is_address(source.at):
+        _refuse_other_options(source, "database")
+        return [databases.read_address(source)]
     return [_file(path, source) for path in _paths(source.at)]
 
 
 def _file(path: Path, source: Source) -> Piece:
-    kind = "csv" if source.delimiter else KINDS.get(path.suffix.lower())
+    said = [kind for kind, option in (("csv", source.delimiter), ("database", source.table or source.query)) if option]
+    kind = said[0] if said else KINDS.get(path.suffix.lower())
     _must_be_readable(path)
     if kind is None:
         raise InputError(
             f"{path}: '{path.suffix}' is no kind of table that can be read; use {', '.join(KINDS)}, or say the "
-            "delimiter of a text file"
+            "delimiter of a text file, or the table of a database"
         )
-    refuse_other_options(source, kind)
+    _refuse_other_options(source, kind)
     return READERS[kind](path, source)
 
 
-def refuse_other_options(source: Source, kind: str) -> None:
-    """Raise if a job says something of a source that its kind does not have.
-
-    Raises
-    ------
-    InputError
-        With the key.
-    """
+def _refuse_other_options(source: Source, kind: str) -> None:
+    if source.table and source.query:
+        raise InputError(f"{source.at}: in [{source.section}]: table and query are both given; give one of the two")
     for option in sorted({option for options in OPTIONS.values() for option in options} - OPTIONS[kind]):
         if getattr(source, option):
-            raise InputError(
-                f"{source.at}: in [{source.section}]: '{option}' says nothing of a {kind} source; remove it"
-            )
+            raise InputError(f"{source.at}: in [{source.section}]: '{option}' says nothing of a {kind}; remove it")
 
 
 def _paths(at: str) -> list[Path]:

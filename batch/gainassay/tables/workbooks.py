@@ -8,8 +8,9 @@ import re
 import warnings
 import zipfile
 from collections.abc import Iterator
+from io import BufferedReader
 from pathlib import Path
-from typing import Any, BinaryIO
+from typing import Any
 
 import numpy as np
 
@@ -68,7 +69,7 @@ def _refuse_what_unpacks_too_large(path: Path) -> None:
         raise InputError(f"{path}: unpacks to {size:,} bytes, {MOST_BYTES:,} at most are read; save the table as CSV")
 
 
-def _read(path: Path, file: BinaryIO, source: Source) -> Piece:
+def _read(path: Path, file: BufferedReader, source: Source) -> Piece:
     import openpyxl
 
     sha256 = hashlib.file_digest(file, "sha256").hexdigest()

@@ -129,6 +129,14 @@ class Checking:
         mask[[position for position, _ in self.refused]] = False
         return mask
 
+    def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
+        """Positions of the rows without a reject, by their names, and these names."""
+        kept = pa.array(np.flatnonzero(self.good()))
+        names = text_of(self.raw.columns[self.raw.key]).take(kept)
+        order = pc.sort_indices(names)
+        written = names.take(order).to_numpy(zero_copy_only=False).astype(np.str_)
+        return np.asarray(kept.take(order)), written
+
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
         return tuple(sorted([*self.raw.ragged, *self.refused.values()]))

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
@@ -91,12 +92,11 @@ def load(source: Source, assume: Mapping[str, StandIn]) -> PartTable:
     if not set(gain_columns) & set(raw.columns):
         raise InputError(f"{raw.source}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
     checking = Checking.of(raw)
-    names = checking.names("part")
+    checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
     nominal, worst, evidence = (np.array(arrays) for arrays in zip(*(r[:3] for r in read), strict=True))
 
-    kept = np.flatnonzero(checking.good())
-    order = kept[np.argsort(names[kept].astype(np.str_))]
+    order, names = checking.in_order()
     rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
         raise InputError(nothing_left(raw.source, rows, checking.found(), "part"))
@@ -104,7 +104,7 @@ def load(source: Source, assume: Mapping[str, StandIn]) -> PartTable:
         source=raw.source,
         sha256=raw.sha256,
         rows=rows,
-        names=names[order].astype(np.str_),
+        names=names,
         nominal=nominal[:, order],
         worst=worst[:, order],
         evidence=evidence[:, order].astype(np.uint8),
@@ -175,8 +175,10 @@ def _figure(checking: Checking, name: str) -> tuple[FloatArray, NDArray[np.bool_
 def _from_decibel(column: Column, cells: Numbers) -> FloatArray:
     if column.unit != "dB":
         raise ValueError(f"{column.name}: no conversion from {column.unit!r}")
+    coded = pa.array(cells.values).dictionary_encode()
     # One by one: an array's pow() may round differently by the place of a number in the array.
-    return np.array([10.0 ** (value / 20.0) for value in cells.values.tolist()])
+    ratios = np.array([10.0 ** (value / 20.0) for value in coded.dictionary.to_pylist()])
+    return np.asarray(ratios[np.asarray(coded.indices)])
 
 
 def _filled_column(checking: Checking, name: str, position: np.intp) -> str:

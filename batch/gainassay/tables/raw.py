@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from bisect import bisect_right
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -101,7 +103,7 @@ class RawTable:
 
     def file_of(self, position: int) -> str:
         """What messages call the file of a row."""
-        return self.files[int(np.searchsorted(self.starts, position, side="right")) - 1]
+        return self.files[bisect_right(self.starts, position) - 1]
 
     def theirs(self, column: str) -> str:
         """What the user calls a column."""
@@ -132,17 +134,18 @@ def plain_type(cells: pa.Array) -> pa.Array:
     return text
 
 
-def array_of(values: Iterable[float | str | None]) -> pa.Array:
-    """A column of Python's numbers and texts: numbers if all are, else text, a number as its shortest."""
-    values = list(values)
+def array_of(values: Sequence[Any]) -> pa.Array:
+    """A column of Python's values: numbers if all are, else text, a number as its shortest."""
     kinds = set(map(type, values)) - {type(None)}
     if kinds and kinds <= {int, float}:
-        return pa.array([None if value is None else float(value) for value in values], pa.float64())
+        return pa.array(values if kinds == {float} else [value and float(value) for value in values], pa.float64())
+    if kinds == {str}:
+        return pa.array(values, pa.string())
     return pa.array([value if value is None else _as_text(value) for value in values], pa.string())
 
 
-def _as_text(value: float | str) -> str:
-    return value if isinstance(value, str) else repr(value).removesuffix(".0")
+def _as_text(value: object) -> str:
+    return repr(value).removesuffix(".0") if isinstance(value, float) else str(value)
 
 
 def whole(cells: pa.ChunkedArray) -> pa.Array:

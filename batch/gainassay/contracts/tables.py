@@ -14,6 +14,9 @@ from gainassay import resources
 ELEMENT = "<element>"
 """Stands in a column's name for any element of the stage's topology."""
 
+WRITTEN_BY_USERS = ("stages", "parts")
+"""The tables that go into a job; the others come out of it."""
+
 _PLACEHOLDER = re.compile("<[a-z]+>")
 
 ELEMENT_SUFFIXES = ("_tol_pct",)
@@ -57,6 +60,19 @@ class Column:
     letter_code: str
     in_place_of: str
 
+    def limits(self) -> str:
+        """Its bounds in words, empty if it has none."""
+        words = []
+        if self.required:
+            words.append("needed")
+        if self.lowest:
+            words.append(f"{'at least' if self.lowest[1] else 'above'} {self.lowest[0]:g}")
+        if self.highest:
+            words.append(f"{'at most' if self.highest[1] else 'below'} {self.highest[0]:g}")
+        if self.nonzero:
+            words.append("not 0")
+        return ", ".join(words)
+
     def of(self, element: str) -> Column:
         """This column for one element."""
         return replace(self, name=_PLACEHOLDER.sub(element, self.name))
@@ -66,6 +82,22 @@ class Column:
 def columns(table: str) -> tuple[Column, ...]:
     """The columns of `schemas/<table>.table.json`, in its order."""
     return tuple(_column(field) for field in _document(table)["fields"])
+
+
+def all_tables() -> list[str]:
+    """The tables that `schemas/` describes, what a user writes first."""
+    names = [path.name.removesuffix(".table.json") for path in resources.schemas().glob("*.table.json")]
+    return sorted(names, key=lambda name: (name not in WRITTEN_BY_USERS, name))
+
+
+def title(table: str) -> str:
+    """A table's name in words."""
+    return str(_document(table)["title"])
+
+
+def description(table: str) -> str:
+    """What the rows of a table are."""
+    return str(_document(table)["description"])
 
 
 def key(table: str) -> str:

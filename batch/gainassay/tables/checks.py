@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass
 
@@ -22,6 +23,9 @@ from gainassay.tables.rejects import Reject, by_reason
 
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
+
+TOTAL = "(?i)(?:grand |sub ?)?totals?:?|summe:?|gesamt:?"
+"""What spreadsheets write below a table in the column of names."""
 
 MOST_LISTED = 3
 """Other rows that a repeated name's reason lists."""
@@ -112,6 +116,10 @@ class Checking:
         for where, reason in faults:
             for position in np.flatnonzero(np.asarray(where)):
                 self.refuse(int(position), column, reason)
+        if len(text) and re.fullmatch(TOTAL, text[-1].as_py()):
+            self.refuse(
+                len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
+            )
         for positions in _repeated(text):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):

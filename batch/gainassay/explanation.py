@@ -157,10 +157,10 @@ def explain(
 def _require(name: str, known: list[str], kind: str, table: StageTable | PartTable) -> None:
     if name in known:
         return
-    row = table.rejected_names.get(name)
-    reasons = [f"{r.column} {r.value!r} {r.reason}" for r in table.rejects if r.row == row]
-    if reasons:
-        raise InputError(f"{table.source}: row {row}: {kind} {name!r} was rejected: {'; '.join(reasons)}")
+    rejects = [reject for reject in table.rejects if reject.name == name]
+    if rejects:
+        reasons = "; ".join(f"{r.column} {r.value!r} {r.reason}" for r in rejects)
+        raise InputError(f"{rejects[0].source}: row {rejects[0].row}: {kind} {name!r} was rejected: {reasons}")
     hint = nearest(name, known) or "; `gainassay check` says what is in the table"
     raise InputError(f"{table.source}: there is no usable {kind} {name!r}{hint}")
 

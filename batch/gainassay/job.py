@@ -101,6 +101,53 @@ class Results:
 
 
 @dataclass(frozen=True)
+class Heading:
+    """What a job says of a column of a table.
+
+    Attributes
+    ----------
+    ours : str
+        The column that it fills.
+    theirs : str
+        Its name in the table.
+    unit : str
+        Unit of its numbers that state none; empty: the unit of `ours`.
+    value : str or None
+        What stands in every row in place of a column of the table.
+    """
+
+    ours: str
+    theirs: str = ""
+    unit: str = ""
+    value: str | None = None
+
+
+@dataclass(frozen=True)
+class Source:
+    """Where a table lies and how it is written; what a job does not say is empty.
+
+    Attributes
+    ----------
+    section : str
+        The job's section, and so the kind of table: `stages` or `parts`.
+    at : str
+        A path as seen from the current folder, a pattern of such, the address of a database, or `$NAME` for an
+        address in an environment variable.
+    """
+
+    section: str
+    at: str
+    delimiter: str = ""
+    encoding: str = ""
+    decimal: str = "."
+    sheet: str = ""
+    header_row: int = 0
+    table: str = ""
+    query: str = ""
+    columns: tuple[Heading, ...] = ()
+
+
+@dataclass(frozen=True)
 class Job:
     """A job, its paths as seen from the current folder.
 
@@ -118,8 +165,8 @@ class Job:
 
     path: Path
     document: Mapping[str, Any]
-    stages: Path
-    parts: Path
+    stages: Source
+    parts: Source
     topologies: tuple[Path, ...]
     assume: Mapping[str, StandIn]
     eligible: tuple[Eligible, ...]
@@ -143,8 +190,8 @@ def read(path: Path) -> Job:
     return Job(
         path=path,
         document=document,
-        stages=here / document["stages"]["from"],
-        parts=here / document["parts"]["from"],
+        stages=_source("stages", document["stages"], here),
+        parts=_source("parts", document["parts"], here),
         topologies=tuple(here / name for name in document.get("topologies", [])),
         assume={quantity: StandIn(**given) for quantity, given in document.get("assume", {}).items()},
         eligible=_eligible(path, document.get("eligible", [])),
@@ -175,6 +222,26 @@ def _rule(given: Mapping[str, Any]) -> Eligible:
     )
     name = given.get("name", f"{' to '.join(part)} {relation} {' to '.join(stage)}")
     return Eligible(name, part, relation, stage)
+
+
+def _source(section: str, given: Mapping[str, Any], here: Path) -> Source:
+    options = {key: value for key, value in given.items() if key not in ("from", "columns")}
+    columns = tuple(_heading(name, said) for name, said in given.get("columns", {}).items())
+    at = given["from"]
+    return Source(section, at if is_address(at) else str(here / at), columns=columns, **options)
+
+
+def is_address(at: str) -> bool:
+    """Whether a table's place is the address of a database, or the name of a variable that holds one."""
+    return "://" in at or at.startswith("$")
+
+
+def _heading(name: str, said: str | Mapping[str, str]) -> Heading:
+    if isinstance(said, str):
+        return Heading(said, name)
+    if "value" in said:
+        return Heading(name, value=said["value"])
+    return Heading(said["is"], name, said.get("unit", ""))
 
 
 def _defaults(section: str) -> dict[str, Any]:

@@ -36,7 +36,7 @@ def faults(folder: Path, content: str | bytes, kind: str = "job") -> list[str]:
         ("[results]\nfoldre = 'x'", "in [results]: unknown key 'foldre'; did you mean 'folder'?"),
         ("[result]\nfolder = 'x'", "unknown key 'result'; did you mean 'results'?"),
         ("[assume]\na_lo = { value = 1 }", "in [assume]: unknown key 'a_lo'; did you mean 'a_ol'?"),
-        ("zzz = 1", "in [parts]: unknown key 'zzz'; the keys are from"),
+        ("[judge]\nzzz = 1", "in [judge]: unknown key 'zzz'; the keys are guard_band_pct, basis"),
     ],
 )
 def test_an_unknown_key_names_the_nearest(tmp_path: Path, more: str, wanted: str) -> None:
@@ -58,8 +58,8 @@ def test_every_fault_is_listed(tmp_path: Path) -> None:
         ("[results]\nformats = []", "results.formats is []", "a list of"),
         ("[results]\nformats = ['xls']", "results.formats.0 is 'xls'", '"parquet" or "csv"'),
         ("[results]\nrows = 1979-05-27", "results.rows is", '"not passing"'),
-        ("[assume]\nr_o = 100", "assume.r_o is 100", "typical_times, value, or both"),
-        ("[assume]\nr_o = {}", "assume.r_o is {}", "typical_times, value, or both"),
+        ("[assume]\nr_o = 100", "assume.r_o is 100", "one or more of typical_times, value, hot_times, change_pct"),
+        ("[assume]\nr_o = {}", "assume.r_o is {}", "one or more of typical_times, value, hot_times, change_pct"),
         ("[assume]\nr_o = { value = 0 }", "assume.r_o.value is 0", "a number above 0"),
         ("[assume]\nr_o = { value = '100' }", "assume.r_o.value is '100'", "a number above 0"),
         ("[assume]\nr_o = { value = true }", "assume.r_o.value is true", "a number above 0"),

@@ -13,17 +13,25 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
+from gainassay.contracts import tables
 from gainassay.errors import InputError
+from gainassay.job import Source
 from gainassay.tables import sources
 from gainassay.tables.checks import Checking
-from gainassay.tables.sources import RawTable
+from gainassay.tables.raw import RawTable
+
+
+def read(path: Path, **said: Any) -> RawTable:
+    """A table as read, with what a job says of it."""
+    known = {column.name: column for column in tables.columns("parts")}
+    return sources.read(Source("parts", str(path), **said), known)
 
 
 def read_csv(folder: Path, content: bytes) -> RawTable:
     """A CSV file as read."""
     path = folder / "table.csv"
     path.write_bytes(content)
-    return sources.read(path)
+    return read(path)
 
 
 def refusal(folder: Path, content: bytes, name: str = "table.csv") -> str:
@@ -31,7 +39,7 @@ def refusal(folder: Path, content: bytes, name: str = "table.csv") -> str:
     path = folder / name
     path.write_bytes(content)
     with pytest.raises(InputError) as refused:
-        sources.read(path)
+        read(path)
     assert str(refused.value).startswith(f"{path}: ")
     return str(refused.value)
 
@@ -148,23 +156,105 @@ def test_a_header_without_its_newline_is_refused(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize("name", ["table.xls", "table", "table.csv.gz", "table.txt"])
 def test_another_suffix_is_refused(tmp_path: Path, name: str) -> None:
-    assert "use .csv or .parquet" in refusal(tmp_path, b"a,b\n1,2\n", name)
+    assert "use .csv, .parquet" in refusal(tmp_path, b"a,b\n1,2\n", name)
+
+
+CSV_OF_OTHERS: dict[str, tuple[dict[str, Any], str, str]] = {
+    "semicolons": ({"delimiter": ";"}, "a;b\n1,5;x\n", "utf-8"),
+    "tabs": ({"delimiter": "\t"}, "a\tb\n1,5\tx\n", "utf-8"),
+    "bars": ({"delimiter": "|"}, "a|b\n1,5|x\n", "utf-8"),
+    "cp1252": ({"encoding": "cp1252"}, 'a,b\n"1,5",µΩ€\n'.replace("Ω", ""), "cp1252"),
+    "Latin-1": ({"encoding": "latin-1"}, 'a,b\n"1,5",µ\n', "latin-1"),
+    "UTF-16": ({"encoding": "utf-16"}, 'a,b\n"1,5",µΩ\n', "utf-16"),
+    "UTF-16, tabs": ({"encoding": "utf-16", "delimiter": "\t"}, "a\tb\r\n1,5\tΩ\r\n", "utf-16"),
+    "byte-order mark, semicolons": ({"delimiter": ";"}, "a;b\n1,5;Ω\n", "utf-8-sig"),
+    "UTF-8 by name": ({"encoding": "utf-8"}, 'a,b\n"1,5",Ω\n', "utf-8-sig"),
+    "lines above the header": ({"header_row": 4}, 'Parts of 2031\n\n;;\na,b\n"1,5",x\n', "utf-8"),
+}
+
+
+@pytest.mark.parametrize("name", CSV_OF_OTHERS)
+def test_csv_as_others_write_it(tmp_path: Path, name: str) -> None:
+    said, text, encoding = CSV_OF_OTHERS[name]
+    path = tmp_path / "table.csv"
+    path.write_bytes(text.encode(encoding))
+    table = read(path, **said)
+    row = text.splitlines()[-1]
+    assert table.columns["a"].to_pylist() == ["1,5"]
+    assert row.endswith(table.columns["b"][0].as_py())
+    assert table.rows.tolist() == [len(text.splitlines())]
+
+
+@pytest.mark.parametrize(
+    ("said", "content", "words"),
+    [
+        ({"encoding": "klingon"}, b"a,b\n", "'klingon' is no encoding"),
+        ({"encoding": "base64"}, b"a,b\n", "'base64' is no encoding"),
+        ({"encoding": "ascii"}, b"a,b\n\xe9,1\n", "is not ASCII text (byte 4)"),
+        ({"encoding": "utf-16"}, b"a,b\n1,2\n3", "is not UTF-16 text"),
+        ({"encoding": "cp1252"}, b"a,b\n\x81,2\n", "is not CP1252 text (byte 4)"),
+        ({}, b"\xff\xfea\x00,\x00b\x00\n\x00", 'say encoding = "utf-16" in the job'),
+        ({"header_row": 9}, b"a,b\n1,2\n", "row 9 holds no column names"),
+        ({"header_row": 2}, b'"a\nb",1\na,b\n1,2\n', "runs over the end of the line"),
+    ],
+)
+def test_what_a_job_may_not_say_of_a_csv_file(tmp_path: Path, said: dict[str, Any], content: bytes, words: str) -> None:
+    path = tmp_path / "table.csv"
+    path.write_bytes(content)
+    with pytest.raises(InputError) as refused:
+        read(path, **said)
+    assert words in str(refused.value)
+
+
+def test_rows_below_a_header_further_down_keep_their_numbers(tmp_path: Path) -> None:
+    path = tmp_path / "table.csv"
+    path.write_bytes(b"title\n\na,b\n1,2\n3\n5,6\n")
+    table = read(path, header_row=3)
+    assert table.rows.tolist() == [4, 6]
+    assert [reject.row for reject in table.ragged] == [5]
+
+
+@pytest.mark.parametrize("at", ["", "*.parquet", "**/*.parquet", "[ab].parquet"])
+def test_a_folder_or_pattern_of_parquet_files(tmp_path: Path, at: str) -> None:
+    for name, columns in (("b", {"x": [3.0], "y": ["q"]}), ("a", {"y": ["o", None, "p"], "x": [1, None, 2]})):
+        pq.write_table(pa.table(columns), tmp_path / f"{name}.parquet")
+    table = read(tmp_path / at)
+    assert cells(table) == {"x": [1.0, 2.0, 3.0], "y": ["o", "p", "q"]}
+    assert table.rows.tolist() == [1, 3, 1]
+    assert [Path(table.file_of(position)).name for position in range(3)] == ["a.parquet", "a.parquet", "b.parquet"]
+
+
+@pytest.mark.parametrize(
+    ("files", "at", "words"),
+    [
+        ({}, "", "there is no such table in it"),
+        ({}, "*.parquet", "there is no such table in it"),
+        ({"a.csv": b"a\n", "b.parquet": b""}, "", "holds files of several kinds, .csv, .parquet; name one"),
+        ({"a.csv": b"a,b\n1,2\n", "c.csv": b"a\n1\n"}, "", "c.csv: lacks the column 'b', which"),
+        ({"a.csv": b"a\n1\n", "c.csv": b"a,b\n1,2\n"}, "", "a.csv: lacks the column 'b', which"),
+    ],
+)
+def test_files_that_make_no_table(tmp_path: Path, files: dict[str, bytes], at: str, words: str) -> None:
+    for name, content in files.items():
+        (tmp_path / name).write_bytes(content)
+    with pytest.raises(InputError, match=words):
+        read(tmp_path / at)
 
 
 @pytest.mark.parametrize("name", ["table.csv", "table.parquet"])
 def test_a_folder_or_nothing_in_place_of_a_file(tmp_path: Path, name: str) -> None:
     with pytest.raises(InputError, match="there is no such file"):
-        sources.read(tmp_path / name)
+        read(tmp_path / name)
     (tmp_path / name).mkdir()
-    with pytest.raises(InputError, match="cannot be read"):
-        sources.read(tmp_path / name)
+    with pytest.raises(InputError, match="there is no such table in it"):
+        read(tmp_path / name)
 
 
 def test_a_path_that_no_file_can_have(tmp_path: Path) -> None:
     with pytest.raises(InputError):
-        sources.read(tmp_path / "x\0.csv")
+        read(tmp_path / "x\0.csv")
     with pytest.raises(InputError):
-        sources.read(tmp_path / f"{'x' * 300}.csv")
+        read(tmp_path / f"{'x' * 300}.csv")
 
 
 DAY = datetime.datetime(2031, 2, 3, tzinfo=datetime.UTC)
@@ -188,14 +278,14 @@ DAY = datetime.datetime(2031, 2, 3, tzinfo=datetime.UTC)
 )
 def test_columns_of_a_parquet_file(tmp_path: Path, column: pa.Array, found: list[Any]) -> None:
     pq.write_table(pa.table({"key": ["k"] * len(column), "x": column}), tmp_path / "table.parquet")
-    table = sources.read(tmp_path / "table.parquet")
+    table = read(tmp_path / "table.parquet")
     assert table.columns["x"].to_pylist() == found
     assert table.rows.tolist() == list(range(1, len(column) + 1))
 
 
 def test_a_parquet_row_in_which_nothing_stands_is_passed_over(tmp_path: Path) -> None:
     pq.write_table(pa.table({"a": ["x", " ", "z"], "b": [1.0, None, None]}), tmp_path / "table.parquet")
-    assert sources.read(tmp_path / "table.parquet").rows.tolist() == [1, 3]
+    assert read(tmp_path / "table.parquet").rows.tolist() == [1, 3]
 
 
 @pytest.mark.parametrize(
@@ -203,7 +293,7 @@ def test_a_parquet_row_in_which_nothing_stands_is_passed_over(tmp_path: Path) ->
 )
 def test_a_column_of_neither_text_nor_number_is_named(tmp_path: Path, column: pa.Array) -> None:
     pq.write_table(pa.table({"x": column}), tmp_path / "table.parquet")
-    checking = Checking.of(sources.read(tmp_path / "table.parquet"))
+    checking = Checking.of(read(tmp_path / "table.parquet"))
     with pytest.raises(InputError, match="column 'x' holds"):
         checking.cells("x")
 
@@ -213,7 +303,7 @@ def test_parquet_text_that_is_not_utf_8_is_refused(tmp_path: Path) -> None:
         pa.string(), 1, [None, pa.array([0, 1], pa.int32()).buffers()[1], pa.py_buffer(b"\xff")]
     )
     pq.write_table(pa.table({"x": broken}), tmp_path / "table.parquet")
-    checking = Checking.of(sources.read(tmp_path / "table.parquet"))
+    checking = Checking.of(read(tmp_path / "table.parquet"))
     with pytest.raises(InputError, match="not UTF-8"):
         checking.cells("x")
 
@@ -235,20 +325,23 @@ def test_a_parquet_column_that_stands_twice_is_refused(tmp_path: Path) -> None:
     twice = pa.Table.from_arrays([pa.array(["x"]), pa.array(["y"])], names=["a", "a"])
     pq.write_table(twice, tmp_path / "table.parquet")
     with pytest.raises(InputError):
-        sources.read(tmp_path / "table.parquet")
+        read(tmp_path / "table.parquet")
 
 
 def test_the_folder_of_a_parquet_file_adds_no_column(tmp_path: Path) -> None:
     folder = tmp_path / "year=2031"
     folder.mkdir()
     pq.write_table(pa.table({"a": ["x"]}), folder / "table.parquet")
-    assert list(sources.read(folder / "table.parquet").columns) == ["a"]
+    assert list(read(folder / "table.parquet").columns) == ["a"]
 
 
 def test_the_room_works_on_its_own(tmp_path: Path) -> None:
     path = tmp_path / "table.csv"
     path.write_bytes(b"a,b\n1,2\n")
-    code = f"from pathlib import Path; from gainassay.tables import sources; sources.read(Path({str(path)!r}))"
+    code = (
+        "from gainassay.job import Source; from gainassay.tables import sources; "
+        f"sources.read(Source('parts', {str(path)!r}), {{}})"
+    )
     subprocess.run([sys.executable, "-c", code], check=True)
 
 

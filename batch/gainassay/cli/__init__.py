@@ -10,15 +10,19 @@ import sys
 from typing import NoReturn
 
 import click
+from click.shell_completion import CompletionItem
 
 from gainassay import __version__
 from gainassay.errors import GainassayError
 
 COMMANDS = {
     "check": "Read a job's tables and say what is in them.",
+    "columns": "Say what the columns of tables mean, with units and limits.",
     "explain": "Show all that decides one stage with one part.",
     "form": "Show the gain of a topology as a formula.",
+    "map": "Propose what the columns of a table of yours may be.",
     "need": "Say what each stage of a job asks of a part.",
+    "new": "Write a new job, with tables and a small example.",
     "runs": "List the runs of a job.",
     "sample": "Write a sample set, ready to screen, into a new folder.",
     "screen": "Screen all stages of a job against all its parts.",
@@ -39,6 +43,10 @@ class _Commands(click.Group):
             return super().invoke(ctx)
         except (BrokenPipeError, _ReaderGoneError):
             raise _ReaderGoneError from None
+
+    def shell_complete(self, ctx: click.Context, incomplete: str) -> list[CompletionItem]:
+        commands = [CompletionItem(name, help=line) for name, line in COMMANDS.items() if name.startswith(incomplete)]
+        return commands or super().shell_complete(ctx, incomplete)
 
     def list_commands(self, ctx: click.Context) -> list[str]:
         return list(COMMANDS)

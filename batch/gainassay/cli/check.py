@@ -16,7 +16,7 @@ from gainassay.report import check as report
 @shared.fail_on_option("rejected")
 @shared.json_option
 def check(job: Path, fail_on: tuple[str, ...], as_json: bool) -> None:
-    """Read the tables of JOB and say what is in them: rows, rejected cells, eligible pairs. Nothing is written."""
+    """Read the tables of JOB and say what is in them: rows, columns, rejects, eligible pairs. Nothing is written."""
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
     if as_json:

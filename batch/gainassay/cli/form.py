@@ -22,7 +22,7 @@ KINDS = ("text", "latex", "mathml", "json")
 
 
 @click.command()
-@click.argument("name", metavar="TOPOLOGY")
+@click.argument("name", metavar="TOPOLOGY", shell_complete=shared.complete_topologies)
 @click.argument("more", metavar="[NAME=VALUE]...", nargs=-1)
 @click.option("--as", "kind", type=click.Choice(KINDS), default="text", help="How to show it.")
 @shared.json_option

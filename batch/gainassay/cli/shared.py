@@ -31,6 +31,21 @@ def fail_on_option(*conditions: str) -> Callable[[Command], Command]:
     )
 
 
+def complete_columns(_: click.Context, __: click.Parameter, start: str) -> list[str]:
+    """Names of columns, for a shell to complete."""
+    from gainassay.contracts import tables
+
+    names = dict.fromkeys(column.name for table in tables.all_tables() for column in tables.columns(table))
+    return [name for name in names if name.startswith(start)]
+
+
+def complete_topologies(_: click.Context, __: click.Parameter, start: str) -> list[str]:
+    """Names of built-in topologies, for a shell to complete."""
+    from gainassay import resources
+
+    return sorted(path.stem for path in resources.topologies().glob("*.toml") if path.stem.startswith(start))
+
+
 CONTROL = re.compile(r"[\x00-\x09\x0b-\x1f\x7f-\x9f]")
 """Characters that a terminal obeys; line feeds apart."""
 

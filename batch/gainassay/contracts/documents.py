@@ -6,6 +6,7 @@ import json
 import math
 import tomllib
 from collections.abc import Iterable, Iterator
+from dataclasses import dataclass
 from difflib import get_close_matches
 from functools import cache
 from pathlib import Path
@@ -49,10 +50,48 @@ def schema(kind: str) -> dict[str, Any]:
     return found
 
 
+@dataclass(frozen=True)
+class Key:
+    """A key of a kind of document, with what its schema says of it."""
+
+    path: str
+    meaning: str
+    default: str
+
+
+def keys(kind: str) -> list[Key]:
+    """Every key of a kind of document, in the order of its schema; those of a list's tables as `list[].key`."""
+    return list(_keys(schema(kind), schema(kind), ""))
+
+
+def _keys(node: dict[str, Any], root: dict[str, Any], path: str) -> Iterator[Key]:
+    for name, given in node.get("properties", {}).items():
+        own = f"{path}.{name}" if path else name
+        found = _resolved(given, root)
+        default = json.dumps(found["default"]) if "default" in found else ""
+        yield Key(own, found.get("description") or found.get("title", ""), default)
+        items = _resolved(found.get("items", {}), root)
+        yield from _keys(items, root, f"{own}[]") if "properties" in items else _keys(found, root, own)
+
+
+def _resolved(node: dict[str, Any], root: dict[str, Any]) -> dict[str, Any]:
+    """A part of a schema with what it refers to; what it says itself comes first."""
+    found: dict[str, Any] = {}
+    for other in [*node.get("allOf", []), *([node] if "$ref" in node else [])]:
+        place: Any = root
+        for step in other.get("$ref", "#").split("/")[1:]:
+            place = place[step]
+        found |= place if "$ref" in other else other
+    properties = {**found.get("properties", {}), **node.get("properties", {})}
+    merged = {**found, **node}
+    return {**merged, "properties": properties} if properties else merged
+
+
 def nearest(name: str, known: Iterable[str]) -> str:
     """`; did you mean '...'?` with the nearest known name, or nothing if none is near."""
-    matches = get_close_matches(name, list(known), n=1, cutoff=0.6)
-    return f"; did you mean '{matches[0]}'?" if matches else ""
+    by_folded = {other.casefold(): other for other in known}
+    matches = get_close_matches(name.casefold(), list(by_folded), n=1, cutoff=0.6)
+    return f"; did you mean '{by_folded[matches[0]]}'?" if matches else ""
 
 
 def _faults(document: dict[str, Any], kind: str) -> Iterator[str]:

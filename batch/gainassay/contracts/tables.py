@@ -16,6 +16,8 @@ ELEMENT = "<element>"
 
 NETWORK = "<network>"
 """Stands in a column's name for any network of resistors that a stage names."""
+WRITTEN_BY_USERS = ("stages", "parts")
+"""The tables that go into a job; the others come out of it."""
 
 _PLACEHOLDER = re.compile("<[a-z]+>")
 
@@ -31,6 +33,8 @@ class Column:
     ----------
     name : str
         Its name; may hold a placeholder such as `<element>` or `<resistor>`.
+    is_number : bool
+        Whether its cells are numbers.
     unit : str
         Unit, empty for text and counts.
     meaning : str
@@ -42,12 +46,13 @@ class Column:
     nonzero : bool
         Whether zero is refused.
     letter_code : str
-        Which letter code of IEC 60062 its cells may use: `resistance`, `capacitance` or none.
+        Which letter code of IEC 60062 its cells may use: `resistance`, `capacitance`, `tolerance` or none.
     in_place_of : str
         The column whose number it gives in another unit, or nothing.
     """
 
     name: str
+    is_number: bool
     unit: str
     meaning: str
     required: bool
@@ -57,6 +62,19 @@ class Column:
     letter_code: str
     in_place_of: str
 
+    def limits(self) -> str:
+        """Its bounds in words, empty if it has none."""
+        words = []
+        if self.required:
+            words.append("needed")
+        if self.lowest:
+            words.append(f"{'at least' if self.lowest[1] else 'above'} {self.lowest[0]:g}")
+        if self.highest:
+            words.append(f"{'at most' if self.highest[1] else 'below'} {self.highest[0]:g}")
+        if self.nonzero:
+            words.append("not 0")
+        return ", ".join(words)
+
     def of(self, element: str) -> Column:
         """This column for one element."""
         return replace(self, name=_PLACEHOLDER.sub(element, self.name))
@@ -65,8 +83,34 @@ class Column:
 @cache
 def columns(table: str) -> tuple[Column, ...]:
     """The columns of `schemas/<table>.table.json`, in its order."""
-    document = json.loads((resources.schemas() / f"{table}.table.json").read_text(encoding="utf-8"))
-    return tuple(_column(field) for field in document["fields"])
+    return tuple(_column(field) for field in _document(table)["fields"])
+
+
+def all_tables() -> list[str]:
+    """The tables that `schemas/` describes, what a user writes first."""
+    names = [path.name.removesuffix(".table.json") for path in resources.schemas().glob("*.table.json")]
+    return sorted(names, key=lambda name: (name not in WRITTEN_BY_USERS, name))
+
+
+def title(table: str) -> str:
+    """A table's name in words."""
+    return str(_document(table)["title"])
+
+
+def description(table: str) -> str:
+    """What the rows of a table are."""
+    return str(_document(table)["description"])
+
+
+def key(table: str) -> str:
+    """The column that names the rows of a table."""
+    return str(_document(table)["primaryKey"][0])
+
+
+@cache
+def _document(table: str) -> dict[str, Any]:
+    found: dict[str, Any] = json.loads((resources.schemas() / f"{table}.table.json").read_text(encoding="utf-8"))
+    return found
 
 
 def column(table: str, name: str) -> Column:
@@ -77,18 +121,24 @@ def column(table: str, name: str) -> Column:
 def undescribed(name: str, like: Column | None) -> Column:
     """A column that no schema knows, its numbers written as in another column if there is one."""
     written = {"unit": like.unit, "letter_code": like.letter_code} if like else {}
-    return _column({"name": name, "description": "", **written})
+    return _column({"name": name, "type": "string", "description": "", **written})
 
 
 def stage_columns(kinds: Mapping[str, str]) -> dict[str, Column]:
-    """The columns that a stage table may have, by name, for elements of these kinds."""
-    of_elements = [
-        column("stages", template).of(element)
-        for element, kind in sorted(kinds.items())
-        for template in (f"<{kind}>", *(ELEMENT + suffix for suffix in ELEMENT_SUFFIXES))
-    ]
-    general = [column("stages", name) for name in sorted(reserved_stage_columns())]
-    return {found.name: found for found in (*general, *of_elements)}
+    """Every column that a stage table may have, by name, for elements of the given kinds.
+
+    Parameters
+    ----------
+    kinds : Mapping[str, str]
+        Kind of each element, by its name.
+    """
+    found: dict[str, Column] = {}
+    for column in columns("stages"):
+        placeholder = _PLACEHOLDER.search(column.name)
+        wanted = placeholder.group()[1:-1] if placeholder else ""
+        names = [name for name, kind in sorted(kinds.items()) if wanted in (kind, "element")] if wanted else [""]
+        found |= {column.of(name).name: column.of(name) for name in names}
+    return found
 
 
 def reserved_stage_columns() -> frozenset[str]:
@@ -100,6 +150,7 @@ def _column(field: dict[str, Any]) -> Column:
     constraints = field.get("constraints", {})
     return Column(
         name=field["name"],
+        is_number=field["type"] != "string",
         unit=field.get("unit", ""),
         meaning=field["description"],
         required=constraints.get("required", False),

@@ -15,6 +15,7 @@ from gainassay.job import Job
 from gainassay.runs.folder import File
 from gainassay.runs.summaries import Counts
 from gainassay.tables.parts import PartTable
+from gainassay.tables.rejects import by_reason
 from gainassay.tables.stages import StageTable
 
 PACKAGES = ("gainassay", "dask", "numpy", "pyarrow", "sympy")
@@ -53,6 +54,7 @@ def manifest(
                 "rows": table.rows,
                 "used": table.used(),
                 "rejected": table.rejected_rows(),
+                "rejected_cells": by_reason(table.rejects),
             }
             for name, table in tables.items()
         },

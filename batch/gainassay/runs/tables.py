@@ -111,6 +111,7 @@ def rejected_table(rejects: Sequence[Reject]) -> pa.Table:
         {
             "source": pa.array([reject.source for reject in ordered], pa.string()),
             "row": pa.array([reject.row for reject in ordered], pa.int64()),
+            "name": pa.array([reject.name for reject in ordered], pa.string()),
             "column": pa.array([reject.column for reject in ordered], pa.string()),
             "value": pa.array([reject.value for reject in ordered], pa.string()),
             "reason": pa.array([reject.reason for reject in ordered], pa.string()),

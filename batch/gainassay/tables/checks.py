@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import json
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass, field
-from pathlib import Path
 
 import numpy as np
 import pyarrow as pa
@@ -13,17 +14,24 @@ from numpy.typing import NDArray
 
 from gainassay.contracts import tables
 from gainassay.contracts.documents import nearest
-from gainassay.contracts.quantities import Numbers, numbers, text_of
+from gainassay.contracts.quantities import Numbers, Writing, numbers, text_of
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
-from gainassay.tables.rejects import Reject, Rejects
-from gainassay.tables.sources import RawTable, is_number, shown
+from gainassay.job import Heading
+from gainassay.tables.raw import RawTable, is_number, shown
+from gainassay.tables.rejects import Reject, by_reason
 
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
 
+TOTAL = "(?i)(?:grand |sub ?)?totals?:?|summe:?|gesamt:?"
+"""What spreadsheets write below a table in the column of names."""
+
 MOST_LISTED = 3
 """Other rows that a repeated name's reason lists."""
+
+MOST_SHOWN = 5
+"""Rejects, and reasons, that the message for a useless table shows."""
 
 
 @dataclass
@@ -32,23 +40,33 @@ class Checking:
 
     Attributes
     ----------
+    refused : dict[tuple[int, str], Reject]
+        The rejects, by position and column: a cell is refused once, for the first reason.
     read : dict[Column, Numbers]
-        Columns read so far: each is read, and its bad cells rejected, once.
+        Columns read so far.
     """
 
     raw: RawTable
-    rejects: Rejects
+    refused: dict[tuple[int, str], Reject]
     read: dict[Column, Numbers] = field(default_factory=dict)
 
     @staticmethod
     def of(raw: RawTable) -> Checking:
-        """Start with a table as read; its ragged rows are rejected already."""
-        return Checking(raw, Rejects(raw.source, found=list(raw.ragged)))
+        """Start with a table as read."""
+        return Checking(raw, {})
 
     def refuse(self, position: int, column: str, reason: str) -> None:
         """Reject the row at `position` for its cell in `column` (several columns: joined by commas)."""
-        value = ", ".join(self.cell(name, position) for name in column.split(", "))
-        self.rejects.add(position, int(self.raw.rows[position]), column, value, reason)
+        names = column.split(", ")
+        if (position, column) not in self.refused:
+            self.refused[position, column] = Reject(
+                source=self.raw.file_of(position),
+                row=int(self.raw.rows[position]),
+                column=", ".join(self.raw.theirs(name) for name in names),
+                value=", ".join(self.cell(name, position) for name in names),
+                reason=reason,
+                name=self.cell(self.raw.key, position).strip(),
+            )
 
     def cell(self, column: str, position: int) -> str:
         """What stands in a cell; nothing where the table has no such column."""
@@ -58,7 +76,7 @@ class Checking:
         return "" if value is None else shown(str(value))
 
     def cells(self, column: str) -> pa.Array:
-        """A column of text or numbers.
+        """A column of text or numbers; cells that are no plain value are rejected.
 
         Raises
         ------
@@ -68,9 +86,11 @@ class Checking:
         cells = self.raw.columns[column]
         if not pa.types.is_string(cells.type) and not is_number(cells):
             raise InputError(
-                f"{self.raw.source}: column '{column}' holds {cells.type}, which is neither text nor number, "
-                "or text that is not UTF-8; convert the column"
+                f"{self.raw.source}: column '{self.raw.theirs(column)}' holds {cells.type}, which is neither text nor "
+                "number, or text that is not UTF-8; convert the column"
             )
+        for position, reason in self.raw.flaws.get(column, {}).items():
+            self.refuse(position, column, reason)
         return cells
 
     def column(self, column: Column) -> Numbers:
@@ -79,7 +99,9 @@ class Checking:
         if column.name not in self.raw.columns:
             return Numbers(np.full(count, np.nan), np.ones(count, dtype=bool), {})
         if column not in self.read:
-            self.read[column] = numbers(self.cells(column.name), column)
+            heading = self.raw.headings.get(column.name)
+            writing = Writing(heading.unit if heading else "", self.raw.decimal)
+            self.read[column] = numbers(self.cells(column.name), column, writing)
             for position, reason in self.read[column].refused.items():
                 self.refuse(position, column.name, reason)
         return self.read[column]
@@ -87,43 +109,99 @@ class Checking:
     def names(self, column: str) -> NDArray[np.object_]:
         """The names in a key column; blank, unprintable and repeated names are rejected."""
         text = text_of(self.cells(column))
-        names = np.array(text.to_pylist(), dtype=object)
-        for position in np.flatnonzero(names == ""):
-            self.refuse(int(position), column, "is blank; each row needs a name")
-        for position in np.flatnonzero(np.asarray(pc.match_substring_regex(text, r"\p{Cc}"))):
-            self.refuse(int(position), column, "holds a control character; use printable text")
-        for position in np.flatnonzero(np.asarray(pc.greater(pc.utf8_length(text), LONGEST_NAME))):
-            self.refuse(int(position), column, f"is longer than {LONGEST_NAME} characters; shorten the name")
-        for name, positions in _repeated(names).items():
+        faults = (
+            (pc.equal(text, ""), "is blank; each row needs a name"),
+            (pc.match_substring_regex(text, r"\p{Cc}"), "holds a control character; use printable text"),
+            (
+                pc.greater(pc.utf8_length(text), LONGEST_NAME),
+                f"is longer than {LONGEST_NAME} characters; shorten the name",
+            ),
+        )
+        for where, reason in faults:
+            for position in np.flatnonzero(np.asarray(where)):
+                self.refuse(int(position), column, reason)
+        if len(text) and re.fullmatch(TOTAL, text[-1].as_py()):
+            self.refuse(
+                len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
+            )
+        for positions in _repeated(text):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):
-                others = [str(other) for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
-                listed = ", ".join(others) + (", ..." if len(rows) > MOST_LISTED + 1 else "")
-                if name:
-                    self.refuse(place, column, f"stands more than once: also in row {listed}; which is meant?")
-        return names
-
-    def rejected_names(self, names: NDArray[np.object_]) -> dict[str, int]:
-        """Row in the file of each name that was rejected."""
-        return {names[position]: int(self.raw.rows[position]) for position in sorted(self.rejects.positions)}
+                others = [other for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
+                self.refuse(
+                    place,
+                    column,
+                    f"stands more than once: also in row {_listed(others, len(rows) - 1)}; which is meant?",
+                )
+        return np.asarray(text.to_numpy(zero_copy_only=False), dtype=object)
 
     def good(self) -> NDArray[np.bool_]:
         """Rows without a reject."""
         mask = np.ones(len(self.raw.rows), dtype=bool)
-        mask[list(self.rejects.positions)] = False
+        mask[[position for position, _ in self.refused]] = False
         return mask
+
+    def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
+        """Positions of the rows without a reject, by their names, and these names."""
+        kept = pa.array(np.flatnonzero(self.good()))
+        names = text_of(self.raw.columns[self.raw.key]).take(kept)
+        order = pc.sort_indices(names)
+        written = names.take(order).to_numpy(zero_copy_only=False).astype(np.str_)
+        return np.asarray(kept.take(order)), written
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
-        return tuple(sorted(self.rejects.found))
+        return tuple(sorted([*self.raw.ragged, *self.refused.values()]))
 
 
-def _repeated(names: NDArray[np.object_]) -> dict[str, list[int]]:
-    """Positions of each name that stands more than once."""
-    places: dict[str, list[int]] = {}
-    for position, name in enumerate(names):
-        places.setdefault(name, []).append(position)
-    return {name: positions for name, positions in places.items() if len(positions) > 1}
+def _repeated(names: pa.Array) -> list[list[int]]:
+    """Positions of each name that stands more than once; blank ones apart."""
+    coded = names.dictionary_encode()
+    places = np.asarray(coded.indices)
+    often = np.bincount(places, minlength=len(coded.dictionary)) > 1
+    often &= np.asarray(pc.not_equal(coded.dictionary, ""))
+    found: dict[int, list[int]] = {}
+    for position in np.flatnonzero(often[places]):
+        found.setdefault(int(places[position]), []).append(int(position))
+    return list(found.values())
+
+
+def _listed(rows: list[int], count: int) -> str:
+    more = f" and {count - len(rows)} more" if count > len(rows) else ""
+    return ", ".join(map(str, rows)) + more
+
+
+@dataclass(frozen=True)
+class ColumnUse:
+    """What became of the columns of a table.
+
+    Attributes
+    ----------
+    found : tuple[str, ...]
+        Known columns that bear their own names.
+    mapped : tuple[Heading, ...]
+        What the job says of others.
+    missing : tuple[str, ...]
+        Known columns that are not there, those of elements apart.
+    unknown : tuple[str, ...]
+        Columns that nothing reads, with the nearest known name.
+    """
+
+    found: tuple[str, ...]
+    mapped: tuple[Heading, ...]
+    missing: tuple[str, ...]
+    unknown: tuple[str, ...]
+
+
+def column_use(raw: RawTable, table: str, known: Iterable[str]) -> ColumnUse:
+    """What became of the columns of a table, of which the known ones are read."""
+    names = set(known)
+    return ColumnUse(
+        found=tuple(name for name in raw.columns if name in names and name not in raw.headings),
+        mapped=tuple(raw.headings.values()),
+        missing=tuple(c.name for c in tables.columns(table) if c.name in names and c.name not in raw.columns),
+        unknown=tuple(f"'{name}'{nearest(name, names)}" for name in raw.columns if name not in names),
+    )
 
 
 def require_columns(raw: RawTable, table: str) -> None:
@@ -140,7 +218,7 @@ def require_columns(raw: RawTable, table: str) -> None:
             only = next(iter(raw.columns)) if len(raw.columns) == 1 else ""
             for mark, name in ((";", "semicolons"), ("\t", "tabs"), ("|", "bars")):
                 if mark in only:
-                    hint = f"; its cells look separated by {name}: save it with commas, and points in numbers"
+                    hint = f"; its cells look separated by {name}: say delimiter = {json.dumps(mark)} in [{table}]"
             raise InputError(f"{raw.source}: the column '{column.name}' is missing{hint}")
 
 
@@ -154,11 +232,17 @@ def unknown_columns(raw: RawTable, known: Iterable[str]) -> tuple[str, ...]:
     )
 
 
-def nothing_left(path: Path, found: int, rejects: tuple[Reject, ...], kind: str) -> str:
+def nothing_left(source: str, found: int, rejects: tuple[Reject, ...], kind: str) -> str:
     """The message for a table that holds no row that can be used."""
     if not found:
-        return f"{path}: the table has no rows; it needs one for each {kind}"
-    listed = [f"  row {r.row}, {r.column or 'whole row'}: {r.value!r} {r.reason}" for r in rejects[:5]] + (
-        ["  ..."] if len(rejects) > 5 else []
+        return f"{source}: the table has no rows; it needs one for each {kind}"
+    first = [f"  row {r.row}, {r.column or 'whole row'}: {r.value!r} {r.reason}" for r in rejects[:MOST_SHOWN]]
+    more = len(rejects) - len(first)
+    kinds = [f"  {count:,} x {reason}" for reason, count in by_reason(rejects).items()][:MOST_SHOWN]
+    return "\n".join(
+        [
+            f"{source}: none of its {found} rows can be used:",
+            *first,
+            *([f"  and {more:,} more; the most frequent reasons:", *kinds] if more else []),
+        ]
     )
-    return "\n".join([f"{path}: none of its {found} rows can be used:", *listed])

@@ -16,7 +16,7 @@ from gainassay.errors import InputError
 from gainassay.forms.coefficients import FloatArray
 from gainassay.job import Eligible
 from gainassay.tables.checks import Checking
-from gainassay.tables.sources import is_number
+from gainassay.tables.raw import is_number
 
 
 @dataclass(frozen=True)
@@ -37,9 +37,9 @@ class Compared:
     words: tuple[Column, ...] = ()
     ranges: tuple[tuple[str, str], ...] = ()
 
-    def names(self) -> tuple[str, ...]:
-        """All columns."""
-        return tuple(column.name for column in (*self.numbers, *self.words))
+    def columns(self) -> dict[str, Column]:
+        """All columns, by name."""
+        return {column.name: column for column in (*self.numbers, *self.words)}
 
 
 NOTHING = Compared()
@@ -119,12 +119,12 @@ def read_compared(checking: Checking, compared: Compared) -> dict[str, Cells]:
     InputError
         If the table lacks one.
     """
-    _require(checking, compared.names())
+    _require(checking, compared.columns())
     found = {column.name: _cells(checking, column, is_word=False) for column in compared.numbers}
     found |= {column.name: _cells(checking, column, is_word=True) for column in compared.words}
     for low, high in compared.ranges:
         for position in np.flatnonzero(found[low].values > found[high].values):
-            if position not in checking.rejects.positions:
+            if checking.good()[position]:
                 checking.refuse(int(position), f"{low}, {high}", "the low end of the range lies above its high end")
     return found
 

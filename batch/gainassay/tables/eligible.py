@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from gainassay.job import Comparison, Eligible
 from gainassay.tables.compared import Cells
 from gainassay.tables.parts import PartTable
-from gainassay.tables.sources import shown
+from gainassay.tables.raw import shown
 from gainassay.tables.stages import StageGroup
 
 ELIGIBLE = -1

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
@@ -16,9 +16,9 @@ from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
-from gainassay.job import StandIn
+from gainassay.job import Source, StandIn
 from gainassay.tables import sources
-from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.rejects import Reject, rejected_rows
 
@@ -53,8 +53,8 @@ class PartTable:
         evidence GUARANTEED, since nothing is claimed about it.
     compared : Mapping[str, Cells]
         The columns that rules compare with the stages'.
-    rejected_names : Mapping[str, int]
-        Row in the file of each name that was rejected.
+    columns : ColumnUse
+        What became of the table's columns.
     """
 
     source: str
@@ -71,7 +71,7 @@ class PartTable:
     modelled: tuple[bool, ...]
     compared: Mapping[str, Cells]
     rejects: tuple[Reject, ...]
-    rejected_names: Mapping[str, int]
+    columns: ColumnUse
     warnings: tuple[str, ...]
 
     def used(self) -> int:
@@ -87,13 +87,13 @@ class PartTable:
         return tuple(d.quantity for d, there in zip(DEPARTURES, self.modelled, strict=True) if not there)
 
 
-def load(path: Path, assume: Mapping[str, StandIn], compared: Compared = NOTHING) -> PartTable:
+def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOTHING) -> PartTable:
     """Read and check a parts table.
 
     Parameters
     ----------
-    path : Path
-        The file.
+    source : Source
+        Where it lies.
     assume : Mapping[str, StandIn]
         What stands in for missing numbers, by data-sheet quantity.
     compared : Compared
@@ -102,28 +102,27 @@ def load(path: Path, assume: Mapping[str, StandIn], compared: Compared = NOTHING
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every part or a rule needs, or holds no row that can be used.
+        If the table cannot be read, lacks a column that every part or a rule needs, or holds no row that can be used.
     """
-    raw = sources.read(path)
-    known = tables.columns("parts")
+    known = {column.name: column for column in tables.columns("parts")} | compared.columns()
+    raw = sources.read(source, known)
     require_columns(raw, "parts")
     gain_columns = _figure_columns(OPEN_LOOP_GAIN)
     if not set(gain_columns) & set(raw.columns):
-        raise InputError(f"{path}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
+        raise InputError(f"{raw.source}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
     checking = Checking.of(raw)
-    names = checking.names("part")
+    checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
     cells = read_compared(checking, compared)
-    kept = np.flatnonzero(checking.good())
-    order = kept[np.argsort(names[kept].astype(np.str_))]
+    order, names = checking.in_order()
     rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
-        raise InputError(nothing_left(path, rows, checking.found(), "part"))
+        raise InputError(nothing_left(raw.source, rows, checking.found(), "part"))
     return PartTable(
         source=raw.source,
         sha256=raw.sha256,
         rows=rows,
-        names=names[order].astype(np.str_),
+        names=names,
         nominal=np.array([one.nominal[order] for one in read]),
         worst=np.array([one.worst[order] for one in read]),
         evidence=np.array([one.evidence[order] for one in read], np.uint8),
@@ -134,8 +133,8 @@ def load(path: Path, assume: Mapping[str, StandIn], compared: Compared = NOTHING
         modelled=tuple(one.modelled for one in read),
         compared={name: column.at(order) for name, column in cells.items()},
         rejects=checking.found(),
-        rejected_names=checking.rejected_names(names),
-        warnings=unknown_columns(raw, [*(column.name for column in known), *compared.names()]),
+        columns=column_use(raw, "parts", known),
+        warnings=unknown_columns(raw, known),
     )
 
 
@@ -240,8 +239,10 @@ def _figure(checking: Checking, name: str) -> tuple[FloatArray, NDArray[np.bool_
 def _from_decibel(column: Column, cells: Numbers) -> FloatArray:
     if column.unit != "dB":
         raise ValueError(f"{column.name}: no conversion from {column.unit!r}")
+    coded = pa.array(cells.values).dictionary_encode()
     # One by one: an array's pow() may round differently by the place of a number in the array.
-    return np.array([10.0 ** (value / 20.0) for value in cells.values.tolist()])
+    ratios = np.array([10.0 ** (value / 20.0) for value in coded.dictionary.to_pylist()])
+    return np.asarray(ratios[np.asarray(coded.indices)])
 
 
 def _filled_column(checking: Checking, name: str, position: np.intp) -> str:

@@ -2,42 +2,40 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+import re
+from collections import Counter
+from dataclasses import dataclass
 
 
 @dataclass(frozen=True, order=True)
 class Reject:
-    """A cell that could not be used. Its row is left out; nothing is repaired."""
+    """A cell that could not be used. Its row is left out; nothing is repaired.
+
+    Attributes
+    ----------
+    column : str
+        What the user calls it; several where the reason lies between them; empty: the whole row.
+    name : str
+        The name in that row; empty if it has none.
+    """
 
     source: str
     row: int
     column: str
     value: str
     reason: str
+    name: str = ""
 
-
-@dataclass
-class Rejects:
-    """The rejects of one table, while it is read.
-
-    Attributes
-    ----------
-    positions : set[int]
-        Positions, in the table as read, of the rows to leave out.
-    found : list[Reject]
-        Every reject.
-    """
-
-    source: str
-    positions: set[int] = field(default_factory=set)
-    found: list[Reject] = field(default_factory=list)
-
-    def add(self, position: int, row: int, column: str, value: str, reason: str) -> None:
-        """Refuse the row at `position`, the file's row `row`, for one of its cells."""
-        self.positions.add(position)
-        self.found.append(Reject(self.source, row, column, value, reason))
+    def kind(self) -> str:
+        """The reason without what is particular to the cell."""
+        return re.split("[;:]", self.reason, maxsplit=1)[0]
 
 
 def rejected_rows(rejects: tuple[Reject, ...]) -> int:
     """How many rows of one table the rejects leave out."""
-    return len({reject.row for reject in rejects})
+    return len({(reject.source, reject.row) for reject in rejects})
+
+
+def by_reason(rejects: tuple[Reject, ...]) -> dict[str, int]:
+    """How many cells were rejected for each kind of reason, the most frequent first."""
+    return dict(Counter(reject.kind() for reject in rejects).most_common())

@@ -11,8 +11,10 @@ from numpy.typing import NDArray
 from gainassay.contracts import tables
 from gainassay.contracts.moves import MOVES, TEMPERATURE
 from gainassay.contracts.quantities import Numbers, text_of
+from gainassay.contracts.tables import Column
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.topology import Topology
+from gainassay.job import Source
 from gainassay.tables.checks import Checking
 
 SPREAD_COLUMNS = (("tol_pct", 1e-2), ("tc_ppm_k", 1e-6), ("drift_pct", 1e-2))
@@ -78,10 +80,22 @@ class SpreadColumns:
     networks: Mapping[str, NDArray[np.object_]]
     ratios: Mapping[str, tuple[Numbers, ...]]
 
-    def names(self) -> tuple[str, ...]:
-        """All columns that may be there."""
-        general = [name for name, _ in SPREAD_COLUMNS] + ["network", "t_min_c", "t_max_c"]
-        return (*general, *(f"{network}_{column}" for network in self.ratios for column, _ in RATIO_COLUMNS))
+    def columns(self) -> dict[str, Column]:
+        """The columns of its networks, by name."""
+        found = [_of_network(name, column) for name in self.ratios for column, _ in RATIO_COLUMNS]
+        return {column.name: column for column in found}
+
+
+def networks_named(source: Source) -> dict[str, Column]:
+    """The columns of networks that a job maps, by name."""
+    suffixes = [f"_{column}" for column, _ in RATIO_COLUMNS]
+    names = [(heading.ours, suffix) for heading in source.columns for suffix in suffixes]
+    found = [(name.removesuffix(suffix), suffix[1:]) for name, suffix in names if name.endswith(suffix)]
+    return {column.name: column for column in (_of_network(network, column) for network, column in found)}
+
+
+def _of_network(network: str, column: str) -> Column:
+    return tables.column("stages", f"{tables.NETWORK}_{column}").of(network)
 
 
 def read(checking: Checking, elements: Iterable[str]) -> SpreadColumns:
@@ -106,10 +120,7 @@ def read(checking: Checking, elements: Iterable[str]) -> SpreadColumns:
         network=network,
         networks=networks,
         ratios={
-            name: tuple(
-                checking.column(tables.column("stages", f"{tables.NETWORK}_{column}").of(name))
-                for column, _ in RATIO_COLUMNS
-            )
+            name: tuple(checking.column(_of_network(name, column)) for column, _ in RATIO_COLUMNS)
             for name in sorted(named)
         },
     )

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
-from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,8 +18,9 @@ from gainassay.forms.cache import form_of
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology
+from gainassay.job import Source
 from gainassay.tables import sources, spreads
-from gainassay.tables.checks import Checking, nothing_left, require_columns, unknown_columns
+from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.rejects import Reject, rejected_rows
 from gainassay.tables.spreads import SpreadColumns, Spreads
@@ -84,8 +84,8 @@ class StageTable:
         Rows in the file, blank ones apart.
     groups : tuple[StageGroup, ...]
         By name of the topology.
-    rejected_names : Mapping[str, int]
-        Row in the file of each name that was rejected.
+    columns : ColumnUse
+        What became of the table's columns.
     """
 
     source: str
@@ -93,7 +93,7 @@ class StageTable:
     rows: int
     groups: tuple[StageGroup, ...]
     rejects: tuple[Reject, ...]
-    rejected_names: Mapping[str, int]
+    columns: ColumnUse
     warnings: tuple[str, ...]
 
     def used(self) -> int:
@@ -126,7 +126,7 @@ def kinds(library: Mapping[str, Topology]) -> dict[str, str]:
     return {element.name: element.kind for topology in library.values() for element in topology.elements}
 
 
-def load(path: Path, library: Mapping[str, Topology], compared: Compared = NOTHING) -> StageTable:
+def load(source: Source, library: Mapping[str, Topology], compared: Compared = NOTHING) -> StageTable:
     """Read and check a stage table.
 
     Parameters
@@ -137,14 +137,17 @@ def load(path: Path, library: Mapping[str, Topology], compared: Compared = NOTHI
     Raises
     ------
     InputError
-        If the file cannot be read, lacks a column that every stage or a rule needs, names a topology that has no form,
-        or holds no row that can be used.
+        If the table cannot be read, lacks a column that every stage or a rule needs, names a topology that has no
+        form, or holds no row that can be used.
     """
-    raw = sources.read(path)
     kind_of = kinds(library)
+    known = tables.stage_columns(kind_of) | compared.columns() | spreads.networks_named(source)
+    raw = sources.read(source, known)
     require_columns(raw, "stages")
     if not {"accuracy_pct", "accuracy_ppm"} & set(raw.columns):
-        raise InputError(f"{path}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?")
+        raise InputError(
+            f"{raw.source}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?"
+        )
     checking = Checking.of(raw)
     names = checking.names("stage")
     chosen = _topologies(checking, library)
@@ -152,11 +155,12 @@ def load(path: Path, library: Mapping[str, Topology], compared: Compared = NOTHI
         name: checking.column(tables.column("stages", name)) for name in ("accuracy_pct", "accuracy_ppm", "target_gain")
     }
     limits = _limits(checking, general["accuracy_pct"], general["accuracy_ppm"])
-    known = [name for name in sorted(kind_of) if name in raw.columns]
-    values = {name: checking.column(tables.column("stages", f"<{kind_of[name]}>").of(name)) for name in known}
+    there = [name for name in sorted(kind_of) if name in raw.columns]
+    values = {name: checking.column(tables.column("stages", f"<{kind_of[name]}>").of(name)) for name in there}
     moving = spreads.read(checking, sorted(kind_of))
     is_hot, is_calibrated = ~np.isnan(moving.excursion), _calibrated(checking)
     cells = read_compared(checking, compared)
+    known |= moving.columns()
 
     groups = []
     for name in sorted(set(chosen) & set(library)):
@@ -184,18 +188,15 @@ def load(path: Path, library: Mapping[str, Topology], compared: Compared = NOTHI
                 groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
     rows = len(raw.rows) + len(raw.ragged)
     if not groups:
-        raise InputError(nothing_left(path, rows, checking.found(), "stage"))
+        raise InputError(nothing_left(raw.source, rows, checking.found(), "stage"))
     return StageTable(
         source=raw.source,
         sha256=raw.sha256,
         rows=rows,
         groups=tuple(groups),
         rejects=checking.found(),
-        rejected_names=checking.rejected_names(names),
-        warnings=(
-            *unknown_columns(raw, [*tables.stage_columns(kind_of), *moving.names(), *compared.names()]),
-            *_idle_coefficients(raw.source, moving, is_hot),
-        ),
+        columns=column_use(raw, "stages", known),
+        warnings=(*unknown_columns(raw, known), *_idle_coefficients(raw.source, moving, is_hot)),
     )
 
 

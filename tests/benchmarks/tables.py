@@ -1,0 +1,123 @@
+"""How long tables take to be read and checked, as ratios to what pyarrow takes to read the same files.
+
+    python tests/benchmarks/tables.py [ROWS]
+
+The goals, for a million parts of 15 columns: from Parquet in the order of pyarrow's own read and one second; from CSV
+within three times pyarrow's own read; from a database as its driver allows. Peak memory is that of a process that does
+nothing else.
+"""
+
+from __future__ import annotations
+
+import sqlite3
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.csv as pacsv
+import pyarrow.parquet as pq
+
+from gainassay.job import Source
+from gainassay.tables import parts
+
+COLUMNS = 15
+
+
+def table(rows: int) -> pa.Table:
+    """Parts with a fifth of their figures blank, and columns that nothing reads."""
+    rng = np.random.default_rng(2031)
+
+    def figures(low: float, high: float) -> pa.Array:
+        values = np.exp(rng.uniform(np.log(low), np.log(high), rows))
+        return pa.array([float(f"{value:.4g}") for value in values], mask=rng.random(rows) < 0.2)
+
+    columns = {
+        "part": pa.array([f"amp-{number:07d}" for number in rng.permutation(rows)]),
+        "a_ol_db_min": figures(80, 100),
+        "a_ol_db_typ": figures(100, 130),
+        "r_id_min": figures(1e5, 1e6),
+        "r_id_typ": figures(1e6, 1e9),
+        "r_o_typ": figures(1, 10),
+        "r_o_max": figures(10, 100),
+    }
+    others = {f"other_{place}": figures(1, 100) for place in range(COLUMNS - len(columns))}
+    return pa.table({**columns, **others})
+
+
+def as_text(cells: pa.ChunkedArray) -> pa.ChunkedArray:
+    """Numbers as text."""
+    return cells.cast(pa.string())
+
+
+def seconds(work: Callable[[], object]) -> float:
+    """The best of three."""
+    found = []
+    for _ in range(3):
+        started = time.perf_counter()
+        work()
+        found.append(time.perf_counter() - started)
+    return min(found)
+
+
+def peak(path: Path, table: str) -> float:
+    """Peak memory [GiB] of a process that loads a table and nothing else."""
+    code = (
+        "import resource; from gainassay.job import Source; from gainassay.tables import parts; "
+        f"parts.load(Source('parts', {str(path)!r}, table={table!r}), {{}}); "
+        "print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)"
+    )
+    done = subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True)
+    return int(done.stdout) / 2**20
+
+
+def main() -> None:
+    rows = int(sys.argv[1]) if len(sys.argv) > 1 else 1_000_000
+    with tempfile.TemporaryDirectory() as folder:
+        home = Path(folder)
+        numbers = table(rows)
+        text = pa.table({name: as_text(numbers[name]) for name in numbers.column_names})
+        clutter = text.set_column(
+            3, "r_id_min", pa.array([f"{n % 977 / 1000} Mohm" if n % 977 else "4k7" for n in range(rows)])
+        )
+        pq.write_table(numbers, home / "numbers.parquet")
+        pq.write_table(text, home / "text.parquet")
+        pacsv.write_csv(numbers, home / "numbers.csv", pacsv.WriteOptions(quoting_style="needed"))
+        pacsv.write_csv(clutter, home / "units.csv", pacsv.WriteOptions(quoting_style="needed"))
+        with sqlite3.connect(home / "numbers.sqlite") as connection:
+            marks = ", ".join("?" * numbers.num_columns)
+            connection.execute(f"create table parts ({', '.join(numbers.column_names)})")
+            columns = [column.to_pylist() for column in numbers.columns]
+            connection.executemany(f"insert into parts values ({marks})", zip(*columns, strict=True))
+
+        def driver() -> None:
+            with sqlite3.connect(home / "numbers.sqlite") as connection:
+                for _ in connection.execute("select * from parts"):
+                    pass
+
+        def load(name: str, table: str) -> Callable[[], object]:
+            return lambda: parts.load(Source("parts", str(home / name), table=table), {})
+
+        print(f"{rows:,} rows x {numbers.num_columns} columns")
+        print(f"{'':18}{'MB':>6}{'own s':>8}{'ours s':>8}{'ratio':>7}{'more s':>8}{'peak GiB':>10}")
+        for name, own, said in (
+            ("numbers.parquet", lambda: pq.read_table(home / "numbers.parquet"), ""),
+            ("text.parquet", lambda: pq.read_table(home / "text.parquet"), ""),
+            ("numbers.csv", lambda: pacsv.read_csv(home / "numbers.csv"), ""),
+            ("units.csv", lambda: pacsv.read_csv(home / "units.csv"), ""),
+            ("numbers.sqlite", driver, "parts"),
+        ):
+            theirs, ours = seconds(own), seconds(load(name, said))
+            size = (home / name).stat().st_size / 1e6
+            print(
+                f"{name:18}{size:6.0f}{theirs:8.2f}{ours:8.2f}{ours / theirs:7.1f}{ours - theirs:8.2f}"
+                f"{peak(home / name, said):10.2f}"
+            )
+
+
+if __name__ == "__main__":
+    main()

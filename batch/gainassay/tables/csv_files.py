@@ -51,8 +51,8 @@ def read(path: Path, source: Source) -> Piece:
             columns[name] = cells
         elif filled({"": cells}, len(cells)).any():
             raise InputError(
-                f"{path}: column {place + 1} has no name in row {header_row}, but cells that are filled; name it, or say "
-                "header_row = ... where the names stand further down"
+                f"{path}: column {place + 1} has no name in row {header_row}, but cells that are filled; name it, or "
+                "say header_row = ... where the names stand further down"
             )
     return Piece(str(path), columns, rows, sha256, ragged)
 

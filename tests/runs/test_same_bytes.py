@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import csv
 import random
+import sqlite3
 from collections.abc import Mapping, Sequence
 from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+import openpyxl
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
@@ -94,6 +96,59 @@ def test_text_in_csv_or_in_parquet(write_job: JobWriter, usual: dict[str, bytes]
     pq.write_table(pa.Table.from_pylist(list(STAGES)), job.parent / "stages.parquet")
     pq.write_table(pa.Table.from_pylist(list(PARTS)), job.parent / "parts.parquet")
     assert files(job) == usual
+
+
+@pytest.mark.parametrize("kind", ["xlsx", "sqlite", "folder", "mapped"])
+def test_kind_of_source(write_job: JobWriter, usual: dict[str, bytes], kind: str) -> None:
+    lines = {
+        "xlsx": '[{name}]\nfrom = "{name}.xlsx"\n',
+        "sqlite": '[{name}]\nfrom = "all.sqlite"\nquery = "select * from {name} order by random()"\n',
+        "folder": '[{name}]\nfrom = "{name}/*.parquet"\n',
+        "mapped": '[{name}]\nfrom = "{name}.txt"\ndelimiter = "|"\nencoding = "utf-16"\n'
+        '[{name}.columns]\n"Their {key}" = "{key}"\n',
+    }[kind]
+    keys = {"stages": "stage", "parts": "part"}
+    job = write_job(RESULTS, tables="".join(lines.format(name=name, key=key) for name, key in keys.items()))
+    for name, rows in (("stages", STAGES), ("parts", PARTS)):
+        WRITERS[kind](job.parent, name, pa.Table.from_pylist(list(rows)))
+    assert files(job) == usual
+
+
+def write_xlsx(home: Path, name: str, table: pa.Table) -> None:
+    """A workbook."""
+    book = openpyxl.Workbook(write_only=True)
+    sheet = book.create_sheet()
+    sheet.append(table.column_names)
+    for row in table.to_pylist():
+        sheet.append(list(row.values()))
+    book.save(home / f"{name}.xlsx")
+
+
+def write_sqlite(home: Path, name: str, table: pa.Table) -> None:
+    """A table of an SQLite file."""
+    with sqlite3.connect(home / "all.sqlite") as connection:
+        connection.execute(f"create table {name} ({', '.join(table.column_names)})")
+        marks = ", ".join("?" * table.num_columns)
+        rows = [list(row.values()) for row in table.to_pylist()]
+        connection.executemany(f"insert into {name} values ({marks})", rows)
+    connection.close()
+
+
+def write_folder(home: Path, name: str, table: pa.Table) -> None:
+    """A folder of Parquet files."""
+    (home / name).mkdir()
+    for place, start in enumerate(range(0, table.num_rows, 7)):
+        pq.write_table(table.slice(start, 7), home / name / f"{place:03d}.parquet")
+
+
+def write_mapped(home: Path, name: str, table: pa.Table) -> None:
+    """A text file with other delimiters, another encoding and another name of its key."""
+    header = [f"Their {table.column_names[0]}", *table.column_names[1:]]
+    lines = ["|".join(header), *("|".join(row.values()) for row in table.to_pylist())]
+    (home / f"{name}.txt").write_bytes("\r\n".join(lines).encode("utf-16"))
+
+
+WRITERS = {"xlsx": write_xlsx, "sqlite": write_sqlite, "folder": write_folder, "mapped": write_mapped}
 
 
 def test_numbers_in_csv_or_in_parquet(write_job: JobWriter) -> None:

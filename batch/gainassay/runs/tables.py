@@ -16,7 +16,7 @@ from gainassay.screen.blocks import Screened, accounts
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
-from gainassay.tables.rejects import Reject
+from gainassay.tables.rejects import PLACE, Reject
 
 PPM = 1e6
 ROWS_PER_GROUP = 250_000
@@ -105,7 +105,7 @@ def summary_table(table: str, columns: Mapping[str, pa.Array]) -> pa.Table:
 
 def rejected_table(rejects: Sequence[Reject]) -> pa.Table:
     """The rejected cells, in the order of source, row and column."""
-    ordered = sorted(rejects)
+    ordered = sorted(rejects, key=PLACE)
     return summary_table(
         "rejected",
         {

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -19,7 +19,7 @@ from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.job import Heading
 from gainassay.tables.raw import RawTable, is_number, shown
-from gainassay.tables.rejects import Reject, by_reason
+from gainassay.tables.rejects import PLACE, Reject, by_reason
 
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
@@ -57,23 +57,40 @@ class Checking:
 
     def refuse(self, position: int, column: str, reason: str) -> None:
         """Reject the row at `position` for its cell in `column` (several columns: joined by commas)."""
-        names = column.split(", ")
+        value = ", ".join(self.cell(name, position) for name in column.split(", "))
+        self._add(position, column, reason, value, self.cell(self.raw.key, position))
+
+    def refuse_all(self, column: str, reasons: Mapping[int, str]) -> None:
+        """Reject many rows for their cells in one column, each with its reason by its position."""
+        if not reasons:
+            return
+        places = pa.array(reasons.keys(), pa.int64())
+        values, names = (self._shown(name, places) for name in (column, self.raw.key))
+        for (position, reason), value, name in zip(reasons.items(), values, names, strict=True):
+            self._add(position, column, reason, value, name)
+
+    def _add(self, position: int, column: str, reason: str, value: str, name: str) -> None:
         if (position, column) not in self.refused:
             self.refused[position, column] = Reject(
                 source=self.raw.file_of(position),
                 row=int(self.raw.rows[position]),
-                column=", ".join(self.raw.theirs(name) for name in names),
-                value=", ".join(self.cell(name, position) for name in names),
+                column=", ".join(map(self.raw.theirs, column.split(", "))),
+                value=value,
                 reason=reason,
-                name=self.cell(self.raw.key, position).strip(),
+                name=name.strip(),
             )
+
+    def _shown(self, column: str, places: pa.Array) -> list[str]:
+        """What stands in some cells of a column; nothing where the table has no such column."""
+        if column not in self.raw.columns:
+            return [""] * len(places)
+        return [
+            "" if value is None else shown(str(value)) for value in self.raw.columns[column].take(places).to_pylist()
+        ]
 
     def cell(self, column: str, position: int) -> str:
         """What stands in a cell; nothing where the table has no such column."""
-        if column not in self.raw.columns:
-            return ""
-        value = self.raw.columns[column][position].as_py()
-        return "" if value is None else shown(str(value))
+        return self._shown(column, pa.array([position]))[0]
 
     def cells(self, column: str) -> pa.Array:
         """A column of text or numbers; cells that are no plain value are rejected.
@@ -89,8 +106,7 @@ class Checking:
                 f"{self.raw.source}: column '{self.raw.theirs(column)}' holds {cells.type}, which is neither text nor "
                 "number, or text that is not UTF-8; convert the column"
             )
-        for position, reason in self.raw.flaws.get(column, {}).items():
-            self.refuse(position, column, reason)
+        self.refuse_all(column, self.raw.flaws.get(column, {}))
         return cells
 
     def column(self, column: Column) -> Numbers:
@@ -102,8 +118,7 @@ class Checking:
             heading = self.raw.headings.get(column.name)
             writing = Writing(heading.unit if heading else "", self.raw.decimal)
             self.read[column] = numbers(self.cells(column.name), column, writing)
-            for position, reason in self.read[column].refused.items():
-                self.refuse(position, column.name, reason)
+            self.refuse_all(column.name, self.read[column].refused)
         return self.read[column]
 
     def names(self, column: str) -> NDArray[np.object_]:
@@ -118,8 +133,7 @@ class Checking:
             ),
         )
         for where, reason in faults:
-            for position in np.flatnonzero(np.asarray(where)):
-                self.refuse(int(position), column, reason)
+            self.refuse_all(column, dict.fromkeys(np.flatnonzero(np.asarray(where)).tolist(), reason))
         if len(text) and re.fullmatch(TOTAL, text[-1].as_py()):
             self.refuse(
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
@@ -151,7 +165,7 @@ class Checking:
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
-        return tuple(sorted([*self.raw.ragged, *self.refused.values()]))
+        return tuple(sorted([*self.raw.ragged, *self.refused.values()], key=PLACE))
 
 
 def _repeated(names: pa.Array) -> list[list[int]]:

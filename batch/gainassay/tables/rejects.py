@@ -5,9 +5,10 @@ from __future__ import annotations
 import re
 from collections import Counter
 from dataclasses import dataclass
+from operator import attrgetter
 
 
-@dataclass(frozen=True, order=True)
+@dataclass(frozen=True)
 class Reject:
     """A cell that could not be used. Its row is left out; nothing is repaired.
 
@@ -29,6 +30,10 @@ class Reject:
     def kind(self) -> str:
         """The reason without what is particular to the cell."""
         return re.split("[;:]", self.reason, maxsplit=1)[0]
+
+
+PLACE = attrgetter("source", "row", "column", "value", "reason")
+"""What rejects are ordered by."""
 
 
 def rejected_rows(rejects: tuple[Reject, ...]) -> int:

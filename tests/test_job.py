@@ -20,7 +20,7 @@ def test_the_shortest_job(write_job: JobWriter) -> None:
     assert job.stages == path.parent / "stages.csv"
     assert job.parts == path.parent / "parts.csv"
     assert (job.topologies, dict(job.assume)) == ((), {})
-    assert job.results == jobs.Results(path.parent / "runs", "all", ("parquet",), False)
+    assert job.results == jobs.Results(path.parent / "runs", "all", ("parquet",), False, False, 2000)
 
 
 def test_everything_a_job_may_say(write_job: JobWriter) -> None:
@@ -34,6 +34,8 @@ folder = "../elsewhere"
 rows = "not passing"
 formats = ["csv", "parquet"]
 terms = true
+views = true
+samples = 500
 """,
         tables='topologies = ["own/one.toml"]\n[stages]\nfrom = "a.parquet"\n[parts]\nfrom = "/b.csv"\n',
     )
@@ -41,7 +43,7 @@ terms = true
     assert job.topologies == (path.parent / "own/one.toml",)
     assert (job.stages, job.parts) == (path.parent / "a.parquet", Path("/b.csv"))
     assert job.assume == {"a_ol": StandIn(typical_times=0.5), "r_o": StandIn(2, 300)}
-    assert job.results == jobs.Results(path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True)
+    assert job.results == jobs.Results(path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, 500)
 
 
 def test_paths_start_where_the_job_lies(write_job: JobWriter, monkeypatch: pytest.MonkeyPatch) -> None:

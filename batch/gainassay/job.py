@@ -51,12 +51,22 @@ class Judge:
 
 @dataclass(frozen=True)
 class Results:
-    """Where results go and what they hold."""
+    """Where results go and what they hold.
+
+    Attributes
+    ----------
+    views : bool
+        Whether verdict tables show root-sum-square and Monte Carlo beside the worst case.
+    samples : int
+        Of each pair, for Monte Carlo.
+    """
 
     folder: Path
     rows: str
     formats: tuple[str, ...]
     terms: bool
+    views: bool
+    samples: int
 
 
 @dataclass(frozen=True)
@@ -109,6 +119,8 @@ def read(path: Path) -> Job:
             rows=results["rows"],
             formats=tuple(results["formats"]),
             terms=results["terms"],
+            views=results["views"],
+            samples=results["samples"],
         ),
     )
 

@@ -23,7 +23,8 @@ def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
     groups = service.groups_of(prepared.stages, prepared.parts)
-    found = explanation.explain(prepared.stages, prepared.parts, groups, service.rules_of(prepared.job), stage, part)
+    rules, samples = service.rules_of(prepared.job), prepared.job.results.samples
+    found = explanation.explain(prepared.stages, prepared.parts, groups, rules, samples, stage, part)
     if as_json:
         shared.data({**asdict(found), "cautions": CAUTIONS})
     else:

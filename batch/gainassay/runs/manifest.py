@@ -14,6 +14,8 @@ from gainassay.forms.cache import content_hash
 from gainassay.job import Job
 from gainassay.runs.folder import File
 from gainassay.runs.summaries import Counts
+from gainassay.screen.monte_carlo import SEED
+from gainassay.screen.rss import COVERAGE_FACTOR
 from gainassay.tables.parts import PartTable
 from gainassay.tables.stages import StageTable
 
@@ -58,6 +60,9 @@ def manifest(
         "warnings": list(warnings),
         "pairs": sum(counts.verdicts.values()),
         "verdicts": counts.verdicts,
+        "views": {"coverage_factor": COVERAGE_FACTOR, "samples": job.results.samples, "seed": SEED}
+        if job.results.views
+        else None,
         "dominant_terms": counts.dominant_terms,
         "cautions": list(CAUTIONS),
         "files": [asdict(file) for file in sorted(files, key=lambda file: file.path)],

@@ -15,6 +15,7 @@ from gainassay.screen.blocks import Screened
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, account
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
+from gainassay.screen.views import Views
 from gainassay.tables.rejects import Reject
 
 PPM = 1e6
@@ -81,6 +82,8 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         "dominant_term": words(outcome.dominant.ravel()[kept], names),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
+    if screened.views is not None:
+        columns |= {name: number(values.ravel()[kept]) for name, values in _views_columns(screened.views).items()}
     if terms:
         whole = [slice(0, length) for length in shape]
         found = account(sides, screened.part_side, screened.group.active_sets, whole[0], whole[1], outcome)
@@ -89,6 +92,16 @@ def verdict_table(screened: Screened, rows: str, terms: Sequence[str]) -> pa.Tab
         for name in terms:
             columns[f"term_{name}_ppm"] = number(np.where(unbounded, np.nan, values.get(name, nothing)) * PPM)
     return pa.table(list(columns.values()), schema=_schema("verdicts", columns))
+
+
+def _views_columns(views: Views) -> dict[str, NDArray[np.float64]]:
+    return {
+        "error_mean_ppm": views.error_mean * PPM,
+        "error_u_ppm": views.error_u * PPM,
+        "error_rss_ppm": views.error_rss * PPM,
+        "yield_mc": views.yield_mc,
+        "yield_mc_u": views.yield_mc_u,
+    }
 
 
 def summary_table(table: str, columns: Mapping[str, pa.Array]) -> pa.Table:

@@ -7,7 +7,7 @@ tables. Inside a chunk the kernel cuts as it likes.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TypeVar
 
 import numpy as np
@@ -26,8 +26,10 @@ from gainassay.screen.corners import (
     term_names,
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, Outcome, screen
+from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.signs import Reach, reach
 from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
+from gainassay.screen.views import Views, views
 
 Written = TypeVar("Written")
 
@@ -76,7 +78,13 @@ class Chunk:
 
 @dataclass(frozen=True)
 class Screened:
-    """A chunk with all that was found."""
+    """A chunk with all that was found.
+
+    Attributes
+    ----------
+    views : Views or None
+        On request.
+    """
 
     chunk: Chunk
     group: Group
@@ -84,6 +92,7 @@ class Screened:
     part_side: PartSide
     outcome: Outcome
     judgement: Judgement
+    views: Views | None = None
 
 
 @dataclass(frozen=True)
@@ -153,8 +162,10 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
     return tuple(found)
 
 
-def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK) -> Screened:
-    """Screen one chunk."""
+def screen_chunk(
+    groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK, samples: int | None = None
+) -> Screened:
+    """Screen one chunk, with both views if a number of samples is given."""
     one = groups[chunk.group]
     stages = stage_side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
@@ -162,7 +173,14 @@ def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int
     judgement = judge(stages, parts, outcome, rules)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
-    return Screened(chunk, one, stages, parts, outcome, judgement)
+    found = None if samples is None else views(lot_of(one, chunk, stages, parts), outcome.error_worst, samples)
+    return Screened(chunk, one, stages, parts, outcome, judgement, found)
+
+
+def lot_of(group: Group, chunk: Chunk, stages: StageSide, parts: PartSide) -> Lot:
+    """What the views need of a chunk."""
+    box = replace(group.box.part(chunk.stages).at_dc(group.form.kinds), targets=stages.reference)
+    return Lot(group.form, box, group.stage_names[chunk.stages], group.part_names[chunk.parts], parts.limits)
 
 
 def tally(screened: Screened) -> Tally:
@@ -199,6 +217,7 @@ def run(
     workers: int,
     block: int = PAIRS_PER_BLOCK,
     after_each: Callable[[int], None] | None = None,
+    samples: int | None = None,
 ) -> list[tuple[Written, Tally]]:
     """Screen all chunks as dask tasks and hand each to `keep`.
 
@@ -212,6 +231,8 @@ def run(
         Threads.
     after_each : callable, optional
         Called with the number of pairs when a chunk is done.
+    samples : int, optional
+        Of each pair, for its views; none are looked at if not given.
 
     Returns
     -------
@@ -224,7 +245,7 @@ def run(
     planned = chunks(groups)
 
     def task(place: int) -> tuple[Written, Tally]:
-        screened = screen_chunk(groups, planned[place], rules, block)
+        screened = screen_chunk(groups, planned[place], rules, block, samples)
         return keep(place, screened), tally(screened)
 
     def done(key: object, result: object, *_: object) -> None:

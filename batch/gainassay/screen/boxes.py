@@ -31,7 +31,7 @@ class Range:
     low: FloatArray
     high: FloatArray
 
-    def part(self, stages: slice) -> Range:
+    def part(self, stages: slice | NDArray[np.intp]) -> Range:
         """Some of the stages."""
         return Range(self.low[:, :, stages], self.high[:, :, stages])
 
@@ -63,7 +63,7 @@ class StageBox:
     limits: FloatArray
     targets: FloatArray
 
-    def part(self, stages: slice) -> StageBox:
+    def part(self, stages: slice | NDArray[np.intp]) -> StageBox:
         """Some of the stages."""
         return StageBox(
             self.values[:, stages],

@@ -12,7 +12,7 @@ from __future__ import annotations
 import sys
 
 import numpy as np
-from worst_case import parts_of, seconds, stages_of
+from worst_case import parts_of, seconds, stages_of  # type: ignore[import-not-found]
 
 from gainassay.forms.form import derive
 from gainassay.forms.library import library
@@ -29,7 +29,7 @@ def names(count: int) -> np.ndarray:
 
 def main() -> None:
     """Measure and print."""
-    stages, parts, samples = ([int(argument) for argument in sys.argv[1:]] + [40, 500, 2_000][len(sys.argv) - 1 :])[:3]
+    stages, parts, samples = ([int(argument) for argument in sys.argv[1:]] + [100, 500, 2_000][len(sys.argv) - 1 :])[:3]
     print(f"{stages} stages x {parts} parts of each topology, {samples} samples; ns a pair on one thread")
     print(f"{'topology':26} {'screen':>8} {'rss':>8} {'monte carlo':>12} {'ratios':>14}")
     ratios = []
@@ -50,14 +50,13 @@ def main() -> None:
 
         times = [
             seconds(screened),
-            seconds(lambda lot=lot: rss.estimates(lot.form, lot.box, lot.limits)),  # type: ignore[misc]
-            seconds(lambda lot=lot, every=every: monte_carlo.inside(lot, every, samples)),  # type: ignore[misc]
+            seconds(lambda lot=lot: rss.estimates(lot.form, lot.box, lot.limits)),
+            seconds(lambda lot=lot, every=every: monte_carlo.inside(lot, every, samples)),
         ]
         each = [time / (stages * parts) * 1e9 for time in times]
         ratios.append((each[1] / each[0], each[2] / each[0]))
-        print(
-            f"{topology.name:26} {each[0]:8.0f} {each[1]:8.0f} {each[2]:12.0f} {ratios[-1][0]:7.1f} {ratios[-1][1]:6.0f}"
-        )
+        shown = f"{each[0]:8.0f} {each[1]:8.0f} {each[2]:12.0f} {ratios[-1][0]:7.1f} {ratios[-1][1]:6.0f}"
+        print(f"{topology.name:26} {shown}")
     print(f"{'mean ratio':26} {'':8} {'':8} {'':12} {np.mean(ratios, axis=0).round(1)}")
 
 

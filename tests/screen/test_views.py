@@ -94,7 +94,7 @@ def gain_by_library(topology: Topology, ohms: dict[str, Any], parts: list[tuple[
         return name
 
     def size(number: Any) -> float:
-        return abs(getattr(number, "nominal_value", number))
+        return abs(float(getattr(number, "nominal_value", number)))
 
     for element in topology.elements:
         if size(ohms[element.name]) == 0.0:

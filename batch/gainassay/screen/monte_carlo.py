@@ -27,8 +27,8 @@ from gainassay.screen.kernel import add_products
 SEED = 101
 """Of all samples. Part of the output format: another seed gives other yields, inside their uncertainty."""
 
-NUMBERS_PER_STRIP = 2_000_000
-"""Of some stages, at a time: some tens of megabytes with all that is made of them; no bit depends on it."""
+NUMBERS_PER_STRIP = 4_000_000
+"""Of the samples of some stages, kept at a time while all parts are met: 32 megabytes; no bit depends on it."""
 
 SAMPLES_PER_BLOCK = 32_768
 """Of pairs, evaluated at a time: few enough to stay in the cache; no bit depends on it."""
@@ -82,17 +82,15 @@ def uniform(kind: str, name: str, shape: tuple[int, ...]) -> FloatArray:
 
 def stage_samples(lot: Lot, rows: NDArray[np.intp], samples: int) -> StageSamples:
     """Samples of some of the stages."""
-    form, box, count = lot.form, lot.box.part(rows), len(rows)
-    values = np.empty((len(form.elements), count, samples))
-    for place, name in enumerate(lot.stage_names[rows].tolist()):
-        values[:, place] = _elements(box.part(slice(place, place + 1)), name, samples)
-    at = coefficients.evaluate(form, coefficients.at_dc(form, values.reshape(len(values), -1)))
-    targets = box.targets[:, None]
-    return StageSamples(
-        (at.gain_ideal.reshape(count, samples) - targets) / targets,
-        at.contrasts.reshape(-1, count, samples),
-        at.loadings.reshape(-1, count, samples),
-    )
+    terms, shape = len(lot.form.monomials), (len(rows), samples)
+    found = StageSamples(np.empty(shape), np.empty((terms, *shape)), np.empty((terms, *shape)))
+    for place, row in enumerate(rows.tolist()):
+        box = lot.box.part(slice(row, row + 1))
+        values = _elements(box, str(lot.stage_names[row]), samples)
+        at = coefficients.evaluate(lot.form, coefficients.at_dc(lot.form, values))
+        found.error[place] = (at.gain_ideal - box.targets) / box.targets
+        found.contrasts[:, place], found.loadings[:, place] = at.contrasts, at.loadings
+    return found
 
 
 def _elements(box: StageBox, name: str, samples: int) -> FloatArray:
@@ -144,7 +142,7 @@ def inside(lot: Lot, undecided: NDArray[np.bool_], samples: int) -> NDArray[np.i
         Of each pair.
     """
     found = np.zeros(undecided.shape, np.int64)
-    per_stage = samples * (2 * len(lot.form.monomials) + (1 + len(MOVES)) * len(lot.form.elements))
+    per_stage = samples * (2 * len(lot.form.monomials) + 1)
     for rows in _some(np.logical_or.reduce(undecided, axis=1), NUMBERS_PER_STRIP // per_stage):
         stages = stage_samples(lot, rows, samples)
         for columns in _some(np.logical_or.reduce(undecided[rows], axis=0), SAMPLES_PER_BLOCK // samples):

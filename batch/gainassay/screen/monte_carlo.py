@@ -73,11 +73,11 @@ class StageSamples:
 def uniform(kind: str, name: str, shape: tuple[int, ...]) -> FloatArray:
     """Numbers between 0 and 1 that follow from the seed, a kind and a name.
 
-    Drawn as raw bits of a counter-based generator, which no later release of its library may change.
+    Drawn as raw bits of a generator whose stream no later release of its library may change.
     """
-    key = sha256(f"{SEED} {kind} {name}".encode()).digest()[:16]
-    bits = np.random.Philox(key=int.from_bytes(key, "little")).random_raw(int(np.prod(shape)))
-    return np.asarray((bits >> np.uint64(11)) * 2.0**-53, np.float64).reshape(shape)
+    seed = int.from_bytes(sha256(f"{SEED} {kind} {name}".encode()).digest()[:16], "little")
+    bits = np.random.PCG64DXSM(seed).random_raw(int(np.prod(shape)))
+    return np.asarray((bits >> np.uint64(11)).view(np.int64) * 2.0**-53, np.float64).reshape(shape)
 
 
 def stage_samples(lot: Lot, rows: NDArray[np.intp], samples: int) -> StageSamples:

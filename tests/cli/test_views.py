@@ -9,7 +9,6 @@ from typing import TYPE_CHECKING, Any
 import pyarrow.parquet as pq
 import pytest
 
-from gainassay.contracts import tables
 from gainassay.screen.monte_carlo import SEED
 
 if TYPE_CHECKING:
@@ -47,9 +46,6 @@ def test_views_are_shown_on_request(
     schema = pq.read_schema(next(Path(done["folder"]).glob("verdicts/*.parquet")))
     assert [name for name in schema.names if name in COLUMNS] == (COLUMNS if shown else [])
     assert done["views"] == ({"coverage_factor": 2.0, "samples": 400, "seed": SEED} if shown else None)
-    for name in COLUMNS if shown else []:
-        described = tables.column("verdicts", name)
-        assert schema.field(name).metadata[b"unit"].decode() == described.unit
 
 
 def test_a_yield_is_certain_where_the_worst_case_is_inside(here: CommandLineHere, write_job: JobWriter) -> None:

@@ -131,7 +131,7 @@ def error_and_sensitivities(
 
 
 def root_sum_square(contributions: Iterable[FloatArray]) -> FloatArray:
-    """Combined standard uncertainty of independent contributions, one added after the other (JCGM 100:2008, eq. 11)."""
+    """Combined standard uncertainty of independent contributions, added in their order (JCGM 100:2008, eq. 11a)."""
     total = np.zeros(1)
     for contribution in contributions:
         total = total + contribution * contribution

@@ -20,7 +20,7 @@ def test_the_shortest_job(write_job: JobWriter) -> None:
     assert job.stages == Source("stages", str(path.parent / "stages.csv"))
     assert job.parts == Source("parts", str(path.parent / "parts.csv"))
     assert (job.topologies, dict(job.assume)) == ((), {})
-    assert job.results == jobs.Results(path.parent / "runs", "all", ("parquet",), False, False)
+    assert job.results == jobs.Results(path.parent / "runs", "all", ("parquet",), False, False, False, 2000)
 
 
 def test_everything_a_job_may_say(write_job: JobWriter) -> None:
@@ -35,6 +35,8 @@ rows = "not passing"
 formats = ["csv", "parquet"]
 terms = true
 need = true
+views = true
+samples = 500
 """,
         tables='topologies = ["own/one.toml"]\n[stages]\nfrom = "a.parquet"\n[parts]\nfrom = "/b.csv"\n',
     )
@@ -42,7 +44,11 @@ need = true
     assert job.topologies == (path.parent / "own/one.toml",)
     assert (job.stages.at, job.parts.at) == (str(path.parent / "a.parquet"), "/b.csv")
     assert job.assume == {"a_ol": StandIn(typical_times=0.5), "r_o": StandIn(2, 300)}
-    assert job.results == jobs.Results(path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True)
+    assert job.results == jobs.Results(
+        path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, True, 500
+    )
+        path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, True, 500
+    )
 
 
 def test_paths_start_where_the_job_lies(write_job: JobWriter, monkeypatch: pytest.MonkeyPatch) -> None:

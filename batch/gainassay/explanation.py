@@ -15,10 +15,11 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
-from gainassay.screen import blocks
-from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened
+from gainassay.screen import blocks, monte_carlo, rss
+from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, nominal_account
+from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
 from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
@@ -92,6 +93,61 @@ class PortFigure:
 
 
 @dataclass(frozen=True)
+class Share:
+    """What a quantity contributes to the standard uncertainty of the error.
+
+    Attributes
+    ----------
+    half_width : float
+        Of its range, over the middle of it.
+    sensitivity : float
+        Derivative of the error in the quantity's logarithm.
+    u_ppm : float
+        Standard uncertainty that comes from it [ppm].
+    share : float
+        Of the variance.
+    """
+
+    name: str
+    half_width: float
+    sensitivity: float
+    u_ppm: float
+    share: float
+
+
+@dataclass(frozen=True)
+class ViewFigures:
+    """The error as root-sum-square and Monte Carlo show it. nan: no finite bound.
+
+    Attributes
+    ----------
+    mean_ppm, u_ppm, stated_ppm : float
+        Root-sum-square: mean, standard uncertainty, and the error stated with the coverage factor [ppm].
+    inside : float
+        Probability that a normally distributed error is inside the limit.
+    sampled_mean_ppm, sampled_u_ppm : float
+        Mean and standard deviation of the samples [ppm].
+    yield_mc, yield_mc_u : float
+        Share of samples inside the limit, and its standard uncertainty.
+    shares : tuple[Share, ...]
+        Of all quantities that contribute, the largest first.
+    """
+
+    mean_ppm: float
+    u_ppm: float
+    coverage_factor: float
+    stated_ppm: float
+    inside: float
+    samples: int
+    seed: int
+    sampled_mean_ppm: float
+    sampled_u_ppm: float
+    yield_mc: float
+    yield_mc_u: float
+    shares: tuple[Share, ...]
+
+
+@dataclass(frozen=True)
 class Explanation:
     """All that decides one pair. Errors in ppm; nan: no finite bound.
 
@@ -122,6 +178,7 @@ class Explanation:
     elements: tuple[ElementValue, ...]
     figures: tuple[Figure, ...]
     terms: tuple[Term, ...]
+    views: ViewFigures
     ports: tuple[PortFigure, ...]
 
 
@@ -131,10 +188,16 @@ def explain(
     eligibility: Sequence[Eligibility],
     groups: tuple[Group, ...],
     rules: Rules,
+    samples: int,
     stage: str,
     part: str,
 ) -> Explanation:
     """Explain one pair.
+
+    Parameters
+    ----------
+    samples : int
+        Of its error, for Monte Carlo.
 
     Raises
     ------
@@ -150,8 +213,8 @@ def explain(
     objection = eligibility[place].objection(s, p)
     if objection:
         raise InputError(f"{stages.source}, {parts.source}: part {part!r} may not serve stage {stage!r}: {objection}")
-    screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules)
-    return _explanation(screened, stages.groups[place], s, parts, p)
+    screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules, samples=samples)
+    return _explanation(screened, samples, stages.groups[place], s, parts, p)
 
 
 def _require(name: str, known: list[str], kind: str, table: StageTable | PartTable) -> None:
@@ -165,7 +228,7 @@ def _require(name: str, known: list[str], kind: str, table: StageTable | PartTab
     raise InputError(f"{table.source}: there is no usable {kind} {name!r}{hint}")
 
 
-def _explanation(screened: Screened, of: StageGroup, s: int, parts: PartTable, p: int) -> Explanation:
+def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts: PartTable, p: int) -> Explanation:
     topology, spreads = of.topology, of.spreads
     side, outcome, judgement = screened.stage_side, screened.outcome, screened.judgement
     corner = int(outcome.corner[0, 0])
@@ -206,8 +269,40 @@ def _explanation(screened: Screened, of: StageGroup, s: int, parts: PartTable, p
                 key=lambda term: (-np.nan_to_num(abs(term.worst_ppm)), names.index(term.name)),
             )
         ),
+        views=_views(screened, samples),
         ports=tuple(_ports(topology, values, parts.nominal[:, p])),
     )
+
+
+def _views(screened: Screened, samples: int) -> ViewFigures:
+    """Both views of a chunk of one pair."""
+    lot = lot_of(screened.group, screened.chunk, screened.stage_side, screened.part_side)
+    assert screened.views is not None
+    seen = {name: float(values[0, 0]) for name, values in vars(screened.views).items()}
+    has_bound = not np.isnan(seen["error_mean"])
+    limit, error = float(lot.box.limits[0]), np.full(1, np.nan)
+    if has_bound:
+        error = monte_carlo.errors_of_first(lot, samples)
+    return ViewFigures(
+        mean_ppm=seen["error_mean"] * PPM,
+        u_ppm=seen["error_u"] * PPM,
+        coverage_factor=rss.COVERAGE_FACTOR,
+        stated_ppm=seen["error_rss"] * PPM,
+        inside=rss.probability_inside(seen["error_mean"], seen["error_u"], -limit, limit),
+        samples=samples,
+        seed=monte_carlo.SEED,
+        sampled_mean_ppm=float(error.mean()) * PPM,
+        sampled_u_ppm=float(error.std()) * PPM,
+        yield_mc=seen["yield_mc"],
+        yield_mc_u=seen["yield_mc_u"],
+        shares=tuple(_shares(lot, seen["error_u"])) if has_bound else (),
+    )
+
+
+def _shares(lot: Lot, uncertainty: float) -> Iterator[Share]:
+    for entry in sorted(rss.budget(lot.form, lot.box, lot.limits), key=lambda entry: -entry.u()):
+        share = (entry.u() / uncertainty) ** 2
+        yield Share(entry.name, entry.half_width, entry.sensitivity, entry.u() * PPM, share)
 
 
 def _elements(

@@ -91,13 +91,23 @@ class Judge:
 
 @dataclass(frozen=True)
 class Results:
-    """Where results go and what they hold."""
+    """Where results go and what they hold.
+
+    Attributes
+    ----------
+    views : bool
+        Whether verdict tables show root-sum-square and Monte Carlo beside the worst case.
+    samples : int
+        Of each pair, for Monte Carlo.
+    """
 
     folder: Path
     rows: str
     formats: tuple[str, ...]
     terms: bool
     need: bool
+    views: bool
+    samples: int
 
 
 @dataclass(frozen=True)
@@ -202,6 +212,8 @@ def read(path: Path) -> Job:
             formats=tuple(results["formats"]),
             terms=results["terms"],
             need=results["need"],
+            views=results["views"],
+            samples=results["samples"],
         ),
     )
 

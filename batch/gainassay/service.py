@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -111,8 +111,13 @@ class Done:
     hopeless: tuple[str, ...]
 
 
-def prepare(path: Path) -> Prepared:
+def prepare(path: Path, views: bool | None = None) -> Prepared:
     """Read a job and its tables.
+
+    Parameters
+    ----------
+    views : bool, optional
+        Whether verdict tables show root-sum-square and Monte Carlo; as the job says if not given.
 
     Raises
     ------
@@ -121,6 +126,8 @@ def prepare(path: Path) -> Prepared:
     """
     started = datetime.now(UTC)
     job = jobs.read(path)
+    if views is not None:
+        job = replace(job, results=replace(job.results, views=views))
     topologies = library(job.topologies)
     of_stages, of_parts = compared(job.eligible, stage_tables.kinds(topologies))
     stages = stage_tables.load(job.stages, topologies, of_stages)
@@ -190,7 +197,8 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
         def keep(place: int, screened: Screened) -> list[File]:
             return _write_verdicts(unfinished.folder, place, screened, rules, results, terms)
 
-        done = blocks.run(groups, rules, keep, workers or usable_cores(), after_each=after_each)
+        samples = results.samples if results.views else None
+        done = blocks.run(groups, rules, keep, workers or usable_cores(), after_each=after_each, samples=samples)
         tallies = [tally for _, tally in done]
         stages = summaries.stage_summary(groups, tallies)
         rejects = [*prepared.stages.rejects, *prepared.parts.rejects]

@@ -22,8 +22,10 @@ def explain(job: Path, stage: str, part: str, as_json: bool) -> None:
     """Show all that decides STAGE with PART in JOB: gains, every term of the error, the worst corner, the evidence."""
     prepared = service.prepare(job)
     shared.warn(prepared.warnings())
-    groups, rules = service.groups_of(prepared), service.rules_of(prepared.job)
-    found = explanation.explain(prepared.stages, prepared.parts, prepared.eligibility, groups, rules, stage, part)
+    groups, rules, samples = service.groups_of(prepared), service.rules_of(prepared.job), prepared.job.results.samples
+    found = explanation.explain(
+        prepared.stages, prepared.parts, prepared.eligibility, groups, rules, samples, stage, part
+    )
     if as_json:
         shared.data({**asdict(found), "cautions": CAUTIONS})
     else:

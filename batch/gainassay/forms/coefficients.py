@@ -7,6 +7,7 @@ everything between are one case without a division.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -42,6 +43,23 @@ class Coefficients:
         G_ideal [gain unit].
     contrasts, loadings : ndarray, shape (terms, stages)
         n_k - d_k and d_k [1/unit of m_k].
+    """
+
+    gain_ideal: FloatArray
+    contrasts: FloatArray
+    loadings: FloatArray
+
+
+@dataclass(frozen=True)
+class Slopes:
+    """Derivatives of a form's coefficient functions in the logarithm of each element's impedance.
+
+    Attributes
+    ----------
+    gain_ideal : ndarray, shape (elements, stages)
+        Of the logarithm of G_ideal.
+    contrasts, loadings : ndarray, shape (elements, terms, stages)
+        Of n_k - d_k and d_k [1/unit of m_k].
     """
 
     gain_ideal: FloatArray
@@ -129,11 +147,42 @@ def gain_ideal(form: Form, pairs: Pairs) -> FloatArray:
     return _ratio(form.gain_ideal, pairs)
 
 
+def slopes(form: Form, pairs: Pairs) -> Slopes:
+    """The slopes of a form's coefficient functions, from the derivatives of their polynomials.
+
+    What is open or short has a slope of 0, or of its rounding.
+    """
+
+    def table(ratios: tuple[Ratio, ...]) -> FloatArray:
+        found = np.empty((len(ratios), *pairs.y.shape))
+        for place, ratio in enumerate(ratios):
+            found[place] = _slopes(ratio, pairs)
+        return found.swapaxes(0, 1)
+
+    with np.errstate(divide="ignore", invalid="ignore"):
+        relative = _slopes(form.gain_ideal, pairs) / gain_ideal(form, pairs)
+    return Slopes(relative, table(form.contrasts), table(form.loadings))
+
+
 def _ratio(ratio: Ratio, pairs: Pairs) -> FloatArray:
-    powers = [_powers(y, z, degree) for y, z, degree in zip(pairs.y, pairs.z, ratio.degrees(), strict=True)]
+    powers = _all_powers(ratio, pairs)
     count = pairs.y.shape[1]
     with np.errstate(divide="ignore", invalid="ignore"):
         return _polynomial(ratio.numerator, powers, count) / _polynomial(ratio.denominator, powers, count)
+
+
+def _slopes(ratio: Ratio, pairs: Pairs) -> FloatArray:
+    """z d/dz of N/D = (z N' - (N/D) z D')/D for each element's z; shape (elements, stages)."""
+    powers = _all_powers(ratio, pairs)
+    (numerator, rises), (denominator, falls) = (
+        _with_slopes(polynomial, powers, pairs.y.shape) for polynomial in (ratio.numerator, ratio.denominator)
+    )
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray((rises - numerator / denominator * falls) / denominator)
+
+
+def _all_powers(ratio: Ratio, pairs: Pairs) -> list[list[FloatArray]]:
+    return [_powers(y, z, degree) for y, z, degree in zip(pairs.y, pairs.z, ratio.degrees(), strict=True)]
 
 
 def _powers(y: FloatArray, z: FloatArray, degree: int) -> list[FloatArray]:
@@ -147,10 +196,32 @@ def _powers(y: FloatArray, z: FloatArray, degree: int) -> list[FloatArray]:
 def _polynomial(polynomial: Polynomial, powers: list[list[FloatArray]], count: int) -> FloatArray:
     # One monomial after the other: a fixed order of summation, whatever the number of stages.
     total = np.zeros(count)
+    for product, _ in _products(polynomial, powers, count):
+        total += product
+    return total
+
+
+def _with_slopes(
+    polynomial: Polynomial, powers: list[list[FloatArray]], shape: tuple[int, ...]
+) -> tuple[FloatArray, FloatArray]:
+    """The polynomial and its z d/dz for each element's z; shapes (stages,) and (elements, stages)."""
+    total, slopes = np.zeros(shape[1]), np.zeros(shape)
+    for product, exponents in _products(polynomial, powers, shape[1]):
+        total += product
+        for slope, table, exponent in zip(slopes, powers, exponents, strict=True):
+            power = len(table) - 1 - exponent
+            if power:
+                slope += power * product
+    return total, slopes
+
+
+def _products(
+    polynomial: Polynomial, powers: list[list[FloatArray]], count: int
+) -> Iterator[tuple[FloatArray, tuple[int, ...]]]:
+    """Each monomial with its coefficient, and its exponents."""
     for coefficient, exponents in polynomial:
         product = np.full(count, float(coefficient))
         for table, exponent in zip(powers, exponents, strict=True):
             if len(table) > 1:
                 product *= table[exponent]
-        total += product
-    return total
+        yield product, exponents

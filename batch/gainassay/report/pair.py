@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 from gainassay.cautions import CAUTIONS
-from gainassay.explanation import Explanation, PortFigure
+from gainassay.explanation import Explanation, PortFigure, ViewFigures
 from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
@@ -34,6 +34,10 @@ def text(found: Explanation) -> list[str]:
         "",
         "Terms of the error, in ppm",
         *_terms(found),
+        "",
+        "Two more views, every quantity independent of the others and rectangular between its ends; errors in ppm",
+        *_views(found.views),
+        *_shares(found.views),
         "",
         "Elements",
         *table(
@@ -105,6 +109,54 @@ def _terms(found: Explanation) -> list[str]:
     ]
     rows.append(["  sum", _nominal(found.error_nominal_ppm), ppm(found.error_worst_ppm), ""])
     return table(["  term", "nominal", "worst case", ""], rows, right=[1, 2])
+
+
+def _views(views: ViewFigures) -> list[str]:
+    return table(
+        ["  view", "mean", "u", f"mean and {views.coverage_factor:g} u", "inside the limit", ""],
+        [
+            [
+                "  root-sum-square",
+                _nominal(views.mean_ppm),
+                _nominal(views.u_ppm).lstrip("+"),
+                _nominal(views.stated_ppm),
+                _percent(views.inside),
+                "if normally distributed",
+            ],
+            [
+                "  Monte Carlo",
+                _nominal(views.sampled_mean_ppm),
+                _nominal(views.sampled_u_ppm).lstrip("+"),
+                "",
+                _percent(views.yield_mc),
+                f"+/- {_percent(views.yield_mc_u)} from {views.samples:,} samples"
+                if views.yield_mc_u
+                else "since the worst case is",
+            ],
+        ],
+        right=[1, 2, 3, 4],
+    )
+
+
+def _shares(views: ViewFigures) -> list[str]:
+    if not views.shares:
+        return []
+    rows = [
+        [
+            f"  {s.name}",
+            f"{s.half_width * 100:.4g} %",
+            f"{s.sensitivity:.4g}",
+            ppm(s.u_ppm).lstrip("+"),
+            _percent(s.share),
+        ]
+        for s in views.shares
+    ]
+    header = ["  quantity", "half width", "sensitivity", "its u", "share of u^2"]
+    return ["", *table(header, rows, right=[1, 2, 3, 4])]
+
+
+def _percent(share: float) -> str:
+    return "-" if math.isnan(share) else f"{share * 100:.2f} %"
 
 
 def _bar(value: float, longest: float) -> str:

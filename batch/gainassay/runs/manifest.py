@@ -14,6 +14,8 @@ from gainassay.forms.cache import content_hash
 from gainassay.job import Job
 from gainassay.runs.folder import File
 from gainassay.runs.summaries import Counts
+from gainassay.screen.monte_carlo import SEED
+from gainassay.screen.rss import COVERAGE_FACTOR
 from gainassay.tables.parts import PartTable
 from gainassay.tables.rejects import by_reason
 from gainassay.tables.stages import StageTable
@@ -68,6 +70,9 @@ def manifest(
         "not_eligible": dict(not_eligible),
         "never_eligible": dict(never_eligible),
         "verdicts": counts.verdicts,
+        "views": {"coverage_factor": COVERAGE_FACTOR, "samples": job.results.samples, "seed": SEED}
+        if job.results.views
+        else None,
         "dominant_terms": counts.dominant_terms,
         "cautions": list(CAUTIONS),
         "files": [asdict(file) for file in sorted(files, key=lambda file: file.path)],

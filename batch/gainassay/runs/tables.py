@@ -16,6 +16,7 @@ from gainassay.screen.blocks import Screened, accounts
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
+from gainassay.screen.views import Views
 from gainassay.tables.rejects import PLACE, Reject
 
 PPM = 1e6
@@ -89,6 +90,8 @@ def verdict_table(
     }
     if needs is not None:
         columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
+    if screened.views is not None:
+        columns |= {name: number(values.ravel()[kept]) for name, values in _views_columns(screened.views).items()}
     if terms:
         found = zip(names, accounts(screened), strict=True)
         values = {name: term.ravel()[kept] for name, term in found if name in terms}
@@ -96,6 +99,16 @@ def verdict_table(
         for name in terms:
             columns[f"term_{name}_ppm"] = number(np.where(unbounded, np.nan, values.get(name, nothing)) * PPM)
     return pa.table(list(columns.values()), schema=_schema("verdicts", columns))
+
+
+def _views_columns(views: Views) -> dict[str, NDArray[np.float64]]:
+    return {
+        "error_mean_ppm": views.error_mean * PPM,
+        "error_u_ppm": views.error_u * PPM,
+        "error_rss_ppm": views.error_rss * PPM,
+        "yield_mc": views.yield_mc,
+        "yield_mc_u": views.yield_mc_u,
+    }
 
 
 def summary_table(table: str, columns: Mapping[str, pa.Array]) -> pa.Table:

@@ -26,8 +26,10 @@ from gainassay.screen.corners import (
     term_names,
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, account, screen
+from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.signs import Reach, reach
 from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
+from gainassay.screen.views import Views, views
 
 Written = TypeVar("Written")
 
@@ -95,6 +97,8 @@ class Screened:
     ----------
     eligible : ndarray of bool, shape (stages, parts)
         The pairs that were screened; of the others nothing is found, and what stands for them means nothing.
+    views : Views or None
+        On request.
     """
 
     chunk: Chunk
@@ -104,6 +108,7 @@ class Screened:
     eligible: NDArray[np.bool_]
     outcome: Outcome
     judgement: Judgement
+    views: Views | None = None
 
 
 @dataclass(frozen=True)
@@ -178,8 +183,10 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
     return tuple(found)
 
 
-def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK) -> Screened:
-    """Screen one chunk."""
+def screen_chunk(
+    groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK, samples: int | None = None
+) -> Screened:
+    """Screen one chunk, with both views if a number of samples is given."""
     one = groups[chunk.group]
     side = calibrated.stage_side if one.calibrated else stage_side
     stages = side(one.form, one.box.part(chunk.stages), one.reach)
@@ -194,7 +201,9 @@ def screen_chunk(groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int
     judgement = judge(stages, parts, outcome, rules)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
-    return Screened(chunk, one, stages, parts, eligible, outcome, judgement)
+    bounded = np.full_like(outcome.error_worst, np.nan) if one.calibrated else outcome.error_worst
+    found = None if samples is None else views(lot_of(one, chunk, stages, parts), bounded, samples)
+    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, found)
 
 
 def _screen(one: Group, stages: StageSide, parts: PartSide, block: int) -> Outcome:
@@ -246,6 +255,12 @@ def _only(stages: StageSide, rows: NDArray[np.intp]) -> StageSide:
     return replace(stages, plans=tuple(plan for plan in plans if len(plan.stages)))
 
 
+def lot_of(group: Group, chunk: Chunk, stages: StageSide, parts: PartSide) -> Lot:
+    """What the views need of a chunk."""
+    box = replace(group.box.part(chunk.stages).at_dc(group.form.kinds), targets=stages.reference)
+    return Lot(group.form, box, group.stage_names[chunk.stages], group.part_names[chunk.parts], parts.limits)
+
+
 def tally(screened: Screened) -> Tally:
     """What a screened chunk adds to the summaries."""
     verdict, used = screened.judgement.verdict, screened.judgement.limit_used
@@ -280,6 +295,7 @@ def run(
     workers: int,
     block: int = PAIRS_PER_BLOCK,
     after_each: Callable[[int], None] | None = None,
+    samples: int | None = None,
 ) -> list[tuple[Written, Tally]]:
     """Screen all chunks as dask tasks and hand each to `keep`.
 
@@ -293,6 +309,8 @@ def run(
         Threads.
     after_each : callable, optional
         Called with the number of pairs when a chunk is done.
+    samples : int, optional
+        Of each pair, for its views; none are looked at if not given.
 
     Returns
     -------
@@ -305,7 +323,7 @@ def run(
     planned = chunks(groups)
 
     def task(place: int) -> tuple[Written, Tally]:
-        screened = screen_chunk(groups, planned[place], rules, block)
+        screened = screen_chunk(groups, planned[place], rules, block, samples)
         return keep(place, screened), tally(screened)
 
     def done(key: object, result: object, *_: object) -> None:

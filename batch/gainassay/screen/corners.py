@@ -248,14 +248,32 @@ def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDAr
     return PartSide(products(form, nominal), products(form, worst), worst, evidence)
 
 
-def products(form: Form, departures: FloatArray) -> FloatArray:
-    """The products m_k, shape (terms, ...), of departures, shape (departures, ...), in the order of `DEPARTURES`."""
+def products(form: Form, of_part: FloatArray) -> FloatArray:
+    """The products m_k, shape (terms, ...), of departures of a part, in the order of `DEPARTURES`."""
+    return monomials(form, by_amplifier(form, of_part))
+
+
+def by_amplifier(form: Form, of_part: FloatArray) -> FloatArray:
+    """Departures of a part, in the order of `DEPARTURES`, handed to every amplifier; in the order of the form's."""
     place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
-    kinds = [place[symbol] for _, symbol in form.departures]
+    return of_part[[place[symbol] for _, symbol in form.departures]]
+
+
+def figure_names(form: Form) -> tuple[str, ...]:
+    """The data-sheet quantity behind each of the form's departures, with its amplifier where there are several."""
+    quantity = {departure.symbol: departure.quantity for departure in DEPARTURES}
+    several = len({amplifier for amplifier, _ in form.departures}) > 1
+    return tuple(
+        f"{amplifier}.{quantity[symbol]}" if several else quantity[symbol] for amplifier, symbol in form.departures
+    )
+
+
+def monomials(form: Form, departures: FloatArray) -> FloatArray:
+    """The products m_k of departures; shape (terms, ...) from (the form's departures, ...)."""
     found = np.ones((len(form.monomials), *departures.shape[1:]))
-    for k, monomial in enumerate(form.monomials):
+    for product_k, monomial in zip(found, form.monomials, strict=True):
         for departure in monomial:
-            found[k] *= departures[kinds[departure]]
+            product_k *= departures[departure]
     return found
 
 

@@ -172,7 +172,7 @@ def _nominal(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns
     products = parts.nominal[:, columns]
     numerator, denominator = np.zeros((2, len(rows), products.shape[1]))
     denominator += 1.0
-    add_products(stages.contrasts[:, rows], stages.loadings[:, rows], products, numerator, denominator)
+    add_products(stages.contrasts[:, rows, None], stages.loadings[:, rows, None], products, numerator, denominator)
     may_vanish = bool((stages.loadings[:, rows] < 0.0).any())
     e = stages.set_point[rows, None]
     error = e + (1.0 + e) * (numerator / denominator)
@@ -182,13 +182,13 @@ def _nominal(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns
 def add_products(
     contrasts: FloatArray, loadings: FloatArray, products: FloatArray, numerator: FloatArray, denominator: FloatArray
 ) -> None:
-    """Add sum_k contrasts[k, :, None] * products[k] to the numerator, and so for the loadings, in the order of k."""
+    """Add sum_k contrasts[k] * products[k] to the numerator, and so for the loadings, in the order of k."""
     scratch = np.empty_like(numerator)
     for contrast, loading, factor in zip(contrasts, loadings, products, strict=True):
         if contrast.any():
-            numerator += np.multiply(contrast[:, None], factor, out=scratch)
+            numerator += np.multiply(contrast, factor, out=scratch)
         if loading.any():
-            denominator += np.multiply(loading[:, None], factor, out=scratch)
+            denominator += np.multiply(loading, factor, out=scratch)
 
 
 def _worst(
@@ -218,7 +218,7 @@ def _worst(
             contrasts, loadings = stages.corner_contrasts[active][:, at], stages.corner_loadings[active][:, at]
             numerator[:] = 0.0
             denominator[:] = 1.0
-            add_products(contrasts, loadings, products[active], numerator, denominator)
+            add_products(contrasts[..., None], loadings[..., None], products[active], numerator, denominator)
             # 1 + sum d m stays positive by itself where no loading is negative.
             if (loadings < 0.0).any():
                 bounded = denominator > 0.0 if bounded is None else bounded & (denominator > 0.0)
@@ -287,7 +287,7 @@ def nominal_account(stages: StageSide, parts: PartSide) -> Iterator[FloatArray]:
     for _ in stages.corner_terms:
         yield np.zeros(shape)
     numerator, denominator = np.zeros(shape), np.ones(shape)
-    add_products(stages.contrasts, stages.loadings, parts.nominal, numerator, denominator)
+    add_products(stages.contrasts[..., None], stages.loadings[..., None], parts.nominal, numerator, denominator)
     lift = (1.0 + stages.set_point[:, None]) / denominator
     for contrast, factor in zip(stages.contrasts, parts.nominal, strict=True):
         yield lift * (contrast[:, None] * factor)

@@ -267,7 +267,7 @@ def _sides(
     for power in range(highest + 1):
         of_power = [k for k in active if degrees[k] == power]
         contrasts, loadings = side.corner_contrasts[of_power][:, at], side.corner_loadings[of_power][:, at]
-        add_products(contrasts, loadings, rest[of_power], numerator[power], denominator[power])
+        add_products(contrasts[..., None], loadings[..., None], rest[of_power], numerator[power], denominator[power])
     e = side.corner_error[at, None]
     error = e * denominator + (1.0 + e) * numerator
     allowance = allowed * (1.0 - ROOM) * denominator

@@ -47,8 +47,6 @@ samples = 500
     assert job.results == jobs.Results(
         path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, True, 500
     )
-        path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, True, 500
-    )
 
 
 def test_paths_start_where_the_job_lies(write_job: JobWriter, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -24,6 +24,9 @@ from gainassay.tables.rejects import PLACE, Reject, by_reason
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
 
+SHORT_NAME = 32
+"""Bytes of names that are ordered by their bytes as numbers."""
+
 TOTAL = "(?i)(?:grand |sub ?)?totals?:?|summe:?|gesamt:?"
 """What spreadsheets write below a table in the column of names."""
 
@@ -44,16 +47,19 @@ class Checking:
         The rejects, by position and column: a cell is refused once, for the first reason.
     read : dict[Column, Numbers]
         Columns read so far.
+    by_name : ndarray of int, shape (rows,)
+        Positions by name, once the names are read.
     """
 
     raw: RawTable
-    refused: dict[tuple[int, str], Reject]
+    refused: dict[tuple[int, str], Reject] = field(default_factory=dict)
+    by_name: NDArray[np.intp] = field(default_factory=lambda: np.array([], dtype=np.intp))
     read: dict[Column, Numbers] = field(default_factory=dict)
 
     @staticmethod
     def of(raw: RawTable) -> Checking:
         """Start with a table as read."""
-        return Checking(raw, {})
+        return Checking(raw)
 
     def refuse(self, position: int, column: str, reason: str) -> None:
         """Reject the row at `position` for its cell in `column` (several columns: joined by commas)."""
@@ -138,7 +144,8 @@ class Checking:
             self.refuse(
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
             )
-        for positions in _repeated(text):
+        self.by_name = _by_name(text)
+        for positions in _repeated(text, self.by_name):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):
                 others = [other for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
@@ -156,28 +163,38 @@ class Checking:
         return mask
 
     def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
-        """Positions of the rows without a reject, by their names, and these names."""
-        kept = pa.array(np.flatnonzero(self.good()))
-        names = text_of(self.raw.columns[self.raw.key]).take(kept)
-        order = pc.sort_indices(names)
-        written = names.take(order).to_numpy(zero_copy_only=False).astype(np.str_)
-        return np.asarray(kept.take(order)), written
+        """Positions of the rows without a reject, by their names, and these names; after `names`."""
+        order = self.by_name[self.good()[self.by_name]]
+        names = text_of(self.raw.columns[self.raw.key]).take(pa.array(order))
+        return order, names.to_numpy(zero_copy_only=False).astype(np.str_)
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
         return tuple(sorted([*self.raw.ragged, *self.refused.values()], key=PLACE))
 
 
-def _repeated(names: pa.Array) -> list[list[int]]:
-    """Positions of each name that stands more than once; blank ones apart."""
-    coded = names.dictionary_encode()
-    places = np.asarray(coded.indices)
-    often = np.bincount(places, minlength=len(coded.dictionary)) > 1
-    often &= np.asarray(pc.not_equal(coded.dictionary, ""))
-    found: dict[int, list[int]] = {}
-    for position in np.flatnonzero(often[places]):
-        found.setdefault(int(places[position]), []).append(int(position))
-    return list(found.values())
+def _by_name(names: pa.Array) -> NDArray[np.intp]:
+    """Positions by name, in the order of code points; short names go by their bytes as numbers, which is faster."""
+    longest = pc.max(pc.binary_length(names)).as_py() or 0
+    if longest > SHORT_NAME:
+        return np.asarray(pc.sort_indices(names)).astype(np.intp)
+    words = max(1, -(-longest // 8))
+    padded = pc.ascii_rpad(names, 8 * words, padding="\0")
+    content = np.frombuffer(padded.buffers()[2], dtype=">u8", count=words * len(names))
+    return np.lexsort(content.astype(np.uint64).reshape(-1, words).T[::-1])
+
+
+def _repeated(names: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
+    """Positions of each name that stands more than once, blank ones apart; `order` sorts the names."""
+    by_name = names.take(pa.array(order))
+    same = np.asarray(pc.equal(by_name[1:], by_name[:-1])) & np.asarray(pc.not_equal(by_name[1:], ""))
+    found: list[list[int]] = []
+    for place in np.flatnonzero(same):
+        starts = not place or not same[place - 1]
+        if starts:
+            found.append([int(order[place])])
+        found[-1].append(int(order[place + 1]))
+    return [sorted(positions) for positions in found]
 
 
 def _listed(rows: list[int], count: int) -> str:

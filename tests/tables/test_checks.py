@@ -1,0 +1,54 @@
+"""Checks that both tables share: names in their order, however they are put in order."""
+
+from __future__ import annotations
+
+import numpy as np
+import pyarrow as pa
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from gainassay.tables import checks
+from gainassay.tables.checks import Checking
+from gainassay.tables.raw import RawTable
+
+
+def checking_of(names: list[str]) -> Checking:
+    """A table of names alone."""
+    columns = {"part": pa.array(names, pa.string())}
+    rows = np.arange(2, 2 + len(names))
+    return Checking.of(RawTable("parts.csv", "part", columns, rows, ("parts.csv",), (0,), (), "", {}, {}, "."))
+
+
+NAMES = st.lists(st.text("ab é\U0001f600\uffff-0", min_size=1, max_size=12).filter(lambda text: text == text.strip()))
+
+
+@pytest.mark.parametrize("short", [0, 8, 1000])
+@given(names=NAMES)
+def test_names_are_in_the_order_of_their_code_points(short: int, names: list[str]) -> None:
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(checks, "SHORT_NAME", short)
+        checking = checking_of(names)
+        checking.names("part")
+        order, ordered = checking.in_order()
+    once = sorted(name for name in set(names) if names.count(name) == 1)
+    assert ordered.tolist() == once
+    assert [names[position] for position in order] == once
+
+
+@pytest.mark.parametrize("short", [0, 1000])
+def test_every_row_of_a_repeated_name_names_the_others(monkeypatch: pytest.MonkeyPatch, short: int) -> None:
+    monkeypatch.setattr(checks, "SHORT_NAME", short)
+    checking = checking_of(["b", "a", "b", "c", "b", "b", "b", "a", "", ""])
+    checking.names("part")
+    assert {reject.row: reject.reason for reject in checking.found()} == {
+        2: "stands more than once: also in row 4, 6, 7 and 1 more; which is meant?",
+        3: "stands more than once: also in row 9; which is meant?",
+        4: "stands more than once: also in row 2, 6, 7 and 1 more; which is meant?",
+        6: "stands more than once: also in row 2, 4, 7 and 1 more; which is meant?",
+        7: "stands more than once: also in row 2, 4, 6 and 1 more; which is meant?",
+        8: "stands more than once: also in row 2, 4, 6 and 1 more; which is meant?",
+        9: "stands more than once: also in row 3; which is meant?",
+        10: "is blank; each row needs a name",
+        11: "is blank; each row needs a name",
+    }

@@ -224,6 +224,13 @@ def test_a_folder_or_pattern_of_parquet_files(tmp_path: Path, at: str) -> None:
     assert [Path(table.file_of(position)).name for position in range(3)] == ["a.parquet", "a.parquet", "b.parquet"]
 
 
+def test_what_programs_leave_in_a_folder_is_no_table(tmp_path: Path) -> None:
+    for name in ("_delta/a.parquet", ".hidden/a.parquet", ".a.parquet", "_SUCCESS", "year=2031/a.parquet"):
+        (tmp_path / name).parent.mkdir(exist_ok=True)
+        pq.write_table(pa.table({"x": [name]}), tmp_path / name)
+    assert cells(read(tmp_path)) == {"x": ["year=2031/a.parquet"]}
+
+
 @pytest.mark.parametrize(
     ("files", "at", "words"),
     [

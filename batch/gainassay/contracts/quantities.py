@@ -140,7 +140,7 @@ def _block(
     cells: pa.Array, column: Column, writing: Writing
 ) -> tuple[NDArray[np.float64], NDArray[np.bool_], dict[int, str]]:
     """Values, blanks and refusals of some cells of text."""
-    plain = None if writing != Writing() else _all_plain(cells)
+    plain = None if writing.unit else _all_plain(cells, writing.decimal)
     if plain is not None:
         return plain, np.asarray(cells.is_null()), {}
     coded = text_of(cells).dictionary_encode()
@@ -152,11 +152,15 @@ def _block(
     return values[place], blank[place], {int(position): reasons[place[position]] for position in bad}
 
 
-def _all_plain(cells: pa.Array) -> NDArray[np.float64] | None:
+def _all_plain(cells: pa.Array, decimal: str) -> NDArray[np.float64] | None:
     """The numbers of cells that are all plain or null, else None.
 
     The cast takes what `PLAIN` takes, and words for infinity and nan, which are sent the long way.
     """
+    if decimal == ",":
+        if pc.any(pc.match_substring(cells, ".")).as_py():
+            return None
+        cells = pc.replace_substring(cells, ",", ".")
     try:
         found = cells.cast(pa.float64())
     except pa.ArrowInvalid:

@@ -23,9 +23,6 @@ BLOCK = 1 << 22
 MARKS = {codecs.BOM_UTF16_LE: "utf-16", codecs.BOM_UTF16_BE: "utf-16"}
 """Byte-order marks of other encodings than UTF-8."""
 
-LONGEST_NAME = 1 << 17
-"""Characters of a column's name."""
-
 
 def read(path: Path, source: Source) -> Piece:
     """The table in a CSV file.
@@ -156,7 +153,6 @@ def _scanned(path: Path, encoding: str) -> tuple[str, int]:
 
 def _header(path: Path, encoding: str, delimiter: str, header_row: int) -> list[str]:
     """Names of the columns, without surrounding white space; empty where a column has none."""
-    csv.field_size_limit(LONGEST_NAME)
     try:
         with path.open(encoding="utf-8-sig" if encoding == "utf-8" else encoding, newline="") as file:
             above = list(islice(csv.reader(file, delimiter=delimiter), header_row))

@@ -110,7 +110,7 @@ def _paths(at: str) -> list[Path]:
     path = Path(at)
     try:
         if path.is_dir():
-            return _all_of_a_kind(at, [p for p in path.rglob("*") if p.suffix.lower() in KINDS and p.is_file()])
+            return _all_of_a_kind(at, [p for p in path.rglob("*") if _is_table(p.relative_to(path)) and p.is_file()])
         if not path.exists() and any(mark in at for mark in "*?["):
             start = Path(path.anchor)
             pattern = str(path.relative_to(start)) if path.anchor else at
@@ -118,6 +118,11 @@ def _paths(at: str) -> list[Path]:
     except (OSError, ValueError, NotImplementedError) as error:
         raise InputError(f"{at}: cannot be read: {getattr(error, 'strerror', None) or error}") from None
     return [path]
+
+
+def _is_table(path: Path) -> bool:
+    """Whether a file in a folder is one of its tables; what starts with a dot or underscore is a program's own."""
+    return path.suffix.lower() in KINDS and not any(part.startswith((".", "_")) for part in path.parts)
 
 
 def _all_of_a_kind(at: str, paths: list[Path]) -> list[Path]:

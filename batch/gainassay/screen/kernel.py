@@ -132,8 +132,10 @@ def worst_errors(
             found[rows, columns], corner[rows, columns] = _worst(
                 stages, parts, active_sets, plan.corners, rows, columns
             )
-    found += beyond_corners(stages, parts, found)
-    return found, np.where(np.isnan(found), np.int32(UNBOUNDED), corner)
+    if stages.slack is not None:
+        found += beyond_corners(stages, parts, found)
+        np.copyto(corner, UNBOUNDED, where=np.isnan(found))
+    return found, corner
 
 
 def in_blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:

@@ -15,7 +15,7 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
-from gainassay.screen import blocks, monte_carlo, rss
+from gainassay.screen import blocks, calibrated, monte_carlo, rss
 from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, nominal_account
@@ -371,18 +371,19 @@ def _at_worst(screened: Screened, index: int) -> str:
     place, departure = group.corner(code)[1], DEPARTURES[index]
     own = [(i, amplifier) for i, (amplifier, symbol) in enumerate(group.form.departures) if symbol == departure.symbol]
     if group.calibrated:
-        return "; ".join(f"{amplifier}: {_change(screened, departure, place >> i & 1)}" for i, amplifier in own)
+        ends = calibrated.ends(group.form, place)
+        return "; ".join(f"{amplifier}: {_change(screened, departure, ends[i])}" for i, amplifier in own)
     active = {i for k in group.active_sets[place] for i in group.form.monomials[k]}
     amplifiers = [amplifier for i, amplifier in own if i in active]
     return f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
 
 
-def _change(screened: Screened, departure: Departure, rises: int) -> str:
+def _change(screened: Screened, departure: Departure, end: int) -> str:
     changed = screened.part_side.changed
     if changed is None:
         raise ValueError("these parts do not change")
     before, after = (
         f"{_quantity(departure, value):.6g} {departure.unit}" if value else "ideal"
-        for value in changed[rises, :, DEPARTURES.index(departure), 0].tolist()
+        for value in changed[end, :, DEPARTURES.index(departure), 0].tolist()
     )
     return f"from {before} to {after}"

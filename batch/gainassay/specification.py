@@ -115,9 +115,7 @@ def _of_group(
     has = np.where(is_there, group.parts.limits[:, place], np.nan)
     is_known = is_there & (group.parts.evidence[:, place] != MISSING)
     floor = _floor(group, box)
-    need = needed(Asked(group.form, box, has[:, :, None], group.parts.limits))[:, :, 0]
-    for kind in range(len(DEPARTURES)):
-        _put_back(group, box, kind, has, need[kind])
+    need = _needed(group, box, has, is_there)
     columns = {"floor_a_ol": floor}
     for kind, departure in enumerate(DEPARTURES):
         columns[f"has_{departure.quantity}"] = np.where(is_known[kind], figure(departure, has[kind]), np.nan)
@@ -130,6 +128,17 @@ def _of_group(
         "tolerance_ideal_pct": loosest * ideal_factor,
         "tolerance_part_pct": loosest * part_factor,
     }
+
+
+def _needed(group: Group, box: StageBox, has: FloatArray, where: NDArray[np.bool_]) -> FloatArray:
+    """What some stages need of their best parts; shape (departures, stages), nan elsewhere."""
+    need = np.full_like(has, np.nan)
+    rows = np.flatnonzero(where)
+    if len(rows):
+        need[:, rows] = needed(Asked(group.form, box.part(rows), has[:, rows, None], group.parts.limits))[:, :, 0]
+    for kind in range(len(DEPARTURES)):
+        _put_back(group, box, kind, has, need[kind])
+    return need
 
 
 def _floor(group: Group, box: StageBox) -> FloatArray:

@@ -143,6 +143,20 @@ def test_a_stage_that_leans_on_typical_figures(here: CommandLineHere, write_job:
     assert row["has_a_ol"] == pytest.approx(200000.0, rel=1e-12)
 
 
+def test_a_stage_that_no_part_may_serve(here: CommandLineHere, write_job: JobWriter) -> None:
+    stages, parts = (
+        "\n".join(f"{line},{'channels' if not place else count}" for place, line in enumerate(rows.splitlines())) + "\n"
+        for rows, count in ((STAGES, 2), (PARTS, 1))
+    )
+    stages = stages.replace("off,non_inverting,1k,9k,,0.1,1,10.5,2", "off,non_inverting,1k,9k,,0.1,1,10.5,1")
+    job = write_job('[[eligible]]\npart = "channels"\nat_least = "channels"\n', stages=stages, parts=parts)
+    row = rows_of(here("need", job, "--json").out)["easy"]
+    assert (row["outlook"], row["part"], row["need_a_ol"], row["has_a_ol"]) == ("unmet", "", None, None)
+    alone = rows_of(here("need", write_job(stages=STAGES, parts=PARTS, folder="alone"), "--json").out)["easy"]
+    assert row["floor_a_ol"] == alone["floor_a_ol"]
+    assert "  easy: no part is eligible, or none has a finite bound" in here("need", job).out
+
+
 def test_an_unusable_job(here: CommandLineHere, write_job: JobWriter) -> None:
     done = here("need", write_job(stages="stage,topology\na,inverting\n"), status=2)
     assert "a column 'accuracy_pct' or 'accuracy_ppm' is missing" in done.err

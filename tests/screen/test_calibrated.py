@@ -79,7 +79,7 @@ def test_nothing_drawn_exceeds_the_worst_case(topology: Topology, seed: int) -> 
     spreads[0, ~toleranced] = 0.0
     room = np.array([[10.0 ** -rng.uniform(3, 6)], [10.0 ** -rng.uniform(5, 8)], [10.0 ** rng.uniform(0, 2.5)]])
     limits = room * np.array([[rng.choice([1.0, 3.0])] for _ in DEPARTURES])
-    change = np.array([[rng.choice([0.3, np.inf])] for _ in DEPARTURES])
+    change = np.array([[rng.choice([0.0, 0.02, 0.3, np.inf])] for _ in DEPARTURES])
     one = box(values[:, None], spreads[:, :, None], np.ones(1), np.full(1, np.nan))
     _, outcome, terms = screened(form, one, room, limits, change)
     found = float(outcome.error_worst[0, 0])
@@ -125,6 +125,25 @@ def test_a_follower_feels_the_change_of_its_open_loop_gain_alone() -> None:
     assert follower(1e-3, 1e-3, np.inf)[0] == pytest.approx((1001 / 1000) - 1, rel=1e-12)
     assert follower(1e-3, 2e-3, np.inf)[0] == pytest.approx(-2e-3 / 1.002, rel=1e-12)
     assert follower(1e-3, 1e-3, 0.0)[0] == 0.0
+
+
+@pytest.mark.oracle
+def test_a_part_may_be_better_than_its_limits_at_calibration() -> None:
+    """1 + r2/r1 trimmed, then 1000 ppm of r2 more: with a part that never changes, the most if that is ideal.
+
+    By hand: gain = G/(1 + G a), so that G to G' makes G'/G (1 + G a)/(1 + G' a) - 1, which falls as a rises.
+    """
+    topology = LIBRARY["non_inverting"]
+    form = derive(topology)
+    values = np.array([{"r1": 1e3, "r2": 9e4, "r_load": np.inf}.get(name, 0.0) for name in form.elements])
+    is_r2 = np.array([name == "r2" for name in form.elements])
+    spreads = np.where(is_r2, [[0.0], [1e-3], [0.0]], 0.0)[:, :, None]
+    one = box(values[:, None], spreads, np.ones(1), np.full(1, np.nan))
+    room = np.array([[1e-3], [0.0], [0.0]])
+    _, outcome, _ = screened(form, one, room, room, np.zeros((3, 1)))
+    assert abs(float(outcome.error_worst[0, 0])) == pytest.approx(0.09 / 91.0, rel=1e-12)
+    before = np.array([91.0 / 1.091, 91.09 / 1.09109])
+    assert abs(float(outcome.error_worst[0, 0])) > 1.08 * (before[1] / before[0] - 1.0)
 
 
 @pytest.mark.oracle

@@ -106,8 +106,10 @@ def _remedy(row: Row) -> str:
 
 
 def _with_part(row: Row) -> str:
+    if not row["part"]:
+        return "no part is eligible, or none has a finite bound"
     if row["tolerance_part_pct"] is None:
-        return f"no tolerance would do with {row['part'] or 'any part'}"
+        return f"no tolerance would do with {row['part']}"
     return f"{_in_place(row, 'tolerance_part_pct')} would do with {row['part']}"
 
 

@@ -77,7 +77,7 @@ class Group:
 
     def corner(self, code: int) -> tuple[int, int]:
         """The stage's and the part's corner that an outcome's `corner` stands for."""
-        return divmod(code, 1 << len(self.form.departures) if self.calibrated else len(self.active_sets))
+        return divmod(code, calibrated.corners_of_part(self.form) if self.calibrated else len(self.active_sets))
 
 
 @dataclass(frozen=True)

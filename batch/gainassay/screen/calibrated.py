@@ -9,13 +9,16 @@ its tolerances. In each variable that moves the error is a ratio of multi-affine
 worst case; over what is held every combination of ends is visited.
 
 A departure is at calibration anywhere within its limit. Afterwards it has changed by no more than the part says;
-where the part says nothing it may again be anywhere within its limit.
+where the part says nothing it may again be anywhere within its limit. What it is at calibration is held, so that it is
+taken to be ideal, too, before and after: each kind of departure in all amplifiers at once.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from functools import cache
+from itertools import product as combinations
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,13 +29,21 @@ from gainassay.forms.coefficients import Coefficients, FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
-from gainassay.screen.corners import PartSide, StageSide, elements_terms, is_regular, matters
+from gainassay.screen.corners import PartSide, StageSide, elements_terms, is_regular, matters, monomials
 from gainassay.screen.corners import part_side as limits_side
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, beyond_corners, in_blocks, undoing
+from gainassay.screen.kernel import (
+    PAIRS_PER_BLOCK,
+    UNBOUNDED,
+    Outcome,
+    add_products,
+    beyond_corners,
+    in_blocks,
+    undoing,
+)
 from gainassay.screen.signs import FIXED, OPEN, Reach
-from gainassay.screen.visits import factors_at, visit, what_is_known, with_a_bound
+from gainassay.screen.visits import Plan, factors_at, visit, what_is_known, with_a_bound
 
-FALLEN, RISEN = range(2)
+FALLEN, RISEN, IDEAL = range(3)
 """Places in `PartSide.changed`."""
 
 
@@ -85,7 +96,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             corner_loadings=now.loadings,
             corner_error=error,
             corner_terms=terms,
-            plans=with_a_bound(visited.plans, regular),
+            plans=with_a_bound(tuple(_with_ideal_ones(form, plan) for plan in visited.plans), regular),
             regular=regular,
             matters=matters(form, known.box, now, visited.first),
             untied=known.untied,
@@ -97,6 +108,39 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
 def _place(rises: Sequence[bool]) -> int:
     """The place of a corner of the part: bit i is whether departure i rises after calibration."""
     return sum(1 << index for index, rising in enumerate(rises) if rising)
+
+
+@cache
+def _ideal_sets(form: Form) -> tuple[tuple[bool, ...], ...]:
+    """Which of the form's departures may be ideal throughout: first none, and each set that leaves other products."""
+    kinds = [departure.symbol for departure in DEPARTURES]
+    found = {}
+    for are_ideal in combinations((False, True), repeat=len(kinds)):
+        ideal = tuple(are_ideal[kinds.index(symbol)] for _, symbol in form.departures)
+        # Of the sets that leave the same products the last is the largest.
+        found[tuple(any(ideal[i] for i in monomial) for monomial in form.monomials)] = ideal
+    return tuple(found.values())
+
+
+def _with_ideal_ones(form: Form, plan: Plan) -> Plan:
+    """The corners of a plan, each also with departures that are ideal throughout."""
+    found = {
+        (j, (which << len(ideal)) + _place([not best and bool(q >> i & 1) for i, best in enumerate(ideal)]))
+        for j, q in plan.corners
+        for which, ideal in enumerate(_ideal_sets(form))
+    }
+    return Plan(plan.stages, tuple(sorted(found)))
+
+
+def corners_of_part(form: Form) -> int:
+    """How many corners of a part there are at most."""
+    return len(_ideal_sets(form)) << len(form.departures)
+
+
+def ends(form: Form, q: int) -> tuple[int, ...]:
+    """What becomes of each of the form's departures at a corner of the part: `FALLEN`, `RISEN` or `IDEAL`."""
+    which, rises = divmod(q, 1 << len(form.departures))
+    return tuple(IDEAL if ideal else rises >> index & 1 for index, ideal in enumerate(_ideal_sets(form)[which]))
 
 
 def _all(box: StageBox, stage: NDArray[np.intp], is_upper: NDArray[np.bool_]) -> FloatArray:
@@ -123,7 +167,7 @@ def part_side(
         least = np.where(is_reciprocal, 1.0 / (1.0 + change), np.maximum(0.0, 1.0 - change))
         most = np.where(is_reciprocal, np.where(change < 1.0, 1.0 / (1.0 - change), np.inf), 1.0 + change)
         risen = np.where(np.isinf(most), limits, np.minimum(room * most, limits))
-        changed = np.array([[room, room * least], [risen / most, risen]])
+        changed = np.array([[room, room * least], [risen / most, risen], np.zeros((2, *room.shape))])
     side = limits_side(form, np.zeros_like(limits), limits, evidence)
     return PartSide(side.nominal, side.worst, side.limits, side.evidence, changed)
 
@@ -173,21 +217,32 @@ def _worst(
     bounded = np.ones(shape, dtype=bool)
     products = {q: _products(form, parts, q, columns) for q in {q for _, q in corners}}
     for number, (j, q) in enumerate(corners):
-        error, is_bounded = _error(stages, (stages.first[rows] + j)[:, None], products[q])
+        error, is_bounded = _error(stages, stages.first[rows] + j, products[q])
         bounded &= is_bounded & np.isfinite(error)
         larger = np.abs(error) > np.abs(worst) if number else np.ones(shape, dtype=bool)
         np.copyto(worst, error, where=larger)
-        np.copyto(corner, j * (1 << len(form.departures)) + q, where=larger)
+        np.copyto(corner, j * corners_of_part(form) + q, where=larger)
     return np.where(bounded, worst, np.nan), np.where(bounded, corner, np.int32(UNBOUNDED))
 
 
 def _error(stages: StageSide, at: NDArray[np.intp], products: FloatArray) -> tuple[FloatArray, NDArray[np.bool_]]:
     """Error at one corner, and whether both denominators are positive there."""
-    before, after = products
-    was, now = _departing(at_calibration(stages), at, before), _departing(afterwards(stages), at, after)
-    e = stages.corner_error[at]
-    error = (e + (1.0 + e) * now.error() - was.error()) / (1.0 + was.error())
-    return error, (was.denominator > 0.0) & (now.denominator > 0.0)
+    was, before = _departed(at_calibration(stages), at, products[0])
+    now, after = _departed(afterwards(stages), at, products[1])
+    e = stages.corner_error[at, None]
+    error = (e + (1.0 + e) * now - was) / (1.0 + was)
+    return error, (before > 0.0) & (after > 0.0)
+
+
+def _departed(of: Coefficients, at: NDArray[np.intp], products: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """E = sum_k c_k m_k / (1 + sum_k d_k m_k) at corners `at`, and its denominator; products of shape (terms, parts)."""
+    numerator, denominator = np.zeros((2, len(at), products.shape[1]))
+    denominator += 1.0
+    # Products of departures that are ideal would add 0.
+    active = np.flatnonzero(products.any(axis=1))
+    contrasts, loadings = (coefficient[active[:, None], at] for coefficient in (of.contrasts, of.loadings))
+    add_products(contrasts[..., None], loadings[..., None], products[active], numerator, denominator)
+    return numerator / denominator, denominator
 
 
 def at_calibration(stages: StageSide) -> Coefficients:
@@ -234,14 +289,10 @@ def _products(form: Form, parts: PartSide, q: int, columns: slice) -> FloatArray
     assert parts.changed is not None
     place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
     values = [
-        parts.changed[RISEN if q >> index & 1 else FALLEN, :, place[symbol], columns]
-        for index, (_, symbol) in enumerate(form.departures)
+        parts.changed[end, :, place[symbol], columns]
+        for end, (_, symbol) in zip(ends(form, q), form.departures, strict=True)
     ]
-    found = np.ones((2, len(form.monomials), values[0].shape[-1]))
-    for k, monomial in enumerate(form.monomials):
-        for departure in monomial:
-            found[:, k] *= values[departure]
-    return found
+    return monomials(form, np.array(values)).swapaxes(0, 1)
 
 
 def account(
@@ -249,7 +300,7 @@ def account(
 ) -> Iterator[FloatArray]:
     """As `kernel.account`, of calibrated stages."""
     corner = outcome.corner[rows, columns]
-    j, q = np.divmod(np.maximum(corner, 0), 1 << len(form.departures))
+    j, q = np.divmod(np.maximum(corner, 0), corners_of_part(form))
     at = stages.first[np.arange(*rows.indices(len(stages.limits)))][:, None] + j
     products = np.zeros((2, len(form.monomials), *corner.shape))
     for code in np.unique(q).tolist():

@@ -103,8 +103,8 @@ class PartSide:
         The departures at their limits, in the order of `DEPARTURES`.
     evidence : ndarray of uint8, shape (departures, parts)
         What each limit rests on.
-    changed : ndarray, shape (2, 2, departures, parts), or None
-        For calibrated stages, the departures at and after calibration: once as they fall most, once as they rise most.
+    changed : ndarray, shape (3, 2, departures, parts), or None
+        For calibrated stages, the departures at and after calibration: as they fall most, as they rise most, and ideal.
     """
 
     nominal: FloatArray

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pyarrow as pa
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from gainassay.tables import checks
@@ -24,6 +24,7 @@ NAMES = st.lists(st.text("ab é\U0001f600\uffff-0", min_size=1, max_size=12).fil
 
 
 @pytest.mark.parametrize("short", [0, 8, 1000])
+@settings(deadline=None)
 @given(names=NAMES)
 def test_names_are_in_the_order_of_their_code_points(short: int, names: list[str]) -> None:
     with pytest.MonkeyPatch.context() as patch:

@@ -38,7 +38,7 @@ typical,,10000000,1G,1
 rejected,-1,,,
 """
 
-RESULTS = '[results]\nformats = ["csv", "parquet"]\nterms = true\nneed = true\nviews = true\n'
+RESULTS = '[results]\nformats = ["csv", "parquet"]\nterms = true\nneed = true\nviews = true\nmargins = true\n'
 
 
 @pytest.fixture(scope="module")

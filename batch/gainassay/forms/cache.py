@@ -16,7 +16,8 @@ from typing import Any, TypeVar
 
 from platformdirs import user_cache_path
 
-from gainassay.forms import meaningful, soundness
+from gainassay.forms import duty, meaningful, soundness
+from gainassay.forms.duty import Duty
 from gainassay.forms.form import Form, Ratio, derive
 from gainassay.forms.meaningful import Formulas
 from gainassay.forms.slopes import Polynomial, Slope
@@ -28,6 +29,9 @@ Derived = TypeVar("Derived")
 
 FORM_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "slopes.py", "soundness.py", "topology.py")
 """Files of this room whose change makes every kept form stale."""
+
+DUTY_CODE = (*FORM_CODE, "duty.py")
+"""Files of this room whose change makes every kept duty stale."""
 
 FORMULA_CODE = (*FORM_CODE, "expression.py", "meaningful.py", "proof.py", "render.py", "simplest.py")
 """Files of this room whose change makes every kept formula stale."""
@@ -59,6 +63,23 @@ def form_of(topology: Topology) -> Form:
 
     path = folder() / "forms" / f"{_key(topology, FORM_CODE, {})}.json"
     return _kept(path, made, asdict, _form)
+
+
+def duty_of(topology: Topology) -> Duty:
+    """What the amplifiers of a topology must do: read from the cache, or derived and kept.
+
+    Raises
+    ------
+    InputError
+        If the topology makes no sense, or has no form.
+    """
+
+    def made() -> Duty:
+        form_of(topology)
+        return duty.derive(topology)
+
+    path = folder() / "duties" / f"{_key(topology, DUTY_CODE, {})}.json"
+    return _kept(path, made, asdict, _duty)
 
 
 def formulas_of(topology: Topology, absent: Mapping[str, str] | None = None) -> Formulas:
@@ -163,6 +184,12 @@ def _form(data: dict[str, Any]) -> Form:
             Slope(int(slope["sign"]), _polynomial(slope["terms"]), bool(slope["is_whole"])) for slope in data["slopes"]
         ),
     )
+
+
+def _duty(data: dict[str, Any]) -> Duty:
+    v_out, i_out, v_in = (tuple(_ratio(ratio) for ratio in data[name]) for name in ("v_out", "i_out", "v_in"))
+    feedback = tuple(tuple(_ratio(ratio) for ratio in row) for row in data["feedback"])
+    return Duty(tuple(data["amplifiers"]), v_out, i_out, v_in, feedback)
 
 
 def _ratio(data: dict[str, Any]) -> Ratio:

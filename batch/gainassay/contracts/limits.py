@@ -38,5 +38,5 @@ LIMITS = (
 )
 """The first that a pair is outside of is the reason of its verdict."""
 
-WITH_A_DEFAULT = ("v_ground", "t_min_c", "t_max_c")
+WITH_A_DEFAULT = ("v_ground", "v_in_dc", "t_min_c", "t_max_c")
 """Columns of the stage table that limits use, too, and whose blanks mean something."""

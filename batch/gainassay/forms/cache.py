@@ -17,7 +17,7 @@ from typing import Any, TypeVar
 from platformdirs import user_cache_path
 
 from gainassay.forms import duty, meaningful, soundness
-from gainassay.forms.duty import Duty
+from gainassay.forms.duty import Duty, Work
 from gainassay.forms.form import Form, Ratio, derive
 from gainassay.forms.meaningful import Formulas
 from gainassay.forms.slopes import Polynomial, Slope
@@ -176,8 +176,8 @@ def _form(data: dict[str, Any]) -> Form:
         monomials=tuple(tuple(monomial) for monomial in data["monomials"]),
         terms=tuple(data["terms"]),
         gain_ideal=_ratio(data["gain_ideal"]),
-        contrasts=tuple(_ratio(ratio) for ratio in data["contrasts"]),
-        loadings=tuple(_ratio(ratio) for ratio in data["loadings"]),
+        contrasts=_ratios(data["contrasts"]),
+        loadings=_ratios(data["loadings"]),
         numerator=_polynomial(data["numerator"]),
         denominator=_polynomial(data["denominator"]),
         slopes=tuple(
@@ -187,9 +187,20 @@ def _form(data: dict[str, Any]) -> Form:
 
 
 def _duty(data: dict[str, Any]) -> Duty:
-    v_out, i_out, v_in = (tuple(_ratio(ratio) for ratio in data[name]) for name in ("v_out", "i_out", "v_in"))
-    feedback = tuple(tuple(_ratio(ratio) for ratio in row) for row in data["feedback"])
-    return Duty(tuple(data["amplifiers"]), v_out, i_out, v_in, feedback)
+    return Duty(
+        amplifiers=tuple(data["amplifiers"]),
+        of_signal=_work(data["of_signal"]),
+        of_bias=None if data["of_bias"] is None else _work(data["of_bias"]),
+        feedback=tuple(_ratios(row) for row in data["feedback"]),
+    )
+
+
+def _work(data: dict[str, Any]) -> Work:
+    return Work(*(_ratios(data[name]) for name in ("v_out", "i_out", "v_in")))
+
+
+def _ratios(data: list[Any]) -> tuple[Ratio, ...]:
+    return tuple(_ratio(ratio) for ratio in data)
 
 
 def _ratio(data: dict[str, Any]) -> Ratio:

@@ -15,46 +15,66 @@ from dataclasses import dataclass
 
 from gainassay.forms import nodal
 from gainassay.forms.form import Ratio, Ratios
-from gainassay.forms.topology import Topology
+from gainassay.forms.multiaffine import MultiAffine
+from gainassay.forms.nodal import Operation
+from gainassay.forms.topology import Topology, driven_by_voltage
+
+
+@dataclass(frozen=True)
+class Work:
+    """What each amplifier does for 1 V somewhere.
+
+    Attributes
+    ----------
+    v_out, i_out, v_in : tuple[Ratio, ...]
+        Output voltage [V/V], current out of the output [A/V], and voltage of both inputs [V/V].
+    """
+
+    v_out: tuple[Ratio, ...]
+    i_out: tuple[Ratio, ...]
+    v_in: tuple[Ratio, ...]
 
 
 @dataclass(frozen=True)
 class Duty:
-    """What ideal amplifiers do for 1 V at the output of a stage.
-
-    The stage's output voltage is that across the element where its output is a current.
+    """What a topology asks of its amplifiers.
 
     Attributes
     ----------
     amplifiers : tuple[str, ...]
         Their names.
-    v_out, i_out, v_in : tuple[Ratio, ...]
-        Of each amplifier the output voltage [V/V], the current out of the output [A/V] and the voltage of both inputs
-        [V/V].
+    of_signal : Work
+        For 1 V of signal at the stage's output, across the element where that is a current.
+    of_bias : Work or None
+        For 1 V at the input, at both nodes of a pair; none if the input is a current.
     feedback : tuple[tuple[Ratio, ...], ...]
         Feedback factors [V/V], by receiving, then by sending amplifier: what 1 V at the output of the one brings to
         v- less v+ of the other.
     """
 
     amplifiers: tuple[str, ...]
-    v_out: tuple[Ratio, ...]
-    i_out: tuple[Ratio, ...]
-    v_in: tuple[Ratio, ...]
+    of_signal: Work
+    of_bias: Work | None
     feedback: tuple[tuple[Ratio, ...], ...]
 
 
 def derive(topology: Topology) -> Duty:
     """What a topology that has a form asks of its amplifiers."""
-    ratio = Ratios(tuple(element.name for element in topology.elements))
-    found, (brought, whole) = nodal.operation(topology), nodal.feedback(topology)
-    v_out, i_out, v_in = (
-        tuple(ratio.reduced(numerator, found.output) for numerator in numerators)
-        for numerators in (found.v_out, found.i_out, found.v_in)
-    )
+    ratios = Ratios(tuple(element.name for element in topology.elements))
+    brought, whole = nodal.feedback(topology)
+    signal = nodal.operation(topology)
+    bias = nodal.operation(topology, common=True) if driven_by_voltage(topology) else None
     return Duty(
         amplifiers=tuple(amplifier.name for amplifier in topology.amplifiers),
-        v_out=v_out,
-        i_out=i_out,
-        v_in=v_in,
-        feedback=tuple(tuple(ratio.reduced(numerator, whole) for numerator in row) for row in brought),
+        of_signal=_work(ratios, signal, signal.output),
+        of_bias=_work(ratios, bias, bias.whole) if bias else None,
+        feedback=tuple(tuple(ratios.reduced(numerator, whole) for numerator in row) for row in brought),
     )
+
+
+def _work(ratios: Ratios, of: Operation, reference: MultiAffine) -> Work:
+    v_out, i_out, v_in = (
+        tuple(ratios.reduced(numerator, reference) for numerator in numerators)
+        for numerators in (of.v_out, of.i_out, of.v_in)
+    )
+    return Work(v_out, i_out, v_in)

@@ -100,24 +100,33 @@ class Operation:
 
     Attributes
     ----------
+    whole : MultiAffine
+        The denominator of all others.
     output : MultiAffine
         The stage's output voltage, that across the element where the output is a current.
     v_out, i_out, v_in : tuple[MultiAffine, ...]
-        Of each amplifier the output voltage, the current out of the output, and the voltage of both inputs. All share
-        one denominator with `output`.
+        Of each amplifier the output voltage, the current out of the output, and the voltage of both inputs.
     """
 
+    whole: MultiAffine
     output: MultiAffine
     v_out: tuple[MultiAffine, ...]
     i_out: tuple[MultiAffine, ...]
     v_in: tuple[MultiAffine, ...]
 
 
-def operation(topology: Topology) -> Operation:
-    """What the amplifiers of a topology do while they are ideal."""
-    system = _driven(topology, is_ideal=True)
+def operation(topology: Topology, common: bool = False) -> Operation:
+    """What the amplifiers of a topology do while they are ideal.
+
+    Parameters
+    ----------
+    common : bool
+        Whether 1 V stands at every node of the input, in place of the signal.
+    """
+    system = _driven(topology, dict.fromkeys(topology.input, 1) if common else None, is_ideal=True)
     places = range(len(topology.amplifiers))
     return Operation(
+        whole=system.whole,
         output=system.output_voltage(),
         v_out=tuple(system.voltage(amplifier.out) for amplifier in topology.amplifiers),
         i_out=tuple(system.solved(len(topology.nodes()) + place) for place in places),
@@ -146,8 +155,8 @@ def feedback(topology: Topology) -> tuple[tuple[tuple[MultiAffine, ...], ...], M
     return brought, systems[0].whole
 
 
-def _driven(topology: Topology, is_ideal: bool = False) -> _System:
-    """The equations of a topology with its input driven.
+def _driven(topology: Topology, drive: Mapping[str, int] | None = None, is_ideal: bool = False) -> _System:
+    """The equations of a topology with its input driven, by the signal if nothing else is said.
 
     Raises
     ------
@@ -155,8 +164,8 @@ def _driven(topology: Topology, is_ideal: bool = False) -> _System:
         If they have no unique solution even with a real amplifier.
     """
     held = driven_by_voltage(topology)
-    drive = dict(zip(topology.input, (1, -1), strict=False))
-    system = _System.of(topology, {GROUND: 0} | (drive if held else {}), {} if held else drive, is_ideal)
+    drive = dict(zip(topology.input, (1, -1), strict=False)) if drive is None else drive
+    system = _System.of(topology, {GROUND: 0, **(drive if held else {})}, {} if held else drive, is_ideal)
     if not system.whole:
         raise InputError(
             f"{topology.where()}: its nodal equations have no unique solution; "

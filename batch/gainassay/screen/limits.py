@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from gainassay.contracts.limits import LIMITS
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import FloatArray, Pairs
-from gainassay.forms.duty import Duty
+from gainassay.forms.duty import Duty, Work
 from gainassay.forms.form import Form
 from gainassay.tables.operating import Operating
 from gainassay.tables.spreads import CALIBRATION_C
@@ -40,8 +40,12 @@ class Conditions:
 
     Attributes
     ----------
-    v_out, i_out, v_in : ndarray
-        Largest peak of any amplifier's output voltage [V], output current [A], input voltage [V].
+    v_out_up, v_out_down : ndarray
+        How far any amplifier's output goes up and down from the stage's ground [V].
+    i_out : ndarray
+        Largest current out of or into any amplifier's output [A].
+    v_in_up, v_in_down : ndarray
+        How far any amplifier's inputs go up and down from the stage's ground [V].
     noise_gain : ndarray
         Least noise gain of any loop [V/V].
     slew : ndarray
@@ -54,9 +58,11 @@ class Conditions:
         Temperatures [degree Celsius].
     """
 
-    v_out: FloatArray
+    v_out_up: FloatArray
+    v_out_down: FloatArray
     i_out: FloatArray
-    v_in: FloatArray
+    v_in_up: FloatArray
+    v_in_down: FloatArray
     noise_gain: FloatArray
     slew: FloatArray
     above: FloatArray
@@ -104,15 +110,15 @@ def _full_power(parts: Operating) -> FloatArray:
 
 
 def _nothing(stages: Conditions) -> FloatArray:
-    return np.zeros_like(stages.v_out)
+    return np.zeros_like(stages.v_supply)
 
 
 SIDES = (
-    Side("output_swing", "up", True, lambda s: s.v_out, lambda s: s.above, lambda p: p["swing_headroom_v"]),
-    Side("output_swing", "down", True, lambda s: s.v_out, lambda s: s.below, lambda p: p["swing_headroom_v"]),
+    Side("output_swing", "up", True, lambda s: s.v_out_up, lambda s: s.above, lambda p: p["swing_headroom_v"]),
+    Side("output_swing", "down", True, lambda s: s.v_out_down, lambda s: s.below, lambda p: p["swing_headroom_v"]),
     Side("output_current", "", True, lambda s: s.i_out, _nothing, lambda p: -p["i_out_max_a"]),
-    Side("input_range", "up", True, lambda s: s.v_in, lambda s: s.above, lambda p: p["v_cm_headroom_high_v"]),
-    Side("input_range", "down", True, lambda s: s.v_in, lambda s: s.below, lambda p: p["v_cm_headroom_low_v"]),
+    Side("input_range", "up", True, lambda s: s.v_in_up, lambda s: s.above, lambda p: p["v_cm_headroom_high_v"]),
+    Side("input_range", "down", True, lambda s: s.v_in_down, lambda s: s.below, lambda p: p["v_cm_headroom_low_v"]),
     Side("slew_rate", "", True, lambda s: s.slew, _nothing, lambda p: -p["slew_rate_min_v_us"]),
     Side("full_power", "", True, lambda s: s.slew, _nothing, lambda p: -_full_power(p)),
     Side("stable_gain", "", False, lambda s: s.noise_gain, _nothing, lambda p: p["gain_stable_min"]),
@@ -196,17 +202,22 @@ def conditions(form: Form, duty: Duty, values: FloatArray, operating: Operating)
         Nominal values [ohm, F, H], as in `StageGroup`.
     """
     at_dc, peak = coefficients.at_dc(form, values), operating["v_out_peak"]
-    v_out, i_out, v_in = (_finite(coefficients.ratios(ratios, at_dc)) for ratios in (duty.v_out, duty.i_out, duty.v_in))
+    v_out, i_out, v_in = (np.abs(of) * peak for of in _amounts(duty.of_signal, at_dc))
+    bias = np.nan_to_num(operating["v_in_dc"])
+    nothing = np.zeros_like(v_out)
+    at_rest = (nothing,) * 3 if duty.of_bias is None else (of * bias for of in _amounts(duty.of_bias, at_dc))
+    v_out_rest, i_out_rest, v_in_rest = (np.where(bias == 0.0, 0.0, of) for of in at_rest)
     supply, cold, hot = operating["v_supply"], operating["t_min_c"], operating["t_max_c"]
     ground = np.where(np.isnan(operating["v_ground"]), supply / 2.0, operating["v_ground"])
     noise_gains = (_noise_gain(duty, pairs) for pairs in (at_dc, coefficients.far_above(form, values)))
-    largest = _largest(v_out) * peak
     return Conditions(
-        v_out=largest,
-        i_out=_largest(i_out) * peak,
-        v_in=_largest(v_in) * peak,
+        v_out_up=(v_out + v_out_rest).max(axis=0),
+        v_out_down=(v_out - v_out_rest).max(axis=0),
+        i_out=(i_out + np.abs(i_out_rest)).max(axis=0),
+        v_in_up=(v_in + v_in_rest).max(axis=0),
+        v_in_down=(v_in - v_in_rest).max(axis=0),
         noise_gain=np.minimum(*noise_gains),
-        slew=_slope(operating["frequency_hz"], largest),
+        slew=_slope(operating["frequency_hz"], v_out.max(axis=0)),
         above=supply - ground,
         below=ground,
         v_supply=supply,
@@ -215,13 +226,10 @@ def conditions(form: Form, duty: Duty, values: FloatArray, operating: Operating)
     )
 
 
-def _finite(values: FloatArray) -> FloatArray:
-    return np.where(np.isfinite(values), values, np.nan)
-
-
-def _largest(of_amplifiers: FloatArray) -> FloatArray:
-    """nan of any amplifier stays."""
-    return np.asarray(np.abs(of_amplifiers).max(axis=0))
+def _amounts(work: Work, pairs: Pairs) -> tuple[FloatArray, ...]:
+    """Output voltage, output current and input voltage, each of shape (amplifiers, stages); nan where undefined."""
+    found = (coefficients.ratios(ratios, pairs) for ratios in (work.v_out, work.i_out, work.v_in))
+    return tuple(np.where(np.isfinite(values), values, np.nan) for values in found)
 
 
 def _slope(hertz: FloatArray, peak: FloatArray) -> FloatArray:

@@ -17,7 +17,7 @@ from gainassay.forms import coefficients
 from gainassay.forms.cache import form_of
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
-from gainassay.forms.topology import Topology
+from gainassay.forms.topology import Topology, driven_by_voltage
 from gainassay.job import Source
 from gainassay.tables import operating, sources, spreads
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
@@ -188,6 +188,7 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
                 operating=operating.at(conditions, members),
             )
             _refuse_without_form(checking, group, members)
+            _refuse_bias(checking, topology, members, conditions)
             kept = np.flatnonzero(checking.good()[members])
             if len(kept):
                 groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
@@ -303,6 +304,14 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
         else:
             continue
         checking.refuse(int(position), elements, reason)
+
+
+def _refuse_bias(checking: Checking, topology: Topology, members: NDArray[np.intp], conditions: Operating) -> None:
+    """Reject stages that put a voltage at an input that a current drives."""
+    if not driven_by_voltage(topology):
+        for position in members[~np.isnan(conditions["v_in_dc"][members])]:
+            reason = f"the input of topology '{topology.name}' is a current; empty the cell"
+            checking.refuse(int(position), "v_in_dc", reason)
 
 
 def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:

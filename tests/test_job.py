@@ -20,7 +20,7 @@ def test_the_shortest_job(write_job: JobWriter) -> None:
     assert job.stages == Source("stages", str(path.parent / "stages.csv"))
     assert job.parts == Source("parts", str(path.parent / "parts.csv"))
     assert (job.topologies, dict(job.assume)) == ((), {})
-    assert job.results == jobs.Results(path.parent / "runs", "all", ("parquet",), False, False, False, 2000)
+    assert job.results == jobs.Results(path.parent / "runs", "all", ("parquet",), False, False, False, 2000, False)
 
 
 def test_everything_a_job_may_say(write_job: JobWriter) -> None:
@@ -37,6 +37,7 @@ terms = true
 need = true
 views = true
 samples = 500
+margins = true
 """,
         tables='topologies = ["own/one.toml"]\n[stages]\nfrom = "a.parquet"\n[parts]\nfrom = "/b.csv"\n',
     )
@@ -45,7 +46,7 @@ samples = 500
     assert (job.stages.at, job.parts.at) == (str(path.parent / "a.parquet"), "/b.csv")
     assert job.assume == {"a_ol": StandIn(typical_times=0.5), "r_o": StandIn(2, 300)}
     assert job.results == jobs.Results(
-        path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, True, 500
+        path.parent / "../elsewhere", "not passing", ("csv", "parquet"), True, True, True, 500, True
     )
 
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.evidence import EVIDENCE, MISSING
+from gainassay.contracts.limits import LIMITS, Limit
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
 from gainassay.forms.coefficients import FloatArray
@@ -16,9 +17,10 @@ from gainassay.forms.departures import DEPARTURES, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks, calibrated, monte_carlo, rss
-from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
+from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, dominant_names, lot_of
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, nominal_account
+from gainassay.screen.limits import PLACES, SIDES
 from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
 from gainassay.tables.eligible import Eligibility
@@ -93,6 +95,32 @@ class PortFigure:
 
 
 @dataclass(frozen=True)
+class LimitCheck:
+    """A comparison of the stage with an operating limit of the part; nan: not known.
+
+    Attributes
+    ----------
+    end : str
+        Which end of a range it is; empty for a limit of one side.
+    asked, allowed, margin : float
+        What the stage asks, what the part allows, and by how much that is kept [unit].
+    bound : str
+        `at most` or `at least`: how what is asked must stand to what is allowed.
+    state : str
+        `inside` or `outside`, or `not checked` and what is missing.
+    """
+
+    name: str
+    end: str
+    unit: str
+    asked: float
+    bound: str
+    allowed: float
+    margin: float
+    state: str
+
+
+@dataclass(frozen=True)
 class Share:
     """What a quantity contributes to the standard uncertainty of the error.
 
@@ -155,6 +183,8 @@ class Explanation:
     ----------
     terms : tuple[Term, ...]
         All terms that are not zero, the largest at the worst corner first; both columns sum to the errors.
+    limits : tuple[LimitCheck, ...]
+        All operating limits, whether or not they could be checked.
     """
 
     stage: str
@@ -178,6 +208,7 @@ class Explanation:
     elements: tuple[ElementValue, ...]
     figures: tuple[Figure, ...]
     terms: tuple[Term, ...]
+    limits: tuple[LimitCheck, ...]
     views: ViewFigures
     ports: tuple[PortFigure, ...]
 
@@ -235,7 +266,7 @@ def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts
     unbounded = corner == UNBOUNDED
     at_nominal = [float(term[0, 0]) * PPM for term in nominal_account(side, screened.part_side)]
     at_worst = [np.nan if unbounded else float(term[0, 0]) * PPM for term in blocks.accounts(screened)]
-    names = term_names(screened.group.form)
+    names, dominant = term_names(screened.group.form), dominant_names(screened.group.form)
     terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
     leaning = LEANINGS[int(judgement.leaning[0, 0])]
     reference = float(side.reference[0])
@@ -260,7 +291,7 @@ def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts
         reason=REASONS[int(judgement.reason[0, 0])],
         evidence=leaning.evidence,
         leans_on=leaning.leans_on,
-        dominant_term="" if outcome.dominant[0, 0] == NO_TERM else names[int(outcome.dominant[0, 0])],
+        dominant_term="" if outcome.dominant[0, 0] == NO_TERM else dominant[int(outcome.dominant[0, 0])],
         elements=tuple(_elements(screened, spreads.of(np.array([s])), values, at_corner)),
         figures=tuple(_figures(screened, parts, p)),
         terms=tuple(
@@ -269,9 +300,30 @@ def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts
                 key=lambda term: (-np.nan_to_num(abs(term.worst_ppm)), names.index(term.name)),
             )
         ),
+        limits=tuple(_limits(screened, of, s, parts, p)),
         views=_views(screened, samples),
         ports=tuple(_ports(topology, values, parts.nominal[:, p])),
     )
+
+
+def _limits(screened: Screened, of: StageGroup, s: int, parts: PartTable, p: int) -> Iterator[LimitCheck]:
+    bounds = screened.group.bounds.of(screened.chunk.stages, screened.chunk.parts)
+    for index, (side, place) in enumerate(zip(SIDES, PLACES, strict=True)):
+        limit, asked, margin = LIMITS[place], float(bounds.asked[index, 0]), float(bounds.margins(index)[0, 0])
+        allowed = asked + margin if side.is_upper else float(bounds.taken[index, 0])
+        state = "outside" if margin < 0.0 else "inside"
+        if np.isnan(margin):
+            state = f"not checked: {_missing(limit, of, s, parts, p)}"
+        bound = "at most" if side.is_upper else "at least"
+        yield LimitCheck(limit.name, side.end, limit.unit, asked, bound, allowed, margin, state)
+
+
+def _missing(limit: Limit, of: StageGroup, s: int, parts: PartTable, p: int) -> str:
+    """What a limit is not checked for."""
+    tables = {"stage": (limit.stages, of.operating, s), "part": (limit.parts, parts.operating, p)}
+    blank = {kind: [name for name in names if np.isnan(at[name][row])] for kind, (names, at, row) in tables.items()}
+    said = [f"the {kind} gives no {', '.join(names)}" for kind, names in blank.items() if names]
+    return "; ".join(said) or "the stage's network leaves it open"
 
 
 def _views(screened: Screened, samples: int) -> ViewFigures:

@@ -99,6 +99,8 @@ class Results:
         Whether verdict tables show root-sum-square and Monte Carlo beside the worst case.
     samples : int
         Of each pair, for Monte Carlo.
+    margins : bool
+        Whether verdict tables show by how much each operating limit is kept.
     """
 
     folder: Path
@@ -108,6 +110,7 @@ class Results:
     need: bool
     views: bool
     samples: int
+    margins: bool
 
 
 @dataclass(frozen=True)
@@ -214,6 +217,7 @@ def read(path: Path) -> Job:
             need=results["need"],
             views=results["views"],
             samples=results["samples"],
+            margins=results["margins"],
         ),
     )
 

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from gainassay import job as jobs
 from gainassay.contracts.evidence import EVIDENCE
+from gainassay.forms.cache import duty_of
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
@@ -24,10 +25,11 @@ from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
 from gainassay.runs.folder import File, write
 from gainassay.runs.manifest import manifest
-from gainassay.screen import blocks, boxes, calibrated, corners, need
+from gainassay.screen import blocks, boxes, calibrated, corners, limits, need
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import PartSide, moving_terms
+from gainassay.screen.limits import Bounds
 from gainassay.screen.verdicts import Rules
 from gainassay.tables import eligible
 from gainassay.tables import parts as part_tables
@@ -141,7 +143,11 @@ def groups_of(prepared: Prepared) -> tuple[Group, ...]:
     parts = prepared.parts
     return tuple(
         blocks.group(
-            group.form, (group.names, box_of(group)), (parts.names, parts_of(group, parts)), eligibility.patterns()
+            group.form,
+            (group.names, box_of(group)),
+            (parts.names, parts_of(group, parts)),
+            eligibility.patterns(),
+            bounds_of(group, parts),
         )
         for group, eligibility in zip(prepared.stages.groups, prepared.eligibility, strict=True)
     )
@@ -160,6 +166,12 @@ def box_of(group: StageGroup) -> StageBox:
     """The stages of a group with their boxes."""
     spreads = group.spreads
     return boxes.box(group.values, spreads.own, group.limits, group.targets, spreads.network, spreads.ratios)
+
+
+def bounds_of(group: StageGroup, parts: PartTable) -> Bounds:
+    """The operating limits of a group's stages and all parts."""
+    asked = limits.conditions(group.form, duty_of(group.topology), group.values, group.operating)
+    return limits.bounds(asked, parts.operating)
 
 
 def rules_of(job: Job) -> Rules:
@@ -248,7 +260,7 @@ def _write_verdicts(
     if results.rows == "none":
         return []
     needs = _needs(screened, rules) if results.need else None
-    table = run_tables.verdict_table(screened, results.rows, terms, needs)
+    table = run_tables.verdict_table(screened, results.rows, terms, needs, results.margins)
     # Named after the chunk's place, so that the order of the files is the order of the rows.
     name = f"verdicts/{place:05d}-{screened.group.form.topology}"
     return [write(folder, f"{name}.{kind}", table) for kind in results.formats]

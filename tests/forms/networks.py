@@ -144,9 +144,9 @@ def gain(topology: Topology, values: Values) -> mpmath.mpf:
     """Output over input."""
     if topology.gain in ("voltage", "transconductance"):
         drive = (1,) if len(topology.input) == 1 else (mpmath.mpf(1) / 2, mpmath.mpf(-1) / 2)
-        voltages = _solve(topology, values, held=dict(zip(topology.input, drive, strict=True)))
+        voltages = solve(topology, values, held=dict(zip(topology.input, drive, strict=True)))
     else:
-        voltages = _solve(topology, values, injected=dict(zip(topology.input, (1, -1), strict=False)))
+        voltages = solve(topology, values, injected=dict(zip(topology.input, (1, -1), strict=False)))
     if topology.gain in ("voltage", "transresistance"):
         return voltages[topology.output]
     first, second = topology.element(topology.output).between
@@ -156,7 +156,7 @@ def gain(topology: Topology, values: Values) -> mpmath.mpf:
 def input_impedance(topology: Topology, values: Values) -> mpmath.mpf:
     """Seen by the source, which is taken away."""
     first, second = (*topology.input, GROUND)[:2]
-    voltages = _solve(topology, values, injected={first: 1, second: -1})
+    voltages = solve(topology, values, injected={first: 1, second: -1})
     return voltages[first] - voltages[second]
 
 
@@ -164,30 +164,30 @@ def input_impedance_at(topology: Topology, values: Values, node: str) -> mpmath.
     """Seen at one node of a pair, the other source dead."""
     is_held = topology.gain in ("voltage", "transconductance")
     held = {other: 0 for other in topology.input if other != node} if is_held else {}
-    return _solve(topology, values, held=held, injected={node: 1})[node]
+    return solve(topology, values, held=held, injected={node: 1})[node]
 
 
 def output_impedance(topology: Topology, values: Values) -> mpmath.mpf:
     """Seen by a load; the source is dead."""
     held = dict.fromkeys(topology.input, 0) if topology.gain in ("voltage", "transconductance") else {}
     if topology.gain in ("voltage", "transresistance"):
-        return _solve(topology, values, held=held, injected={topology.output: 1})[topology.output]
+        return solve(topology, values, held=held, injected={topology.output: 1})[topology.output]
     first, second = topology.element(topology.output).between
     open_output = {**values, topology.output: mpmath.inf}
-    voltages = _solve(topology, open_output, held=held, injected={first: 1, second: -1})
+    voltages = solve(topology, open_output, held=held, injected={first: 1, second: -1})
     return voltages[first] - voltages[second]
 
 
 def return_ratio(topology: Topology, values: Values, amplifier: str) -> mpmath.mpf:
     """What comes back, sign changed, of 1 V put in place of A_OL (v+ - v-) of one amplifier."""
     held = dict.fromkeys(topology.input, 0) if topology.gain in ("voltage", "transconductance") else {}
-    voltages = _solve(topology, values, held=held, forced=amplifier)
+    voltages = solve(topology, values, held=held, forced=amplifier)
     pins = next(a for a in topology.amplifiers if a.name == amplifier)
     suffix = f"_{amplifier}" if len(topology.amplifiers) > 1 else ""
     return -values[f"A{suffix}"] * (voltages[pins.plus] - voltages[pins.minus])
 
 
-def _solve(
+def solve(
     topology: Topology,
     values: Values,
     held: Mapping[str, object] | None = None,

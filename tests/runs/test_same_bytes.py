@@ -25,7 +25,10 @@ if TYPE_CHECKING:
 Table = Sequence[Mapping[str, str]]
 
 SAMPLE = resources.sample_sets() / "river_gauging"
-RESULTS = "[assume]\nr_o = { typical_times = 2, value = 300 }\n[results]\nterms = true\nviews = true\nsamples = 100\n"
+RESULTS = (
+    "[assume]\nr_o = { typical_times = 2, value = 300 }\n"
+    "[results]\nterms = true\nviews = true\nsamples = 100\nmargins = true\n"
+)
 
 
 def some_of(name: str, every: int) -> Table:

@@ -58,6 +58,11 @@ NOTATIONS = {
     ),
     "V": Notation(symbols=("V", "volt"), prefixes={"k": 3, **MILLI_DOWN}),
     "A": Notation(symbols=("A", "ampere"), prefixes=MILLI_DOWN),
+    "V/us": Notation(
+        symbols=("V/us", "V/\u00b5s", "V/\u03bcs"),
+        prefixes={"k": 3, "m": -3},
+        others={"V/s": -6, "V/ms": -3, "V/ns": 3},
+    ),
     "V/V": Notation(
         symbols=("V/V",),
         prefixes=KILO_UP,

@@ -16,7 +16,8 @@ from typing import Any, TypeVar
 
 from platformdirs import user_cache_path
 
-from gainassay.forms import meaningful, soundness
+from gainassay.forms import duty, meaningful, soundness
+from gainassay.forms.duty import Duty, Work
 from gainassay.forms.form import Form, Ratio, derive
 from gainassay.forms.meaningful import Formulas
 from gainassay.forms.slopes import Polynomial, Slope
@@ -28,6 +29,9 @@ Derived = TypeVar("Derived")
 
 FORM_CODE = ("departures.py", "form.py", "multiaffine.py", "nodal.py", "slopes.py", "soundness.py", "topology.py")
 """Files of this room whose change makes every kept form stale."""
+
+DUTY_CODE = (*FORM_CODE, "duty.py")
+"""Files of this room whose change makes every kept duty stale."""
 
 FORMULA_CODE = (*FORM_CODE, "expression.py", "meaningful.py", "proof.py", "render.py", "simplest.py")
 """Files of this room whose change makes every kept formula stale."""
@@ -59,6 +63,23 @@ def form_of(topology: Topology) -> Form:
 
     path = folder() / "forms" / f"{_key(topology, FORM_CODE, {})}.json"
     return _kept(path, made, asdict, _form)
+
+
+def duty_of(topology: Topology) -> Duty:
+    """What the amplifiers of a topology must do: read from the cache, or derived and kept.
+
+    Raises
+    ------
+    InputError
+        If the topology makes no sense, or has no form.
+    """
+
+    def made() -> Duty:
+        form_of(topology)
+        return duty.derive(topology)
+
+    path = folder() / "duties" / f"{_key(topology, DUTY_CODE, {})}.json"
+    return _kept(path, made, asdict, _duty)
 
 
 def formulas_of(topology: Topology, absent: Mapping[str, str] | None = None) -> Formulas:
@@ -155,14 +176,31 @@ def _form(data: dict[str, Any]) -> Form:
         monomials=tuple(tuple(monomial) for monomial in data["monomials"]),
         terms=tuple(data["terms"]),
         gain_ideal=_ratio(data["gain_ideal"]),
-        contrasts=tuple(_ratio(ratio) for ratio in data["contrasts"]),
-        loadings=tuple(_ratio(ratio) for ratio in data["loadings"]),
+        contrasts=_ratios(data["contrasts"]),
+        loadings=_ratios(data["loadings"]),
         numerator=_polynomial(data["numerator"]),
         denominator=_polynomial(data["denominator"]),
         slopes=tuple(
             Slope(int(slope["sign"]), _polynomial(slope["terms"]), bool(slope["is_whole"])) for slope in data["slopes"]
         ),
     )
+
+
+def _duty(data: dict[str, Any]) -> Duty:
+    return Duty(
+        amplifiers=tuple(data["amplifiers"]),
+        of_signal=_work(data["of_signal"]),
+        of_bias=None if data["of_bias"] is None else _work(data["of_bias"]),
+        feedback=tuple(_ratios(row) for row in data["feedback"]),
+    )
+
+
+def _work(data: dict[str, Any]) -> Work:
+    return Work(*(_ratios(data[name]) for name in ("v_out", "i_out", "v_in")))
+
+
+def _ratios(data: list[Any]) -> tuple[Ratio, ...]:
+    return tuple(_ratio(ratio) for ratio in data)
 
 
 def _ratio(data: dict[str, Any]) -> Ratio:

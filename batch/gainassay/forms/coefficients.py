@@ -7,7 +7,7 @@ everything between are one case without a division.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -83,7 +83,22 @@ def at_dc(form: Form, values: FloatArray) -> Pairs:
         then stay far from overflow.
     """
     kinds = np.array(form.kinds)[:, None]
-    ohms = np.where(kinds == "capacitor", np.inf, np.where(kinds == "inductor", 0.0, values))
+    return _pairs(np.where(kinds == "capacitor", np.inf, np.where(kinds == "inductor", 0.0, values)))
+
+
+def far_above(form: Form, values: FloatArray) -> Pairs:
+    """Pairs of a form's elements far above all corner frequencies, where a capacitor is a short and an inductor open.
+
+    Of `values` as in `at_dc`; a capacitor that is not there, of 0 F, stays open, and an inductor of 0 H short.
+    """
+    kinds = np.array(form.kinds)[:, None]
+    is_reactive = values > 0.0
+    capacitors, inductors = np.where(is_reactive, 0.0, np.inf), np.where(is_reactive, np.inf, 0.0)
+    return _pairs(np.where(kinds == "capacitor", capacitors, np.where(kinds == "inductor", inductors, values)))
+
+
+def _pairs(ohms: FloatArray) -> Pairs:
+    """Pairs of resistances, 0 for a short and inf for an open circuit."""
     is_open = np.isinf(ohms)
     finite = np.where(is_open, 1.0, ohms)
     _, exponent = np.frexp(finite)
@@ -104,12 +119,7 @@ def evaluate(form: Form, pairs: Pairs) -> Coefficients:
     pairs : Pairs
         The elements, in the order of `form.elements`.
     """
-    count = pairs.y.shape[1]
-
-    def table(ratios: tuple[Ratio, ...]) -> FloatArray:
-        return np.array([_ratio(ratio, pairs) for ratio in ratios]).reshape(len(ratios), count)
-
-    return Coefficients(gain_ideal(form, pairs), table(form.contrasts), table(form.loadings))
+    return Coefficients(gain_ideal(form, pairs), ratios(form.contrasts, pairs), ratios(form.loadings, pairs))
 
 
 def occur(form: Form, pairs: Pairs) -> NDArray[np.bool_]:
@@ -162,6 +172,11 @@ def slopes(form: Form, pairs: Pairs) -> Slopes:
     with np.errstate(divide="ignore", invalid="ignore"):
         relative = _slopes(form.gain_ideal, pairs) / gain_ideal(form, pairs)
     return Slopes(relative, table(form.contrasts), table(form.loadings))
+
+
+def ratios(of: Sequence[Ratio], pairs: Pairs) -> FloatArray:
+    """Ratios at given elements, shape (ratios, stages); not finite where elements make one infinite or undefined."""
+    return np.array([_ratio(ratio, pairs) for ratio in of]).reshape(len(of), pairs.y.shape[1])
 
 
 def _ratio(ratio: Ratio, pairs: Pairs) -> FloatArray:

@@ -108,7 +108,7 @@ def derive(topology: Topology) -> Form:
             f"{where}: the ideal gain is zero: the input does not reach the output; "
             "it has no form ideal gain x correction factor"
         )
-    ratio = _Ratios(gain.elements)
+    ratio = Ratios(gain.elements)
     products = sorted({*numerators, *denominators} - {0}, key=lambda mask: (mask.bit_count(), mask))
     zero = MultiAffine({})
     n_0, d_0 = numerators[0], denominators[0]
@@ -144,7 +144,7 @@ def _name(monomial: tuple[int, ...], departures: tuple[tuple[str, str], ...], se
     return term_name([(departures[i][0], by_symbol[departures[i][1]]) for i in monomial], several)
 
 
-class _Ratios:
+class Ratios:
     """Ratios of polynomials brought to lowest terms in a ring of sympy's."""
 
     def __init__(self, elements: tuple[str, ...]) -> None:

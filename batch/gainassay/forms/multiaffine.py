@@ -86,6 +86,10 @@ class MultiAffine:
         """Greatest common divisor of the coefficients, 0 for the zero polynomial."""
         return gcd(*self.terms.values()) if self.terms else 0
 
+    def within(self, symbols: int) -> MultiAffine:
+        """The products of masked symbols alone: all others are 0."""
+        return MultiAffine({mask: value for mask, value in self.terms.items() if not mask & ~symbols})
+
     def split(self, symbol: int) -> tuple[MultiAffine, MultiAffine]:
         """What does not hold the symbol of the mask `symbol`, and the coefficient of that symbol."""
         without: dict[int, int] = {}

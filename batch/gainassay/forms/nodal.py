@@ -82,35 +82,136 @@ def derive(topology: Topology) -> Gain:
     InputError
         If the nodal equations have no unique solution even with a real amplifier.
     """
-    names = _Names.of(topology)
-    held = driven_by_voltage(topology)
-    drive = dict(zip(topology.input, (1, -1), strict=False))
+    system = _driven(topology)
     # A balanced pair of voltages is +1 and -1 in place of +1/2 and -1/2, so that coefficients stay integers.
-    scale = len(topology.input) if held else 1
-    potential = {GROUND: 0} | (drive if held else {})
-    rows, columns = _equations(topology, names, potential, {} if held else drive)
-    whole = _determinant(topology, rows, columns)
-    if not whole:
+    scale = len(topology.input) if driven_by_voltage(topology) else 1
+    numerator = system.output_voltage()
+    if output_is_current(topology):
+        # The voltage across an element depends on its admittance in the denominator alone (Thevenin), so the
+        # current y (v1 - v2) is multi-affine again.
+        numerator = system.names.symbol(topology.output).times(numerator)
+    names = system.names
+    return Gain(names.elements, names.departures, numerator, system.whole.times(MultiAffine.constant(scale)))
+
+
+@dataclass(frozen=True)
+class Operation:
+    """What a topology's amplifiers do while they are ideal, as polynomials in the elements' admittances.
+
+    Attributes
+    ----------
+    whole : MultiAffine
+        The denominator of all others.
+    output : MultiAffine
+        The stage's output voltage, that across the element where the output is a current.
+    v_out, i_out, v_in : tuple[MultiAffine, ...]
+        Of each amplifier the output voltage, the current out of the output, and the voltage of both inputs.
+    """
+
+    whole: MultiAffine
+    output: MultiAffine
+    v_out: tuple[MultiAffine, ...]
+    i_out: tuple[MultiAffine, ...]
+    v_in: tuple[MultiAffine, ...]
+
+
+def operation(topology: Topology, common: bool = False) -> Operation:
+    """What the amplifiers of a topology do while they are ideal.
+
+    Parameters
+    ----------
+    common : bool
+        Whether 1 V stands at every node of the input, in place of the signal.
+    """
+    system = _driven(topology, dict.fromkeys(topology.input, 1) if common else None, is_ideal=True)
+    places = range(len(topology.amplifiers))
+    return Operation(
+        whole=system.whole,
+        output=system.output_voltage(),
+        v_out=tuple(system.voltage(amplifier.out) for amplifier in topology.amplifiers),
+        i_out=tuple(system.solved(len(topology.nodes()) + place) for place in places),
+        v_in=tuple(system.voltage(amplifier.plus) for amplifier in topology.amplifiers),
+    )
+
+
+def feedback(topology: Topology) -> tuple[tuple[tuple[MultiAffine, ...], ...], MultiAffine]:
+    """What each amplifier's output brings back to each amplifier's inputs, v- less v+, through the elements alone.
+
+    Returns
+    -------
+    tuple
+        Numerators by receiving, then by sending amplifier, and their denominator.
+    """
+    passive = replace(topology, amplifiers=())
+    dead = dict.fromkeys((GROUND, *(topology.input if driven_by_voltage(topology) else ())), 0)
+    outputs = [amplifier.out for amplifier in topology.amplifiers]
+    systems = [
+        _System.of(passive, dead | {output: int(output == sending) for output in outputs}, {}) for sending in outputs
+    ]
+    brought = tuple(
+        tuple(system.voltage(amplifier.minus) - system.voltage(amplifier.plus) for system in systems)
+        for amplifier in topology.amplifiers
+    )
+    return brought, systems[0].whole
+
+
+def _driven(topology: Topology, drive: Mapping[str, int] | None = None, is_ideal: bool = False) -> _System:
+    """The equations of a topology with its input driven, by the signal if nothing else is said.
+
+    Raises
+    ------
+    InputError
+        If they have no unique solution even with a real amplifier.
+    """
+    held = driven_by_voltage(topology)
+    drive = dict(zip(topology.input, (1, -1), strict=False)) if drive is None else drive
+    system = _System.of(topology, {GROUND: 0, **(drive if held else {})}, {} if held else drive, is_ideal)
+    if not system.whole:
         raise InputError(
             f"{topology.where()}: its nodal equations have no unique solution; "
             "look for a node that nothing holds, or an amplifier without feedback"
         )
+    return system
 
-    def voltage(node: str) -> MultiAffine:
-        """Numerator of a node's voltage over the determinant `whole` (Cramer's rule)."""
-        if node in potential:
-            return whole.times(MultiAffine.constant(potential[node]))
-        column = _column(topology, node)
-        return _determinant(topology, rows, [RIGHT_HAND_SIDE if c == column else c for c in columns])
 
-    if output_is_current(topology):
-        first, second = topology.element(topology.output).between
-        # The voltage across an element depends on its admittance in the denominator alone (Thevenin), so the
-        # current y (v1 - v2) is multi-affine again.
-        numerator = names.symbol(topology.output).times(voltage(first) - voltage(second))
-    else:
-        numerator = voltage(topology.output)
-    return Gain(names.elements, names.departures, numerator, whole.times(MultiAffine.constant(scale)))
+@dataclass(frozen=True)
+class _System:
+    """Nodal equations and their determinant `whole`, over which all unknowns are solved for (Cramer's rule)."""
+
+    topology: Topology
+    names: _Names
+    potential: Mapping[str, int]
+    rows: list[dict[int, MultiAffine]]
+    columns: list[int]
+    whole: MultiAffine
+
+    @staticmethod
+    def of(
+        topology: Topology, potential: Mapping[str, int], injected: Mapping[str, int], is_ideal: bool = False
+    ) -> _System:
+        names = _Names.of(topology)
+        rows, columns = _equations(topology, names, potential, injected)
+        if is_ideal:
+            elements = (1 << len(names.elements)) - 1
+            rows = [{column: entry.within(elements) for column, entry in row.items()} for row in rows]
+        return _System(topology, names, potential, rows, columns, _determinant(topology, rows, columns))
+
+    def solved(self, column: int) -> MultiAffine:
+        """Numerator of the unknown of a column."""
+        return _determinant(self.topology, self.rows, [RIGHT_HAND_SIDE if c == column else c for c in self.columns])
+
+    def voltage(self, node: str) -> MultiAffine:
+        """Numerator of a node's voltage."""
+        if node in self.potential:
+            return self.whole.times(MultiAffine.constant(self.potential[node]))
+        return self.solved(self.topology.nodes().index(node))
+
+    def output_voltage(self) -> MultiAffine:
+        """Numerator of the output voltage, that across the element where the output is a current."""
+        if not output_is_current(self.topology):
+            return self.voltage(self.topology.output)
+        first, second = self.topology.element(self.topology.output).between
+        return self.voltage(first) - self.voltage(second)
 
 
 def _determinant(topology: Topology, rows: list[dict[int, MultiAffine]], columns: list[int]) -> MultiAffine:
@@ -190,10 +291,6 @@ class _Names:
 
     def symbol(self, name: str | tuple[str, str]) -> MultiAffine:
         return MultiAffine.symbol((*self.elements, *self.departures).index(name))
-
-
-def _column(topology: Topology, node: str) -> int:
-    return topology.nodes().index(node)
 
 
 def _equations(

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 from gainassay.cautions import CAUTIONS
-from gainassay.explanation import Explanation, PortFigure, ViewFigures
+from gainassay.explanation import Explanation, LimitCheck, PortFigure, ViewFigures
 from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
@@ -70,11 +70,21 @@ def text(found: Explanation) -> list[str]:
             ],
         ),
         "",
+        "Operating limits, with nominal elements and an ideal op-amp",
+        *table(["  limit", "end", "asked", "", "allowed", "margin", ""], [_limit(check) for check in found.limits]),
+        "",
         "Impedances and loop at 0 Hz, with the nominal figures",
         *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports])[1:],
         "",
         *CAUTIONS,
     ]
+
+
+def _limit(check: LimitCheck) -> list[str]:
+    """A comparison as a row; the temperatures themselves stand in degrees Celsius."""
+    unit = "C" if check.unit == "K" else check.unit
+    asked, allowed = (quantity(value, unit) for value in (check.asked, check.allowed))
+    return [f"  {check.name}", check.end, asked, check.bound, allowed, quantity(check.margin, check.unit), check.state]
 
 
 def _port(port: PortFigure) -> str:

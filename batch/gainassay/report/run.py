@@ -28,6 +28,7 @@ def summary(manifest: Mapping[str, Any], folder: Path, hopeless: Sequence[str]) 
     lines += [f"  {name}" for name in hopeless[:MOST_LISTED]]
     if len(hopeless) > MOST_LISTED:
         lines.append(f"  and {len(hopeless) - MOST_LISTED:,} more: those with pass = 0 in {folder / 'stages.parquet'}")
+    lines += _limits(manifest["limits"], pairs)
     lines += ["", "Tables"]
     lines += table(
         ["", "", "", "", ""],
@@ -43,6 +44,19 @@ def summary(manifest: Mapping[str, Any], folder: Path, hopeless: Sequence[str]) 
         lines.append(f"  not modelled, for want of a column: {', '.join(manifest['not_modelled'])}")
     lines += ["", f"Results: {folder}", f"Time:    {manifest['seconds']:.1f} s", "", *manifest["cautions"]]
     return lines
+
+
+def _limits(limits: Mapping[str, Mapping[str, int]], pairs: int) -> list[str]:
+    """The operating limits: of how many pairs each was checked and how many are outside."""
+    checked = {name: pairs - counts["not_checked"] for name, counts in limits.items()}
+    rows = [
+        [f"  {name}", f"{counts['outside']:,} outside", f"{counts['not_checked']:,} not checked"]
+        for name, counts in limits.items()
+        if checked[name]
+    ]
+    lines = ["", "Operating limits", *table(["", "", ""], rows, right=[1, 2])[1:]]
+    never = [name for name in limits if not checked[name]]
+    return [*lines, f"  not checked at all, for want of columns or numbers: {', '.join(never)}"] if never else lines
 
 
 def runs(manifests: Sequence[Mapping[str, Any]]) -> list[str]:

@@ -74,6 +74,7 @@ def manifest(
         if job.results.views
         else None,
         "dominant_terms": counts.dominant_terms,
+        "limits": counts.limits,
         "cautions": list(CAUTIONS),
         "files": [asdict(file) for file in sorted(files, key=lambda file: file.path)],
     }

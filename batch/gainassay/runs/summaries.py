@@ -9,9 +9,9 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 
+from gainassay.contracts.limits import LIMITS
 from gainassay.runs.tables import PPM, summary_table
-from gainassay.screen.blocks import Group, Tally
-from gainassay.screen.corners import term_names
+from gainassay.screen.blocks import Group, Tally, dominant_names
 from gainassay.screen.verdicts import VERDICTS
 
 
@@ -23,10 +23,13 @@ class Counts:
     ----------
     verdicts, dominant_terms : dict[str, int]
         Pairs by verdict; pairs by dominant term, the most frequent first.
+    limits : dict[str, dict[str, int]]
+        Of each operating limit the pairs outside it, and the pairs of which it was not checked.
     """
 
     verdicts: dict[str, int]
     dominant_terms: dict[str, int]
+    limits: dict[str, dict[str, int]]
 
 
 def counts(groups: Sequence[Group], tallies: Sequence[Tally]) -> Counts:
@@ -34,10 +37,20 @@ def counts(groups: Sequence[Group], tallies: Sequence[Tally]) -> Counts:
     verdicts = sum((tally.by_stage.sum(axis=0) for tally in tallies), np.zeros(len(VERDICTS), np.int64))
     dominant: dict[str, int] = {}
     for tally in tallies:
-        for name, count in zip(term_names(groups[tally.chunk.group].form), tally.dominant.tolist(), strict=True):
+        for name, count in zip(dominant_names(groups[tally.chunk.group].form), tally.dominant.tolist(), strict=True):
             dominant[name] = dominant.get(name, 0) + count
     common = sorted(((name, count) for name, count in dominant.items() if count), key=lambda item: (-item[1], item[0]))
-    return Counts(dict(zip(VERDICTS, verdicts.tolist(), strict=True)), dict(common))
+    return Counts(dict(zip(VERDICTS, verdicts.tolist(), strict=True)), dict(common), _limits(tallies))
+
+
+def _limits(tallies: Sequence[Tally]) -> dict[str, dict[str, int]]:
+    return {
+        limit.name: {
+            "outside": sum(int(tally.outside[place]) for tally in tallies),
+            "not_checked": sum(int(tally.unchecked[place]) for tally in tallies),
+        }
+        for place, limit in enumerate(LIMITS)
+    }
 
 
 def stage_summary(groups: Sequence[Group], tallies: Sequence[Tally]) -> pa.Table:

@@ -11,8 +11,10 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from gainassay.contracts import tables
+from gainassay.contracts.limits import LIMITS
 from gainassay.forms.departures import DEPARTURES
-from gainassay.screen.blocks import Screened, accounts
+from gainassay.screen import limits
+from gainassay.screen.blocks import Screened, accounts, dominant_names
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
 from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
@@ -26,13 +28,21 @@ FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 REPEATED = (
     "stage", "part", "topology", "verdict", "reason", "evidence", "leans_on",
-    "gain_ideal", "limit_ppm", "dominant_term",
+    "gain_ideal", "limit_ppm", "dominant_term", "not_checked",
 )  # fmt: skip
 """Columns of the verdict table with few different values, which are stored as a dictionary."""
 
 
+UNCHECKED = tuple(limits.named(code) for code in range(1 << len(LIMITS)))
+"""Operating limits that could not be checked, by code."""
+
+
 def verdict_table(
-    screened: Screened, rows: str, terms: Sequence[str], needs: NDArray[np.float64] | None = None
+    screened: Screened,
+    rows: str,
+    terms: Sequence[str],
+    needs: NDArray[np.float64] | None = None,
+    margins: bool = False,
 ) -> pa.Table:
     """The rows of the verdict table that a chunk gives, ordered by stage and part.
 
@@ -44,6 +54,8 @@ def verdict_table(
         Terms of the account that get a column.
     needs : ndarray, shape (departures, stages, parts), optional
         What `need.needed` gives for the pairs, a column for each quantity.
+    margins : bool
+        Whether each operating limit gets a column.
     """
     verdict = screened.judgement.verdict.ravel()
     is_kept = screened.eligible.ravel() & (rows == "all" or verdict != VERDICTS.index("pass"))
@@ -85,13 +97,17 @@ def verdict_table(
         "error_worst_ppm": number(outcome.error_worst.ravel()[kept] * PPM),
         "limit_ppm": number(sides.limits[stage] * PPM),
         "limit_used": number(screened.judgement.limit_used.ravel()[kept]),
-        "dominant_term": words(outcome.dominant.ravel()[kept], names),
+        "dominant_term": words(outcome.dominant.ravel()[kept], dominant_names(screened.group.form)),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
     if needs is not None:
         columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
     if screened.views is not None:
         columns |= {name: number(values.ravel()[kept]) for name, values in _views_columns(screened.views).items()}
+    if margins:
+        bounds = screened.group.bounds.of(screened.chunk.stages, screened.chunk.parts)
+        columns |= {f"margin_{name}": number(of.ravel()[kept]) for name, of in limits.margins(bounds)}
+        columns["not_checked"] = words(screened.kept.unchecked.ravel()[kept].astype(np.int32), UNCHECKED)
     if terms:
         found = zip(names, accounts(screened), strict=True)
         values = {name: term.ravel()[kept] for name, term in found if name in terms}

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
-from gainassay.screen import calibrated
+from gainassay.screen import calibrated, limits
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import (
     PartSide,
@@ -26,9 +26,10 @@ from gainassay.screen.corners import (
     term_names,
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, account, screen
+from gainassay.screen.limits import Bounds, Kept
 from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.signs import Reach, reach
-from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
+from gainassay.screen.verdicts import FAIL, LIMIT_TERMS, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
 from gainassay.screen.views import Views, views
 
 Written = TypeVar("Written")
@@ -62,6 +63,8 @@ class Group:
         Place of each stage's pattern.
     eligible : ndarray of bool, shape (patterns, parts)
         The parts that the stages of a pattern are screened against.
+    bounds : Bounds
+        The operating limits of all stages and parts.
     """
 
     form: Form
@@ -74,6 +77,7 @@ class Group:
     reach: Reach
     pattern: NDArray[np.intp]
     eligible: NDArray[np.bool_]
+    bounds: Bounds
 
     def corner(self, code: int) -> tuple[int, int]:
         """The stage's and the part's corner that an outcome's `corner` stands for."""
@@ -97,6 +101,8 @@ class Screened:
     ----------
     eligible : ndarray of bool, shape (stages, parts)
         The pairs that were screened; of the others nothing is found, and what stands for them means nothing.
+    kept : Kept
+        Which operating limits the pairs keep.
     views : Views or None
         On request.
     """
@@ -108,6 +114,7 @@ class Screened:
     eligible: NDArray[np.bool_]
     outcome: Outcome
     judgement: Judgement
+    kept: Kept
     views: Views | None = None
 
 
@@ -121,7 +128,9 @@ class Tally:
     by_part : ndarray, shape (parts, verdicts)
         Pairs by verdict, in the order of `VERDICTS`.
     dominant : ndarray, shape (terms,)
-        Pairs by dominant term.
+        Pairs by dominant term, in the order of `dominant_names`.
+    outside, unchecked : ndarray, shape (limits,)
+        Pairs outside each operating limit, and pairs of which it could not be checked.
     best_part : ndarray of int, shape (stages,)
         Place among the group's parts of the best part, -1 where no part has a finite bound.
     best_rank, best_limit_used : ndarray, shape (stages,)
@@ -134,6 +143,8 @@ class Tally:
     by_stage: NDArray[np.int64]
     by_part: NDArray[np.int64]
     dominant: NDArray[np.int64]
+    outside: NDArray[np.int64]
+    unchecked: NDArray[np.int64]
     best_part: NDArray[np.int64]
     best_rank: NDArray[np.int64]
     best_limit_used: FloatArray
@@ -147,6 +158,7 @@ def group(
     stages: tuple[NDArray[np.str_], StageBox],
     parts: tuple[NDArray[np.str_], PartSide],
     patterns: tuple[NDArray[np.intp], NDArray[np.bool_]],
+    bounds: Bounds,
 ) -> Group:
     """Stages of one form and all parts, each as names and numbers.
 
@@ -165,6 +177,7 @@ def group(
         reach=reach(form, side.limits, box.memberships()),
         pattern=patterns[0],
         eligible=patterns[1],
+        bounds=bounds,
     )
 
 
@@ -198,12 +211,22 @@ def screen_chunk(
         if eligible.all()
         else _screen_eligible(one, stages, parts, pattern, of_patterns, block)
     )
-    judgement = judge(stages, parts, outcome, rules)
+    kept = limits.check(one.bounds.of(chunk.stages, chunk.parts))
+    outside = kept.first_outside()
+    judgement = judge(stages, parts, outcome, rules, outside)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
+    is_outside = outside != limits.NONE
+    np.copyto(outcome.dominant, outside + np.int16(len(term_names(one.form))), where=is_outside)
+    outcome.dominant_value[is_outside] = np.nan
     bounded = np.full_like(outcome.error_worst, np.nan) if one.calibrated else outcome.error_worst
     found = None if samples is None else views(lot_of(one, chunk, stages, parts), bounded, samples)
-    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, found)
+    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, kept, found)
+
+
+def dominant_names(form: Form) -> tuple[str, ...]:
+    """What an outcome's `dominant` stands for once it is judged: the terms, then the operating limits."""
+    return (*term_names(form), *LIMIT_TERMS)
 
 
 def _screen(one: Group, stages: StageSide, parts: PartSide, block: int) -> Outcome:
@@ -273,12 +296,15 @@ def tally(screened: Screened) -> Tally:
     best = candidate.argmin(axis=1)
     found = best_rank < len(VERDICTS)
     # NO_TERM is -1, counted in the first place and left out.
-    by_place = np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(term_names(screened.group.form)) + 1)
+    names = dominant_names(screened.group.form)
+    by_place = np.bincount(screened.outcome.dominant[screened.eligible] + 1, minlength=len(names) + 1)
     return Tally(
         chunk=screened.chunk,
         by_stage=is_verdict.sum(axis=2).T,
         by_part=is_verdict.sum(axis=1).T,
         dominant=by_place[1:],
+        outside=_by_limit(screened.kept.outside, screened.eligible),
+        unchecked=_by_limit(screened.kept.unchecked, screened.eligible),
         best_part=np.where(found, best + screened.chunk.parts.start, -1),
         best_rank=best_rank,
         best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),
@@ -286,6 +312,12 @@ def tally(screened: Screened) -> Tally:
         limits=screened.stage_side.limits,
         elements_error=elements_error(screened.stage_side),
     )
+
+
+def _by_limit(codes: NDArray[np.uint8], eligible: NDArray[np.bool_]) -> NDArray[np.int64]:
+    """Pairs by operating limit, of the eligible ones."""
+    count = np.bincount(codes[eligible], minlength=1 << len(LIMIT_TERMS))
+    return np.array([count[limits.holding(place)].sum() for place in range(len(LIMIT_TERMS))])
 
 
 def run(

@@ -4,6 +4,7 @@ With L the required accuracy and g the guard band (JCGM 106: the acceptance limi
 
 | |error_worst| | evidence | verdict | reason |
 |---|---|---|---|
+| any, and the stage asks more than the part can bear | any | fail | outside limit.output_swing, ... |
 | no finite bound | any | fail | no finite bound |
 | above L | any | fail | outside the limit |
 | above L (1 - g), up to L | any | fail | inside the limit, but in its guard band |
@@ -12,7 +13,8 @@ With L the required accuracy and g the guard band (JCGM 106: the acceptance limi
 
 The basis is `guaranteed` or `typical`; what is assumed or missing never proves a pass. A number that is missing
 is left out of the account, as 0. Its true value could only widen the box, so that `fail` stands, and whatever
-is inside the limit is `unproven`.
+is inside the limit is `unproven`. The operating limits are those of `contracts.limits`; one that is not checked proves
+nothing either way, and changes no verdict.
 """
 
 from __future__ import annotations
@@ -23,6 +25,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.contracts.evidence import EVIDENCE
+from gainassay.contracts.limits import LIMITS
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.screen.corners import PartSide, StageSide
@@ -31,13 +34,17 @@ from gainassay.screen.kernel import Outcome
 VERDICTS = ("pass", "fail", "unproven")
 PASS, FAIL, UNPROVEN = range(3)
 
-UNBOUNDED_REASON, OUTSIDE, GUARD_BAND, INSIDE, LEANING = range(5)
+UNBOUNDED_REASON, OUTSIDE, GUARD_BAND, INSIDE, LEANING, OUTSIDE_LIMIT = range(6)
+LIMIT_TERMS = tuple(f"limit.{limit.name}" for limit in LIMITS)
+"""What stands for the dominant term where a pair is outside an operating limit."""
+
 _REASONS = (
     "no finite bound",
     "outside the limit",
     "inside the limit, but in its guard band",
     "inside the limit",
     "inside the limit, but leans on",
+    *(f"outside {term}" for term in LIMIT_TERMS),
 )
 
 BITS = 2
@@ -109,8 +116,20 @@ REASONS = tuple(
 _WEAKEST = np.array([EVIDENCE.index(leaning.evidence) for leaning in LEANINGS])
 
 
-def judge(stages: StageSide, parts: PartSide, outcome: Outcome, rules: Rules) -> Judgement:
-    """Verdict, reason, evidence and share of the limit used, for each pair."""
+def judge(
+    stages: StageSide,
+    parts: PartSide,
+    outcome: Outcome,
+    rules: Rules,
+    outside: NDArray[np.int8] | None = None,
+) -> Judgement:
+    """Verdict, reason, evidence and share of the limit used, for each pair.
+
+    Parameters
+    ----------
+    outside : ndarray of int, shape (stages, parts), optional
+        Place of the operating limit that a pair is outside of, negative for none.
+    """
     weights = 1 << BITS * np.arange(len(DEPARTURES))
     of_part = (parts.evidence.astype(np.int16) * weights[:, None].astype(np.int16)).sum(axis=0, dtype=np.int16)
     seen = (stages.matters * (weights * ((1 << BITS) - 1))[:, None]).sum(axis=0).astype(np.int16)
@@ -123,5 +142,7 @@ def judge(stages: StageSide, parts: PartSide, outcome: Outcome, rules: Rules) ->
         np.where(_WEAKEST[leaning] <= rules.basis, INSIDE, LEANING),
         np.where(magnitude <= limits, GUARD_BAND, np.where(np.isnan(magnitude), UNBOUNDED_REASON, OUTSIDE)),
     )
-    verdict = np.array([FAIL, FAIL, FAIL, PASS, UNPROVEN], np.uint8)[kind]
+    if outside is not None:
+        kind = np.where(outside >= 0, OUTSIDE_LIMIT + outside.astype(kind.dtype), kind)
+    verdict = np.array([FAIL, FAIL, FAIL, PASS, UNPROVEN, *[FAIL] * len(LIMITS)], np.uint8)[kind]
     return Judgement(verdict, (kind * len(LEANINGS) + leaning).astype(np.int32), leaning, magnitude / limits)

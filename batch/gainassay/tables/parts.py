@@ -17,9 +17,10 @@ from gainassay.errors import InputError
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
 from gainassay.job import Source, StandIn
-from gainassay.tables import sources
+from gainassay.tables import operating, sources
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
+from gainassay.tables.operating import Operating
 from gainassay.tables.rejects import Reject, rejected_rows
 
 PER_PCT = 1e-2
@@ -53,6 +54,8 @@ class PartTable:
         evidence GUARANTEED, since nothing is claimed about it.
     compared : Mapping[str, Cells]
         The columns that rules compare with the stages'.
+    operating : Operating
+        The columns that operating limits are checked from.
     columns : ColumnUse
         What became of the table's columns.
     """
@@ -70,6 +73,7 @@ class PartTable:
     evidence_change: NDArray[np.uint8]
     modelled: tuple[bool, ...]
     compared: Mapping[str, Cells]
+    operating: Operating
     rejects: tuple[Reject, ...]
     columns: ColumnUse
     warnings: tuple[str, ...]
@@ -113,7 +117,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
     checking = Checking.of(raw)
     checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
-    cells = read_compared(checking, compared)
+    cells, limits = read_compared(checking, compared), operating.read_parts(checking)
     order, names = checking.in_order()
     rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
@@ -132,6 +136,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         evidence_change=np.array([one.evidence_change[order] for one in read], np.uint8),
         modelled=tuple(one.modelled for one in read),
         compared={name: column.at(order) for name, column in cells.items()},
+        operating=operating.at(limits, order),
         rejects=checking.found(),
         columns=column_use(raw, "parts", known),
         warnings=unknown_columns(raw, known),

@@ -17,11 +17,12 @@ from gainassay.forms import coefficients
 from gainassay.forms.cache import form_of
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
-from gainassay.forms.topology import Topology
+from gainassay.forms.topology import Topology, driven_by_voltage
 from gainassay.job import Source
-from gainassay.tables import sources, spreads
+from gainassay.tables import operating, sources, spreads
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
+from gainassay.tables.operating import Operating
 from gainassay.tables.rejects import Reject, rejected_rows
 from gainassay.tables.spreads import SpreadColumns, Spreads
 
@@ -60,6 +61,8 @@ class StageGroup:
         Target gain [gain unit]; nan where the ideal gain is the target.
     compared : Mapping[str, Cells]
         The columns that rules compare with the parts'.
+    operating : Operating
+        The columns that operating limits are checked from.
     """
 
     topology: Topology
@@ -72,6 +75,7 @@ class StageGroup:
     limits: FloatArray
     targets: FloatArray
     compared: Mapping[str, Cells]
+    operating: Operating
 
 
 @dataclass(frozen=True)
@@ -159,7 +163,7 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
     values = {name: checking.column(tables.column("stages", f"<{kind_of[name]}>").of(name)) for name in there}
     moving = spreads.read(checking, sorted(kind_of))
     is_hot, is_calibrated = ~np.isnan(moving.excursion), _calibrated(checking)
-    cells = read_compared(checking, compared)
+    cells, conditions = read_compared(checking, compared), operating.read_stages(checking)
     known |= moving.columns()
 
     groups = []
@@ -181,8 +185,10 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
                 limits=limits[members],
                 targets=general["target_gain"].values[members],
                 compared={column: found.at(members) for column, found in cells.items()},
+                operating=operating.at(conditions, members),
             )
             _refuse_without_form(checking, group, members)
+            _refuse_bias(checking, topology, members, conditions)
             kept = np.flatnonzero(checking.good()[members])
             if len(kept):
                 groups.append(_ordered(group, kept[np.argsort(group.names[kept])]))
@@ -300,6 +306,14 @@ def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray
         checking.refuse(int(position), elements, reason)
 
 
+def _refuse_bias(checking: Checking, topology: Topology, members: NDArray[np.intp], conditions: Operating) -> None:
+    """Reject stages that put a voltage at an input that a current drives."""
+    if not driven_by_voltage(topology):
+        for position in members[~np.isnan(conditions["v_in_dc"][members])]:
+            reason = f"the input of topology '{topology.name}' is a current; empty the cell"
+            checking.refuse(int(position), "v_in_dc", reason)
+
+
 def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:
     return replace(
         group,
@@ -309,4 +323,5 @@ def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:
         limits=group.limits[order],
         targets=group.targets[order],
         compared={column: cells.at(order) for column, cells in group.compared.items()},
+        operating=operating.at(group.operating, order),
     )

@@ -83,10 +83,13 @@ class Judge:
         Share of the required accuracy that a pass keeps free [%].
     basis : str
         The weakest evidence that a pass may rest on: `guaranteed` or `typical`.
+    phase_margin_min_deg : float or None
+        The least phase margin that a pass must have [degrees]; none: it is not looked at.
     """
 
     guard_band_pct: float
     basis: str
+    phase_margin_min_deg: float | None = None
 
 
 @dataclass(frozen=True)
@@ -99,6 +102,8 @@ class Results:
         Whether verdict tables show root-sum-square and Monte Carlo beside the worst case.
     samples : int
         Of each pair, for Monte Carlo.
+    stability : bool
+        Whether verdict tables show crossover frequency, phase margin and gain margin.
     """
 
     folder: Path
@@ -108,6 +113,7 @@ class Results:
     need: bool
     views: bool
     samples: int
+    stability: bool = False
 
 
 @dataclass(frozen=True)
@@ -214,6 +220,7 @@ def read(path: Path) -> Job:
             need=results["need"],
             views=results["views"],
             samples=results["samples"],
+            stability=results["stability"],
         ),
     )
 
@@ -258,4 +265,4 @@ def _heading(name: str, said: str | Mapping[str, str]) -> Heading:
 
 def _defaults(section: str) -> dict[str, Any]:
     properties = documents.schema("job")["properties"][section]["properties"]
-    return {key: value["default"] for key, value in properties.items()}
+    return {key: value.get("default") for key, value in properties.items()}

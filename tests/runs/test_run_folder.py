@@ -38,7 +38,7 @@ typical,,10000000,1G,1
 rejected,-1,,,
 """
 
-RESULTS = '[results]\nformats = ["csv", "parquet"]\nterms = true\nneed = true\nviews = true\n'
+RESULTS = '[results]\nformats = ["csv", "parquet"]\nterms = true\nneed = true\nviews = true\nstability = true\n'
 
 
 @pytest.fixture(scope="module")
@@ -196,7 +196,7 @@ def screened(write_job: JobWriter) -> Callable[[str], Path]:
 
 
 def test_rows_that_do_not_pass(run: Path, screened: Callable[[str], Path]) -> None:
-    found = verdicts(screened('rows = "not passing"\nterms = true\nneed = true\nviews = true'))
+    found = verdicts(screened('rows = "not passing"\nterms = true\nneed = true\nviews = true\nstability = true'))
     assert found == [row for row in verdicts(run) if row["verdict"] != "pass"]
     assert 0 < len(found) < 12
 

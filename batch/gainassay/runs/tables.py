@@ -15,7 +15,8 @@ from gainassay.forms.departures import DEPARTURES
 from gainassay.screen.blocks import Screened, accounts
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
-from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
+from gainassay.screen.stability import Margins
+from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, dominant_names
 from gainassay.screen.views import Views
 from gainassay.tables.rejects import PLACE, Reject
 
@@ -32,7 +33,11 @@ REPEATED = (
 
 
 def verdict_table(
-    screened: Screened, rows: str, terms: Sequence[str], needs: NDArray[np.float64] | None = None
+    screened: Screened,
+    rows: str,
+    terms: Sequence[str],
+    needs: NDArray[np.float64] | None = None,
+    stability: bool = False,
 ) -> pa.Table:
     """The rows of the verdict table that a chunk gives, ordered by stage and part.
 
@@ -44,6 +49,8 @@ def verdict_table(
         Terms of the account that get a column.
     needs : ndarray, shape (departures, stages, parts), optional
         What `need.needed` gives for the pairs, a column for each quantity.
+    stability : bool
+        Whether the margins get columns.
     """
     verdict = screened.judgement.verdict.ravel()
     is_kept = screened.eligible.ravel() & (rows == "all" or verdict != VERDICTS.index("pass"))
@@ -85,13 +92,15 @@ def verdict_table(
         "error_worst_ppm": number(outcome.error_worst.ravel()[kept] * PPM),
         "limit_ppm": number(sides.limits[stage] * PPM),
         "limit_used": number(screened.judgement.limit_used.ravel()[kept]),
-        "dominant_term": words(outcome.dominant.ravel()[kept], names),
+        "dominant_term": words(outcome.dominant.ravel()[kept], dominant_names(screened.group.form)),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
     if needs is not None:
         columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
     if screened.views is not None:
         columns |= {name: number(values.ravel()[kept]) for name, values in _views_columns(screened.views).items()}
+    if screened.margins is not None and stability:
+        columns |= {name: number(values.ravel()[kept]) for name, values in _margin_columns(screened.margins).items()}
     if terms:
         found = zip(names, accounts(screened), strict=True)
         values = {name: term.ravel()[kept] for name, term in found if name in terms}
@@ -108,6 +117,14 @@ def _views_columns(views: Views) -> dict[str, NDArray[np.float64]]:
         "error_rss_ppm": views.error_rss * PPM,
         "yield_mc": views.yield_mc,
         "yield_mc_u": views.yield_mc_u,
+    }
+
+
+def _margin_columns(margins: Margins) -> dict[str, NDArray[np.float64]]:
+    return {
+        "crossover_hz": margins.crossover_hz,
+        "phase_margin_deg": margins.phase_margin_deg,
+        "gain_margin_db": margins.gain_margin_db,
     }
 
 

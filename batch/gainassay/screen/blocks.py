@@ -23,12 +23,23 @@ from gainassay.screen.corners import (
     active_sets,
     elements_error,
     stage_side,
-    term_names,
 )
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, account, screen
 from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.signs import Reach, reach
-from gainassay.screen.verdicts import FAIL, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
+from gainassay.screen.stability import Dynamics, Looked, Margins, margins
+from gainassay.screen.verdicts import (
+    FAIL,
+    LIMITS,
+    PASS,
+    UNPROVEN,
+    VERDICTS,
+    Judgement,
+    Rules,
+    dominant_names,
+    judge,
+    with_phase_margin,
+)
 from gainassay.screen.views import Views, views
 
 Written = TypeVar("Written")
@@ -62,6 +73,8 @@ class Group:
         Place of each stage's pattern.
     eligible : ndarray of bool, shape (patterns, parts)
         The parts that the stages of a pattern are screened against.
+    dynamics : Dynamics or None
+        The parts over frequency; none where stability is not looked at.
     """
 
     form: Form
@@ -74,6 +87,13 @@ class Group:
     reach: Reach
     pattern: NDArray[np.intp]
     eligible: NDArray[np.bool_]
+    dynamics: Dynamics | None = None
+
+    def looked(self, chunk: Chunk) -> Looked:
+        """A chunk's stages and parts, as stability sees them."""
+        if self.dynamics is None:
+            raise ValueError("these parts have no dynamics")
+        return Looked(self.form, self.box.values[:, chunk.stages], self.dynamics.part(chunk.parts))
 
     def corner(self, code: int) -> tuple[int, int]:
         """The stage's and the part's corner that an outcome's `corner` stands for."""
@@ -99,6 +119,8 @@ class Screened:
         The pairs that were screened; of the others nothing is found, and what stands for them means nothing.
     views : Views or None
         On request.
+    margins : Margins or None
+        On request, or where verdicts need them.
     """
 
     chunk: Chunk
@@ -109,6 +131,7 @@ class Screened:
     outcome: Outcome
     judgement: Judgement
     views: Views | None = None
+    margins: Margins | None = None
 
 
 @dataclass(frozen=True)
@@ -147,6 +170,7 @@ def group(
     stages: tuple[NDArray[np.str_], StageBox],
     parts: tuple[NDArray[np.str_], PartSide],
     patterns: tuple[NDArray[np.intp], NDArray[np.bool_]],
+    dynamics: Dynamics | None = None,
 ) -> Group:
     """Stages of one form and all parts, each as names and numbers.
 
@@ -165,6 +189,7 @@ def group(
         reach=reach(form, side.limits, box.memberships()),
         pattern=patterns[0],
         eligible=patterns[1],
+        dynamics=dynamics,
     )
 
 
@@ -184,9 +209,14 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
 
 
 def screen_chunk(
-    groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK, samples: int | None = None
+    groups: Sequence[Group],
+    chunk: Chunk,
+    rules: Rules,
+    block: int = PAIRS_PER_BLOCK,
+    samples: int | None = None,
+    stability: bool = False,
 ) -> Screened:
-    """Screen one chunk, with both views if a number of samples is given."""
+    """Screen one chunk, with both views if a number of samples is given, and with the margins of stability."""
     one = groups[chunk.group]
     side = calibrated.stage_side if one.calibrated else stage_side
     stages = side(one.form, one.box.part(chunk.stages), one.reach)
@@ -201,9 +231,16 @@ def screen_chunk(
     judgement = judge(stages, parts, outcome, rules)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
+    of_loops = None
+    if stability or rules.phase_margin is not None:
+        of_loops = margins(one.looked(chunk), eligible)
+    if of_loops is not None and rules.phase_margin is not None:
+        judgement, below = with_phase_margin(judgement, of_loops, rules.phase_margin)
+        outcome.dominant[below] = dominant_names(one.form).index(LIMITS[0])
+        outcome.dominant_value[below] = np.nan
     bounded = np.full_like(outcome.error_worst, np.nan) if one.calibrated else outcome.error_worst
     found = None if samples is None else views(lot_of(one, chunk, stages, parts), bounded, samples)
-    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, found)
+    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, found, of_loops)
 
 
 def _screen(one: Group, stages: StageSide, parts: PartSide, block: int) -> Outcome:
@@ -273,7 +310,8 @@ def tally(screened: Screened) -> Tally:
     best = candidate.argmin(axis=1)
     found = best_rank < len(VERDICTS)
     # NO_TERM is -1, counted in the first place and left out.
-    by_place = np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(term_names(screened.group.form)) + 1)
+    names = dominant_names(screened.group.form)
+    by_place = np.bincount(screened.outcome.dominant.ravel() + 1, minlength=len(names) + 1)
     return Tally(
         chunk=screened.chunk,
         by_stage=is_verdict.sum(axis=2).T,
@@ -296,6 +334,7 @@ def run(
     block: int = PAIRS_PER_BLOCK,
     after_each: Callable[[int], None] | None = None,
     samples: int | None = None,
+    stability: bool = False,
 ) -> list[tuple[Written, Tally]]:
     """Screen all chunks as dask tasks and hand each to `keep`.
 
@@ -311,6 +350,8 @@ def run(
         Called with the number of pairs when a chunk is done.
     samples : int, optional
         Of each pair, for its views; none are looked at if not given.
+    stability : bool
+        Whether to look at the margins of stability even where no verdict needs them.
 
     Returns
     -------
@@ -323,7 +364,7 @@ def run(
     planned = chunks(groups)
 
     def task(place: int) -> tuple[Written, Tally]:
-        screened = screen_chunk(groups, planned[place], rules, block, samples)
+        screened = screen_chunk(groups, planned[place], rules, block, samples, stability)
         return keep(place, screened), tally(screened)
 
     def done(key: object, result: object, *_: object) -> None:

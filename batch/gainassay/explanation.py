@@ -17,12 +17,12 @@ from gainassay.forms.departures import DEPARTURES, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks, calibrated, monte_carlo, rss
-from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, dominant_names, lot_of
+from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, nominal_account
 from gainassay.screen.limits import PLACES, SIDES
 from gainassay.screen.monte_carlo import Lot
-from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules
+from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules, dominant_names
 from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.spreads import Spreads

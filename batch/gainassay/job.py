@@ -83,10 +83,13 @@ class Judge:
         Share of the required accuracy that a pass keeps free [%].
     basis : str
         The weakest evidence that a pass may rest on: `guaranteed` or `typical`.
+    phase_margin_min_deg : float or None
+        The least phase margin that a pass must have [degrees]; none: it is not looked at.
     """
 
     guard_band_pct: float
     basis: str
+    phase_margin_min_deg: float | None = None
 
 
 @dataclass(frozen=True)
@@ -101,6 +104,8 @@ class Results:
         Of each pair, for Monte Carlo.
     margins : bool
         Whether verdict tables show by how much each operating limit is kept.
+    stability : bool
+        Whether verdict tables show crossover frequency, phase margin and gain margin.
     """
 
     folder: Path
@@ -110,7 +115,8 @@ class Results:
     need: bool
     views: bool
     samples: int
-    margins: bool
+    margins: bool = False
+    stability: bool = False
 
 
 @dataclass(frozen=True)
@@ -218,6 +224,7 @@ def read(path: Path) -> Job:
             views=results["views"],
             samples=results["samples"],
             margins=results["margins"],
+            stability=results["stability"],
         ),
     )
 
@@ -262,4 +269,4 @@ def _heading(name: str, said: str | Mapping[str, str]) -> Heading:
 
 def _defaults(section: str) -> dict[str, Any]:
     properties = documents.schema("job")["properties"][section]["properties"]
-    return {key: value["default"] for key, value in properties.items()}
+    return {key: value.get("default") for key, value in properties.items()}

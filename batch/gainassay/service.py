@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from pathlib import Path
@@ -30,10 +30,12 @@ from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import PartSide, moving_terms
 from gainassay.screen.limits import Bounds
+from gainassay.screen.stability import Dynamics
 from gainassay.screen.verdicts import Rules
 from gainassay.tables import eligible
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
+from gainassay.tables.bandwidths import SECOND_POLE
 from gainassay.tables.compared import compared
 from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
@@ -68,7 +70,17 @@ class Prepared:
         )
         unserved = self.unserved()
         alone = (f"{self.stages.source}: no part is eligible for {_listed(unserved)}",) if unserved else ()
-        return (*self.stages.warnings, *self.parts.warnings, *unmodelled, *alone)
+        return (*self.stages.warnings, *self.parts.warnings, *unmodelled, *self._of_stability(), *alone)
+
+    def _of_stability(self) -> Iterator[str]:
+        """What the parts table lacks of what the job asks of stability."""
+        if not self.job.results.stability and self.job.judge.phase_margin_min_deg is None:
+            return
+        of_frequency = self.parts.bandwidths
+        if np.isnan(of_frequency.nominal()).all():
+            yield f"{self.parts.source}: no part has a gbw_typ or gbw_min; no stability is checked"
+        if not of_frequency.has_second_pole:
+            yield f"{self.parts.source}: there is no column for {SECOND_POLE}; it is not modelled"
 
     def pairs(self) -> int:
         """Pairs to screen."""
@@ -140,7 +152,7 @@ def prepare(path: Path, views: bool | None = None) -> Prepared:
 
 def groups_of(prepared: Prepared) -> tuple[Group, ...]:
     """The screen of all stages against the parts that may serve them, one group for each topology and condition."""
-    parts = prepared.parts
+    parts, dynamics = prepared.parts, dynamics_of(prepared.parts)
     return tuple(
         blocks.group(
             group.form,
@@ -148,6 +160,7 @@ def groups_of(prepared: Prepared) -> tuple[Group, ...]:
             (parts.names, parts_of(group, parts)),
             eligibility.patterns(),
             bounds_of(group, parts),
+            dynamics,
         )
         for group, eligibility in zip(prepared.stages.groups, prepared.eligibility, strict=True)
     )
@@ -160,6 +173,13 @@ def parts_of(group: StageGroup, parts: PartTable) -> PartSide:
         return corners.part_side(group.form, parts.nominal, limits, evidence)
     weakest = np.maximum(np.maximum(parts.evidence, evidence), parts.evidence_change)
     return calibrated.part_side(group.form, parts.worst, limits, parts.change, weakest)
+
+
+def dynamics_of(parts: PartTable) -> Dynamics:
+    """All parts over frequency, at their nominal figures."""
+    of_frequency = parts.bandwidths
+    pole = of_frequency.second_pole if of_frequency.has_second_pole else np.full(len(parts.names), np.inf)
+    return Dynamics(parts.nominal, of_frequency.nominal(), pole)
 
 
 def box_of(group: StageGroup) -> StageBox:
@@ -176,7 +196,8 @@ def bounds_of(group: StageGroup, parts: PartTable) -> Bounds:
 
 def rules_of(job: Job) -> Rules:
     """The decision rule that a job asks for."""
-    return Rules(guard_band=job.judge.guard_band_pct / 100.0, basis=EVIDENCE.index(job.judge.basis))
+    judge = job.judge
+    return Rules(judge.guard_band_pct / 100.0, EVIDENCE.index(judge.basis), judge.phase_margin_min_deg)
 
 
 def usable_cores() -> int:
@@ -210,7 +231,10 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
             return _write_verdicts(unfinished.folder, place, screened, rules, results, terms)
 
         samples = results.samples if results.views else None
-        done = blocks.run(groups, rules, keep, workers or usable_cores(), after_each=after_each, samples=samples)
+        cores = workers or usable_cores()
+        done = blocks.run(
+            groups, rules, keep, cores, after_each=after_each, samples=samples, stability=results.stability
+        )
         tallies = [tally for _, tally in done]
         stages = summaries.stage_summary(groups, tallies)
         rejects = [*prepared.stages.rejects, *prepared.parts.rejects]
@@ -260,7 +284,7 @@ def _write_verdicts(
     if results.rows == "none":
         return []
     needs = _needs(screened, rules) if results.need else None
-    table = run_tables.verdict_table(screened, results.rows, terms, needs, results.margins)
+    table = run_tables.verdict_table(screened, results.rows, terms, needs, results.margins, results.stability)
     # Named after the chunk's place, so that the order of the files is the order of the rows.
     name = f"verdicts/{place:05d}-{screened.group.form.topology}"
     return [write(folder, f"{name}.{kind}", table) for kind in results.formats]

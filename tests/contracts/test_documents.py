@@ -36,7 +36,7 @@ def faults(folder: Path, content: str | bytes, kind: str = "job") -> list[str]:
         ("[results]\nfoldre = 'x'", "in [results]: unknown key 'foldre'; did you mean 'folder'?"),
         ("[result]\nfolder = 'x'", "unknown key 'result'; did you mean 'results'?"),
         ("[assume]\na_lo = { value = 1 }", "in [assume]: unknown key 'a_lo'; did you mean 'a_ol'?"),
-        ("[judge]\nzzz = 1", "in [judge]: unknown key 'zzz'; the keys are guard_band_pct, basis"),
+        ("[judge]\nzzz = 1", "in [judge]: unknown key 'zzz'; the keys are guard_band_pct, basis, phase_margin_min_deg"),
     ],
 )
 def test_an_unknown_key_names_the_nearest(tmp_path: Path, more: str, wanted: str) -> None:

@@ -178,8 +178,11 @@ def output_impedance(topology: Topology, values: Values) -> mpmath.mpf:
     return voltages[first] - voltages[second]
 
 
-def return_ratio(topology: Topology, values: Values, amplifier: str) -> mpmath.mpf:
-    """What comes back, sign changed, of 1 V put in place of A_OL (v+ - v-) of one amplifier."""
+def return_ratio(topology: Topology, values: Values, amplifier: str) -> mpmath.mpf | mpmath.mpc:
+    """What comes back, sign changed, of 1 V put in place of A_OL (v+ - v-) of one amplifier.
+
+    `values` may be complex: impedances and open-loop gains at a frequency.
+    """
     held = dict.fromkeys(topology.input, 0) if topology.gain in ("voltage", "transconductance") else {}
     voltages = solve(topology, values, held=held, forced=amplifier)
     pins = next(a for a in topology.amplifiers if a.name == amplifier)

@@ -38,7 +38,8 @@ typical,,10000000,1G,1
 rejected,-1,,,
 """
 
-RESULTS = '[results]\nformats = ["csv", "parquet"]\nterms = true\nneed = true\nviews = true\nmargins = true\n'
+EVERYTHING = "terms = true\nneed = true\nviews = true\nmargins = true\nstability = true\n"
+RESULTS = f'[results]\nformats = ["csv", "parquet"]\n{EVERYTHING}'
 
 
 @pytest.fixture(scope="module")
@@ -196,7 +197,9 @@ def screened(write_job: JobWriter) -> Callable[[str], Path]:
 
 
 def test_rows_that_do_not_pass(run: Path, screened: Callable[[str], Path]) -> None:
-    found = verdicts(screened('rows = "not passing"\nterms = true\nneed = true\nviews = true\nmargins = true'))
+    found = verdicts(
+        screened('rows = "not passing"\nterms = true\nneed = true\nviews = true\nmargins = true\nstability = true')
+    )
     assert found == [row for row in verdicts(run) if row["verdict"] != "pass"]
     assert 0 < len(found) < 12
 

@@ -13,7 +13,7 @@ from gainassay.contracts.limits import LIMITS
 from gainassay.errors import InputError
 from gainassay.screen import blocks, limits
 from gainassay.screen.blocks import Screened
-from gainassay.screen.verdicts import REASONS, VERDICTS, Rules
+from gainassay.screen.verdicts import REASONS, VERDICTS, Rules, dominant_names
 
 if TYPE_CHECKING:
     from conftest import JobWriter
@@ -107,7 +107,7 @@ def test_the_first_limit_is_the_reason(write_job: JobWriter) -> None:
     found = screened(write_job, [{}], [{"swing_headroom_v": "6", "i_out_max_a": "1m", "a_ol_min": "2"}])
     assert outcome(found) == ("fail", "outside limit.output_swing")
     assert limits.named(int(found.kept.outside[0, 0])) == "output_swing, output_current"
-    assert blocks.dominant_names(found.group.form)[found.outcome.dominant[0, 0]] == "limit.output_swing"
+    assert dominant_names(found.group.form)[found.outcome.dominant[0, 0]] == "limit.output_swing"
     assert math.isnan(found.outcome.dominant_value[0, 0])
 
 

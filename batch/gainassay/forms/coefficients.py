@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,6 +18,9 @@ from gainassay.forms.form import Form, Ratio
 from gainassay.forms.slopes import Polynomial
 
 FloatArray = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
+AnyArray = NDArray[Any]
+"""Floats at 0 Hz, complex numbers at a frequency."""
 
 
 @dataclass(frozen=True)
@@ -29,8 +33,8 @@ class Pairs:
         Each pair may be scaled by a factor of its own.
     """
 
-    y: FloatArray
-    z: FloatArray
+    y: AnyArray
+    z: AnyArray
 
 
 @dataclass(frozen=True)
@@ -45,9 +49,9 @@ class Coefficients:
         n_k - d_k and d_k [1/unit of m_k].
     """
 
-    gain_ideal: FloatArray
-    contrasts: FloatArray
-    loadings: FloatArray
+    gain_ideal: AnyArray
+    contrasts: AnyArray
+    loadings: AnyArray
 
 
 @dataclass(frozen=True)
@@ -83,7 +87,7 @@ def at_dc(form: Form, values: FloatArray) -> Pairs:
         then stay far from overflow.
     """
     kinds = np.array(form.kinds)[:, None]
-    return _pairs(np.where(kinds == "capacitor", np.inf, np.where(kinds == "inductor", 0.0, values)))
+    return _scaled(np.where(kinds == "capacitor", np.inf, np.where(kinds == "inductor", 0.0, values)))
 
 
 def far_above(form: Form, values: FloatArray) -> Pairs:
@@ -94,10 +98,27 @@ def far_above(form: Form, values: FloatArray) -> Pairs:
     kinds = np.array(form.kinds)[:, None]
     is_reactive = values > 0.0
     capacitors, inductors = np.where(is_reactive, 0.0, np.inf), np.where(is_reactive, np.inf, 0.0)
-    return _pairs(np.where(kinds == "capacitor", capacitors, np.where(kinds == "inductor", inductors, values)))
+    return _scaled(np.where(kinds == "capacitor", capacitors, np.where(kinds == "inductor", inductors, values)))
 
 
-def _pairs(ohms: FloatArray) -> Pairs:
+def at_frequency(form: Form, values: FloatArray, hertz: FloatArray) -> Pairs:
+    """Pairs of a form's elements at s = j 2 pi f, scaled as `at_dc` scales them.
+
+    Parameters
+    ----------
+    values : ndarray, shape (elements, stages)
+        Resistance [ohm], capacitance [F] or inductance [H]; 0 and `inf` are what leaves an element out.
+    hertz : ndarray, shape (stages,)
+        Frequency of each stage [Hz], above 0.
+    """
+    kinds, omega = np.array(form.kinds)[:, None], 2.0 * np.pi * hertz
+    with np.errstate(divide="ignore"):
+        reactance = np.where(kinds == "capacitor", 1.0 / (omega * values), omega * values)
+    size = _scaled(np.where(kinds == "resistor", values, reactance))
+    return Pairs(y=size.y * np.where(kinds == "capacitor", 1j, 1.0), z=size.z * np.where(kinds == "inductor", 1j, 1.0))
+
+
+def _scaled(ohms: FloatArray) -> Pairs:
     """Pairs of resistances, 0 for a short and inf for an open circuit."""
     is_open = np.isinf(ohms)
     finite = np.where(is_open, 1.0, ohms)
@@ -119,7 +140,12 @@ def evaluate(form: Form, pairs: Pairs) -> Coefficients:
     pairs : Pairs
         The elements, in the order of `form.elements`.
     """
-    return Coefficients(gain_ideal(form, pairs), ratios(form.contrasts, pairs), ratios(form.loadings, pairs))
+    return Coefficients(gain_ideal(form, pairs), ratios(form.contrasts, pairs), loadings(form, pairs))
+
+
+def loadings(form: Form, pairs: Pairs) -> AnyArray:
+    """The loadings d_k alone [1/unit of m_k], shape (terms, stages)."""
+    return ratios(form.loadings, pairs)
 
 
 def occur(form: Form, pairs: Pairs) -> NDArray[np.bool_]:
@@ -152,7 +178,7 @@ def is_feedback_positive(form: Form, at: Coefficients) -> NDArray[np.bool_]:
     return np.asarray(np.logical_or.reduce(at.loadings[list(form.loops())] < 0.0, axis=0))
 
 
-def gain_ideal(form: Form, pairs: Pairs) -> FloatArray:
+def gain_ideal(form: Form, pairs: Pairs) -> AnyArray:
     """The ideal gain alone [gain unit], shape (stages,)."""
     return _ratio(form.gain_ideal, pairs)
 
@@ -174,12 +200,12 @@ def slopes(form: Form, pairs: Pairs) -> Slopes:
     return Slopes(relative, table(form.contrasts), table(form.loadings))
 
 
-def ratios(of: Sequence[Ratio], pairs: Pairs) -> FloatArray:
+def ratios(of: Sequence[Ratio], pairs: Pairs) -> AnyArray:
     """Ratios at given elements, shape (ratios, stages); not finite where elements make one infinite or undefined."""
     return np.array([_ratio(ratio, pairs) for ratio in of]).reshape(len(of), pairs.y.shape[1])
 
 
-def _ratio(ratio: Ratio, pairs: Pairs) -> FloatArray:
+def _ratio(ratio: Ratio, pairs: Pairs) -> AnyArray:
     powers = _all_powers(ratio, pairs)
     count = pairs.y.shape[1]
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -196,11 +222,11 @@ def _slopes(ratio: Ratio, pairs: Pairs) -> FloatArray:
         return np.asarray((rises - numerator / denominator * falls) / denominator)
 
 
-def _all_powers(ratio: Ratio, pairs: Pairs) -> list[list[FloatArray]]:
+def _all_powers(ratio: Ratio, pairs: Pairs) -> list[list[AnyArray]]:
     return [_powers(y, z, degree) for y, z, degree in zip(pairs.y, pairs.z, ratio.degrees(), strict=True)]
 
 
-def _powers(y: FloatArray, z: FloatArray, degree: int) -> list[FloatArray]:
+def _powers(y: AnyArray, z: AnyArray, degree: int) -> list[AnyArray]:
     """y**e * z**(degree - e) for e from 0 to degree, by multiplication: pow() may differ between machines."""
     powers = [np.ones_like(y)]
     for step in range(degree):
@@ -208,16 +234,16 @@ def _powers(y: FloatArray, z: FloatArray, degree: int) -> list[FloatArray]:
     return powers
 
 
-def _polynomial(polynomial: Polynomial, powers: list[list[FloatArray]], count: int) -> FloatArray:
+def _polynomial(polynomial: Polynomial, powers: list[list[AnyArray]], count: int) -> AnyArray:
     # One monomial after the other: a fixed order of summation, whatever the number of stages.
-    total = np.zeros(count)
+    total = np.zeros(count, powers[0][0].dtype)
     for product, _ in _products(polynomial, powers, count):
         total += product
     return total
 
 
 def _with_slopes(
-    polynomial: Polynomial, powers: list[list[FloatArray]], shape: tuple[int, ...]
+    polynomial: Polynomial, powers: list[list[AnyArray]], shape: tuple[int, ...]
 ) -> tuple[FloatArray, FloatArray]:
     """The polynomial and its z d/dz for each element's z; shapes (stages,) and (elements, stages)."""
     total, slopes = np.zeros(shape[1]), np.zeros(shape)
@@ -231,11 +257,11 @@ def _with_slopes(
 
 
 def _products(
-    polynomial: Polynomial, powers: list[list[FloatArray]], count: int
-) -> Iterator[tuple[FloatArray, tuple[int, ...]]]:
+    polynomial: Polynomial, powers: list[list[AnyArray]], count: int
+) -> Iterator[tuple[AnyArray, tuple[int, ...]]]:
     """Each monomial with its coefficient, and its exponents."""
     for coefficient, exponents in polynomial:
-        product = np.full(count, float(coefficient))
+        product = np.full(count, float(coefficient), powers[0][0].dtype)
         for table, exponent in zip(powers, exponents, strict=True):
             if len(table) > 1:
                 product *= table[exponent]

@@ -11,8 +11,8 @@ import pyarrow as pa
 
 from gainassay.contracts.limits import LIMITS
 from gainassay.runs.tables import PPM, summary_table
-from gainassay.screen.blocks import Group, Tally, dominant_names
-from gainassay.screen.verdicts import VERDICTS
+from gainassay.screen.blocks import Group, Tally
+from gainassay.screen.verdicts import VERDICTS, dominant_names
 
 
 @dataclass(frozen=True)

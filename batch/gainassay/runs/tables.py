@@ -14,10 +14,11 @@ from gainassay.contracts import tables
 from gainassay.contracts.limits import LIMITS
 from gainassay.forms.departures import DEPARTURES
 from gainassay.screen import limits
-from gainassay.screen.blocks import Screened, accounts, dominant_names
+from gainassay.screen.blocks import Screened, accounts
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
-from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS
+from gainassay.screen.stability import Margins
+from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, dominant_names
 from gainassay.screen.views import Views
 from gainassay.tables.rejects import PLACE, Reject
 
@@ -43,6 +44,7 @@ def verdict_table(
     terms: Sequence[str],
     needs: NDArray[np.float64] | None = None,
     margins: bool = False,
+    stability: bool = False,
 ) -> pa.Table:
     """The rows of the verdict table that a chunk gives, ordered by stage and part.
 
@@ -56,6 +58,8 @@ def verdict_table(
         What `need.needed` gives for the pairs, a column for each quantity.
     margins : bool
         Whether each operating limit gets a column.
+    stability : bool
+        Whether the margins get columns.
     """
     verdict = screened.judgement.verdict.ravel()
     is_kept = screened.eligible.ravel() & (rows == "all" or verdict != VERDICTS.index("pass"))
@@ -108,6 +112,8 @@ def verdict_table(
         bounds = screened.group.bounds.of(screened.chunk.stages, screened.chunk.parts)
         columns |= {f"margin_{name}": number(of.ravel()[kept]) for name, of in limits.margins(bounds)}
         columns["not_checked"] = words(screened.kept.unchecked.ravel()[kept].astype(np.int32), UNCHECKED)
+    if screened.margins is not None and stability:
+        columns |= {name: number(values.ravel()[kept]) for name, values in _margin_columns(screened.margins).items()}
     if terms:
         found = zip(names, accounts(screened), strict=True)
         values = {name: term.ravel()[kept] for name, term in found if name in terms}
@@ -124,6 +130,14 @@ def _views_columns(views: Views) -> dict[str, NDArray[np.float64]]:
         "error_rss_ppm": views.error_rss * PPM,
         "yield_mc": views.yield_mc,
         "yield_mc_u": views.yield_mc_u,
+    }
+
+
+def _margin_columns(margins: Margins) -> dict[str, NDArray[np.float64]]:
+    return {
+        "crossover_hz": margins.crossover_hz,
+        "phase_margin_deg": margins.phase_margin_deg,
+        "gain_margin_db": margins.gain_margin_db,
     }
 
 

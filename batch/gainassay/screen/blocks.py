@@ -29,7 +29,20 @@ from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, account
 from gainassay.screen.limits import Bounds, Kept
 from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.signs import Reach, reach
-from gainassay.screen.verdicts import FAIL, LIMIT_TERMS, PASS, UNPROVEN, VERDICTS, Judgement, Rules, judge
+from gainassay.screen.stability import Dynamics, Looked, Margins, margins
+from gainassay.screen.verdicts import (
+    FAIL,
+    LIMIT_TERMS,
+    PASS,
+    PHASE_MARGIN,
+    UNPROVEN,
+    VERDICTS,
+    Judgement,
+    Rules,
+    dominant_names,
+    judge,
+    with_phase_margin,
+)
 from gainassay.screen.views import Views, views
 
 Written = TypeVar("Written")
@@ -65,6 +78,8 @@ class Group:
         The parts that the stages of a pattern are screened against.
     bounds : Bounds
         The operating limits of all stages and parts.
+    dynamics : Dynamics or None
+        The parts over frequency; none where stability is not looked at.
     """
 
     form: Form
@@ -78,6 +93,13 @@ class Group:
     pattern: NDArray[np.intp]
     eligible: NDArray[np.bool_]
     bounds: Bounds
+    dynamics: Dynamics | None = None
+
+    def looked(self, chunk: Chunk) -> Looked:
+        """A chunk's stages and parts, as stability sees them."""
+        if self.dynamics is None:
+            raise ValueError("these parts have no dynamics")
+        return Looked(self.form, self.box.values[:, chunk.stages], self.dynamics.part(chunk.parts))
 
     def corner(self, code: int) -> tuple[int, int]:
         """The stage's and the part's corner that an outcome's `corner` stands for."""
@@ -105,6 +127,8 @@ class Screened:
         Which operating limits the pairs keep.
     views : Views or None
         On request.
+    margins : Margins or None
+        On request, or where verdicts need them.
     """
 
     chunk: Chunk
@@ -116,6 +140,7 @@ class Screened:
     judgement: Judgement
     kept: Kept
     views: Views | None = None
+    margins: Margins | None = None
 
 
 @dataclass(frozen=True)
@@ -159,6 +184,7 @@ def group(
     parts: tuple[NDArray[np.str_], PartSide],
     patterns: tuple[NDArray[np.intp], NDArray[np.bool_]],
     bounds: Bounds,
+    dynamics: Dynamics | None = None,
 ) -> Group:
     """Stages of one form and all parts, each as names and numbers.
 
@@ -178,6 +204,7 @@ def group(
         pattern=patterns[0],
         eligible=patterns[1],
         bounds=bounds,
+        dynamics=dynamics,
     )
 
 
@@ -197,9 +224,14 @@ def chunks(groups: Sequence[Group]) -> tuple[Chunk, ...]:
 
 
 def screen_chunk(
-    groups: Sequence[Group], chunk: Chunk, rules: Rules, block: int = PAIRS_PER_BLOCK, samples: int | None = None
+    groups: Sequence[Group],
+    chunk: Chunk,
+    rules: Rules,
+    block: int = PAIRS_PER_BLOCK,
+    samples: int | None = None,
+    stability: bool = False,
 ) -> Screened:
-    """Screen one chunk, with both views if a number of samples is given."""
+    """Screen one chunk, with both views if a number of samples is given, and with the margins of stability."""
     one = groups[chunk.group]
     side = calibrated.stage_side if one.calibrated else stage_side
     stages = side(one.form, one.box.part(chunk.stages), one.reach)
@@ -219,14 +251,16 @@ def screen_chunk(
     is_outside = outside != limits.NONE
     np.copyto(outcome.dominant, outside + np.int16(len(term_names(one.form))), where=is_outside)
     outcome.dominant_value[is_outside] = np.nan
+    of_loops = None
+    if stability or rules.phase_margin is not None:
+        of_loops = margins(one.looked(chunk), eligible)
+    if of_loops is not None and rules.phase_margin is not None:
+        judgement, below = with_phase_margin(judgement, of_loops, rules.phase_margin)
+        outcome.dominant[below] = dominant_names(one.form).index(PHASE_MARGIN)
+        outcome.dominant_value[below] = np.nan
     bounded = np.full_like(outcome.error_worst, np.nan) if one.calibrated else outcome.error_worst
     found = None if samples is None else views(lot_of(one, chunk, stages, parts), bounded, samples)
-    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, kept, found)
-
-
-def dominant_names(form: Form) -> tuple[str, ...]:
-    """What an outcome's `dominant` stands for once it is judged: the terms, then the operating limits."""
-    return (*term_names(form), *LIMIT_TERMS)
+    return Screened(chunk, one, stages, parts, eligible, outcome, judgement, kept, found, of_loops)
 
 
 def _screen(one: Group, stages: StageSide, parts: PartSide, block: int) -> Outcome:
@@ -328,6 +362,7 @@ def run(
     block: int = PAIRS_PER_BLOCK,
     after_each: Callable[[int], None] | None = None,
     samples: int | None = None,
+    stability: bool = False,
 ) -> list[tuple[Written, Tally]]:
     """Screen all chunks as dask tasks and hand each to `keep`.
 
@@ -343,6 +378,8 @@ def run(
         Called with the number of pairs when a chunk is done.
     samples : int, optional
         Of each pair, for its views; none are looked at if not given.
+    stability : bool
+        Whether to look at the margins of stability even where no verdict needs them.
 
     Returns
     -------
@@ -355,7 +392,7 @@ def run(
     planned = chunks(groups)
 
     def task(place: int) -> tuple[Written, Tally]:
-        screened = screen_chunk(groups, planned[place], rules, block, samples)
+        screened = screen_chunk(groups, planned[place], rules, block, samples, stability)
         return keep(place, screened), tally(screened)
 
     def done(key: object, result: object, *_: object) -> None:

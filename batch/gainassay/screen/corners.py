@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from gainassay.contracts.moves import MOVES
 from gainassay.forms import coefficients
-from gainassay.forms.coefficients import Coefficients, FloatArray
+from gainassay.forms.coefficients import AnyArray, Coefficients, FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox
@@ -248,12 +248,12 @@ def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDAr
     return PartSide(products(form, nominal), products(form, worst), worst, evidence)
 
 
-def products(form: Form, of_part: FloatArray) -> FloatArray:
+def products(form: Form, of_part: AnyArray) -> AnyArray:
     """The products m_k, shape (terms, ...), of departures of a part, in the order of `DEPARTURES`."""
     return monomials(form, by_amplifier(form, of_part))
 
 
-def by_amplifier(form: Form, of_part: FloatArray) -> FloatArray:
+def by_amplifier(form: Form, of_part: AnyArray) -> AnyArray:
     """Departures of a part, in the order of `DEPARTURES`, handed to every amplifier; in the order of the form's."""
     place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
     return of_part[[place[symbol] for _, symbol in form.departures]]
@@ -268,9 +268,9 @@ def figure_names(form: Form) -> tuple[str, ...]:
     )
 
 
-def monomials(form: Form, departures: FloatArray) -> FloatArray:
+def monomials(form: Form, departures: AnyArray) -> AnyArray:
     """The products m_k of departures; shape (terms, ...) from (the form's departures, ...)."""
-    found = np.ones((len(form.monomials), *departures.shape[1:]))
+    found = np.ones((len(form.monomials), *departures.shape[1:]), departures.dtype)
     for product_k, monomial in zip(found, form.monomials, strict=True):
         for departure in monomial:
             product_k *= departures[departure]

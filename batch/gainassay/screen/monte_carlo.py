@@ -143,9 +143,9 @@ def inside(lot: Lot, undecided: NDArray[np.bool_], samples: int) -> NDArray[np.i
     """
     found = np.zeros(undecided.shape, np.int64)
     per_stage = samples * (2 * len(lot.form.monomials) + 1)
-    for rows in _some(np.logical_or.reduce(undecided, axis=1), NUMBERS_PER_STRIP // per_stage):
+    for rows in some(np.logical_or.reduce(undecided, axis=1), NUMBERS_PER_STRIP // per_stage):
         stages = stage_samples(lot, rows, samples)
-        for columns in _some(np.logical_or.reduce(undecided[rows], axis=0), SAMPLES_PER_BLOCK // samples):
+        for columns in some(np.logical_or.reduce(undecided[rows], axis=0), SAMPLES_PER_BLOCK // samples):
             products = part_samples(lot, columns, samples)
             for place, row in enumerate(rows.tolist()):
                 here = undecided[row, columns]
@@ -155,7 +155,7 @@ def inside(lot: Lot, undecided: NDArray[np.bool_], samples: int) -> NDArray[np.i
     return found
 
 
-def _some(wanted: NDArray[np.bool_], count: int) -> Iterator[NDArray[np.intp]]:
+def some(wanted: NDArray[np.bool_], count: int) -> Iterator[NDArray[np.intp]]:
     """The places that are wanted, some at a time."""
     places = np.flatnonzero(wanted)
     step = max(1, count)

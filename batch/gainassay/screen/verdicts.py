@@ -15,11 +15,23 @@ The basis is `guaranteed` or `typical`; what is assumed or missing never proves 
 is left out of the account, as 0. Its true value could only widen the box, so that `fail` stands, and whatever
 is inside the limit is `unproven`. The operating limits are those of `contracts.limits`; one that is not checked proves
 nothing either way, and changes no verdict.
+
+Where a least phase margin is asked for, the margin has the last word:
+
+| phase margin | verdict so far | verdict | reason |
+|---|---|---|---|
+| below the least | any | fail | phase margin below the limit |
+| at least that, or the loop gain never reaches 1 | any | as it was | as it was |
+| not known, or a second pole that is missing was left out | pass | unproven | what is missing |
+| the same | fail, unproven | as it was | as it was |
+
+Margins rest on the part's nominal figures, whatever the basis: data sheets guarantee none of them. A second pole that
+is missing could only make the margin smaller.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,13 +40,16 @@ from gainassay.contracts.evidence import EVIDENCE
 from gainassay.contracts.limits import LIMITS
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES
-from gainassay.screen.corners import PartSide, StageSide
+from gainassay.forms.form import Form
+from gainassay.screen.corners import PartSide, StageSide, term_names
 from gainassay.screen.kernel import Outcome
+from gainassay.screen.stability import CHECKED, Margins
 
 VERDICTS = ("pass", "fail", "unproven")
 PASS, FAIL, UNPROVEN = range(3)
 
 UNBOUNDED_REASON, OUTSIDE, GUARD_BAND, INSIDE, LEANING, OUTSIDE_LIMIT = range(6)
+PHASE_MARGIN = "limit.phase_margin"
 LIMIT_TERMS = tuple(f"limit.{limit.name}" for limit in LIMITS)
 """What stands for the dominant term where a pair is outside an operating limit."""
 
@@ -61,10 +76,13 @@ class Rules:
         Share of the required accuracy that a pass keeps free.
     basis : int
         Place, in `EVIDENCE`, of the weakest evidence that a pass may rest on.
+    phase_margin : float or None
+        The least phase margin of a pass [deg]; none: it is not looked at.
     """
 
     guard_band: float = 0.0
     basis: int = 0
+    phase_margin: float | None = None
 
 
 @dataclass(frozen=True)
@@ -106,12 +124,24 @@ def _leaning(code: int) -> Leaning:
 LEANINGS = tuple(_leaning(code) for code in range(1 << BITS * len(DEPARTURES)))
 """Meaning of every packed leaning."""
 
-REASONS = tuple(
+DOUBTS = (
+    "",
+    "the phase margin is not checked: gbw missing",
+    "the phase margin leaves out a second pole: f_second_pole_hz missing",
+    "the phase margin is not checked: the loop gain stays above 1 up to 100 GHz",
+)
+"""Why a phase margin proves nothing, by `Margins.doubt`."""
+
+_OF_LEANING = tuple(
     f"{words} {leaning.leans_on}" if place == LEANING else words
     for place, words in enumerate(_REASONS)
     for leaning in LEANINGS
 )
-"""Reason in words, for each kind of reason and, within it, each packed leaning."""
+UNSTABLE = len(_OF_LEANING)
+"""Place of the reason of a phase margin below the limit; those of `DOUBTS` follow, but for the first."""
+
+REASONS = (*_OF_LEANING, "phase margin below the limit", *(f"inside the limit, but {doubt}" for doubt in DOUBTS[1:]))
+"""Reason in words, for each kind of reason and, within it, each packed leaning; then those of the phase margin."""
 
 _WEAKEST = np.array([EVIDENCE.index(leaning.evidence) for leaning in LEANINGS])
 
@@ -146,3 +176,23 @@ def judge(
         kind = np.where(outside >= 0, OUTSIDE_LIMIT + outside.astype(kind.dtype), kind)
     verdict = np.array([FAIL, FAIL, FAIL, PASS, UNPROVEN, *[FAIL] * len(LIMITS)], np.uint8)[kind]
     return Judgement(verdict, (kind * len(LEANINGS) + leaning).astype(np.int32), leaning, magnitude / limits)
+
+
+def dominant_names(form: Form) -> tuple[str, ...]:
+    """What a pair's dominant term may be: the terms of its account, the operating limits, the phase margin."""
+    return (*term_names(form), *LIMIT_TERMS, PHASE_MARGIN)
+
+
+def with_phase_margin(judgement: Judgement, margins: Margins, least: float) -> tuple[Judgement, NDArray[np.bool_]]:
+    """The verdicts once the phase margin has had its say, and the pairs that it fails.
+
+    Parameters
+    ----------
+    least : float
+        The least phase margin of a pass [deg].
+    """
+    below = margins.phase_margin_deg < least
+    doubtful = ~below & (margins.doubt != CHECKED) & (judgement.verdict == PASS)
+    verdict = np.where(below, np.uint8(FAIL), np.where(doubtful, np.uint8(UNPROVEN), judgement.verdict))
+    reason = np.where(below, UNSTABLE, np.where(doubtful, UNSTABLE + margins.doubt.astype(np.int32), judgement.reason))
+    return replace(judgement, verdict=verdict, reason=reason.astype(np.int32)), below

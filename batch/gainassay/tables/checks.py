@@ -181,7 +181,7 @@ def _by_name(names: pa.Array) -> NDArray[np.intp]:
         return np.asarray(pc.sort_indices(names)).astype(np.intp)
     ends = pc.min_max(names).as_py().values()
     # What all start with orders nothing.
-    start = len(os.path.commonprefix([(end or "").encode() for end in ends]))
+    start = len(os.path.commonprefix([(end or "").encode() for end in ends]))  # noqa: RUF071 -- these are no paths
     words = max(1, -(-(longest - start) // 8))
     own = np.ascontiguousarray(_padded(names, start + 8 * words)[:, start:])
     numbers = own.view(">u8").astype(np.uint64).T
@@ -198,8 +198,8 @@ def _as_numpy(names: pa.Array) -> NDArray[np.str_]:
     """Names as an array; those of ASCII alone by their bytes, which is faster."""
     longest = pc.max(pc.binary_length(names)).as_py() or 0
     if 0 < longest <= SHORT_NAME and pc.all(pc.string_is_ascii(names)).as_py():
-        return _padded(names, longest).view(f"S{longest}")[:, 0].astype(np.str_)
-    return names.to_numpy(zero_copy_only=False).astype(np.str_)
+        return np.asarray(_padded(names, longest).view(f"S{longest}")[:, 0].astype(np.str_))
+    return np.asarray(names.to_numpy(zero_copy_only=False).astype(np.str_))
 
 
 def _repeated(names: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:

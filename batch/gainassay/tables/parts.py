@@ -17,7 +17,8 @@ from gainassay.errors import InputError
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
 from gainassay.job import Source, StandIn
-from gainassay.tables import operating, sources
+from gainassay.tables import bandwidths, operating, sources
+from gainassay.tables.bandwidths import Bandwidths
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.operating import Operating
@@ -52,6 +53,8 @@ class PartTable:
     modelled : tuple[bool, ...]
         Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
         evidence GUARANTEED, since nothing is claimed about it.
+    bandwidths : Bandwidths
+        How the open-loop gain falls with frequency.
     compared : Mapping[str, Cells]
         The columns that rules compare with the stages'.
     operating : Operating
@@ -72,6 +75,7 @@ class PartTable:
     change: FloatArray
     evidence_change: NDArray[np.uint8]
     modelled: tuple[bool, ...]
+    bandwidths: Bandwidths
     compared: Mapping[str, Cells]
     operating: Operating
     rejects: tuple[Reject, ...]
@@ -117,6 +121,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
     checking = Checking.of(raw)
     checking.names("part")
     read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
+    of_frequency = bandwidths.read(checking)
     cells, limits = read_compared(checking, compared), operating.read_parts(checking)
     order, names = checking.in_order()
     rows = len(raw.rows) + len(raw.ragged)
@@ -135,6 +140,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         change=np.array([one.change[order] for one in read]),
         evidence_change=np.array([one.evidence_change[order] for one in read], np.uint8),
         modelled=tuple(one.modelled for one in read),
+        bandwidths=of_frequency.at(order),
         compared={name: column.at(order) for name, column in cells.items()},
         operating=operating.at(limits, order),
         rejects=checking.found(),

@@ -46,6 +46,12 @@ def test_a_table_of_another_country_becomes_a_job(here: CommandLineHere, write_j
         ("Input resistance (typ.)", ["1M", "2M"], "r_id_typ"),
         ("R_ID_MIN", ["1M"], "r_id_min"),
         ("Zout_max_ohm", ["75"], "r_o_max"),
+        ("Aol min [dB]", ["90", "95"], "a_ol_db_min"),
+        ("AOL_MIN_DB", ["90", "95"], "a_ol_db_min"),
+        ("AolMin (dB)", ["90", "95"], "a_ol_db_min"),
+        ("A_OL_MIN_HOT [dB]", ["90", "95"], "a_ol_db_min_hot"),
+        ("Gain bandwidth typ (MHz)", ["1"], None),
+        ("Common mode input resistance typ", ["1G"], None),
         ("Colour", ["red"], None),
     ],
 )
@@ -76,6 +82,11 @@ def test_what_is_in_doubt_is_no_part_of_the_proposal(
     assert header not in proposed(here, path)["parts"].get("columns", {})
     (line,) = [line for line in here("map", path).out.splitlines() if line.startswith("# in doubt: ")]
     assert doubt in line
+
+
+@pytest.mark.parametrize("name", ["a" * 5_000, "gone.csv"])
+def test_a_table_that_cannot_be_read_is_refused(here: CommandLineHere, name: str) -> None:
+    assert "Traceback" not in here("map", name, status=2).err
 
 
 def test_two_columns_that_may_be_the_same_are_both_in_doubt(here: CommandLineHere, tmp_path: Path) -> None:

@@ -43,7 +43,11 @@ CASES: dict[str, Case] = {
     "empty": ("", {}, "row 1 holds no column names"),
     "newlines only": ("\n\n\n", {}, "row 1 holds no column names"),
     "header only": ("part,a_ol_min\n", {}, "has no rows"),
-    "NUL bytes only": (b"\0" * 500, {}, "UTF-8"),
+    "header only, without a newline": ("part,a_ol_min", {}, "has no rows"),
+    "UTF-16 without a mark": (GOOD.encode("utf-16-le"), {}, 'say so in the job: encoding = "utf-16-le"'),
+    "UTF-32": (GOOD.encode("utf-32"), {}, 'say encoding = "utf-32"'),
+    "UTF-32, said so": (GOOD.encode("utf-32"), {"encoding": "utf-32"}, (BOTH, [])),
+    "NUL bytes only": (b"\0" * 500, {}, "a name holds a NUL"),
     # Headers
     "spaces about names": (" part , a_ol_min \na,100000\nb,200000\n", {}, (BOTH, [])),
     "quoted names": ('"part","a_ol_min"\na,100000\nb,200000\n', {}, (BOTH, [])),

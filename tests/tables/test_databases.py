@@ -19,7 +19,7 @@ import pytest
 from gainassay.contracts import tables
 from gainassay.errors import InputError
 from gainassay.job import Source
-from gainassay.tables import databases, sources
+from gainassay.tables import databases, parts, sources
 from gainassay.tables.raw import RawTable
 
 if TYPE_CHECKING:
@@ -81,6 +81,16 @@ def test_odd_names_of_tables_and_columns(river: Path) -> None:
 def test_a_query_may_hold_marks_that_drivers_use_for_parameters(river: Path) -> None:
     query = "select part, ':x' as a, '%s' as b, '?' as c, 10 % 3 as d from parts where part like '%1'"
     assert cells(read(river, query=query)) == {"part": ["amp-1"], "a": [":x"], "b": ["%s"], "c": ["?"], "d": [1.0]}
+
+
+def test_whole_numbers_as_names_keep_all_their_digits(tmp_path: Path) -> None:
+    numbers = [10**10, 2**53, 2**53 + 1]
+    with sqlite3.connect(tmp_path / "a.db") as connection:
+        connection.execute("create table parts (part integer, a_ol_min real)")
+        connection.executemany("insert into parts values (?, 1e5)", [(number,) for number in numbers])
+    connection.close()
+    found = parts.load(Source("parts", str(tmp_path / "a.db"), table="parts"), {})
+    assert found.names.tolist() == [str(number) for number in numbers]
 
 
 def test_text_and_numbers_in_one_column_of_sqlite(tmp_path: Path) -> None:
@@ -265,7 +275,7 @@ def test_odd_names_and_types_of_postgresql(address: str) -> None:
         "on": "2031-02-03",
         "ok": "True",
         "n": "NaN",
-        "big": 9007199254740992.0,
+        "big": 9007199254740993,
     }
     assert {name: reason.split(",")[0] for name, flaws in found.flaws.items() for reason in flaws.values()} == {
         "tags": "is a list",
@@ -325,6 +335,8 @@ def test_a_million_rows(address: str) -> None:
         ("oracle+cx_oracle://localhost/river", "its driver is not installed"),
         ("sqlite:///river.sqlite", "name the SQLite file itself"),
         ("://", "is no address of a database"),
+        ("postgresql://gauge:x@s3cret@localhost/river", "write it as %40"),
+        ("postgresql:///gauge:s3cret@localhost/river", "write it as %40"),
     ],
 )
 def test_an_address_that_cannot_be(at: str, words: str) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import datetime
 import decimal
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -150,8 +151,39 @@ def test_a_header_alone_is_a_table_without_rows(tmp_path: Path) -> None:
     assert cells(read_csv(tmp_path, b"a,b\n")) == {"a": [], "b": []}
 
 
-def test_a_header_without_its_newline_is_refused(tmp_path: Path) -> None:
-    assert refusal(tmp_path, b"a,b")
+def test_a_header_without_its_newline_is_a_table_without_rows(tmp_path: Path) -> None:
+    assert cells(read_csv(tmp_path, b"a,b")) == {"a": [], "b": []}
+
+
+@pytest.mark.parametrize("at", ["", "/*.csv"])
+def test_a_link_to_nothing_is_not_passed_over(tmp_path: Path, at: str) -> None:
+    (tmp_path / "a.csv").write_text("part,a_ol_min\na,1\n")
+    (tmp_path / "b.csv").symlink_to("gone.csv")
+    with pytest.raises(InputError, match=r"b\.csv: there is no such file"):
+        sources.read(Source("parts", f"{tmp_path}{at}"), {})
+
+
+def test_a_folder_that_cannot_be_looked_into_is_not_passed_over(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (tmp_path / "a.csv").write_text("part,a_ol_min\na,1\n")
+    (tmp_path / "locked").mkdir()
+    scandir = os.scandir
+
+    def locked(path: Any) -> Any:
+        if str(path).endswith("locked"):
+            raise PermissionError(13, "Permission denied", str(path))
+        return scandir(path)
+
+    monkeypatch.setattr(os, "scandir", locked)
+    with pytest.raises(InputError, match="Permission denied"):
+        sources.read(Source("parts", str(tmp_path)), {})
+
+
+def test_a_pipe_is_not_waited_for(tmp_path: Path) -> None:
+    os.mkfifo(tmp_path / "table.csv")
+    with pytest.raises(InputError, match="is no file"):
+        sources.read(Source("parts", str(tmp_path / "table.csv")), {})
 
 
 @pytest.mark.parametrize("name", ["table.xls", "table", "table.csv.gz", "table.txt"])

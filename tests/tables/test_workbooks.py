@@ -96,6 +96,11 @@ def put(cell: str, value: Any) -> Fill:
     return lambda _, sheet: sheet.__setitem__(cell, value)
 
 
+def show(cell: str, number_format: str) -> Fill:
+    """Gives a cell a format for its number."""
+    return lambda _, sheet: setattr(sheet[cell], "number_format", number_format)
+
+
 @pytest.mark.parametrize(
     ("fill", "column", "row", "words"),
     [
@@ -107,6 +112,11 @@ def put(cell: str, value: Any) -> Fill:
         (put("A3", datetime.date(2031, 2, 3)), "part", 3, "is a date"),
         (put("B3", datetime.time(4, 7)), "a_ol_min", 3, "is a date"),
         (put("B3", True), "a_ol_min", 3, "is not a number"),
+        (show("B3", "0%"), "a_ol_min", 3, "is shown with a sign"),
+        (show("B3", "0.00%"), "a_ol_min", 3, "is shown with a sign"),
+        (show("B3", '0.0" V/mV"'), "a_ol_min", 3, "is shown with a sign"),
+        (show("B3", "0.0\\k"), "a_ol_min", 3, "is shown with a sign"),
+        (show("B3", "#,##0,"), "a_ol_min", 3, "is shown with a sign"),
         (put("B3", "1,5"), "a_ol_min", 3, "has a comma"),
         (put("B3", "x" * 30_000), "a_ol_min", 3, "is not a number"),
     ],
@@ -119,6 +129,11 @@ def test_a_cell_that_is_no_plain_value(tmp_path: Path, fill: Fill, column: str, 
     assert (reject.column, reject.row) == (column, row)
     assert words in reject.reason
     assert checking.good().tolist() == [True, False, True]
+
+
+@pytest.mark.parametrize("plain", ["0.00", "#,##0.00", "0.00E+00", "@", '_-* #,##0.00\\ "-"??_-', "[Red]0.0"])
+def test_a_number_may_be_shown_with_fewer_digits_or_in_groups(tmp_path: Path, plain: str) -> None:
+    assert not read(write(tmp_path / "a.xlsx", ROWS, show("B3", plain))).flaws
 
 
 def test_merged_cells_are_refused_each_by_its_place(tmp_path: Path) -> None:

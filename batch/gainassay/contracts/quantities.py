@@ -16,6 +16,9 @@ from gainassay.contracts.units import misread, notation, power_of_ten, spelled
 SMALLEST, LARGEST = 1e-60, 1e60
 """Magnitudes beyond which nothing is measured, and products of a few numbers would overflow."""
 
+EXACT = 1 << 53
+"""Below this every whole number is a double of its own."""
+
 CELLS_AT_A_TIME = 1 << 16
 """A block of cells with one that is no plain number is looked at text by text; the others are not."""
 
@@ -104,9 +107,18 @@ class Writing:
     decimal: str = "."
 
 
+def in_text(cells: pa.Array) -> pa.Array:
+    """Cells as text: a whole number by its digits, as names are written, another number as its shortest text."""
+    text = cells.cast(pa.string())
+    if not pa.types.is_floating(cells.type):
+        return text
+    whole = pc.and_(pc.equal(pc.floor(cells), cells), pc.less(pc.abs(cells), float(EXACT)))
+    return pc.coalesce(pc.if_else(whole, cells, None).cast(pa.int64()).cast(pa.string()), text)
+
+
 def text_of(cells: pa.Array) -> pa.Array:
     """Cells as text without surrounding white space; what is null becomes empty."""
-    return pc.utf8_trim_whitespace(pc.fill_null(cells.cast(pa.string()), ""))
+    return pc.utf8_trim_whitespace(pc.fill_null(in_text(cells), ""))
 
 
 def numbers(cells: pa.Array, column: Column, writing: Writing = Writing()) -> Numbers:

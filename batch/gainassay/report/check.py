@@ -79,10 +79,15 @@ def _rejects(rejects: tuple[Reject, ...]) -> list[str]:
     several = len({reject.source for reject in rejects}) > 1
     header = ["  row", "name", "column", "value", "reason", *(["source"] if several else [])]
     rows = [
-        [f"  {r.row}", r.name, r.column or "(whole row)", repr(r.value), r.reason, *([r.source] if several else [])]
+        [f"  {r.row}", _printable(r.name), r.column or "(whole row)", repr(r.value), r.reason, *([r.source] * several)]
         for r in rejects[:MOST_LISTED]
     ]
     return table(header, rows) + _more(len(rejects) - MOST_LISTED, "cells")
+
+
+def _printable(name: str) -> str:
+    """A name, which may have been rejected for what it holds."""
+    return name if name.isprintable() else repr(name)
 
 
 def _more(count: int, what: str) -> list[str]:

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from gainassay.contracts import tables
 from gainassay.contracts.documents import nearest
-from gainassay.contracts.quantities import Numbers, Writing, numbers, text_of
+from gainassay.contracts.quantities import Numbers, Writing, in_text, numbers, text_of
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.job import Heading
@@ -91,9 +91,9 @@ class Checking:
         """What stands in some cells of a column; nothing where the table has no such column."""
         if column not in self.raw.columns:
             return [""] * len(places)
-        return [
-            "" if value is None else shown(str(value)) for value in self.raw.columns[column].take(places).to_pylist()
-        ]
+        cells = self.raw.columns[column].take(places)
+        values = (in_text(cells) if is_number(cells) else cells).to_pylist()
+        return ["" if value is None else shown(str(value)) for value in values]
 
     def cell(self, column: str, position: int) -> str:
         """What stands in a cell; nothing where the table has no such column."""

@@ -20,8 +20,13 @@ from gainassay.tables.rejects import Reject
 BLOCK = 1 << 22
 """Bytes that the reader takes at a time; a row may be that long."""
 
-MARKS = {codecs.BOM_UTF16_LE: "utf-16", codecs.BOM_UTF16_BE: "utf-16"}
-"""Byte-order marks of other encodings than UTF-8."""
+MARKS = {
+    codecs.BOM_UTF32_LE: "utf-32",
+    codecs.BOM_UTF32_BE: "utf-32",
+    codecs.BOM_UTF16_LE: "utf-16",
+    codecs.BOM_UTF16_BE: "utf-16",
+}
+"""Byte-order marks of other encodings than UTF-8, the longer ones first: one begins as a shorter one does."""
 
 
 def read(path: Path, source: Source) -> Piece:
@@ -34,7 +39,9 @@ def read(path: Path, source: Source) -> Piece:
     """
     encoding, header_row = _encoding(path, source.encoding), source.header_row or 1
     sha256, quotes = _scanned(path, encoding)
-    header = _header(path, encoding, source.delimiter or ",", header_row)
+    header, has_more = _header(path, encoding, source.delimiter or ",", header_row)
+    if not has_more:
+        return Piece(str(path), _nothing_under(header), np.array([], np.int64), sha256)
     table, ragged = _body(path, header, encoding, source.delimiter or ",", header_row)
     if quotes % 2 and table.num_rows and any("\n" in (column[-1].as_py() or "") for column in table.columns):
         row = header_row + table.num_rows + len(ragged)
@@ -61,6 +68,10 @@ def _encoding(path: Path, name: str) -> str:
         return codecs.lookup(name or "utf-8").name
     except (LookupError, ValueError):
         raise InputError(f"{path}: '{name}' is no encoding of text; use utf-8, utf-16, cp1252 ...") from None
+
+
+def _nothing_under(header: list[str]) -> dict[str, pa.Array]:
+    return {name: pa.array([], pa.string()) for name in header if name}
 
 
 def _body(
@@ -134,10 +145,8 @@ def _scanned(path: Path, encoding: str) -> tuple[str, int]:
     try:
         with path.open("rb") as file:
             while chunk := file.read(1 << 20):
-                if not place and encoding == "utf-8" and chunk[:2] in MARKS:
-                    raise InputError(
-                        f'{path}: is not UTF-8 text but UTF-16; say encoding = "utf-16" in the job, and the delimiter'
-                    )
+                if not place and encoding == "utf-8":
+                    _refuse_other_marks(path, chunk)
                 digest.update(chunk)
                 quotes += decoder.decode(chunk).count('"')
                 place += len(chunk)
@@ -151,11 +160,20 @@ def _scanned(path: Path, encoding: str) -> tuple[str, int]:
     return digest.hexdigest(), quotes
 
 
-def _header(path: Path, encoding: str, delimiter: str, header_row: int) -> list[str]:
-    """Names of the columns, without surrounding white space; empty where a column has none."""
+def _refuse_other_marks(path: Path, start: bytes) -> None:
+    other = next((name for mark, name in MARKS.items() if start.startswith(mark)), "")
+    if other:
+        raise InputError(
+            f'{path}: is not UTF-8 text but {other.upper()}; say encoding = "{other}" in the job, and the delimiter'
+        )
+
+
+def _header(path: Path, encoding: str, delimiter: str, header_row: int) -> tuple[list[str], bool]:
+    """Names of the columns, without surrounding white space, empty where a column has none; whether more follows."""
     try:
         with path.open(encoding="utf-8-sig" if encoding == "utf-8" else encoding, newline="") as file:
             above = list(islice(csv.reader(file, delimiter=delimiter), header_row))
+            has_more = bool(file.read(1))
     except csv.Error as error:
         raise InputError(f"{path}: row {header_row}: cannot be read as CSV: {error}") from None
     header = [name.strip() for name in above[-1]] if len(above) == header_row else []
@@ -167,5 +185,10 @@ def _header(path: Path, encoding: str, delimiter: str, header_row: int) -> list[
                 f"{path}: row {row}: a cell that runs over the end of the line stands in or above the header; "
                 "close or remove the quote"
             )
+    if any("\0" in name for name in header):
+        raise InputError(
+            f"{path}: row {header_row}: a name holds a NUL; if the file is UTF-16, say so in the job: "
+            'encoding = "utf-16-le"'
+        )
     refuse_repeated(str(path), [name for name in header if name])
-    return header
+    return header, has_more

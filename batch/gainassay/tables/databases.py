@@ -109,6 +109,9 @@ def _url(source: Source) -> URL:
         url = make_url(os.environ[variable] if variable else source.at)
     except (ArgumentError, ValueError):
         raise InputError(f"{where}: is no address of a database; wanted is DATABASE://HOST/NAME") from None
+    if "@" in f"{url.host}{url.database}":
+        # Part of a password would pass for the host, and be shown.
+        raise InputError(f"{where}: the address has an '@' too many; in a name or password write it as %40")
     if not variable and (url.password is not None or url.query):
         raise InputError(
             f"{where}: an address in a job holds no password and no parameters, for manifests copy the job; put "

@@ -117,17 +117,25 @@ def propose(source: Source, known: Mapping[str, Column]) -> Proposal:
 def _with_dialect(source: Source) -> Source:
     """A source with delimiter and encoding of its text, where they are not said and not the usual ones."""
     path = Path(source.at)
-    if is_address(source.at) or source.table or source.query or not path.is_file():
-        return source
     kind = sources.KINDS.get(path.suffix.lower(), "csv")
-    if kind != "csv":
+    if is_address(source.at) or source.table or source.query or kind != "csv":
         return source
-    with path.open("rb") as file:
-        start = file.read(LOOKED_AT)
+    start = _start(path)
     encoding = source.encoding or _encoding(start)
     text = start.decode(encoding or "utf-8", errors="replace")
     delimiter = source.delimiter or _delimiter(text.splitlines()[:-1] or [text])
     return replace(source, encoding=encoding, delimiter="" if delimiter == "," else delimiter)
+
+
+def _start(path: Path) -> bytes:
+    """How a file begins; nothing of what is none or cannot be read, for then its reader says so."""
+    try:
+        if not path.is_file():
+            return b""
+        with path.open("rb") as file:
+            return file.read(LOOKED_AT)
+    except (OSError, ValueError):
+        return b""
 
 
 def _encoding(start: bytes) -> str:
@@ -165,13 +173,14 @@ def _guess(theirs: str, table: RawTable, source: Source, known: Mapping[str, Col
     quantity = _quantity(plain, source.section, known)
     if not quantity:
         return Guess(theirs, "")
-    limit = next((name for name, words in _words()["limits"].items() if _fits(plain, words)), "")
-    columns = [c for c in known.values() if c.name in (quantity, f"{quantity}_db") or _is_limit_of(quantity, c.name)]
+    limits = {} if quantity in known else _words()["limits"]
+    limit = next((name for name, words in limits.items() if _fits(plain, words)), "")
+    columns = [c for c in known.values() if quantity in (c.name, c.in_place_of) or _is_limit_of(quantity, c.name)]
     named = [column for column in columns if column.name.endswith(f"_{limit}")] if limit else columns
     named = [column for column in named if not unit or power_of_ten(unit, column.unit) is not None] or named or columns
     column = next((c for c in named if c.name.endswith("_typ")), named[0])
     doubts = []
-    if len({c.name for c in columns}) > 1 and not limit:
+    if quantity not in known and len(columns) > 1 and not limit:
         doubts.append("its header says neither min nor typ nor max")
     if limit and not column.name.endswith(f"_{limit}"):
         doubts.append(f"there is no column for its {limit}")
@@ -217,10 +226,11 @@ def _quantity(words: str, section: str, known: Mapping[str, Column]) -> str:
     fitting = [
         (max((len(word) for word in found["words"] if _fits(words, [word])), default=0), name)
         for name, found in _words()[section].items()
-        if name in known or any(_is_limit_of(name, column) for column in known)
     ]
     length, name = max(fitting, default=(0, ""))
-    return name if length else ""
+    # What fits best may be a quantity that no column is for: its header is none of a lesser fit either.
+    is_read = name in known or any(_is_limit_of(name, column) for column in known)
+    return name if length and is_read else ""
 
 
 def _fits(words: str, wanted: Sequence[str]) -> bool:

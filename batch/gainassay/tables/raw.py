@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from bisect import bisect_right
 from collections.abc import Iterable, Mapping, Sequence
+from contextlib import suppress
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -12,6 +13,7 @@ import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
 
+from gainassay.contracts.quantities import in_text
 from gainassay.errors import InputError
 from gainassay.job import Heading
 from gainassay.tables.rejects import Reject
@@ -137,6 +139,9 @@ def plain_type(cells: pa.Array) -> pa.Array:
 def array_of(values: Sequence[Any]) -> pa.Array:
     """A column of Python's values: numbers if all are, else text, a number as its shortest."""
     kinds = set(map(type, values)) - {type(None)}
+    if kinds == {int}:
+        with suppress(OverflowError, pa.ArrowInvalid):
+            return pa.array(values, pa.int64())
     if kinds and kinds <= {int, float}:
         return pa.array(values if kinds == {float} else [value and float(value) for value in values], pa.float64())
     if kinds == {str}:
@@ -230,9 +235,9 @@ def one_under_the_other(source: str, name: str, parts: Iterable[pa.Array]) -> pa
     parts = list(parts)
     types = {cells.type for cells in parts}
     if len(types) > 1:
-        common = pa.float64() if all(is_number(cells) for cells in parts) else pa.string()
+        numeric = all(is_number(cells) for cells in parts)
         try:
-            parts = [cells.cast(common, safe=False) for cells in parts]
+            parts = [cells.cast(pa.float64(), safe=False) if numeric else in_text(cells) for cells in parts]
         except pa.ArrowException:
             raise InputError(
                 f"its files hold {' and '.join(sorted(map(str, types)))}, which do not go together"

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Callable, Mapping
+import os
+from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
 
 import numpy as np
@@ -110,14 +111,24 @@ def _paths(at: str) -> list[Path]:
     path = Path(at)
     try:
         if path.is_dir():
-            return _all_of_a_kind(at, [p for p in path.rglob("*") if _is_table(p.relative_to(path)) and p.is_file()])
+            return _all_of_a_kind(at, [p for p in _under(path) if _is_table(p.relative_to(path))])
         if not path.exists() and any(mark in at for mark in "*?["):
             start = Path(path.anchor)
             pattern = str(path.relative_to(start)) if path.anchor else at
-            return _all_of_a_kind(at, [p for p in start.glob(pattern) if p.is_file()])
+            return _all_of_a_kind(at, [p for p in start.glob(pattern) if not p.is_dir()])
     except (OSError, ValueError, NotImplementedError) as error:
         raise InputError(f"{at}: cannot be read: {getattr(error, 'strerror', None) or error}") from None
     return [path]
+
+
+def _under(folder: Path) -> Iterator[Path]:
+    """All files of a folder and of those in it; one that cannot be looked into is a fault, and not passed over."""
+
+    def fail(error: OSError) -> None:
+        raise error
+
+    for home, _, names in os.walk(folder, onerror=fail):
+        yield from (Path(home, name) for name in names)
 
 
 def _is_table(path: Path) -> bool:
@@ -136,6 +147,9 @@ def _all_of_a_kind(at: str, paths: list[Path]) -> list[Path]:
 
 def _must_be_readable(path: Path) -> None:
     try:
+        if path.exists() and not path.is_file():
+            # A pipe or device would be waited for, or never end.
+            raise InputError(f"{path}: is no file; save the table as one")
         with path.open("rb"):
             return
     except FileNotFoundError:

@@ -32,8 +32,13 @@ NO_VALUES = {
     "f": "is a formula, and formulas are not evaluated; paste its value in its place",
     "e": "is a spreadsheet's error; mend it there",
     "d": "is a date, into which spreadsheets turn numbers and names; write what was meant, as text",
+    "%": "is shown with a sign, word or scale that its value does not hold; give the cell a plain number format",
 }
 """By the kind of a cell: why it is no plain value."""
+
+
+SHOWN_OTHERWISE = re.compile(r'%|"[^"]*[^\W\d_][^"]*"|\\[^\W\d_]|[0#?],+(?![0#?,])')
+"""Formats of numbers, such as `0%`, `0.0" kohm"` or `0.0,`, by which 0.01 is shown as 1 or 5 as a resistance."""
 
 
 def read(path: Path, source: Source) -> Piece:
@@ -82,7 +87,7 @@ def _read(path: Path, file: BufferedReader, source: Source) -> Piece:
         rows = sheet.iter_rows()
         header_row = source.header_row or 1
         header = _header(where, rows, header_row)
-        columns, flaws = _body(where, rows, header, header_row)
+        columns, flaws = _body(where, rows, header, header_row, _shown_otherwise(book))
         merged = list(_merged(path, sheet))
     finally:
         book.close()
@@ -122,7 +127,7 @@ def _header(where: str, rows: Iterator[tuple[Any, ...]], header_row: int) -> lis
 
 
 def _body(
-    where: str, rows: Iterator[tuple[Any, ...]], header: list[str], header_row: int
+    where: str, rows: Iterator[tuple[Any, ...]], header: list[str], header_row: int, shown_otherwise: frozenset[int]
 ) -> tuple[list[list[Any]], dict[str, dict[int, str]]]:
     """Cells by column, and what is wrong with those that are no plain values."""
     columns: list[list[Any]] = [[] for _ in header]
@@ -137,18 +142,38 @@ def _body(
             if place >= len(header) or not header[place]:
                 if str(value).strip():
                     raise InputError(
-                        f"{where}: cell {cell.coordinate} is filled, but its column has no name in row {header_row}"
+                        f"{where}: cell {cell.coordinate} is filled, but its column has no name in row {header_row}; "
+                        "name it, or say header_row = ... where the names stand further down"
                     )
                 continue
             columns[place].extend([None] * (position - len(columns[place])))
             columns[place].append(_value(value))
-            reason = NO_VALUES.get("d" if isinstance(value, DATES) else cell.data_type)
+            reason = NO_VALUES.get(_kind(cell, value, shown_otherwise))
             if reason:
                 flaws.setdefault(header[place], {})[position] = reason
     count = max(map(len, columns))
     for column in columns:
         column.extend([None] * (count - len(column)))
     return columns, flaws
+
+
+def _shown_otherwise(book: Any) -> frozenset[int]:
+    """The styles, by their place in a workbook, whose numbers do not look like what is held."""
+    from openpyxl.styles.numbers import BUILTIN_FORMATS, BUILTIN_FORMATS_MAX_SIZE
+
+    formats = {**BUILTIN_FORMATS, **dict(enumerate(book._number_formats, start=BUILTIN_FORMATS_MAX_SIZE))}
+    return frozenset(
+        place
+        for place, style in enumerate(book._cell_styles)
+        if SHOWN_OTHERWISE.search(formats.get(style.numFmtId, ""))
+    )
+
+
+def _kind(cell: Any, value: Any, shown_otherwise: frozenset[int]) -> str:
+    """What a cell is, as in `NO_VALUES`, or as the library says."""
+    if isinstance(value, DATES):
+        return "d"
+    return "%" if cell.data_type == "n" and cell._style_id in shown_otherwise else str(cell.data_type)
 
 
 def _value(value: Any) -> Any:

@@ -67,7 +67,11 @@ held-tracks,non_inverting,1k,10k,,,2k,0.2,1,25,,0.02,-40,85,n,,0.1,3,,yes,3
 held-cool,follower,,,,,,0.002,,,,,,,,,,,,yes,2
 nobody,inverting,1k,10k,,,2k,0.5,0.1,,,,,,,,,,,,9
 """
-HOT = ({}, {"a_ol_change_pct": "5", "r_o_change_pct": "0"}, {"a_ol_min_hot": "20000", "r_id_min_hot": "50k"})
+HOT: tuple[dict[str, str], ...] = (
+    {},
+    {"a_ol_change_pct": "5", "r_o_change_pct": "0"},
+    {"a_ol_min_hot": "20000", "r_id_min_hot": "50k"},
+)
 
 
 @pytest.fixture(autouse=True)

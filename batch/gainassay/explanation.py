@@ -145,7 +145,7 @@ class Share:
 
 @dataclass(frozen=True)
 class ViewFigures:
-    """The error as root-sum-square and Monte Carlo show it. nan: no finite bound.
+    """The error as root-sum-square and Monte Carlo show it. nan: no finite bound, or the stage is calibrated.
 
     Attributes
     ----------
@@ -181,6 +181,8 @@ class Explanation:
 
     Attributes
     ----------
+    calibrated : bool
+        Whether errors are of the gain against that at calibration; views are not found then.
     terms : tuple[Term, ...]
         All terms that are not zero, the largest at the worst corner first; both columns sum to the errors.
     limits : tuple[LimitCheck, ...]
@@ -191,6 +193,7 @@ class Explanation:
     part: str
     topology: str
     summary: str
+    calibrated: bool
     gain_unit: str
     gain_ideal: float
     target_gain: float
@@ -278,6 +281,7 @@ def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts
         part=str(parts.names[p]),
         topology=topology.name,
         summary=topology.summary,
+        calibrated=screened.group.calibrated,
         gain_unit=gain_unit(topology),
         gain_ideal=float(side.gain_ideal[0]),
         target_gain=reference,

@@ -78,10 +78,21 @@ def test_an_explanation_without_a_finite_bound_has_no_views(here: CommandLineHer
     seen = json.loads(here("explain", job, "unbounded", "amp", "--json").out)["views"]
     assert seen["shares"] == []
     assert {seen[name] for name in ("mean_ppm", "u_ppm", "stated_ppm", "inside", "yield_mc", "sampled_u_ppm")} == {None}
-    assert "root-sum-square" in here("explain", job, "unbounded", "amp").out
+    assert "not found where the gain has no finite bound" in here("explain", job, "unbounded", "amp").out
 
 
 @pytest.mark.parametrize("samples", ["99", "100001", "1.5"])
 def test_a_number_of_samples_that_cannot_be_used(here: CommandLineHere, write_job: JobWriter, samples: str) -> None:
     message = here("screen", write_job(f"[results]\nsamples = {samples}\n"), status=2).err
     assert "a whole number from 100 to 100000" in message
+
+
+def test_a_calibrated_stage_has_no_views_and_explain_says_so(here: CommandLineHere, write_job: JobWriter) -> None:
+    stages = "stage,topology,r1,r2,accuracy_pct,tol_pct,calibrated\ntrimmed,inverting,1k,10k,2,0.1,yes\n"
+    job = write_job("[results]\nviews = true\n", stages=stages, parts=PART)
+    found = rows(Path(json.loads(here("screen", job, "--json").out)["folder"]))
+    assert {found["trimmed"][name] for name in COLUMNS} == {None}
+    out = here("explain", job, "trimmed", "amp").out
+    assert "Calibrated at 25 degrees Celsius: only what moves afterwards counts" in out
+    assert "Root-sum-square and Monte Carlo are not found for calibrated stages" in out
+    assert "from 2,000 samples" not in out

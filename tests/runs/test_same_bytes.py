@@ -40,6 +40,43 @@ def some_of(name: str, every: int) -> Table:
 STAGES, PARTS = some_of("stages.csv", 9), some_of("parts.csv", 12)
 
 
+MOVING = """\
+[[eligible]]
+part = "grade"
+at_least = "grade"
+[judge]
+guard_band_pct = 10
+[assume]
+a_ol = { typical_times = 0.5, hot_times = 0.5, change_pct = 30 }
+r_o = { typical_times = 2, value = 300, hot_times = 1.5 }
+[results]
+terms = true
+need = true
+views = true
+samples = 100
+"""
+MOVING_STAGES = """\
+stage,topology,r1,r2,r3,r4,r_load,accuracy_pct,tol_pct,tc_ppm_k,r2_tc_ppm_k,drift_pct,t_min_c,t_max_c,\
+network,r1_network,n_ratio_tol_pct,n_ratio_tc_ppm_k,m_ratio_tol_pct,calibrated,grade
+plain,inverting,1k,10k,,,2k,0.5,0.1,,,,,,,,,,,,1
+hot,inverting,2k,33k,,,,1,0.1,25,50,0.05,-40,85,,,,,,,2
+hot-apart,non_inverting,2k,33k,,,,1,0.1,25,,0.05,40,85,,,,,,no,
+tracks,inverting,1k,22k,,,5k,0.2,0.5,25,,,-20,60,n,,0.05,2,,,3
+tracks-less,non_inverting,1k,22k,,,5k,0.2,0.5,25,,0.01,,,n,,0.2,,,,1
+two,cascade_inverting,1k,4k7,2k2,10k,,0.7,0.2,15,,,-40,85,n,none,0.05,2,,,1
+two-networks,difference,1k,10k,1k,10k,,0.3,0.2,,,,,,n,m,0.05,,0.1,,2
+held,inverting,1k,10k,,,2k,0.4,1,25,,,-40,85,,,,,,yes,1
+held-tracks,non_inverting,1k,10k,,,2k,0.2,1,25,,0.02,-40,85,n,,0.1,3,,yes,3
+held-cool,follower,,,,,,0.002,,,,,,,,,,,,yes,2
+nobody,inverting,1k,10k,,,2k,0.5,0.1,,,,,,,,,,,,9
+"""
+HOT: tuple[dict[str, str], ...] = (
+    {},
+    {"a_ol_change_pct": "5", "r_o_change_pct": "0"},
+    {"a_ol_min_hot": "20000", "r_id_min_hot": "50k"},
+)
+
+
 @pytest.fixture(autouse=True)
 def small_chunks(monkeypatch: pytest.MonkeyPatch) -> None:
     """Several verdict files even for a small job."""
@@ -184,6 +221,36 @@ def test_rules_leave_rows_out_and_change_no_other(write_job: JobWriter, usual: d
     for name in (name for name in usual if name.startswith("verdicts/")):
         before, after = (pq.read_table(pa.BufferReader(content[name])).to_pylist() for content in (usual, found))
         assert after == [row for row in before if offered[row["part"]] >= asked[row["stage"]]]
+
+
+@pytest.mark.parametrize(("workers", "block", "per_chunk"), [(1, 7, 150), (5, 64, 40), (2, 1_000_000, 1_000_000)])
+def test_what_moves_and_what_is_asked_for_does_not_depend_on_order_or_cuts(
+    write_job: JobWriter, monkeypatch: pytest.MonkeyPatch, workers: int, block: int, per_chunk: int
+) -> None:
+    stages = list(csv.DictReader(MOVING_STAGES.splitlines()))
+    parts = [
+        {**row, "grade": str(place % 4), **dict.fromkeys({name for one in HOT for name in one}, ""), **HOT[place % 3]}
+        for place, row in enumerate(PARTS)
+    ]
+    usual = values(files(write_job(MOVING, stages=stages, parts=parts, folder="usual")))
+    assert {row["stage"] for row in usual} == {row["stage"] for row in stages} - {"nobody"}
+    assert {row["verdict"] for row in usual} == {"pass", "fail", "unproven"}
+    monkeypatch.setattr(blocks, "PAIRS_PER_CHUNK", per_chunk)
+    monkeypatch.setattr(blocks, "run", partial(blocks.run, block=block))
+    rng = random.Random(workers)
+    shuffled = write_job(MOVING, stages=rng.sample(stages, len(stages)), parts=rng.sample(parts, len(parts)))
+    assert values(files(shuffled, workers)) == usual
+
+
+def values(found: Mapping[str, bytes]) -> list[dict[str, object]]:
+    """All rows of the verdict tables, by stage and part, every number as its bits."""
+    tables = [pq.read_table(pa.BufferReader(found[name])) for name in sorted(found) if name.startswith("verdicts/")]
+    rows = [row for table in tables for row in table.to_pylist()]
+    bits = [
+        {name: value.hex() if isinstance(value, float) else value for name, value in row.items() if value is not None}
+        for row in rows
+    ]
+    return sorted(bits, key=lambda row: (row["stage"], row["part"]))
 
 
 def test_words_are_stored_as_a_dictionary(usual: dict[str, bytes]) -> None:

@@ -18,6 +18,7 @@ def text(found: Explanation) -> list[str]:
     return [
         f"{found.stage} with {found.part}: {found.verdict}, {found.reason}",
         f"{found.topology}: {found.summary}",
+        *(["Calibrated at 25 degrees Celsius: only what moves afterwards counts"] if found.calibrated else []),
         "",
         *table(
             ["", "", ""],
@@ -35,9 +36,7 @@ def text(found: Explanation) -> list[str]:
         "Terms of the error, in ppm",
         *_terms(found),
         "",
-        "Two more views, every quantity independent of the others and rectangular between its ends; errors in ppm",
-        *_views(found.views),
-        *_shares(found.views),
+        *_both_views(found),
         "",
         "Elements",
         *table(
@@ -119,6 +118,18 @@ def _terms(found: Explanation) -> list[str]:
     ]
     rows.append(["  sum", _nominal(found.error_nominal_ppm), ppm(found.error_worst_ppm), ""])
     return table(["  term", "nominal", "worst case", ""], rows, right=[1, 2])
+
+
+def _both_views(found: Explanation) -> list[str]:
+    if found.calibrated:
+        return ["Root-sum-square and Monte Carlo are not found for calibrated stages"]
+    if math.isnan(found.error_worst_ppm):
+        return ["Root-sum-square and Monte Carlo are not found where the gain has no finite bound"]
+    return [
+        "Two more views, every quantity independent of the others and rectangular between its ends; errors in ppm",
+        *_views(found.views),
+        *_shares(found.views),
+    ]
 
 
 def _views(views: ViewFigures) -> list[str]:

@@ -235,7 +235,7 @@ def _error(stages: StageSide, at: NDArray[np.intp], products: FloatArray) -> tup
 
 
 def _departed(of: Coefficients, at: NDArray[np.intp], products: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """E = sum_k c_k m_k / (1 + sum_k d_k m_k) at corners, and its denominator; products of shape (terms, parts)."""
+    """E = sum_k c_k m_k / (1 + sum_k d_k m_k) at corners `at`, and its denominator; products: (terms, parts)."""
     numerator, denominator = np.zeros((2, len(at), products.shape[1]))
     denominator += 1.0
     # Products of departures that are ideal would add 0.

@@ -73,7 +73,7 @@ def screen(
     outcome = Outcome(
         np.empty(shape),
         np.empty(shape),
-        np.empty(shape, np.int32),
+        np.full(shape, UNBOUNDED, np.int32),  # of stages that no plan visits nothing else is filled in
         np.empty(shape, np.int16),
         np.empty(shape),
     )

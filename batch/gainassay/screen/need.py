@@ -166,7 +166,8 @@ def within_corners(side: StageSide, limits: FloatArray, allowed: FloatArray) -> 
     """
     if side.slack is None:
         return allowed
-    return np.asarray((1.0 + allowed) * np.exp(-excess(side.slack, limits)) - 1.0)
+    # Exactly what is allowed where nothing lies beyond: other stages of a chunk may have networks, this one none.
+    return np.asarray(allowed + (1.0 + allowed) * np.expm1(-excess(side.slack, limits)))
 
 
 def _bearable_within(asked: Asked, kind: int, reached: float, upto: FloatArray) -> FloatArray:

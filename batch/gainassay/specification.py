@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 
 import numpy as np
 import pyarrow as pa
@@ -40,13 +41,15 @@ def specify(
     """The need table of a job.
 
     Every number is put back before it is told: the part that just meets it is taken through the worst case. Of
-    calibrated stages, whose errors come from changes and not from limits alone, none is found.
+    calibrated stages, whose errors come from changes and not from limits alone, none is found. All is about the gain:
+    operating limits are left out.
 
     Parameters
     ----------
     workers, after_each
         As in `blocks.run`.
     """
+    groups = [replace(group, bounds=group.bounds.unknown()) for group in groups]
     tallies = [tally for _, tally in blocks.run(groups, rules, lambda *_: None, workers, after_each=after_each)]
     summary = summaries.stage_summary(groups, tallies)
     stages, best = (np.array(summary.column(name).to_pylist(), np.str_) for name in ("stage", "best_part"))

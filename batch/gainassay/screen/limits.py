@@ -278,8 +278,11 @@ def check(of: Bounds) -> Kept:
         if unknown_stages.all() or unknown_parts.all():
             unchecked |= bit
             continue
-        outside |= np.less((left + rounding)[:, None], taken) * bit
-        unchecked |= np.logical_or(unknown_stages[:, None], unknown_parts) * bit
+        is_outside = np.less((left + rounding)[:, None], taken)
+        if is_outside.any():
+            outside |= is_outside * bit
+        if unknown_stages.any() or unknown_parts.any():
+            unchecked |= np.logical_or(unknown_stages[:, None], unknown_parts) * bit
     return Kept(outside, unchecked & ~outside)
 
 

@@ -41,8 +41,8 @@ def specify(
     """The need table of a job.
 
     Every number is put back before it is told: the part that just meets it is taken through the worst case. Of
-    calibrated stages, whose errors come from changes and not from limits alone, none is found. A need is one of
-    accuracy: the phase margin has no say in it.
+    calibrated stages, whose errors come from changes and not from limits alone, none is found. All is about
+    the gain: operating limits and the phase margin are left out.
 
     Parameters
     ----------
@@ -50,6 +50,7 @@ def specify(
         As in `blocks.run`.
     """
     rules = replace(rules, phase_margin=None)
+    groups = [replace(group, bounds=group.bounds.unknown()) for group in groups]
     tallies = [tally for _, tally in blocks.run(groups, rules, lambda *_: None, workers, after_each=after_each)]
     summary = summaries.stage_summary(groups, tallies)
     stages, best = (np.array(summary.column(name).to_pylist(), np.str_) for name in ("stage", "best_part"))

@@ -37,7 +37,15 @@ def some_of(name: str, every: int) -> Table:
         return list(csv.DictReader(file))[::every]
 
 
-STAGES, PARTS = some_of("stages.csv", 9), some_of("parts.csv", 12)
+STAGES: Table = [
+    {**row, "v_out_peak": str(1 + place % 9), "v_supply": "20" if place % 3 else ""}
+    for place, row in enumerate(some_of("stages.csv", 9))
+]
+PARTS: Table = [
+    {**row, "v_swing_headroom_max": str(place % 7), "gain_stable_min": "5" if place % 2 else ""}
+    for place, row in enumerate(some_of("parts.csv", 12))
+]
+"""With operating limits that some pairs keep, some do not, and some leave open."""
 
 
 MOVING = """\

@@ -27,9 +27,9 @@ STAGE = {
 """Its amplifier puts out 10 V and 6 mA, slopes 0.6283 V/us, and has 1 V at its inputs and a noise gain of 10."""
 
 PART = {
-    **{"part": "amp", "a_ol_min": "1e6", "swing_headroom_v": "2", "i_out_max_a": "20m"},
-    **{"v_cm_headroom_low_v": "1", "v_cm_headroom_high_v": "1", "slew_rate_min_v_us": "2", "gain_stable_min": "1"},
-    **{"full_power_min_hz": "20k", "full_power_peak_v": "10", "v_supply_min": "5", "v_supply_max": "36"},
+    **{"part": "amp", "a_ol_min": "1e6", "v_swing_headroom_max": "2", "i_out_max": "20m"},
+    **{"v_cm_headroom_low_max": "1", "v_cm_headroom_high_max": "1", "slew_rate_v_us_min": "2", "gain_stable_min": "1"},
+    **{"full_power_hz_min": "20k", "v_full_power_peak": "10", "v_supply_min": "5", "v_supply_max": "36"},
     **{"t_part_min_c": "-40", "t_part_max_c": "125"},
 }
 """It bears all that."""
@@ -59,24 +59,24 @@ def margin(found: Screened, name: str) -> float:
 
 EDGES = [
     # limit, cells of the stage, column of the part, its edge, and whether more of it is worse
-    ("output_swing", {}, "swing_headroom_v", 5.0, True),
-    ("output_swing", {"v_ground": "12"}, "swing_headroom_v", 2.0, True),
-    ("output_swing", {"v_ground": "18"}, "swing_headroom_v", 2.0, True),
-    ("output_swing", {"v_in_dc": "0.2"}, "swing_headroom_v", 3.0, True),
-    ("output_swing", {"v_in_dc": "-0.2"}, "swing_headroom_v", 3.0, True),
-    ("output_swing", {"v_supply": "3.3", "v_out_peak": "1.6"}, "swing_headroom_v", 0.05, True),
-    ("output_current", {}, "i_out_max_a", 6e-3, False),
-    ("output_current", {"v_in_dc": "-0.2"}, "i_out_max_a", 7.2e-3, False),
-    ("output_current", {"r_load": ""}, "i_out_max_a", 1e-3, False),
-    ("input_range", {}, "v_cm_headroom_low_v", 14.0, True),
-    ("input_range", {}, "v_cm_headroom_high_v", 14.0, True),
-    ("input_range", {"v_ground": "13"}, "v_cm_headroom_low_v", 12.0, True),
-    ("input_range", {"v_ground": "13"}, "v_cm_headroom_high_v", 16.0, True),
-    ("input_range", {"v_in_dc": "0.2"}, "v_cm_headroom_high_v", 13.8, True),
-    ("input_range", {"v_out_peak": "2", "v_supply": "20", "v_ground": "0.1"}, "v_cm_headroom_low_v", -0.1, True),
-    ("slew_rate", {}, "slew_rate_min_v_us", SLOPE, False),
-    ("full_power", {}, "full_power_min_hz", 10e3, False),
-    ("full_power", {}, "full_power_peak_v", 5.0, False),
+    ("output_swing", {}, "v_swing_headroom_max", 5.0, True),
+    ("output_swing", {"v_ground": "12"}, "v_swing_headroom_max", 2.0, True),
+    ("output_swing", {"v_ground": "18"}, "v_swing_headroom_max", 2.0, True),
+    ("output_swing", {"v_in_dc": "0.2"}, "v_swing_headroom_max", 3.0, True),
+    ("output_swing", {"v_in_dc": "-0.2"}, "v_swing_headroom_max", 3.0, True),
+    ("output_swing", {"v_supply": "3.3", "v_out_peak": "1.6"}, "v_swing_headroom_max", 0.05, True),
+    ("output_current", {}, "i_out_max", 6e-3, False),
+    ("output_current", {"v_in_dc": "-0.2"}, "i_out_max", 7.2e-3, False),
+    ("output_current", {"r_load": ""}, "i_out_max", 1e-3, False),
+    ("input_range", {}, "v_cm_headroom_low_max", 14.0, True),
+    ("input_range", {}, "v_cm_headroom_high_max", 14.0, True),
+    ("input_range", {"v_ground": "13"}, "v_cm_headroom_low_max", 12.0, True),
+    ("input_range", {"v_ground": "13"}, "v_cm_headroom_high_max", 16.0, True),
+    ("input_range", {"v_in_dc": "0.2"}, "v_cm_headroom_high_max", 13.8, True),
+    ("input_range", {"v_out_peak": "2", "v_supply": "20", "v_ground": "0.1"}, "v_cm_headroom_low_max", -0.1, True),
+    ("slew_rate", {}, "slew_rate_v_us_min", SLOPE, False),
+    ("full_power", {}, "full_power_hz_min", 10e3, False),
+    ("full_power", {}, "v_full_power_peak", 5.0, False),
     ("stable_gain", {}, "gain_stable_min", 10.0, True),
     ("supply_range", {}, "v_supply_min", 30.0, True),
     ("supply_range", {}, "v_supply_max", 30.0, False),
@@ -89,8 +89,8 @@ EDGES = [
 
 @pytest.mark.parametrize(("name", "cells", "column", "edge", "more_is_worse"), EDGES)
 def test_an_edge(write_job: JobWriter, name: str, cells: Cells, column: str, edge: float, more_is_worse: bool) -> None:
-    # Only the output swing below ground and down to a supply of 0.1 V is out of the way of the last case's input range.
-    wide = {"swing_headroom_v": "0"} if column != "swing_headroom_v" and "v_ground" in cells else {}
+    # With ground near an end of the supply the output needs all the room there is.
+    wide = {"v_swing_headroom_max": "0"} if column != "v_swing_headroom_max" and "v_ground" in cells else {}
     step = 1e-6 * abs(edge)
     worse, better = (edge + step, edge - step) if more_is_worse else (edge - step, edge + step)
     parts = [{**wide, "part": f"amp-{place}", column: repr(value)} for place, value in enumerate((better, edge, worse))]
@@ -104,7 +104,7 @@ def test_an_edge(write_job: JobWriter, name: str, cells: Cells, column: str, edg
 
 
 def test_the_first_limit_is_the_reason(write_job: JobWriter) -> None:
-    found = screened(write_job, [{}], [{"swing_headroom_v": "6", "i_out_max_a": "1m", "a_ol_min": "2"}])
+    found = screened(write_job, [{}], [{"v_swing_headroom_max": "6", "i_out_max": "1m", "a_ol_min": "2"}])
     assert outcome(found) == ("fail", "outside limit.output_swing")
     assert limits.named(int(found.kept.outside[0, 0])) == "output_swing, output_current"
     assert dominant_names(found.group.form)[found.outcome.dominant[0, 0]] == "limit.output_swing"
@@ -123,13 +123,13 @@ def test_all_is_checked_and_kept(write_job: JobWriter) -> None:
         ({"v_supply": ""}, {}, "output_swing, input_range, supply_range"),
         ({"v_out_peak": ""}, {}, "output_swing, output_current, input_range, slew_rate, full_power"),
         ({"frequency_hz": ""}, {}, "slew_rate, full_power"),
-        ({}, {"swing_headroom_v": ""}, "output_swing"),
-        ({}, {"i_out_max_a": ""}, "output_current"),
-        ({}, {"v_cm_headroom_low_v": ""}, "input_range"),
-        ({}, {"v_cm_headroom_high_v": ""}, "input_range"),
-        ({}, {"slew_rate_min_v_us": ""}, "slew_rate"),
-        ({}, {"full_power_min_hz": ""}, "full_power"),
-        ({}, {"full_power_peak_v": ""}, "full_power"),
+        ({}, {"v_swing_headroom_max": ""}, "output_swing"),
+        ({}, {"i_out_max": ""}, "output_current"),
+        ({}, {"v_cm_headroom_low_max": ""}, "input_range"),
+        ({}, {"v_cm_headroom_high_max": ""}, "input_range"),
+        ({}, {"slew_rate_v_us_min": ""}, "slew_rate"),
+        ({}, {"full_power_hz_min": ""}, "full_power"),
+        ({}, {"v_full_power_peak": ""}, "full_power"),
         ({}, {"gain_stable_min": ""}, "stable_gain"),
         ({}, {"v_supply_min": ""}, "supply_range"),
         ({}, {"t_part_max_c": ""}, "temperature_range"),
@@ -145,7 +145,7 @@ def test_what_is_missing_is_not_checked(write_job: JobWriter, stage: Cells, part
 @pytest.mark.parametrize(
     ("name", "part"),
     [
-        ("input_range", {"v_cm_headroom_low_v": "", "v_cm_headroom_high_v": "15"}),
+        ("input_range", {"v_cm_headroom_low_max": "", "v_cm_headroom_high_max": "15"}),
         ("supply_range", {"v_supply_min": "", "v_supply_max": "24"}),
         ("temperature_range", {"t_part_min_c": "30", "t_part_max_c": ""}),
     ],
@@ -160,12 +160,12 @@ def test_one_end_of_a_range_is_enough_to_be_outside(write_job: JobWriter, name: 
 @pytest.mark.parametrize(
     ("column", "text", "name", "expected"),
     [
-        ("i_out_max_a", "16 mA", "output_current", 10e-3),
-        ("slew_rate_min_v_us", "1000 V/ms", "slew_rate", 1.0 - SLOPE),
-        ("slew_rate_min_v_us", "2e6 V/s", "slew_rate", 2.0 - SLOPE),
-        ("slew_rate_min_v_us", "0.001 V/ns", "slew_rate", 1.0 - SLOPE),
-        ("full_power_min_hz", "20 kHz", "full_power", SLOPE),
-        ("swing_headroom_v", "500 mV", "output_swing", 4.5),
+        ("i_out_max", "16 mA", "output_current", 10e-3),
+        ("slew_rate_v_us_min", "1000 V/ms", "slew_rate", 1.0 - SLOPE),
+        ("slew_rate_v_us_min", "2e6 V/s", "slew_rate", 2.0 - SLOPE),
+        ("slew_rate_v_us_min", "0.001 V/ns", "slew_rate", 1.0 - SLOPE),
+        ("full_power_hz_min", "20 kHz", "full_power", SLOPE),
+        ("v_swing_headroom_max", "500 mV", "output_swing", 4.5),
     ],
 )
 def test_units(write_job: JobWriter, column: str, text: str, name: str, expected: float) -> None:

@@ -27,11 +27,11 @@ class Limit:
 
 
 LIMITS = (
-    Limit("output_swing", "V", ("v_out_peak", "v_supply"), ("swing_headroom_v",)),
-    Limit("output_current", "A", ("v_out_peak",), ("i_out_max_a",)),
-    Limit("input_range", "V", ("v_out_peak", "v_supply"), ("v_cm_headroom_low_v", "v_cm_headroom_high_v")),
-    Limit("slew_rate", "V/us", ("v_out_peak", "frequency_hz"), ("slew_rate_min_v_us",)),
-    Limit("full_power", "V/us", ("v_out_peak", "frequency_hz"), ("full_power_min_hz", "full_power_peak_v")),
+    Limit("output_swing", "V", ("v_out_peak", "v_supply"), ("v_swing_headroom_max",)),
+    Limit("output_current", "A", ("v_out_peak",), ("i_out_max",)),
+    Limit("input_range", "V", ("v_out_peak", "v_supply"), ("v_cm_headroom_low_max", "v_cm_headroom_high_max")),
+    Limit("slew_rate", "V/us", ("v_out_peak", "frequency_hz"), ("slew_rate_v_us_min",)),
+    Limit("full_power", "V/us", ("v_out_peak", "frequency_hz"), ("full_power_hz_min", "v_full_power_peak")),
     Limit("stable_gain", "V/V", (), ("gain_stable_min",)),
     Limit("supply_range", "V", ("v_supply",), ("v_supply_min", "v_supply_max")),
     Limit("temperature_range", "K", (), ("t_part_min_c", "t_part_max_c")),

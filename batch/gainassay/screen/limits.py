@@ -12,7 +12,7 @@ where capacitors are shorts: the smaller counts. What lies on a limit is inside 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -106,7 +106,7 @@ class Side:
 
 
 def _full_power(parts: Operating) -> FloatArray:
-    return _slope(parts["full_power_min_hz"], parts["full_power_peak_v"])
+    return _slope(parts["full_power_hz_min"], parts["v_full_power_peak"])
 
 
 def _nothing(stages: Conditions) -> FloatArray:
@@ -114,12 +114,12 @@ def _nothing(stages: Conditions) -> FloatArray:
 
 
 SIDES = (
-    Side("output_swing", "up", True, lambda s: s.v_out_up, lambda s: s.above, lambda p: p["swing_headroom_v"]),
-    Side("output_swing", "down", True, lambda s: s.v_out_down, lambda s: s.below, lambda p: p["swing_headroom_v"]),
-    Side("output_current", "", True, lambda s: s.i_out, _nothing, lambda p: -p["i_out_max_a"]),
-    Side("input_range", "up", True, lambda s: s.v_in_up, lambda s: s.above, lambda p: p["v_cm_headroom_high_v"]),
-    Side("input_range", "down", True, lambda s: s.v_in_down, lambda s: s.below, lambda p: p["v_cm_headroom_low_v"]),
-    Side("slew_rate", "", True, lambda s: s.slew, _nothing, lambda p: -p["slew_rate_min_v_us"]),
+    Side("output_swing", "up", True, lambda s: s.v_out_up, lambda s: s.above, lambda p: p["v_swing_headroom_max"]),
+    Side("output_swing", "down", True, lambda s: s.v_out_down, lambda s: s.below, lambda p: p["v_swing_headroom_max"]),
+    Side("output_current", "", True, lambda s: s.i_out, _nothing, lambda p: -p["i_out_max"]),
+    Side("input_range", "up", True, lambda s: s.v_in_up, lambda s: s.above, lambda p: p["v_cm_headroom_high_max"]),
+    Side("input_range", "down", True, lambda s: s.v_in_down, lambda s: s.below, lambda p: p["v_cm_headroom_low_max"]),
+    Side("slew_rate", "", True, lambda s: s.slew, _nothing, lambda p: -p["slew_rate_v_us_min"]),
     Side("full_power", "", True, lambda s: s.slew, _nothing, lambda p: -_full_power(p)),
     Side("stable_gain", "", False, lambda s: s.noise_gain, _nothing, lambda p: p["gain_stable_min"]),
     Side("supply_range", "least", False, lambda s: s.v_supply, _nothing, lambda p: p["v_supply_min"]),
@@ -153,6 +153,10 @@ class Bounds:
     def of(self, stages: slice, parts: slice) -> Bounds:
         """Some of the stages with some of the parts."""
         return Bounds(self.asked[:, stages], self.left[:, stages], self.rounding[:, stages], self.taken[:, parts])
+
+    def unknown(self) -> Bounds:
+        """The same with nothing known of the parts, so that no limit is checked."""
+        return replace(self, taken=np.full_like(self.taken, np.nan))
 
     def margins(self, side: int) -> FloatArray:
         """Margin of each pair, shape (stages, parts); 0 on the limit, negative outside, nan if not known."""
@@ -274,8 +278,11 @@ def check(of: Bounds) -> Kept:
         if unknown_stages.all() or unknown_parts.all():
             unchecked |= bit
             continue
-        outside |= np.less((left + rounding)[:, None], taken) * bit
-        unchecked |= np.logical_or(unknown_stages[:, None], unknown_parts) * bit
+        is_outside = np.less((left + rounding)[:, None], taken)
+        if is_outside.any():
+            outside |= is_outside * bit
+        if unknown_stages.any() or unknown_parts.any():
+            unchecked |= np.logical_or(unknown_stages[:, None], unknown_parts) * bit
     return Kept(outside, unchecked & ~outside)
 
 

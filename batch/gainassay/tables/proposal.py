@@ -28,7 +28,7 @@ LOOKED_AT = 1 << 16
 """Bytes of a text file that its delimiter is guessed from."""
 
 IN_BRACKETS = re.compile(r"[(\[{]\s*([^)\]}]*?)\s*[)\]}]")
-UNITS = ("ohm", "F", "H", "Hz", "V/V", "dB", "%", "ppm", "ppm/K", "degC")
+UNITS = ("ohm", "F", "H", "Hz", "V", "A", "V/us", "V/V", "dB", "%", "ppm", "ppm/K", "degC")
 """Units of ours by which text in brackets is known for a unit."""
 
 TRAILING = {"ohm": "ohm", "db": "dB", "pct": "%", "ppm": "ppm", "hz": "Hz", "khz": "kHz", "kohm": "kohm"}

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
@@ -12,23 +13,27 @@ from gainassay.contracts.evidence import EVIDENCE, MISSING
 from gainassay.contracts.limits import LIMITS, Limit
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
-from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES, Departure
+from gainassay.forms.coefficients import ComplexArray, FloatArray
+from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
-from gainassay.screen import blocks, calibrated, monte_carlo, rss
+from gainassay.screen import blocks, calibrated, monte_carlo, rss, stability
 from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
 from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED, nominal_account
 from gainassay.screen.limits import PLACES, SIDES
 from gainassay.screen.monte_carlo import Lot
-from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules, dominant_names
+from gainassay.screen.stability import Looked
+from gainassay.screen.verdicts import DOUBTS, LEANINGS, REASONS, VERDICTS, Rules, dominant_names
+from gainassay.tables.bandwidths import Bandwidths
 from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.spreads import Spreads
 from gainassay.tables.stages import StageGroup, StageTable, left_out
 
 PPM = 1e6
+POINTS_PER_DECADE = 60
+"""Of a curve over frequency."""
 
 
 @dataclass(frozen=True)
@@ -176,6 +181,69 @@ class ViewFigures:
 
 
 @dataclass(frozen=True)
+class Loop:
+    """How stable the loop of an amplifier is, all other loops being closed.
+
+    Attributes
+    ----------
+    crossover_hz, phase_margin_deg, gain_margin_db : float
+        As in the verdict table; nan or infinite where there is none.
+    crossovers : int
+        How often the loop gain's magnitude passes 1.
+    """
+
+    amplifier: str
+    crossover_hz: float
+    crossovers: int
+    phase_margin_deg: float
+    gain_margin_db: float
+
+
+@dataclass(frozen=True)
+class StabilityFigures:
+    """Stability, and the figures of the part that it is found with.
+
+    Attributes
+    ----------
+    gbw_hz, second_pole_hz : float
+        Gain-bandwidth product and second pole [Hz]; nan: not known, inf: not modelled.
+    gbw_from : str
+        The column that `gbw_hz` comes from.
+    least_deg : float or None
+        The least phase margin of a pass [deg], if the job asks for one.
+    doubt : str
+        Why the margins prove nothing, if so.
+    loops : tuple[Loop, ...]
+        Of all amplifiers; none if the gain-bandwidth product is not known.
+    """
+
+    gbw_hz: float
+    gbw_from: str
+    second_pole_hz: float
+    least_deg: float | None
+    doubt: str
+    loops: tuple[Loop, ...]
+
+
+@dataclass(frozen=True)
+class Curves:
+    """Gain and loop gains of a pair over frequency, with nominal figures.
+
+    Attributes
+    ----------
+    hertz : ndarray, shape (frequencies,)
+    gain : ndarray of complex
+        [gain unit]
+    loops : dict
+        The loop gain of each amplifier.
+    """
+
+    hertz: FloatArray
+    gain: ComplexArray
+    loops: dict[str, ComplexArray]
+
+
+@dataclass(frozen=True)
 class Explanation:
     """All that decides one pair. Errors in ppm; nan: no finite bound.
 
@@ -214,6 +282,7 @@ class Explanation:
     limits: tuple[LimitCheck, ...]
     views: ViewFigures
     ports: tuple[PortFigure, ...]
+    stability: StabilityFigures
 
 
 def explain(
@@ -247,8 +316,30 @@ def explain(
     objection = eligibility[place].objection(s, p)
     if objection:
         raise InputError(f"{stages.source}, {parts.source}: part {part!r} may not serve stage {stage!r}: {objection}")
-    screened = blocks.screen_chunk(groups, Chunk(place, slice(s, s + 1), slice(p, p + 1)), rules, samples=samples)
-    return _explanation(screened, samples, stages.groups[place], s, parts, p)
+    one_pair = Chunk(place, slice(s, s + 1), slice(p, p + 1))
+    screened = blocks.screen_chunk(groups, one_pair, rules, samples=samples, stability=True)
+    return _explanation(screened, samples, stages.groups[place], s, parts, p, rules)
+
+
+def curves(groups: Sequence[Group], found: Explanation) -> Curves:
+    """Gain and loop gains of an explained pair over frequency, wherever these have something to show.
+
+    Raises
+    ------
+    InputError
+        If the part's gain-bandwidth product is not known.
+    """
+    loops = found.stability.loops
+    if not loops:
+        raise InputError(f"part {found.part!r} has no gbw_typ or gbw_min, and so no loop gain over frequency to draw")
+    group = next(group for group in groups if found.stage in group.stage_names)
+    s, p = int(np.searchsorted(group.stage_names, found.stage)), int(np.searchsorted(group.part_names, found.part))
+    looked = group.looked(Chunk(0, slice(s, s + 1), slice(p, p + 1)))
+    first_pole = found.stability.gbw_hz * float(looked.parts.nominal[DEPARTURES.index(OPEN_LOOP_GAIN), 0])
+    last = [loop.crossover_hz for loop in loops if np.isfinite(loop.crossover_hz)] or [found.stability.gbw_hz]
+    low, high = math.floor(math.log10(first_pole)) - 1, math.ceil(math.log10(max(last))) + 1
+    hertz = np.logspace(low, high, (high - low) * POINTS_PER_DECADE + 1)
+    return Curves(hertz, *stability.response(looked, hertz))
 
 
 def _require(name: str, known: list[str], kind: str, table: StageTable | PartTable) -> None:
@@ -262,14 +353,16 @@ def _require(name: str, known: list[str], kind: str, table: StageTable | PartTab
     raise InputError(f"{table.source}: there is no usable {kind} {name!r}{hint}")
 
 
-def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts: PartTable, p: int) -> Explanation:
+def _explanation(
+    screened: Screened, samples: int, of: StageGroup, s: int, parts: PartTable, p: int, rules: Rules
+) -> Explanation:
     topology, spreads = of.topology, of.spreads
     side, outcome, judgement = screened.stage_side, screened.outcome, screened.judgement
     corner = int(outcome.corner[0, 0])
     unbounded = corner == UNBOUNDED
     at_nominal = [float(term[0, 0]) * PPM for term in nominal_account(side, screened.part_side)]
     at_worst = [np.nan if unbounded else float(term[0, 0]) * PPM for term in blocks.accounts(screened)]
-    names, dominant = term_names(screened.group.form), dominant_names(screened.group.form)
+    names = term_names(screened.group.form)
     terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
     leaning = LEANINGS[int(judgement.leaning[0, 0])]
     reference = float(side.reference[0])
@@ -295,7 +388,7 @@ def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts
         reason=REASONS[int(judgement.reason[0, 0])],
         evidence=leaning.evidence,
         leans_on=leaning.leans_on,
-        dominant_term="" if outcome.dominant[0, 0] == NO_TERM else dominant[int(outcome.dominant[0, 0])],
+        dominant_term=_dominant(screened),
         elements=tuple(_elements(screened, spreads.of(np.array([s])), values, at_corner)),
         figures=tuple(_figures(screened, parts, p)),
         terms=tuple(
@@ -307,6 +400,7 @@ def _explanation(screened: Screened, samples: int, of: StageGroup, s: int, parts
         limits=tuple(_limits(screened, of, s, parts, p)),
         views=_views(screened, samples),
         ports=tuple(_ports(topology, values, parts.nominal[:, p])),
+        stability=_stability(screened, parts.bandwidths, p, rules),
     )
 
 
@@ -328,6 +422,40 @@ def _missing(limit: Limit, of: StageGroup, s: int, parts: PartTable, p: int) -> 
     blank = {kind: [name for name in names if np.isnan(at[name][row])] for kind, (names, at, row) in tables.items()}
     said = [f"the {kind} gives no {', '.join(names)}" for kind, names in blank.items() if names]
     return "; ".join(said) or "the stage's network leaves it open"
+
+
+def _dominant(screened: Screened) -> str:
+    place = int(screened.outcome.dominant[0, 0])
+    return "" if place == NO_TERM else dominant_names(screened.group.form)[place]
+
+
+def _stability(screened: Screened, of_parts: Bandwidths, p: int, rules: Rules) -> StabilityFigures:
+    looked = screened.group.looked(screened.chunk)
+    gbw = float(looked.parts.gbw[0])
+    assert screened.margins is not None
+    source = "" if np.isnan(gbw) else "gbw_min" if np.isnan(of_parts.gbw_typ[p]) else "gbw_typ"
+    return StabilityFigures(
+        gbw_hz=gbw,
+        gbw_from=source,
+        second_pole_hz=float(looked.parts.second_pole[0]),
+        least_deg=rules.phase_margin,
+        doubt=DOUBTS[int(screened.margins.doubt[0, 0])],
+        loops=tuple(_loops(looked)) if source else (),
+    )
+
+
+def _loops(looked: Looked) -> Iterator[Loop]:
+    _, over_grid = stability.response(looked, stability.GRID)
+    for amplifier, loop_gain in over_grid.items():
+        of_loop = stability.margins_of(looked, amplifier)
+        is_above = np.abs(loop_gain) >= 1.0
+        yield Loop(
+            amplifier=amplifier,
+            crossover_hz=float(of_loop.crossover_hz[0, 0]),
+            crossovers=int((is_above[1:] != is_above[:-1]).sum()),
+            phase_margin_deg=float(of_loop.phase_margin_deg[0, 0]),
+            gain_margin_db=float(of_loop.gain_margin_db[0, 0]),
+        )
 
 
 def _views(screened: Screened, samples: int) -> ViewFigures:

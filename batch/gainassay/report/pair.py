@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 from gainassay.cautions import CAUTIONS
-from gainassay.explanation import Explanation, LimitCheck, PortFigure, ViewFigures
+from gainassay.explanation import Explanation, LimitCheck, PortFigure, StabilityFigures, ViewFigures
 from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
@@ -75,6 +75,8 @@ def text(found: Explanation) -> list[str]:
         "Impedances and loop at 0 Hz, with the nominal figures",
         *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports])[1:],
         "",
+        *_stability(found.stability),
+        "",
         *CAUTIONS,
     ]
 
@@ -84,6 +86,36 @@ def _limit(check: LimitCheck) -> list[str]:
     unit = "C" if check.unit == "K" else check.unit
     asked, allowed = (quantity(value, unit) for value in (check.asked, check.allowed))
     return [f"  {check.name}", check.end, asked, check.bound, allowed, quantity(check.margin, check.unit), check.state]
+
+
+def _stability(of: StabilityFigures) -> list[str]:
+    """Margins of each loop, with the figures that they rest on."""
+    if not of.loops:
+        return ["Stability", f"  not checked: {of.doubt.partition(': ')[2]}"]
+    pole = "not modelled" if math.isinf(of.second_pole_hz) else quantity(of.second_pole_hz, "Hz")
+    asked = f"; a pass needs {of.least_deg:g} deg" if of.least_deg is not None else ""
+    rows = [
+        [
+            f"  {loop.amplifier}",
+            quantity(loop.crossover_hz, "Hz"),
+            _margin(loop.phase_margin_deg, "deg"),
+            _margin(loop.gain_margin_db, "dB"),
+            f"of {loop.crossovers} crossovers the one with the smallest phase margin" if loop.crossovers > 1 else "",
+        ]
+        for loop in of.loops
+    ]
+    return [
+        f"Stability, with {of.gbw_from} {quantity(of.gbw_hz, 'Hz')}, second pole {pole} and the nominal figures{asked}",
+        *table(["  loop of", "crossover", "phase margin", "gain margin", ""], rows),
+        *(["  each amplifier's loop with all others closed"] if len(rows) > 1 else []),
+        *([f"  {of.doubt}"] if of.doubt else []),
+    ]
+
+
+def _margin(value: float, unit: str) -> str:
+    if math.isinf(value):
+        return "none"
+    return "-" if math.isnan(value) else f"{value:.4g} {unit}"
 
 
 def _port(port: PortFigure) -> str:

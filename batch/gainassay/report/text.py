@@ -14,6 +14,7 @@ DIGITS = 4
 """Of a number that is rounded to the safe side."""
 
 ELEMENT_UNITS = {"resistor": "ohm", "capacitor": "F", "inductor": "H"}
+PREFIXED = (*ELEMENT_UNITS.values(), "Hz")
 
 
 def table(header: Sequence[str], rows: Sequence[Sequence[str]], right: Sequence[int] = ()) -> list[str]:
@@ -56,7 +57,7 @@ def quantity(value: float, unit: str) -> str:
         return "-"
     if math.isinf(value):
         return "infinite"
-    if unit not in ELEMENT_UNITS.values() or value == 0.0:
+    if unit not in PREFIXED or value == 0.0:
         return f"{value:.6g} {unit}"
     power = min(max(3 * math.floor(math.log10(abs(value)) / 3), min(PREFIXES)), max(PREFIXES))
     return f"{value / 10.0**power:.6g} {PREFIXES[power]}{unit}"

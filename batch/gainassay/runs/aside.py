@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Iterable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 import pyarrow as pa
@@ -12,16 +14,21 @@ from gainassay.runs.folder import WRITERS
 from gainassay.runs.tables import sync
 
 
-def check(path: Path) -> None:
-    """See that a table could be written to a path.
+def check(path: Path, endings: Iterable[str] = WRITERS) -> None:
+    """See that a file could be written to a path.
+
+    Parameters
+    ----------
+    endings : iterable of str
+        What its name may end with; that of a table if not given.
 
     Raises
     ------
     InputError
-        If no table is written under such a name, or there is no such folder.
+        If nothing is written under such a name, or there is no such folder.
     """
-    if path.suffix not in WRITERS:
-        raise InputError(f"{path}: the name must end with {' or '.join(WRITERS)}")
+    if path.suffix not in endings:
+        raise InputError(f"{path}: the name must end with {' or '.join(endings)}")
     if not path.parent.is_dir():
         raise InputError(f"{path}: cannot be written: there is no folder {path.parent}")
 
@@ -35,10 +42,24 @@ def write_whole(table: pa.Table, path: Path) -> None:
         If the file cannot be written; what lay there before is left as it was.
     """
     check(path)
+    with replaced(path) as aside:
+        WRITERS[path.suffix](table, aside)
+
+
+@contextmanager
+def replaced(path: Path) -> Iterator[Path]:
+    """A file to write to, which takes the place of `path` once it is whole.
+
+    Raises
+    ------
+    InputError
+        If it cannot be written; what lay there before is left as it was.
+    """
     aside = path.with_name(f".{path.name}.{os.getpid()}")
     try:
         aside.touch()
-        WRITERS[path.suffix](table, aside)
+        yield aside
+        sync(aside)
         aside.replace(path)
         sync(path.parent)
     except OSError as error:

@@ -202,8 +202,19 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
         groups=tuple(groups),
         rejects=checking.found(),
         columns=column_use(raw, "stages", known),
-        warnings=(*unknown_columns(raw, known), *_idle_coefficients(raw.source, moving, is_hot)),
+        warnings=(
+            *unknown_columns(raw, known),
+            *_idle_coefficients(raw.source, moving, is_hot),
+            *_at_0_hz(raw.source, conditions),
+        ),
     )
+
+
+def _at_0_hz(source: str, conditions: Operating) -> tuple[str, ...]:
+    """A warning where stages state a frequency, which no gain is judged at yet."""
+    if np.isnan(conditions["frequency_hz"]).all():
+        return ()
+    return (f"{source}: frequency_hz counts for slew rate and full-power bandwidth; all gains are judged at 0 Hz",)
 
 
 def _idle_coefficients(source: str, moving: SpreadColumns, is_hot: NDArray[np.bool_]) -> tuple[str, ...]:

@@ -50,7 +50,7 @@ def test_a_table_of_another_country_becomes_a_job(here: CommandLineHere, write_j
         ("AOL_MIN_DB", ["90", "95"], "a_ol_db_min"),
         ("AolMin (dB)", ["90", "95"], "a_ol_db_min"),
         ("A_OL_MIN_HOT [dB]", ["90", "95"], "a_ol_db_min_hot"),
-        ("Gain bandwidth typ (MHz)", ["1"], None),
+        ("Gain bandwidth typ (MHz)", ["1"], {"is": "gbw_typ", "unit": "MHz"}),
         ("Common mode input resistance typ", ["1G"], None),
         ("Colour", ["red"], None),
     ],

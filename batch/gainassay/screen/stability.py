@@ -193,7 +193,7 @@ class _Loop:
     Attributes
     ----------
     on_grid : ndarray, shape (terms, frequencies, stages)
-        The loadings d_k.
+        The loadings d_k; at one frequency for all if no element is reactive.
     """
 
     form: Form
@@ -204,17 +204,26 @@ class _Loop:
     @staticmethod
     def of(looked: Looked, amplifier: str, rows: NDArray[np.intp]) -> _Loop:
         values = looked.values[:, rows]
-        return _Loop(looked.form, amplifier, values, loadings_at(looked.form, values, GRID))
+        is_reactive = any(kind != "resistor" for kind in looked.form.kinds)
+        on_grid = loadings_at(looked.form, values, GRID if is_reactive else GRID[:1])
+        return _Loop(looked.form, amplifier, values, on_grid)
 
     def inverse(self, parts: Dynamics, place: int) -> ComplexArray:
         """1/T of all pairs at a frequency of the grid."""
         of_part = products(self.form, parts.at(GRID[place : place + 1]))
-        return inverse_loop_gain(self.form, self.amplifier, self.on_grid[:, place, :, None], of_part[:, None, :])
+        return inverse_loop_gain(
+            self.form,
+            self.amplifier,
+            self.on_grid[:, min(place, self.on_grid.shape[1] - 1), :, None],
+            of_part[:, None, :],
+        )
 
     def inverse_of(self, parts: Dynamics, rows: NDArray[np.intp], hertz: FloatArray) -> ComplexArray:
         """1/T of some pairs, a stage, a part and a frequency for each."""
-        pairs = coefficients.at_frequency(self.form, self.values[:, rows], hertz)
         of_part = products(self.form, parts.at(hertz))
+        if self.on_grid.shape[1] == 1:
+            return inverse_loop_gain(self.form, self.amplifier, self.on_grid[:, 0, rows], of_part)
+        pairs = coefficients.at_frequency(self.form, self.values[:, rows], hertz)
         return inverse_loop_gain(self.form, self.amplifier, coefficients.loadings(self.form, pairs), of_part)
 
 

@@ -14,7 +14,8 @@ from hypothesis import strategies as st
 
 from gainassay.contracts import tables
 from gainassay.contracts.quantities import Writing, numbers
-from gainassay.contracts.tables import Column
+from gainassay.contracts.tables import WRITTEN_BY_USERS, Column, columns
+from gainassay.contracts.units import NOTATIONS
 
 ANY = Column(
     name="any",
@@ -133,7 +134,7 @@ def test_what_is_no_number(text: str) -> None:
         ("0.1 %", "ppm", 1000.0),
         ("25 ppm/K", "ppm/K", 25.0),
         ("25 ppm/°C", "ppm/K", 25.0),
-        ("-40 °C", "degC", -40.0),
+        ("-40 °C", "degree Celsius", -40.0),
         ("5 mV", "V", 5e-3),
     ],
 )
@@ -149,7 +150,7 @@ def test_a_unit_is_read_with_its_prefix(text: str, unit: str, value: float) -> N
         ("1 mHz", "Hz", "milli or mega"),
         ("100 dB", "V/V", "such figures belong into a column"),
         ("100 V/mV", "dB", "such figures belong into a column"),
-        ("300 K", "degC", "degrees Celsius"),
+        ("300 K", "degree Celsius", "degrees Celsius"),
         ("10 nF", "ohm", "does not take"),
         (">= 100", "ohm", "limit or typical"),
         ("≥100", "ohm", "limit or typical"),
@@ -335,3 +336,8 @@ def test_an_integer_that_no_float_holds_is_rounded(value: int) -> None:
 @pytest.mark.parametrize("kind", [pa.string(), pa.float64(), pa.null()])
 def test_an_empty_column(kind: pa.DataType) -> None:
     assert not numbers(pa.array([], kind), ANY).values.size
+
+
+def test_every_unit_of_a_users_column_is_one_that_people_may_write() -> None:
+    written = {column.unit for table in WRITTEN_BY_USERS for column in columns(table)} - {"", "1", "gain"}
+    assert written <= set(NOTATIONS)

@@ -80,8 +80,8 @@ NOTATIONS = {
         symbols=tuple(f"{part}/{kelvin}" for part in ("ppm", "PPM") for kelvin in ("K", *CELSIUS)),
         others={f"%/{kelvin}": 4 for kelvin in ("K", *CELSIUS)},
     ),
-    "degC": Notation(
-        symbols=CELSIUS,
+    "degree Celsius": Notation(
+        symbols=("degree Celsius", *CELSIUS),
         foreign={**dict.fromkeys(("K", "kelvin"), NO_CELSIUS), **dict.fromkeys(("F", "\u00b0F", "degF"), NO_CELSIUS)},
     ),
 }  # fmt: skip

@@ -18,7 +18,7 @@ import pyarrow.compute as pc
 
 from gainassay.contracts.quantities import Writing, numbers
 from gainassay.contracts.tables import Column
-from gainassay.contracts.units import notation, power_of_ten
+from gainassay.contracts.units import NOTATIONS, notation, power_of_ten
 from gainassay.job import Source, is_address
 from gainassay.tables import sources
 from gainassay.tables.raw import RawTable, is_number
@@ -28,9 +28,6 @@ LOOKED_AT = 1 << 16
 """Bytes of a text file that its delimiter is guessed from."""
 
 IN_BRACKETS = re.compile(r"[(\[{]\s*([^)\]}]*?)\s*[)\]}]")
-UNITS = ("ohm", "F", "H", "Hz", "V", "A", "V/us", "V/V", "dB", "%", "ppm", "ppm/K", "degC")
-"""Units of ours by which text in brackets is known for a unit."""
-
 TRAILING = {"ohm": "ohm", "db": "dB", "pct": "%", "ppm": "ppm", "hz": "Hz", "khz": "kHz", "kohm": "kohm"}
 """Units at the end of a header in whatever case; what could be milli or mega is not among them."""
 
@@ -209,7 +206,7 @@ def _respelled(unit: str) -> str:
 
 
 def _is_unit(text: str) -> bool:
-    return any(power_of_ten(text, own) is not None for own in UNITS)
+    return any(power_of_ten(text, own) is not None for own in NOTATIONS)
 
 
 def _is_limit_of(quantity: str, name: str) -> bool:

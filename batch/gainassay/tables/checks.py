@@ -50,11 +50,14 @@ class Checking:
         Columns read so far.
     by_name : ndarray of int, shape (rows,)
         Positions by name, once the names are read.
+    ordered : pyarrow.Array
+        The names in that order.
     """
 
     raw: RawTable
     refused: dict[tuple[int, str], Reject] = field(default_factory=dict)
     by_name: NDArray[np.intp] = field(default_factory=lambda: np.array([], dtype=np.intp))
+    ordered: pa.Array = field(default_factory=lambda: pa.array([], pa.string()))
     read: dict[Column, Numbers] = field(default_factory=dict)
 
     @staticmethod
@@ -159,7 +162,8 @@ class Checking:
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
             )
         self.by_name = _by_name(text)
-        for positions in _repeated(text, self.by_name):
+        self.ordered = text.take(pa.array(self.by_name))
+        for positions in _repeated(self.ordered, self.by_name):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):
                 others = [other for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
@@ -178,9 +182,8 @@ class Checking:
 
     def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
         """Positions of the rows without a reject, by their names, and these names; after `names`."""
-        order = self.by_name[self.good()[self.by_name]]
-        names = text_of(self.raw.columns[self.raw.key]).take(pa.array(order))
-        return order, _as_numpy(names)
+        kept = self.good()[self.by_name]
+        return self.by_name[kept], _as_numpy(self.ordered.filter(pa.array(kept)))
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
@@ -215,9 +218,8 @@ def _as_numpy(names: pa.Array) -> NDArray[np.str_]:
     return np.asarray(names.to_numpy(zero_copy_only=False).astype(np.str_))
 
 
-def _repeated(names: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
-    """Positions of each name that stands more than once, blank ones apart; `order` sorts the names."""
-    by_name = names.take(pa.array(order))
+def _repeated(by_name: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
+    """Positions of each name that stands more than once, blank ones apart; names in their order, and its positions."""
     same = np.asarray(pc.equal(by_name[1:], by_name[:-1])) & np.asarray(pc.not_equal(by_name[1:], ""))
     found: list[list[int]] = []
     for place in np.flatnonzero(same):

@@ -25,6 +25,7 @@ ROWS_AT_A_TIME = 1_000
 """So few that their cells are still near when they are turned into columns: ten times as many take longer."""
 
 CHUNKS_OF_A_PIECE = 64
+"""What is checked together: fewer cost more for each row."""
 
 READ_ONLY = {
     "postgresql": "SET SESSION CHARACTERISTICS AS TRANSACTION READ ONLY",

@@ -155,10 +155,10 @@ def _require(raw: RawTable) -> None:
 
 def _of_all(blocks: list[list[_Read]], figure: str, order: NDArray[np.intp]) -> NDArray[Any]:
     """One figure of each departure, of all blocks in order."""
-    found = []
-    for departures in zip(*blocks, strict=True):
-        found.append(np.concatenate([getattr(one, figure) for one in departures])[order])
-    return np.array(found)
+    found = np.empty((len(DEPARTURES), len(order)), getattr(blocks[0][0], figure).dtype)
+    for own, departures in zip(found, zip(*blocks, strict=True), strict=True):
+        own[:] = np.concatenate([getattr(one, figure) for one in departures])[order]
+    return found
 
 
 def _figure_columns(departure: Departure) -> list[str]:

@@ -159,12 +159,6 @@ def _as_text(value: object) -> str:
     return repr(value).removesuffix(".0") if isinstance(value, float) else str(value)
 
 
-def whole(cells: pa.ChunkedArray) -> pa.Array:
-    """A column in one piece."""
-    found = cells.combine_chunks()
-    return found if isinstance(found, pa.Array) else pa.concat_arrays(found.chunks)
-
-
 def refuse_repeated(source: str, header: Sequence[str]) -> None:
     """Raise if a name stands more than once in a header.
 

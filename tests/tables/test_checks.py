@@ -17,7 +17,9 @@ def checking_of(names: list[str]) -> Checking:
     """A table of names alone."""
     columns = {"part": pa.array(names, pa.string())}
     rows = np.arange(2, 2 + len(names))
-    return Checking.of(RawTable("parts.csv", "part", columns, rows, ("parts.csv",), (0,), (), "", {}, {}, "."))
+    return Checking.of(
+        RawTable("parts.csv", "part", ("part",), columns, rows, ("parts.csv",), (0,), (), "", {}, {}, ".")
+    )
 
 
 NAMES = st.lists(st.text("ab é\U0001f600\uffff-0", min_size=1, max_size=12).filter(lambda text: text == text.strip()))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -40,6 +41,14 @@ class Bandwidths:
     def nominal(self) -> FloatArray:
         """The gain-bandwidth product [Hz]: typical where given, else the limit; nan where neither is."""
         return np.where(np.isnan(self.gbw_typ), self.gbw_min, self.gbw_typ)
+
+
+def joined(blocks: Sequence[Bandwidths]) -> Bandwidths:
+    """The figures of all parts, from those of some after the other."""
+    least, typical, pole = (
+        np.concatenate([getattr(block, name) for block in blocks]) for name in ("gbw_min", "gbw_typ", "second_pole")
+    )
+    return Bandwidths(least, typical, pole, blocks[0].has_second_pole)
 
 
 def read(checking: Checking) -> Bandwidths:

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import json
-import os
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
+from itertools import takewhile
 
 import numpy as np
 import pyarrow as pa
@@ -19,7 +19,7 @@ from gainassay.contracts.quantities import Numbers, Writing, in_text, numbers, t
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.job import Heading
-from gainassay.tables.raw import RawTable, is_number, shown
+from gainassay.tables.raw import RawTable, is_number, joined, shown, starts_of
 from gainassay.tables.rejects import PLACE, Reject, by_reason
 
 LONGEST_NAME = 200
@@ -50,17 +50,33 @@ class Checking:
         Columns read so far.
     by_name : ndarray of int, shape (rows,)
         Positions by name, once the names are read.
+    ordered : pyarrow.Array
+        The names in that order.
     """
 
     raw: RawTable
     refused: dict[tuple[int, str], Reject] = field(default_factory=dict)
     by_name: NDArray[np.intp] = field(default_factory=lambda: np.array([], dtype=np.intp))
+    ordered: pa.Array = field(default_factory=lambda: pa.array([], pa.string()))
     read: dict[Column, Numbers] = field(default_factory=dict)
 
     @staticmethod
     def of(raw: RawTable) -> Checking:
         """Start with a table as read."""
         return Checking(raw)
+
+    @staticmethod
+    def joined(parts: Sequence[Checking]) -> Checking:
+        """Checks of some rows under those of others, as one."""
+        tables = [part.raw for part in parts]
+        found = Checking(joined(tables))
+        for part, start in zip(parts, starts_of(tables), strict=True):
+            found.refused |= {(start + at, column): reject for (at, column), reject in part.refused.items()}
+        return found
+
+    def only(self, columns: Collection[str]) -> Checking:
+        """What was found, with the cells of some columns alone."""
+        return Checking(self.raw.only(columns), self.refused)
 
     def refuse(self, position: int, column: str, reason: str) -> None:
         """Reject the row at `position` for its cell in `column` (several columns: joined by commas)."""
@@ -128,8 +144,8 @@ class Checking:
             self.refuse_all(column.name, self.read[column].refused)
         return self.read[column]
 
-    def names(self, column: str) -> NDArray[np.object_]:
-        """The names in a key column; blank, unprintable and repeated names are rejected."""
+    def names(self, column: str) -> pa.Array:
+        """The names in a key column, as text; blank, unprintable and repeated names are rejected."""
         text = text_of(self.cells(column))
         faults = (
             (pc.equal(text, ""), "is blank; each row needs a name"),
@@ -146,7 +162,8 @@ class Checking:
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
             )
         self.by_name = _by_name(text)
-        for positions in _repeated(text, self.by_name):
+        self.ordered = text.take(pa.array(self.by_name))
+        for positions in _repeated(self.ordered, self.by_name):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):
                 others = [other for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
@@ -155,7 +172,7 @@ class Checking:
                     column,
                     f"stands more than once: also in row {_listed(others, len(rows) - 1)}; which is meant?",
                 )
-        return np.asarray(text.to_numpy(zero_copy_only=False), dtype=object)
+        return text
 
     def good(self) -> NDArray[np.bool_]:
         """Rows without a reject."""
@@ -165,9 +182,8 @@ class Checking:
 
     def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
         """Positions of the rows without a reject, by their names, and these names; after `names`."""
-        order = self.by_name[self.good()[self.by_name]]
-        names = text_of(self.raw.columns[self.raw.key]).take(pa.array(order))
-        return order, _as_numpy(names)
+        kept = self.good()[self.by_name]
+        return self.by_name[kept], _as_numpy(self.ordered.filter(pa.array(kept)))
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
@@ -179,9 +195,9 @@ def _by_name(names: pa.Array) -> NDArray[np.intp]:
     longest = pc.max(pc.binary_length(names)).as_py() or 0
     if longest > SHORT_NAME:
         return np.asarray(pc.sort_indices(names)).astype(np.intp)
-    ends = pc.min_max(names).as_py().values()
+    ends = [(end or "").encode() for end in pc.min_max(names).as_py().values()]
     # What all start with orders nothing.
-    start = len(os.path.commonprefix([(end or "").encode() for end in ends]))  # noqa: RUF071 -- these are no paths
+    start = len(list(takewhile(lambda pair: pair[0] == pair[1], zip(*ends, strict=False))))
     words = max(1, -(-(longest - start) // 8))
     own = np.ascontiguousarray(_padded(names, start + 8 * words)[:, start:])
     numbers = own.view(">u8").astype(np.uint64).T
@@ -202,9 +218,8 @@ def _as_numpy(names: pa.Array) -> NDArray[np.str_]:
     return np.asarray(names.to_numpy(zero_copy_only=False).astype(np.str_))
 
 
-def _repeated(names: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
-    """Positions of each name that stands more than once, blank ones apart; `order` sorts the names."""
-    by_name = names.take(pa.array(order))
+def _repeated(by_name: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
+    """Positions of each name that stands more than once, blank ones apart; names in their order, and its positions."""
     same = np.asarray(pc.equal(by_name[1:], by_name[:-1])) & np.asarray(pc.not_equal(by_name[1:], ""))
     found: list[list[int]] = []
     for place in np.flatnonzero(same):
@@ -246,10 +261,10 @@ def column_use(raw: RawTable, table: str, known: Iterable[str]) -> ColumnUse:
     """What became of the columns of a table, of which the known ones are read."""
     names = set(known)
     return ColumnUse(
-        found=tuple(name for name in raw.columns if name in names and name not in raw.headings),
+        found=tuple(name for name in raw.header if name in names and name not in raw.headings),
         mapped=tuple(raw.headings.values()),
-        missing=tuple(c.name for c in tables.columns(table) if c.name in names and c.name not in raw.columns),
-        unknown=tuple(f"'{name}'{nearest(name, names)}" for name in raw.columns if name not in names),
+        missing=tuple(c.name for c in tables.columns(table) if c.name in names and c.name not in raw.header),
+        unknown=tuple(f"'{name}'{nearest(name, names)}" for name in raw.header if name not in names),
     )
 
 
@@ -262,9 +277,9 @@ def require_columns(raw: RawTable, table: str) -> None:
         With the column, the nearest that is there, and a guess at what separates the cells if it is no comma.
     """
     for column in tables.columns(table):
-        if column.required and column.name not in raw.columns:
-            hint = nearest(column.name, raw.columns)
-            only = next(iter(raw.columns)) if len(raw.columns) == 1 else ""
+        if column.required and column.name not in raw.header:
+            hint = nearest(column.name, raw.header)
+            only = raw.header[0] if len(raw.header) == 1 else ""
             for mark, name in ((";", "semicolons"), ("\t", "tabs"), ("|", "bars")):
                 if mark in only:
                     hint = f"; its cells look separated by {name}: say delimiter = {json.dumps(mark)} in [{table}]"
@@ -276,7 +291,7 @@ def unknown_columns(raw: RawTable, known: Iterable[str]) -> tuple[str, ...]:
     names = set(known)
     return tuple(
         f"{raw.source}: column '{name}' is not known and not read{nearest(name, names)}"
-        for name in raw.columns
+        for name in raw.header
         if name not in names
     )
 

@@ -137,7 +137,7 @@ def _cells(checking: Checking, column: Column, is_word: bool) -> Cells:
 
 
 def _require(checking: Checking, names: Iterable[str]) -> None:
-    there = checking.raw.columns
+    there = checking.raw.header
     for name in names:
         if name not in there:
             raise InputError(

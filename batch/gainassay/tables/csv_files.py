@@ -5,16 +5,18 @@ from __future__ import annotations
 import codecs
 import csv
 import hashlib
+from collections.abc import Iterator, Sequence
 from itertools import islice
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pyarrow as pa
+from numpy.typing import NDArray
 
 from gainassay.errors import InputError
 from gainassay.job import Source
-from gainassay.tables.raw import Piece, filled, refuse_repeated, shown, whole
+from gainassay.tables.raw import Piece, filled, refuse_repeated, shown
 from gainassay.tables.rejects import Reject
 
 BLOCK = 1 << 22
@@ -29,8 +31,8 @@ MARKS = {
 """Byte-order marks of other encodings than UTF-8, the longer ones first: one begins as a shorter one does."""
 
 
-def read(path: Path, source: Source) -> Piece:
-    """The table in a CSV file.
+def read(path: Path, source: Source) -> Iterator[Piece]:
+    """The table in a CSV file, block by block; the last piece holds no rows, but what is known at the end.
 
     Raises
     ------
@@ -41,16 +43,39 @@ def read(path: Path, source: Source) -> Piece:
     sha256, quotes = _scanned(path, encoding)
     header, has_more = _header(path, encoding, source.delimiter or ",", header_row)
     if not has_more:
-        return Piece(str(path), _nothing_under(header), np.array([], np.int64), sha256)
-    table, ragged = _body(path, header, encoding, source.delimiter or ",", header_row)
-    if quotes % 2 and table.num_rows and any("\n" in (column[-1].as_py() or "") for column in table.columns):
-        row = header_row + table.num_rows + len(ragged)
+        yield Piece(str(path), _nothing_under(header), np.array([], np.int64), sha256)
+        return
+    ragged: list[Reject] = []
+    row, last = (
+        header_row,
+        pa.RecordBatch.from_pylist([], pa.schema([(place, pa.string()) for place in _places(header)])),
+    )
+    for batch in _batches(path, header, encoding, source.delimiter or ",", header_row, ragged):
+        rows = _next_rows(row, len(batch), [reject.row for reject in ragged])
+        yield Piece(str(path), _columns(path, header, header_row, batch), rows)
+        if len(batch):
+            row, last = int(rows[-1]), batch
+    if quotes % 2 and any("\n" in (cells[-1].as_py() or "") for cells in last.columns if len(cells)):
         raise InputError(f"{path}: row {row}: a quote is opened and never closed; close or remove it")
-    numbers = np.arange(header_row + 1, header_row + 1 + table.num_rows + len(ragged))
-    rows = numbers[~np.isin(numbers, [reject.row for reject in ragged])] if ragged else numbers
+    nothing = _columns(path, header, header_row, last.slice(len(last)))
+    yield Piece(str(path), nothing, np.array([], np.int64), sha256, tuple(ragged))
+
+
+def _places(header: Sequence[str]) -> list[str]:
+    """Columns by their place, since a header may name some nothing."""
+    return [str(place) for place in range(len(header))]
+
+
+def _next_rows(row: int, count: int, aside: Sequence[int]) -> NDArray[np.int64]:
+    """Numbers of the rows that follow a row, those that were set aside passed over."""
+    numbers = np.arange(row + 1, row + 1 + count + len(aside))
+    return numbers[~np.isin(numbers, aside)][:count] if aside else numbers
+
+
+def _columns(path: Path, header: Sequence[str], header_row: int, batch: pa.RecordBatch) -> dict[str, pa.Array]:
+    """The cells of each column by its name; those of one that has none must be blank."""
     columns = {}
-    for place, name in enumerate(header):
-        cells = whole(table.column(place))
+    for place, (name, cells) in enumerate(zip(header, batch.columns, strict=True)):
         if name:
             columns[name] = cells
         elif filled({"": cells}, len(cells)).any():
@@ -58,7 +83,7 @@ def read(path: Path, source: Source) -> Piece:
                 f"{path}: column {place + 1} has no name in row {header_row}, but cells that are filled; name it, or "
                 "say header_row = ... where the names stand further down"
             )
-    return Piece(str(path), columns, rows, sha256, ragged)
+    return columns
 
 
 def _encoding(path: Path, name: str) -> str:
@@ -74,21 +99,10 @@ def _nothing_under(header: list[str]) -> dict[str, pa.Array]:
     return {name: pa.array([], pa.string()) for name in header if name}
 
 
-def _body(
-    path: Path, header: list[str], encoding: str, delimiter: str, header_row: int
-) -> tuple[pa.Table, tuple[Reject, ...]]:
-    """The rows under the header, and those whose number of cells is another."""
-    try:
-        return _table(path, header, encoding, delimiter, header_row), ()
-    except (pa.ArrowInvalid, UnicodeError):
-        # Only on one thread does the reader say the number of a row that it sets aside.
-        return _careful_table(path, header, encoding, delimiter, header_row)
-
-
-def _careful_table(
-    path: Path, header: list[str], encoding: str, delimiter: str, header_row: int
-) -> tuple[pa.Table, tuple[Reject, ...]]:
-    ragged: list[Reject] = []
+def _batches(
+    path: Path, header: list[str], encoding: str, delimiter: str, header_row: int, ragged: list[Reject]
+) -> Iterator[pa.RecordBatch]:
+    """The rows under the header; those whose number of cells is another are set aside."""
     swallowing: list[int] = []
 
     def keep_aside(row: Any) -> str:
@@ -104,7 +118,8 @@ def _careful_table(
         return "skip"
 
     try:
-        return _table(path, header, encoding, delimiter, header_row, keep_aside), tuple(ragged)
+        with _opened(path, header, encoding, delimiter, header_row, keep_aside) as reader:
+            yield from reader
     except (pa.ArrowInvalid, pa.ArrowKeyError, UnicodeError) as error:
         if swallowing:
             raise InputError(
@@ -114,17 +129,16 @@ def _careful_table(
         raise InputError(f"{path}: cannot be read as CSV in {encoding.upper()}: {str(error).splitlines()[0]}") from None
 
 
-def _table(
-    path: Path, header: list[str], encoding: str, delimiter: str, header_row: int, keep_aside: Any = None
-) -> pa.Table:
-    """All cells as text, null where nothing stands; columns by their place, since a header may name some nothing."""
+def _opened(path: Path, header: list[str], encoding: str, delimiter: str, header_row: int, keep_aside: Any) -> Any:
+    """A reader of all cells as text, null where nothing stands."""
     import pyarrow.csv as pacsv
 
-    places = [str(place) for place in range(len(header))]
-    return pacsv.read_csv(
+    places = _places(header)
+    return pacsv.open_csv(
         path,
         read_options=pacsv.ReadOptions(
-            use_threads=keep_aside is None,
+            # Only on one thread does the reader say the number of a row that it sets aside.
+            use_threads=False,
             skip_rows=header_row,
             column_names=places,
             encoding=encoding,

@@ -16,13 +16,16 @@ import pyarrow as pa
 
 from gainassay.errors import InputError
 from gainassay.job import Source
-from gainassay.tables.raw import Piece, array_of, one_under_the_other, refuse_repeated
+from gainassay.tables.raw import Flaws, Piece, array_of, one_under_the_other, refuse_repeated
 
 if TYPE_CHECKING:
     from sqlalchemy import URL, Connection, CursorResult, Engine
 
 ROWS_AT_A_TIME = 1_000
 """So few that their cells are still near when they are turned into columns: ten times as many take longer."""
+
+CHUNKS_OF_A_PIECE = 64
+"""What is checked together: fewer cost more for each row."""
 
 READ_ONLY = {
     "postgresql": "SET SESSION CHARACTERISTICS AS TRANSACTION READ ONLY",
@@ -47,7 +50,7 @@ NO_VALUES: dict[type, str] = {
 """By type: why a cell is no plain value."""
 
 
-def read_file(path: Path, source: Source) -> Piece:
+def read_file(path: Path, source: Source) -> Iterator[Piece]:
     """The table in an SQLite file.
 
     Raises
@@ -71,7 +74,7 @@ def _attach_nothing(action: int, *_: object) -> int:
     return sqlite3.SQLITE_DENY if action == sqlite3.SQLITE_ATTACH else sqlite3.SQLITE_OK
 
 
-def read_address(source: Source) -> Piece:
+def read_address(source: Source) -> Iterator[Piece]:
     """The table at the address of a database; the address may stand in an environment variable.
 
     Raises
@@ -122,13 +125,14 @@ def _url(source: Source) -> URL:
     return url
 
 
-def _read(engine: Engine, name: str, source: Source, secrets: tuple[str, ...]) -> Piece:
+def _read(engine: Engine, name: str, source: Source, secrets: tuple[str, ...]) -> Iterator[Piece]:
     from sqlalchemy.exc import SQLAlchemyError
 
     query = _one_statement(name, source.query)
     done = 0
     batches: list[list[pa.Array]] = []
     flaws: dict[str, dict[int, str]] = {}
+    first = 1
     digest = hashlib.sha256()
     try:
         with _reading(engine, name, bool(query)) as connection:
@@ -137,10 +141,13 @@ def _read(engine: Engine, name: str, source: Source, secrets: tuple[str, ...]) -
             header = list(result.keys())
             refuse_repeated(where, header)
             for chunk in result.partitions(ROWS_AT_A_TIME):
+                if len(batches) == CHUNKS_OF_A_PIECE:
+                    yield _piece(where, header, batches, first, flaws)
+                    batches, flaws, first = [], {}, done + 1
                 columns = list(zip(*chunk, strict=True))
                 batch = [array_of(column) for column in columns]
                 for title, column in zip(header, columns, strict=True):
-                    if found := _flaws(column, done):
+                    if found := _flaws(column, done + 1 - first):
                         flaws.setdefault(title, {}).update(found)
                 digest.update(pa.record_batch(batch, names=header).serialize())
                 batches.append(batch)
@@ -151,9 +158,22 @@ def _read(engine: Engine, name: str, source: Source, secrets: tuple[str, ...]) -
         raise InputError(f"{name}: cannot be read{after}: {fault.splitlines()[0]}") from None
     finally:
         engine.dispose()
+    yield _piece(where, header, batches, first, flaws, digest.hexdigest())
+
+
+def _piece(
+    where: str,
+    header: list[str],
+    batches: list[list[pa.Array]],
+    first: int,
+    flaws: Flaws,
+    sha256: str = "",
+) -> Piece:
+    """Chunks of a result, one under the other; `first` is the row of the first."""
     parts = zip(*batches, strict=True) if batches else ([pa.array([], pa.string())] for _ in header)
-    cells = {title: one_under_the_other(where, title, part) for title, part in zip(header, parts, strict=True)}
-    return Piece(where, cells, np.arange(1, 1 + done), digest.hexdigest(), (), flaws)
+    columns = {title: one_under_the_other(part) for title, part in zip(header, parts, strict=True)}
+    count = sum(len(batch[0]) for batch in batches)
+    return Piece(where, columns, np.arange(first, first + count), sha256, (), flaws)
 
 
 @contextmanager

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Collection, Iterator, Mapping
 from dataclasses import dataclass
 
 import pyarrow as pa
@@ -13,7 +13,6 @@ from gainassay.contracts.tables import Column
 from gainassay.contracts.units import misread, power_of_ten
 from gainassay.errors import InputError
 from gainassay.job import Heading, Source
-from gainassay.tables.raw import Piece
 
 
 @dataclass(frozen=True)
@@ -35,17 +34,26 @@ class Headings:
     constants: Mapping[str, str]
 
 
-def headings(source: Source, table: Piece, known: Mapping[str, Column]) -> Headings:
+def headings(source: Source, called: str, header: Collection[str], known: Mapping[str, Column]) -> Headings:
     """What a job says of the columns of a table, checked against both.
+
+    Parameters
+    ----------
+    called : str
+        What messages call the table.
+    header : Collection[str]
+        The names of its columns.
+    known : Mapping[str, Column]
+        The columns that such a table may have, by name.
 
     Raises
     ------
     InputError
         If a column is not there or not known, is named twice, or cannot have the unit; every fault is listed.
     """
-    faults = list(_faults(source, table, known))
+    faults = list(_faults(source, header, known))
     if faults:
-        raise InputError("\n".join(f"{table.source}: in [{source.section}.columns]: {fault}" for fault in faults))
+        raise InputError("\n".join(f"{called}: in [{source.section}.columns]: {fault}" for fault in faults))
     by_name = {heading.ours: heading for heading in source.columns}
     return Headings(
         by_name=by_name,
@@ -54,18 +62,18 @@ def headings(source: Source, table: Piece, known: Mapping[str, Column]) -> Headi
     )
 
 
-def _faults(source: Source, table: Piece, known: Mapping[str, Column]) -> Iterator[str]:
+def _faults(source: Source, header: Collection[str], known: Mapping[str, Column]) -> Iterator[str]:
     taken = {heading.theirs for heading in source.columns if heading.value is None}
     ours: set[str] = set()
     for heading in source.columns:
         name = heading.ours
-        if heading.value is None and heading.theirs not in table.columns:
-            yield f"the table has no column '{heading.theirs}'{nearest(heading.theirs, table.columns)}"
+        if heading.value is None and heading.theirs not in header:
+            yield f"the table has no column '{heading.theirs}'{nearest(heading.theirs, header)}"
         if name not in known:
             yield f"there is no column '{name}' to fill{nearest(name, known) or '; `gainassay columns` lists them'}"
         elif name in ours:
             yield f"two columns are to fill '{name}'; which is meant?"
-        elif name in table.columns and name not in taken:
+        elif name in header and name not in taken:
             yield f"the table has a column '{name}' of its own; which is meant?"
         else:
             yield from _faults_of(heading, known[name], source.decimal)

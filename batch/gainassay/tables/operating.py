@@ -36,6 +36,11 @@ def read_parts(checking: Checking) -> Operating:
     return _read(checking, "parts", OF_PARTS)
 
 
+def joined(blocks: Sequence[Operating]) -> Operating:
+    """The same of all rows, from those of some after the other."""
+    return {name: np.concatenate([block[name] for block in blocks]) for name in blocks[0]}
+
+
 def at(operating: Operating, rows: NDArray[np.intp]) -> Operating:
     """The same of some rows."""
     return {name: values[rows] for name, values in operating.items()}

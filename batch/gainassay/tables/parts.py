@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -22,6 +23,7 @@ from gainassay.tables.bandwidths import Bandwidths
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.operating import Operating
+from gainassay.tables.raw import RawTable
 from gainassay.tables.rejects import Reject, rejected_rows
 
 PER_PCT = 1e-2
@@ -113,17 +115,25 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         If the table cannot be read, lacks a column that every part or a rule needs, or holds no row that can be used.
     """
     known = {column.name: column for column in tables.columns("parts")} | compared.columns()
-    raw = sources.read(source, known)
-    require_columns(raw, "parts")
-    gain_columns = _figure_columns(OPEN_LOOP_GAIN)
-    if not set(gain_columns) & set(raw.columns):
-        raise InputError(f"{raw.source}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
-    checking = Checking.of(raw)
+    kept = {"part", *compared.columns()}
+    checks: list[Checking] = []
+    figures: list[list[_Read]] = []
+    of_frequency: list[Bandwidths] = []
+    limits: list[Operating] = []
+    for block in sources.blocks(source, known):
+        if not checks:
+            _require(block)
+        checking = Checking.of(block)
+        figures.append([_departure(checking, one, assume.get(one.quantity, StandIn())) for one in DEPARTURES])
+        of_frequency.append(bandwidths.read(checking))
+        limits.append(operating.read_parts(checking))
+        # Its text is done with: a table may be larger than the memory.
+        checks.append(checking.only(kept))
+    checking = Checking.joined(checks)
     checking.names("part")
-    read = [_departure(checking, departure, assume.get(departure.quantity, StandIn())) for departure in DEPARTURES]
-    of_frequency = bandwidths.read(checking)
-    cells, limits = read_compared(checking, compared), operating.read_parts(checking)
+    cells = read_compared(checking, compared)
     order, names = checking.in_order()
+    raw = checking.raw
     rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
         raise InputError(nothing_left(raw.source, rows, checking.found(), "part"))
@@ -132,21 +142,37 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         sha256=raw.sha256,
         rows=rows,
         names=names,
-        nominal=np.array([one.nominal[order] for one in read]),
-        worst=np.array([one.worst[order] for one in read]),
-        evidence=np.array([one.evidence[order] for one in read], np.uint8),
-        worst_hot=np.array([one.worst_hot[order] for one in read]),
-        evidence_hot=np.array([one.evidence_hot[order] for one in read], np.uint8),
-        change=np.array([one.change[order] for one in read]),
-        evidence_change=np.array([one.evidence_change[order] for one in read], np.uint8),
-        modelled=tuple(one.modelled for one in read),
-        bandwidths=of_frequency.at(order),
+        nominal=_of_all(figures, "nominal", order),
+        worst=_of_all(figures, "worst", order),
+        evidence=_of_all(figures, "evidence", order),
+        worst_hot=_of_all(figures, "worst_hot", order),
+        evidence_hot=_of_all(figures, "evidence_hot", order),
+        change=_of_all(figures, "change", order),
+        evidence_change=_of_all(figures, "evidence_change", order),
+        modelled=tuple(one.modelled for one in figures[0]),
+        bandwidths=bandwidths.joined(of_frequency).at(order),
         compared={name: column.at(order) for name, column in cells.items()},
-        operating=operating.at(limits, order),
+        operating=operating.at(operating.joined(limits), order),
         rejects=checking.found(),
         columns=column_use(raw, "parts", known),
         warnings=unknown_columns(raw, known),
     )
+
+
+def _require(raw: RawTable) -> None:
+    """Raise if a column is missing that every part needs."""
+    require_columns(raw, "parts")
+    gain_columns = _figure_columns(OPEN_LOOP_GAIN)
+    if not set(gain_columns) & set(raw.header):
+        raise InputError(f"{raw.source}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
+
+
+def _of_all(blocks: list[list[_Read]], figure: str, order: NDArray[np.intp]) -> NDArray[Any]:
+    """One figure of each departure, of all blocks in order."""
+    found = np.empty((len(DEPARTURES), len(order)), getattr(blocks[0][0], figure).dtype)
+    for own, departures in zip(found, zip(*blocks, strict=True), strict=True):
+        own[:] = np.concatenate([getattr(one, figure) for one in departures])[order]
+    return found
 
 
 def _figure_columns(departure: Departure) -> list[str]:
@@ -164,11 +190,11 @@ class _Read:
 
     nominal: FloatArray
     worst: FloatArray
-    evidence: NDArray[np.int64]
+    evidence: NDArray[np.uint8]
     worst_hot: FloatArray
-    evidence_hot: NDArray[np.int64]
+    evidence_hot: NDArray[np.uint8]
     change: FloatArray
-    evidence_change: NDArray[np.int64]
+    evidence_change: NDArray[np.uint8]
     modelled: bool
 
 
@@ -182,8 +208,8 @@ def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _
     _refuse_crossed(checking, departure, departure.hot_column, hot, typical_column, typical)
     change, evidence_change = _change(checking, departure, stand_in)
 
-    if not set(_figure_columns(departure)) & set(checking.raw.columns) and stand_in.value is None:
-        nothing, certain = np.zeros(len(limit)), np.full(len(limit), GUARANTEED)
+    if not set(_figure_columns(departure)) & set(checking.raw.header) and stand_in.value is None:
+        nothing, certain = np.zeros(len(limit)), np.full(len(limit), GUARANTEED, np.uint8)
         return _Read(nothing, nothing, certain, nothing, certain, change, evidence_change, False)
     assumed = np.nan if stand_in.value is None else stand_in.value
     figure = np.where(limit_given, limit, np.where(typical_given, typical * stand_in.typical_times, assumed))
@@ -200,9 +226,9 @@ def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _
     return _Read(
         nominal=_as_departure(nominal, np.isnan(nominal), departure),
         worst=worst,
-        evidence=evidence,
+        evidence=evidence.astype(np.uint8),
         worst_hot=np.maximum(worst, _as_departure(over_temperature, evidence == MISSING, departure)),
-        evidence_hot=np.where(hot_given, GUARANTEED, weaker),
+        evidence_hot=np.where(hot_given, GUARANTEED, weaker).astype(np.uint8),
         change=change,
         evidence_change=evidence_change,
         modelled=True,
@@ -219,12 +245,12 @@ def _refuse_crossed(
         checking.refuse(int(position), named, f"{relation} the typical figure")
 
 
-def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tuple[FloatArray, NDArray[np.int64]]:
+def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tuple[FloatArray, NDArray[np.uint8]]:
     """Change after a calibration as a fraction, and what it rests on."""
     cells = checking.column(tables.column("parts", departure.change_column))
     assumed = np.inf if stand_in.change_pct is None else stand_in.change_pct * PER_PCT
     evidence = np.where(cells.blank & np.isfinite(assumed), ASSUMED, GUARANTEED)
-    return np.where(cells.blank, assumed, cells.values * PER_PCT), evidence
+    return np.where(cells.blank, assumed, cells.values * PER_PCT), evidence.astype(np.uint8)
 
 
 def _as_departure(figure: FloatArray, missing: NDArray[np.bool_], departure: Departure) -> FloatArray:

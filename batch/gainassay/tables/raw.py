@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import hashlib
 from bisect import bisect_right
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from contextlib import suppress
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from itertools import accumulate
 from typing import Any
 
 import numpy as np
@@ -27,7 +29,7 @@ Flaws = Mapping[str, Mapping[int, str]]
 
 @dataclass(frozen=True)
 class Piece:
-    """One file, sheet or query's result as it stands.
+    """Some rows of a file, sheet or query's result, as they stand; all of one have the same columns.
 
     Attributes
     ----------
@@ -39,7 +41,7 @@ class Piece:
         Row in the file: a CSV's header is row 1, as a spreadsheet counts; the first of a Parquet file or of a
         query's result is 1.
     sha256 : str
-        Hash of what was read.
+        Hash of all that was read, in one of the pieces; empty in the others.
     ragged : tuple[Reject, ...]
         Rows of a CSV file whose number of cells is not the header's.
     """
@@ -47,7 +49,7 @@ class Piece:
     source: str
     columns: dict[str, pa.Array]
     rows: NDArray[np.int64]
-    sha256: str
+    sha256: str = ""
     ragged: tuple[Reject, ...] = ()
     flaws: Flaws = field(default_factory=dict)
 
@@ -69,7 +71,7 @@ class Piece:
 
 @dataclass(frozen=True)
 class RawTable:
-    """A table as it stands in its source, its columns by the names that the job gives them.
+    """A table or some rows of one as they stand in its source, its columns by the names that the job gives them.
 
     Attributes
     ----------
@@ -77,14 +79,18 @@ class RawTable:
         What messages call it.
     key : str
         The column that names its rows.
+    header : tuple[str, ...]
+        All columns.
     columns : dict[str, pyarrow.Array]
-        Cells, as in `Piece`.
+        Cells, as in `Piece`; of columns that are done with, none.
     rows : ndarray of int, shape (rows,)
         Row of each in its file, as in `Piece`.
     files : tuple[str, ...]
-        What messages call the file of a row, by the file's place.
+        What messages call the file of a row, by the piece's place.
     starts : tuple[int, ...]
-        Position of the first row of each file.
+        Position of the first row of each piece.
+    sha256 : str
+        Hash of what was read; of some rows, as in `Piece`.
     headings : Mapping[str, Heading]
         What the job says of a column, for those of which it says something.
     decimal : str
@@ -93,6 +99,7 @@ class RawTable:
 
     source: str
     key: str
+    header: tuple[str, ...]
     columns: dict[str, pa.Array]
     rows: NDArray[np.int64]
     files: tuple[str, ...]
@@ -106,6 +113,10 @@ class RawTable:
     def file_of(self, position: int) -> str:
         """What messages call the file of a row."""
         return self.files[bisect_right(self.starts, position) - 1]
+
+    def only(self, columns: Collection[str]) -> RawTable:
+        """The table with the cells of some columns alone."""
+        return replace(self, columns={name: self.columns[name] for name in self.header if name in columns})
 
     def theirs(self, column: str) -> str:
         """What the user calls a column."""
@@ -153,12 +164,6 @@ def _as_text(value: object) -> str:
     return repr(value).removesuffix(".0") if isinstance(value, float) else str(value)
 
 
-def whole(cells: pa.ChunkedArray) -> pa.Array:
-    """A column in one piece."""
-    found = cells.combine_chunks()
-    return found if isinstance(found, pa.Array) else pa.concat_arrays(found.chunks)
-
-
 def refuse_repeated(source: str, header: Sequence[str]) -> None:
     """Raise if a name stands more than once in a header.
 
@@ -193,38 +198,34 @@ def _stands(cells: pa.Array) -> NDArray[np.bool_]:
     return np.asarray(pc.fill_null(pc.not_equal(pc.utf8_trim_whitespace(cells), ""), False))
 
 
-def joined(source: str, pieces: Sequence[Piece]) -> Piece:
-    """Pieces one under the other, as one.
-
-    Raises
-    ------
-    InputError
-        If they do not have the same columns.
-    """
-    first = pieces[0]
-    for piece in pieces[1:]:
-        for one, other in ((first, piece), (piece, first)):
-            lacking = sorted(one.columns.keys() - other.columns.keys())
-            if lacking:
-                raise InputError(f"{other.source}: lacks the column '{lacking[0]}', which {one.source} has")
-    if len(pieces) == 1:
-        return first
-    starts = np.cumsum([0, *(len(piece.rows) for piece in pieces)])
+def joined(tables: Sequence[RawTable]) -> RawTable:
+    """Some rows of a table under others, as one; they have the same columns."""
+    first, starts = tables[0], starts_of(tables)
     flaws: dict[str, dict[int, str]] = {}
-    for piece, start in zip(pieces, starts, strict=False):
-        for name, found in piece.flaws.items():
-            flaws.setdefault(name, {}).update({int(start) + at: why for at, why in found.items()})
-    return Piece(
-        source,
-        {name: one_under_the_other(source, name, [piece.columns[name] for piece in pieces]) for name in first.columns},
-        np.concatenate([piece.rows for piece in pieces]),
-        "",
-        tuple(reject for piece in pieces for reject in piece.ragged),
-        flaws,
+    for table, start in zip(tables, starts, strict=True):
+        for name, found in table.flaws.items():
+            flaws.setdefault(name, {}).update({start + at: why for at, why in found.items()})
+    hashes = [table.sha256 for table in tables if table.sha256]
+    return replace(
+        first,
+        columns={name: one_under_the_other([table.columns[name] for table in tables]) for name in first.columns},
+        rows=np.concatenate([table.rows for table in tables]),
+        files=tuple(file for table in tables for file in table.files),
+        starts=tuple(start + own for table, start in zip(tables, starts, strict=True) for own in table.starts),
+        ragged=tuple(reject for table in tables for reject in table.ragged),
+        sha256=hashes[0]
+        if len(hashes) == 1
+        else hashlib.sha256("".join(f"{h}\n" for h in hashes).encode()).hexdigest(),
+        flaws=flaws,
     )
 
 
-def one_under_the_other(source: str, name: str, parts: Iterable[pa.Array]) -> pa.Array:
+def starts_of(tables: Sequence[RawTable]) -> list[int]:
+    """Position of the first row of each, when one stands under the other."""
+    return list(accumulate((len(table.rows) for table in tables[:-1]), initial=0))
+
+
+def one_under_the_other(parts: Iterable[pa.Array]) -> pa.Array:
     """A column joined: numbers if all are numbers, else text, a number as the shortest text that means it.
 
     Raises
@@ -235,6 +236,8 @@ def one_under_the_other(source: str, name: str, parts: Iterable[pa.Array]) -> pa
     parts = list(parts)
     types = {cells.type for cells in parts}
     if len(types) > 1:
+        if types == {pa.string(), pa.binary()}:
+            return pa.concat_arrays([cells.cast(pa.binary()) for cells in parts])
         numeric = all(is_number(cells) for cells in parts)
         try:
             parts = [cells.cast(pa.float64(), safe=False) if numeric else in_text(cells) for cells in parts]

@@ -2,12 +2,11 @@
 
 from __future__ import annotations
 
-import hashlib
 import os
 from collections.abc import Callable, Iterator, Mapping
+from itertools import chain
 from pathlib import Path
 
-import numpy as np
 import pyarrow as pa
 
 from gainassay.contracts import tables
@@ -15,13 +14,13 @@ from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.job import Source, is_address
 from gainassay.tables import csv_files, databases, parquet_files, workbooks
-from gainassay.tables.headings import headings
+from gainassay.tables.headings import Headings, headings
 from gainassay.tables.raw import Piece, RawTable, joined
 
-READERS: Mapping[str, Callable[[Path, Source], Piece]] = {
+READERS: Mapping[str, Callable[[Path, Source], Iterator[Piece]]] = {
     "csv": csv_files.read,
     "parquet": lambda path, _: parquet_files.read(path),
-    "workbook": workbooks.read,
+    "workbook": lambda path, source: map(workbooks.read, [path], [source]),
     "database": databases.read_file,
 }
 
@@ -45,7 +44,12 @@ OPTIONS = {
 
 
 def read(source: Source, known: Mapping[str, Column]) -> RawTable:
-    """The table that a job names. Rows in which nothing stands are passed over.
+    """The whole table that a job names; else as `blocks`."""
+    return joined(list(blocks(source, known)))
+
+
+def blocks(source: Source, known: Mapping[str, Column]) -> Iterator[RawTable]:
+    """The table that a job names, some rows at a time. Rows in which nothing stands are passed over.
 
     Parameters
     ----------
@@ -57,35 +61,48 @@ def read(source: Source, known: Mapping[str, Column]) -> RawTable:
     InputError
         If it cannot be read as what the job says, or a column that the job names is not there.
     """
-    pieces = [piece.without_blank_rows() for piece in _pieces(source)]
-    whole = joined(source.at, pieces)
-    found = headings(source, whole, known)
-    columns = {found.names.get(name, name): cells for name, cells in whole.columns.items()}
-    constants = {name: pa.repeat(pa.scalar(value), len(whole.rows)) for name, value in found.constants.items()}
+    if is_address(source.at):
+        _refuse_other_options(source, "database")
+        files = [databases.read_address(source)]
+    else:
+        files = [_file(path, source) for path in _paths(source.at)]
+    pieces = chain.from_iterable(files)
+    first = next(pieces)
+    called = source.at if len(files) > 1 else first.source
+    found = headings(source, called, first.columns, known)
+    for piece in chain([first], pieces):
+        _refuse_other_columns(first, piece)
+        yield _named(piece.without_blank_rows(), called, source, found)
+
+
+def _named(piece: Piece, called: str, source: Source, found: Headings) -> RawTable:
+    """A piece under the job's names of columns, with what stands in every row."""
+    columns = {found.names.get(name, name): cells for name, cells in piece.columns.items()}
+    columns |= {name: pa.repeat(pa.scalar(value), len(piece.rows)) for name, value in found.constants.items()}
     return RawTable(
-        source=whole.source,
+        source=called,
         key=tables.key(source.section),
-        columns={**columns, **constants},
-        rows=whole.rows,
-        files=tuple(piece.source for piece in pieces),
-        starts=tuple(int(start) for start in np.cumsum([0, *(len(piece.rows) for piece in pieces[:-1])])),
-        ragged=whole.ragged,
-        sha256=_hash_of(pieces),
-        flaws={found.names.get(name, name): flaws for name, flaws in whole.flaws.items()},
+        header=tuple(columns),
+        columns=columns,
+        rows=piece.rows,
+        files=(piece.source,),
+        starts=(0,),
+        ragged=piece.ragged,
+        sha256=piece.sha256,
+        flaws={found.names.get(name, name): flaws for name, flaws in piece.flaws.items()},
         headings=found.by_name,
         decimal=source.decimal,
     )
 
 
-def _pieces(source: Source) -> list[Piece]:
-    """What a source holds: one piece, or one for each file of a folder or pattern."""
-    if is_address(source.at):
-        _refuse_other_options(source, "database")
-        return [databases.read_address(source)]
-    return [_file(path, source) for path in _paths(source.at)]
+def _refuse_other_columns(first: Piece, piece: Piece) -> None:
+    for one, other in ((first, piece), (piece, first)):
+        lacking = sorted(one.columns.keys() - other.columns.keys())
+        if lacking:
+            raise InputError(f"{other.source}: lacks the column '{lacking[0]}', which {one.source} has")
 
 
-def _file(path: Path, source: Source) -> Piece:
+def _file(path: Path, source: Source) -> Iterator[Piece]:
     said = [kind for kind, option in (("csv", source.delimiter), ("database", source.table or source.query)) if option]
     kind = said[0] if said else KINDS.get(path.suffix.lower())
     _must_be_readable(path)
@@ -156,9 +173,3 @@ def _must_be_readable(path: Path) -> None:
         raise InputError(f"{path}: there is no such file") from None
     except (OSError, ValueError) as error:
         raise InputError(f"{path}: cannot be read: {getattr(error, 'strerror', None) or error}") from None
-
-
-def _hash_of(pieces: list[Piece]) -> str:
-    if len(pieces) == 1:
-        return pieces[0].sha256
-    return hashlib.sha256("".join(f"{piece.sha256}\n" for piece in pieces).encode()).hexdigest()

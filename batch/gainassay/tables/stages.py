@@ -153,7 +153,7 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
             f"{raw.source}: a column 'accuracy_pct' or 'accuracy_ppm' is missing: how accurate must a stage be?"
         )
     checking = Checking.of(raw)
-    names = checking.names("stage")
+    names = checking.names("stage").to_numpy(zero_copy_only=False)
     chosen = _topologies(checking, library)
     general = {
         name: checking.column(tables.column("stages", name)) for name in ("accuracy_pct", "accuracy_ppm", "target_gain")

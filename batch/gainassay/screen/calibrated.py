@@ -37,6 +37,7 @@ from gainassay.screen.kernel import (
     Outcome,
     add_products,
     beyond_corners,
+    find_dominant,
     in_blocks,
     undoing,
 )
@@ -194,10 +195,7 @@ def screen(form: Form, stages: StageSide, parts: PartSide, block: int = PAIRS_PE
             beyond=None if stages.slack is None else beyond,
         )
         every = slice(None)
-        for place, term in enumerate(account(form, stages, parts, every, every, found)):
-            larger = (np.abs(term) > np.abs(found.dominant_value)) & (corner != UNBOUNDED)
-            np.copyto(found.dominant, place, where=larger)
-            np.copyto(found.dominant_value, term, where=larger)
+        find_dominant(account(form, stages, parts, every, every, found), found)
         for row in np.flatnonzero((corner == UNBOUNDED).any(axis=1)):
             pulled = undoing(stages, parts, np.array([row]), every)[0]
             found.dominant[row] = np.where(corner[row] == UNBOUNDED, pulled, found.dominant[row])

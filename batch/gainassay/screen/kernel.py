@@ -11,7 +11,7 @@ that).
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -104,12 +104,17 @@ def _with_what_lies_beyond(
     np.copyto(outcome.dominant_value, np.nan, where=np.isnan(beyond))
     widened = replace(outcome, error_worst=outcome.error_worst + beyond, beyond=beyond)
     every = slice(None)
-    for place, term in enumerate(account(stages, parts, active_sets, every, every, widened)):
-        larger = np.abs(term) > (np.abs(widened.dominant_value) if place else -1.0)
-        larger &= outcome.corner != UNBOUNDED
-        np.copyto(widened.dominant, place, where=larger)
-        np.copyto(widened.dominant_value, term, where=larger)
+    find_dominant(account(stages, parts, active_sets, every, every, widened), widened)
     return widened
+
+
+def find_dominant(terms: Iterable[FloatArray], outcome: Outcome) -> None:
+    """Fill in the term of largest magnitude of each pair, the first of equals; not of those without a finite bound."""
+    bounded = outcome.corner != UNBOUNDED
+    for place, term in enumerate(terms):
+        larger = bounded & (np.abs(term) > (np.abs(outcome.dominant_value) if place else -1.0))
+        np.copyto(outcome.dominant, place, where=larger)
+        np.copyto(outcome.dominant_value, term, where=larger)
 
 
 def nominal_errors(stages: StageSide, parts: PartSide, block: int = PAIRS_PER_BLOCK) -> FloatArray:

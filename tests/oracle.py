@@ -1,8 +1,8 @@
 """An independent solver of stages, to hold Gainassay against.
 
 `gain` shares no formula with the package: unknowns are node voltages *and* every branch current, elements enter
-by their resistance, the amplifier by A_OL itself with r_o as a resistor in series, and numbers are solved for
-at 60 digits. Where many solves are needed `gains`, a plain nodal solve in double precision, does them in a
+by their resistance or complex impedance, the amplifier by A_OL itself with r_o as a resistor in series, and numbers are
+solved for at 60 digits. Where many solves are needed `gains`, a plain nodal solve in double precision, does them in a
 batch; it writes the amplifier with 1/A_OL, as the package does, but has its matrices solved numerically.
 """
 
@@ -24,9 +24,9 @@ OPEN = float("inf")
 
 @dataclass(frozen=True)
 class Part:
-    """An op-amp; the default is ideal. a_ol [V/V], r_id and r_o [ohm]."""
+    """An op-amp; the default is ideal. a_ol [V/V], complex at a frequency; r_id and r_o [ohm]."""
 
-    a_ol: float = OPEN
+    a_ol: float | mpmath.mpc = OPEN
     r_id: float = OPEN
     r_o: float = 0.0
 
@@ -34,16 +34,18 @@ class Part:
 IDEAL = Part()
 
 
-def gain(topology: Topology, ohms: Mapping[str, float], parts: Part | Mapping[str, Part]) -> mpmath.mpf:
+def gain(topology: Topology, ohms: Mapping[str, float | mpmath.mpc], parts: Part | Mapping[str, Part]) -> mpmath.mpf:
     """The gain of a stage at 60 digits; `parts` is one part for all amplifiers or one for each."""
     with mpmath.workdps(DIGITS):
         return _tableau(topology, ohms, parts)
 
 
-def _tableau(topology: Topology, ohms: Mapping[str, float], parts: Part | Mapping[str, Part]) -> mpmath.mpf:
+def _tableau(
+    topology: Topology, ohms: Mapping[str, float | mpmath.mpc], parts: Part | Mapping[str, Part]
+) -> mpmath.mpf:
     nodes = list(topology.nodes())
     held = topology.gain in ("voltage", "transconductance")
-    branches: list[tuple[str, str, str, float]] = [
+    branches: list[tuple[str, str, str, float | mpmath.mpc]] = [
         (element.name, *element.between, ohms[element.name]) for element in topology.elements
     ]
     part_of = {a.name: parts if isinstance(parts, Part) else parts[a.name] for a in topology.amplifiers}
@@ -79,7 +81,7 @@ def _tableau(topology: Topology, ohms: Mapping[str, float], parts: Part | Mappin
         else:
             voltage(row, start, mpmath.mpf(1))
             voltage(row, end, mpmath.mpf(-1))
-            matrix[row, column["i", name]] -= mpmath.mpf(value)
+            matrix[row, column["i", name]] -= mpmath.mpmathify(value)
         row += 1
     for amplifier in topology.amplifiers:
         part = part_of[amplifier.name]
@@ -88,7 +90,7 @@ def _tableau(topology: Topology, ohms: Mapping[str, float], parts: Part | Mappin
             voltage(row, amplifier.plus, mpmath.mpf(1))
             voltage(row, amplifier.minus, mpmath.mpf(-1))
         else:
-            a_ol = mpmath.mpf(part.a_ol)
+            a_ol = mpmath.mpmathify(part.a_ol)
             voltage(row, amplifier.out, mpmath.mpf(1))
             matrix[row, column["i", f"out {amplifier.name}"]] += mpmath.mpf(part.r_o)
             voltage(row, amplifier.plus, -a_ol)
@@ -109,6 +111,30 @@ def _tableau(topology: Topology, ohms: Mapping[str, float], parts: Part | Mappin
     if topology.gain in ("transconductance", "current"):
         return solution[column["i", topology.output]]
     return solution[column["v", topology.output]]
+
+
+def impedances(topology: Topology, values: Mapping[str, float], hertz: float) -> dict[str, float | mpmath.mpc]:
+    """Complex impedances [ohm] of elements in ohm, farad and henry; what is open or short stays so."""
+    with mpmath.workdps(DIGITS):
+        s = mpmath.mpc(0, 2 * mpmath.pi * mpmath.mpf(hertz))
+        found: dict[str, float | mpmath.mpc] = {}
+        for element in topology.elements:
+            value = values[element.name]
+            if element.kind == "capacitor":
+                found[element.name] = OPEN if value == 0.0 else 0.0 if value == OPEN else 1 / (s * mpmath.mpf(value))
+            elif element.kind == "inductor" and value != OPEN:
+                found[element.name] = s * mpmath.mpf(value)
+            else:
+                found[element.name] = value
+        return found
+
+
+def part_at(hertz: float, a_ol: float, r_id: float, r_o: float, gbw: float, second_pole: float = OPEN) -> Part:
+    """A part at a frequency: 1/A = (1/A_OL + j f/GBW)(1 + j f/f2)."""
+    with mpmath.workdps(DIGITS):
+        f = mpmath.mpf(hertz)
+        inverse = mpmath.mpc(1 / mpmath.mpf(a_ol), f / mpmath.mpf(gbw)) * mpmath.mpc(1, f / mpmath.mpf(second_pole))
+        return Part(1 / inverse if inverse else OPEN, r_id, r_o)
 
 
 def gains(
@@ -197,6 +223,20 @@ def random_ohms(topology: Topology, rng: random.Random, low: float = 1.0, high: 
         if element.absent != "error" and left_out:
             value = blank[element.absent]
         found[element.name] = at_dc.get(element.kind, value)
+    return found
+
+
+def random_values(topology: Topology, rng: random.Random, hertz: float) -> dict[str, float]:
+    """Elements in ohm, farad and henry whose impedances at a frequency are spread over the decades; some left out."""
+    blank = {"open": {"capacitor": 0.0}, "short": {"capacitor": OPEN, "resistor": 0.0, "inductor": 0.0}}
+    found = {}
+    for element in topology.elements:
+        ohms, omega = 10.0 ** rng.uniform(2, 6), 2.0 * np.pi * hertz
+        value = {"resistor": ohms, "capacitor": 1.0 / (omega * ohms), "inductor": ohms / omega}[element.kind]
+        left_out = rng.random() < 0.25
+        if element.absent != "error" and left_out:
+            value = blank[element.absent].get(element.kind, OPEN)
+        found[element.name] = float(value)
     return found
 
 

@@ -3,6 +3,8 @@
 An element enters as a pair (y, z), its admittance being y/z: a resistor is (1, r), an open circuit (0, 1), a
 short circuit (1, 0). Polynomials in admittances are made homogeneous in each pair, so that open, short and
 everything between are one case without a division.
+
+At 0 Hz pairs and all that follows from them are real, at a frequency complex.
 """
 
 from __future__ import annotations
@@ -66,9 +68,9 @@ class Slopes:
         Of n_k - d_k and d_k [1/unit of m_k].
     """
 
-    gain_ideal: FloatArray
-    contrasts: FloatArray
-    loadings: FloatArray
+    gain_ideal: AnyArray
+    contrasts: AnyArray
+    loadings: AnyArray
 
 
 def at_dc(form: Form, values: FloatArray) -> Pairs:
@@ -189,14 +191,14 @@ def slopes(form: Form, pairs: Pairs) -> Slopes:
     What is open or short has a slope of 0, or of its rounding.
     """
 
-    def table(ratios: tuple[Ratio, ...]) -> FloatArray:
-        found = np.empty((len(ratios), *pairs.y.shape))
+    def table(ratios: tuple[Ratio, ...]) -> AnyArray:
+        found = np.empty((len(ratios), *pairs.y.shape), pairs.z.dtype)
         for place, ratio in enumerate(ratios):
             found[place] = _slopes(ratio, pairs)
         return found.swapaxes(0, 1)
 
     with np.errstate(divide="ignore", invalid="ignore"):
-        relative = _slopes(form.gain_ideal, pairs) / gain_ideal(form, pairs)
+        relative = over(_slopes(form.gain_ideal, pairs), gain_ideal(form, pairs))
     return Slopes(relative, table(form.contrasts), table(form.loadings))
 
 
@@ -205,21 +207,51 @@ def ratios(of: Sequence[Ratio], pairs: Pairs) -> AnyArray:
     return np.array([_ratio(ratio, pairs) for ratio in of]).reshape(len(of), pairs.y.shape[1])
 
 
+def times(one: AnyArray, other: AnyArray) -> AnyArray:
+    """The product of arrays, real or complex.
+
+    A library's complex product may round differently by the place of a number in the array; this one does not.
+    """
+    if not (np.iscomplexobj(one) and np.iscomplexobj(other)):
+        return np.asarray(one * other)
+    found = np.empty(np.broadcast_shapes(one.shape, other.shape), np.complex128)
+    np.subtract(one.real * other.real, one.imag * other.imag, out=found.real)
+    np.add(one.real * other.imag, one.imag * other.real, out=found.imag)
+    return found
+
+
+def over(one: AnyArray, other: AnyArray) -> AnyArray:
+    """The quotient of arrays, as `times` gives products."""
+    if not np.iscomplexobj(other):
+        return np.asarray(one / other)
+    # Scaled by a power of two, so without rounding: squares then stay far from overflow.
+    _, exponent = np.frexp(np.maximum(np.abs(other.real), np.abs(other.imag)))
+    scale = np.ldexp(1.0, -exponent)
+    real, imag = other.real * scale, other.imag * scale
+    conjugate = np.empty(other.shape, np.complex128)
+    conjugate.real, conjugate.imag = real, -imag
+    found, square = times(one, conjugate), (real * real + imag * imag) / scale
+    found = found.astype(np.complex128)
+    np.divide(found.real, square, out=found.real)
+    np.divide(found.imag, square, out=found.imag)
+    return found
+
+
 def _ratio(ratio: Ratio, pairs: Pairs) -> AnyArray:
     powers = _all_powers(ratio, pairs)
     count = pairs.y.shape[1]
     with np.errstate(divide="ignore", invalid="ignore"):
-        return _polynomial(ratio.numerator, powers, count) / _polynomial(ratio.denominator, powers, count)
+        return over(_polynomial(ratio.numerator, powers, count), _polynomial(ratio.denominator, powers, count))
 
 
-def _slopes(ratio: Ratio, pairs: Pairs) -> FloatArray:
+def _slopes(ratio: Ratio, pairs: Pairs) -> AnyArray:
     """z d/dz of N/D = (z N' - (N/D) z D')/D for each element's z; shape (elements, stages)."""
     powers = _all_powers(ratio, pairs)
     (numerator, rises), (denominator, falls) = (
         _with_slopes(polynomial, powers, pairs.y.shape) for polynomial in (ratio.numerator, ratio.denominator)
     )
     with np.errstate(divide="ignore", invalid="ignore"):
-        return np.asarray((rises - numerator / denominator * falls) / denominator)
+        return over(rises - times(over(numerator, denominator), falls), denominator)
 
 
 def _all_powers(ratio: Ratio, pairs: Pairs) -> list[list[AnyArray]]:
@@ -230,7 +262,7 @@ def _powers(y: AnyArray, z: AnyArray, degree: int) -> list[AnyArray]:
     """y**e * z**(degree - e) for e from 0 to degree, by multiplication: pow() may differ between machines."""
     powers = [np.ones_like(y)]
     for step in range(degree):
-        powers = [powers[0] * z, *(power * y for power in powers)] if step else [z, y]
+        powers = [times(powers[0], z), *(times(power, y) for power in powers)] if step else [z, y]
     return powers
 
 
@@ -244,9 +276,9 @@ def _polynomial(polynomial: Polynomial, powers: list[list[AnyArray]], count: int
 
 def _with_slopes(
     polynomial: Polynomial, powers: list[list[AnyArray]], shape: tuple[int, ...]
-) -> tuple[FloatArray, FloatArray]:
+) -> tuple[AnyArray, AnyArray]:
     """The polynomial and its z d/dz for each element's z; shapes (stages,) and (elements, stages)."""
-    total, slopes = np.zeros(shape[1]), np.zeros(shape)
+    total, slopes = np.zeros(shape[1], powers[0][0].dtype), np.zeros(shape, powers[0][0].dtype)
     for product, exponents in _products(polynomial, powers, shape[1]):
         total += product
         for slope, table, exponent in zip(slopes, powers, exponents, strict=True):
@@ -264,5 +296,6 @@ def _products(
         product = np.full(count, float(coefficient), powers[0][0].dtype)
         for table, exponent in zip(powers, exponents, strict=True):
             if len(table) > 1:
-                product *= table[exponent]
+                product = times(product, table[exponent])
         yield product, exponents
+

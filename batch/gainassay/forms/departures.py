@@ -7,6 +7,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
+from numpy.typing import NDArray
+
 
 @dataclass(frozen=True)
 class Departure:
@@ -28,6 +31,8 @@ class Departure:
     poorest : float
         The poorest figure of the quantity that is looked at when asking how poor a part may be [unit]: that of no
         op-amp.
+    scale : float
+        What the quantity, or its reciprocal, is multiplied by: 2 pi for a capacitance, whose admittance rises so with f.
     """
 
     symbol: str
@@ -36,6 +41,17 @@ class Departure:
     term: str
     unit: str
     poorest: float
+    scale: float = 1.0
+
+    def of(self, figure: NDArray[np.float64]) -> NDArray[np.float64]:
+        """The departure that a figure of the quantity gives."""
+        return self.scale / figure if self.reciprocal else self.scale * figure
+
+    def figure(self, value: float) -> float:
+        """The figure of the quantity that gives a departure."""
+        if not self.reciprocal:
+            return value / self.scale
+        return self.scale / value if value else np.inf
 
     @property
     def limit_column(self) -> str:
@@ -59,7 +75,16 @@ DEPARTURES = (
     Departure("r_o", "r_o", False, "output_resistance", "ohm", 1e6),
 )
 
-OPEN_LOOP_GAIN = DEPARTURES[0]
+OPEN_LOOP_GAIN, DIFFERENTIAL_INPUT = DEPARTURES[:2]
+
+BANDWIDTH = Departure("b", "gbw", True, "bandwidth", "Hz", 1.0)
+INPUT_CAPACITANCE = Departure("c_id", "c_id", False, "input_capacitance", "F", 1e-6, 2.0 * np.pi)
+
+RISING = {OPEN_LOOP_GAIN.symbol: BANDWIDTH, DIFFERENTIAL_INPUT.symbol: INPUT_CAPACITANCE}
+"""What adds j f times itself to a departure at the frequency f: 1/A = 1/A_OL + j f/GBW, and likewise for capacitances."""
+
+FIGURES = (*DEPARTURES, *RISING.values())
+"""All that a part may be asked for: the departures at 0 Hz, then those that rise with frequency."""
 
 
 def term_name(product: list[tuple[str, Departure]], several_amplifiers: bool) -> str:
@@ -70,11 +95,13 @@ def term_name(product: list[tuple[str, Departure]], several_amplifiers: bool) ->
     'output_resistance'
     >>> term_name([("u1", a), ("u2", a), ("u2", g_id)], several_amplifiers=True)
     'u1.open_loop_gain+u2.input_resistance'
+
+    Bandwidth is understood as open-loop gain is.
     """
     names = []
     for amplifier in dict.fromkeys(amplifier for amplifier, _ in product):
         own = [departure for name, departure in product if name == amplifier]
-        others = [departure for departure in own if departure is not OPEN_LOOP_GAIN]
+        others = [departure for departure in own if departure not in (OPEN_LOOP_GAIN, BANDWIDTH)]
         prefix = f"{amplifier}." if several_amplifiers else ""
         names += [prefix + departure.term for departure in others or own]
     return "+".join(names)

@@ -298,4 +298,3 @@ def _products(
             if len(table) > 1:
                 product = times(product, table[exponent])
         yield product, exponents
-

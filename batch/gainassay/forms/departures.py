@@ -32,7 +32,7 @@ class Departure:
         The poorest figure of the quantity that is looked at when asking how poor a part may be [unit]: that of no
         op-amp.
     scale : float
-        What the quantity, or its reciprocal, is multiplied by: 2 pi for a capacitance, whose admittance rises so with f.
+        What the quantity, or its reciprocal, is multiplied by: 2 pi for a capacitance, whose admittance is 2 pi f c.
     """
 
     symbol: str
@@ -81,7 +81,7 @@ BANDWIDTH = Departure("b", "gbw", True, "bandwidth", "Hz", 1.0)
 INPUT_CAPACITANCE = Departure("c_id", "c_id", False, "input_capacitance", "F", 1e-6, 2.0 * np.pi)
 
 RISING = {OPEN_LOOP_GAIN.symbol: BANDWIDTH, DIFFERENTIAL_INPUT.symbol: INPUT_CAPACITANCE}
-"""What adds j f times itself to a departure at the frequency f: 1/A = 1/A_OL + j f/GBW, and likewise for capacitances."""
+"""What adds j f times itself to a departure at the frequency f: 1/A = 1/A_OL + j f/GBW, and so for capacitances."""
 
 FIGURES = (*DEPARTURES, *RISING.values())
 """All that a part may be asked for: the departures at 0 Hz, then those that rise with frequency."""

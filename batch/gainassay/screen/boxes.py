@@ -16,6 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.contracts.moves import MOVES, TOLERANCE
+from gainassay.contracts.signals import Signals
 from gainassay.forms.coefficients import FloatArray
 
 
@@ -55,6 +56,8 @@ class StageBox:
         The network that an element's common factor is of, -1 for none.
     limits, targets : ndarray, shape (stages,)
         Required accuracy as a fraction; target gain [gain unit] or nan.
+    signals : Signals or None
+        Of stages that do not work at 0 Hz.
     """
 
     values: FloatArray
@@ -63,6 +66,7 @@ class StageBox:
     network: NDArray[np.int8]
     limits: FloatArray
     targets: FloatArray
+    signals: Signals | None = None
 
     def part(self, stages: slice | NDArray[np.intp]) -> StageBox:
         """Some of the stages."""
@@ -73,6 +77,7 @@ class StageBox:
             self.network[:, stages],
             self.limits[stages],
             self.targets[stages],
+            self.signals and self.signals.part(stages),
         )
 
     def ends(self) -> tuple[FloatArray, FloatArray]:

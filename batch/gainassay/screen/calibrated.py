@@ -29,7 +29,7 @@ from gainassay.forms.coefficients import Coefficients, FloatArray
 from gainassay.forms.departures import DEPARTURES
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
-from gainassay.screen.corners import PartSide, StageSide, elements_terms, is_regular, matters, monomials
+from gainassay.screen.corners import PartSide, StageSide, elements_terms, ideal_at_dc, is_regular, matters, monomials
 from gainassay.screen.corners import part_side as limits_side
 from gainassay.screen.kernel import (
     PAIRS_PER_BLOCK,
@@ -70,13 +70,13 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             known.of[variables:],
         ]
     )
-    visited = visit(form, of, _place)
+    visited = visit(form, of[None], _place, 2 * variables)
     stage = visited.stage
     before = box.values[:, stage] * _all(held, stage, visited.is_upper[variables:])
     factors = factors_at(moving, stage, visited.is_upper[:variables])
     after = before * product(factors.own) * product(factors.together)
     was, now = (coefficients.evaluate(form, coefficients.at_dc(form, ohms)) for ohms in (before, after))
-    terms = elements_terms(form, before, factors, was.gain_ideal)
+    terms = elements_terms(before, factors, was.gain_ideal, ideal_at_dc(form))
     slack = known.slack and known.slack.over(np.log(product(moving.common.high)) - np.log(product(moving.common.low)))
     with np.errstate(invalid="ignore", divide="ignore"):
         error = (now.gain_ideal - was.gain_ideal) / was.gain_ideal

@@ -12,7 +12,7 @@ depends on the stage and on the whole parts table, never on other stages nor on 
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from itertools import product
 
@@ -175,12 +175,13 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
     reference = np.where(np.isnan(box.targets), nominal.gain_ideal, box.targets)
     places = {active: q for q, active in enumerate(active_sets(form))}
     known = what_is_known(form, box, reached)
-    visited = visit(form, known.of, lambda at_limit: places[_active(form, at_limit)])
+    variables = len(known.of) - len(form.departures)
+    visited = visit(form, known.of[None], lambda at_limit: places[_active(form, at_limit)], variables)
     stage, box = visited.stage, known.box
     factors = factors_at(box, stage, visited.is_upper)
     values = box.values[:, stage] * product_of_moves(factors.own) * product_of_moves(factors.together)
     at_corners = coefficients.evaluate(form, coefficients.at_dc(form, values))
-    terms = elements_terms(form, box.values[:, stage], factors, reference[stage])
+    terms = elements_terms(box.values[:, stage], factors, reference[stage], ideal_at_dc(form))
     with np.errstate(invalid="ignore"):
         corner_error = (at_corners.gain_ideal - reference[stage]) / reference[stage]
         is_sound = is_regular(form, at_corners, nominal.gain_ideal[stage]) & np.isfinite(corner_error)
@@ -277,7 +278,14 @@ def monomials(form: Form, departures: AnyArray) -> AnyArray:
     return found
 
 
-def elements_terms(form: Form, nominal: FloatArray, factors: Factors, reference: FloatArray) -> FloatArray:
+def ideal_at_dc(form: Form) -> Callable[[FloatArray], FloatArray]:
+    """The ideal gain of given elements at 0 Hz."""
+    return lambda values: coefficients.gain_ideal(form, coefficients.at_dc(form, values))
+
+
+def elements_terms(
+    nominal: FloatArray, factors: Factors, reference: AnyArray, ideal: Callable[[FloatArray], AnyArray]
+) -> AnyArray:
     """Share of what moves each element, and all networks, in the ideal gain's error at each corner.
 
     The elements are moved from nominal to the corner one step after the other, once in their order and once in the
@@ -288,13 +296,15 @@ def elements_terms(form: Form, nominal: FloatArray, factors: Factors, reference:
     ----------
     nominal : ndarray, shape (elements, corners)
     reference : ndarray, shape (corners,)
+    ideal : callable
+        The ideal gain of given elements at each corner.
 
     Returns
     -------
     ndarray, shape (moves x elements + 1, corners)
     """
     elements = len(nominal)
-    shares = np.zeros((len(MOVES) * elements + 1, nominal.shape[1]))
+    shares = np.zeros((len(MOVES) * elements + 1, nominal.shape[1]), reference.dtype)
     steps = [
         (element * len(MOVES) + move, slice(element, element + 1), factors.own[move, element])
         for element in range(elements)
@@ -304,12 +314,12 @@ def elements_terms(form: Form, nominal: FloatArray, factors: Factors, reference:
     steps = [step for step in steps if (step[2] != 1.0).any()]
     for order in (steps, steps[::-1]):
         moved = nominal.copy()
-        before = coefficients.gain_ideal(form, coefficients.at_dc(form, moved))
+        before = ideal(moved)
         for row, which, factor in order:
             moved[which] *= factor
-            after = coefficients.gain_ideal(form, coefficients.at_dc(form, moved))
+            after = ideal(moved)
             with np.errstate(invalid="ignore"):
-                shares[row] += (after - before) / reference / 2.0
+                shares[row] += coefficients.over(after - before, reference) / 2.0
             before = after
     return shares
 

@@ -47,6 +47,8 @@ class Outcome:
         That term as a fraction; nan where there is no finite bound.
     beyond : ndarray or None
         The part of the error by which it may lie beyond that corner, since networks track; none for all pairs.
+    phase : ndarray or None
+        At a frequency, the phase error of largest magnitude [degree].
     """
 
     error_nominal: FloatArray
@@ -55,6 +57,7 @@ class Outcome:
     dominant: NDArray[np.int16]
     dominant_value: FloatArray
     beyond: FloatArray | None = None
+    phase: FloatArray | None = None
 
 
 def screen(
@@ -238,7 +241,7 @@ def _worst(
         if place:
             np.greater(size, magnitude, out=larger)
             np.maximum(magnitude, size, out=magnitude)  # nan stays: a corner that overflows bounds nothing
-            _put(worst, error, larger)
+            put(worst, error, larger)
             # Codes rise from corner to corner: the largest is the last that exceeded all before it.
             np.maximum(corner, np.multiply(larger.view(np.int8), np.int32(code), out=mark), out=corner)
         else:
@@ -322,8 +325,8 @@ def _dominant(
             place, largest = _dominant_at(stages, parts, list(active_sets[q]), at, stages.set_point[rows], columns)
             if is_here.all():
                 return place, largest
-            _put(dominant, place, is_here)
-            _put(value, largest, is_here)
+            put(dominant, place, is_here)
+            put(value, largest, is_here)
     return dominant, value
 
 
@@ -371,7 +374,7 @@ def _dominant_at(
     return found >> 1, magnitude
 
 
-def _put(target: NDArray[Any], source: NDArray[Any], where: NDArray[np.bool_]) -> None:
+def put(target: NDArray[Any], source: NDArray[Any], where: NDArray[np.bool_]) -> None:
     """target[where] = source[where], without branches: for an irregular mask several times as fast as copying."""
     integer = {2: np.int16, 8: np.int64}[target.itemsize]
     bits = target.view(integer)

@@ -101,24 +101,24 @@ class _Recipe:
     corners: tuple[tuple[int, int], ...]
 
 
-def _recipe(form: Form, place: Place, pattern: NDArray[np.int8]) -> _Recipe:
-    """For the largest and for the smallest gain, all ends of the variables of open direction."""
-    count = len(pattern) - len(form.departures)
-    is_open = (pattern == OPEN).tolist()
-    if sum(is_open[:count]) > MOST_OPEN_ELEMENTS:
-        raise InputError(
-            f"topology '{form.topology}': {sum(is_open[:count])} elements of a stage may each move "
-            f"the gain either way; at most {MOST_OPEN_ELEMENTS} can be taken to every corner"
-        )
+def _recipe(form: Form, place: Place, patterns: NDArray[np.int8], count: int) -> _Recipe:
+    """For the largest and for the smallest of each quantity, all ends of the variables of open direction."""
     found = set()
-    for extreme in (RISES, FALLS):
-        choices = [
-            (False, True) if unknown else (direction == extreme,)
-            for direction, unknown in zip(pattern.tolist(), is_open, strict=True)
-        ]
-        element_ends = list(product(*choices[:count]))
-        departure_sets = {place(at_limit) for at_limit in product(*choices[count:])}
-        found |= {(ends[::-1], q) for ends in element_ends for q in departure_sets}
+    for pattern in patterns:
+        is_open = (pattern == OPEN).tolist()
+        if sum(is_open[:count]) > MOST_OPEN_ELEMENTS:
+            raise InputError(
+                f"topology '{form.topology}': {sum(is_open[:count])} elements of a stage may each move "
+                f"the gain either way; at most {MOST_OPEN_ELEMENTS} can be taken to every corner"
+            )
+        for extreme in (RISES, FALLS):
+            choices = [
+                (False, True) if unknown else (direction == extreme,)
+                for direction, unknown in zip(pattern.tolist(), is_open, strict=True)
+            ]
+            element_ends = list(product(*choices[:count]))
+            departure_sets = {place(at_limit) for at_limit in product(*choices[count:])}
+            found |= {(ends[::-1], q) for ends in element_ends for q in departure_sets}
     # Ordered by the last element first, as the bits of a number are, then by the part's corner.
     ordered = sorted(found)
     stage_corners = sorted({ends for ends, _ in ordered})
@@ -147,8 +147,15 @@ class Visited:
     plans: tuple[Plan, ...]
 
 
-def visit(form: Form, known: NDArray[np.int8], place: Place) -> Visited:
+def visit(form: Form, known: NDArray[np.int8], place: Place, count: int) -> Visited:
     """The corners to visit, from what is known of each stage.
+
+    Parameters
+    ----------
+    known : ndarray of int8, shape (quantities, variables, stages)
+        As in `signs.Directions`, for each quantity whose extremes are looked for.
+    count : int
+        Of the variables how many, the first, belong to the stage.
 
     Raises
     ------
@@ -156,13 +163,13 @@ def visit(form: Form, known: NDArray[np.int8], place: Place) -> Visited:
         If more elements may move the gain either way than can be visited corner by corner.
     """
     # Two of the same pattern visit the same corners; there are few patterns.
-    patterns, pattern_of = np.unique(known, axis=1, return_inverse=True)
+    patterns, pattern_of = np.unique(known, axis=2, return_inverse=True)
     pattern_of = pattern_of.reshape(-1)
-    recipes = [_recipe(form, place, pattern) for pattern in patterns.T]
+    recipes = [_recipe(form, place, pattern, count) for pattern in np.moveaxis(patterns, 2, 0)]
     counts = np.array([len(recipe.ends) for recipe in recipes], np.intp)[pattern_of]
     first = np.concatenate([[0], np.cumsum(counts)[:-1]])
     stage = np.repeat(np.arange(len(counts)), counts)
-    is_upper = np.empty((len(known) - len(form.departures), len(stage)), dtype=bool)
+    is_upper = np.empty((count, len(stage)), dtype=bool)
     plans: dict[tuple[tuple[int, int], ...], list[NDArray[np.intp]]] = {}
     for number, recipe in enumerate(recipes):
         members = np.flatnonzero(pattern_of == number)

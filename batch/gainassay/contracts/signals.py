@@ -1,0 +1,31 @@
+"""The signals that stages work with, where these are not at 0 Hz."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+@dataclass(frozen=True)
+class Signals:
+    """The signals of some stages.
+
+    Attributes
+    ----------
+    hertz : ndarray, shape (most, stages)
+        Frequencies of each stage, rising [Hz]; nan behind its last.
+    is_band : ndarray of bool, shape (stages,)
+        Whether the signal may have any frequency between the first two.
+    phase_limits : ndarray, shape (stages,)
+        Largest phase error [degree]; inf where it may be any.
+    """
+
+    hertz: NDArray[np.float64]
+    is_band: NDArray[np.bool_]
+    phase_limits: NDArray[np.float64]
+
+    def part(self, stages: slice | NDArray[np.intp]) -> Signals:
+        """Some of the stages."""
+        return Signals(self.hertz[:, stages], self.is_band[stages], self.phase_limits[stages])

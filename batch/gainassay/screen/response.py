@@ -1,0 +1,291 @@
+"""The departures of parts at a frequency, and polynomials in them.
+
+At s = j 2 pi f a departure is x + j f y, x being what it is at 0 Hz and y what rises: 1/A = 1/A_OL + j f/GBW, an input
+admittance 1/r + j f 2 pi c. A second pole of the open-loop gain makes 1/A (x + j f y)(1 + j f/f_2). The products m_k,
+and with them the form, are as at 0 Hz. x and y are the variables of a pair's box, each between 0 and its limit.
+
+Complex numbers are kept as real and imaginary parts. A library's complex product may round differently by the place
+of a number in an array, and a verdict must not; and much of what meets here is real.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cache, reduce
+from itertools import product
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gainassay.forms.coefficients import AnyArray, ComplexArray, FloatArray
+from gainassay.forms.departures import DEPARTURES, FIGURES, OPEN_LOOP_GAIN, RISING, Departure, term_name
+from gainassay.forms.form import Form
+
+LAG = len(FIGURES)
+"""Place of 1/f_2, the second pole's, behind the figures of a part."""
+
+PLACE = {departure.symbol: place for place, departure in enumerate(FIGURES)}
+_BY_SYMBOL = {departure.symbol: departure for departure in DEPARTURES}
+
+
+@dataclass(frozen=True)
+class Split:
+    """Complex numbers; `imag` is None where all are real, `real` where all are imaginary."""
+
+    real: FloatArray | None
+    imag: FloatArray | None
+
+    def whole(self) -> tuple[FloatArray, FloatArray]:
+        """Real and imaginary part, 0 where there is none."""
+        zero = np.zeros((1, 1))
+        return zero if self.real is None else self.real, zero if self.imag is None else self.imag
+
+
+def split(numbers: AnyArray) -> Split:
+    """Numbers as real and imaginary parts."""
+    real, imag = (np.ascontiguousarray(part) if part.any() else None for part in (numbers.real, numbers.imag))
+    return Split(real, imag)
+
+
+def times(one: Split, other: Split) -> Split:
+    """The product."""
+    return Split(real_product(one, other), _sum(_product(one.real, other.imag), _product(one.imag, other.real)))
+
+
+def over(one: Split, other: Split) -> Split:
+    """The quotient."""
+    real, imag = other.whole()
+    square = real * real + imag * imag
+    return times(one, Split(real / square, -imag / square))
+
+
+def plus(one: Split | None, other: Split) -> Split:
+    """The sum."""
+    return other if one is None else Split(_sum(one.real, other.real), _sum(one.imag, other.imag))
+
+
+def real_product(one: Split, other: Split) -> FloatArray | None:
+    """The real part of the product; None: 0."""
+    return _difference(_product(one.real, other.real), _product(one.imag, other.imag))
+
+
+def _product(one: FloatArray | None, other: FloatArray | None) -> FloatArray | None:
+    return None if one is None or other is None else one * other
+
+
+def _sum(one: FloatArray | None, other: FloatArray | None) -> FloatArray | None:
+    return other if one is None else one if other is None else one + other
+
+
+def _difference(one: FloatArray | None, other: FloatArray | None) -> FloatArray | None:
+    return one if other is None else -other if one is None else one - other
+
+
+# What a pair's box consists of
+
+
+def variables(form: Form) -> tuple[tuple[str, Departure], ...]:
+    """The figures of a part in each amplifier: those of the form's departures, then what rises of them."""
+    own = tuple((amplifier, _BY_SYMBOL[symbol]) for amplifier, symbol in form.departures)
+    return (*own, *((amplifier, RISING[symbol]) for amplifier, symbol in form.departures if symbol in RISING))
+
+
+@cache
+def _rising(departures: tuple[tuple[str, str], ...]) -> dict[int, int]:
+    """For each of a form's departures that rises, the place of what does among the variables."""
+    found = [place for place, (_, symbol) in enumerate(departures) if symbol in RISING]
+    return {place: len(departures) + number for number, place in enumerate(found)}
+
+
+IN_PHASE, RISES, WHOLE = range(3)
+"""What a factor of an addend takes of a departure x + j f y."""
+
+
+@dataclass(frozen=True)
+class Addend:
+    """Part of a product m_k.
+
+    Attributes
+    ----------
+    product : int
+        k.
+    factors : tuple[tuple[int, int], ...]
+        Each one of the form's departures and what of it is taken.
+    """
+
+    product: int
+    factors: tuple[tuple[int, int], ...]
+
+
+@dataclass(frozen=True)
+class Term:
+    """A term of the account, of departures."""
+
+    name: str
+    addends: tuple[Addend, ...]
+
+
+def terms(form: Form) -> tuple[Term, ...]:
+    """The terms of the departures.
+
+    What rises of a departure is told from what does not, but for 1/A beside other departures of its amplifier: there
+    open-loop gain and bandwidth are understood.
+    """
+    return _terms(form.departures, form.monomials)
+
+
+@cache
+def _terms(departures: tuple[tuple[str, str], ...], monomials: tuple[tuple[int, ...], ...]) -> tuple[Term, ...]:
+    several = len({amplifier for amplifier, _ in departures}) > 1
+    found: dict[str, list[Addend]] = {}
+    for k, monomial in enumerate(monomials):
+        for taken in product(*(_taken(departures, monomial, i) for i in monomial)):
+            factors = tuple(zip(monomial, taken, strict=True))
+            named = [(departures[i][0], _figure(departures[i][1], part)) for i, part in factors]
+            outermost = tuple(sorted(factors, key=lambda factor: _rank(departures, factor[0])))
+            found.setdefault(term_name(named, several), []).append(Addend(k, outermost))
+    return tuple(Term(name, tuple(own)) for name, own in found.items())
+
+
+def _figure(symbol: str, part: int) -> Departure:
+    return RISING[symbol] if part == RISES else _BY_SYMBOL[symbol]
+
+
+def _rank(departures: tuple[tuple[str, str], ...], i: int) -> tuple[int, int]:
+    """What is mostly complex comes first, so that few sums or products are multiplied by it."""
+    symbol = departures[i][1]
+    return (0 if symbol == OPEN_LOOP_GAIN.symbol else 1 if symbol in RISING else 2, i)
+
+
+def _taken(departures: tuple[tuple[str, str], ...], monomial: tuple[int, ...], i: int) -> tuple[int, ...]:
+    """What addends take, one after the other, of a departure in a product."""
+    amplifier, symbol = departures[i]
+    burdened = any(departures[other][0] == amplifier for other in monomial if other != i)
+    if symbol not in RISING or (symbol == OPEN_LOOP_GAIN.symbol and burdened):
+        return (WHOLE,)
+    return (IN_PHASE, RISES)
+
+
+# Departures of pairs
+
+
+class Departing:
+    """The departures of some parts at the frequencies of some stages.
+
+    Parameters
+    ----------
+    figures : ndarray, shape (figures + 1, parts)
+        Those of `FIGURES`, then 1/f_2.
+    hertz : ndarray, shape (stages, 1) or (stages, parts)
+    """
+
+    def __init__(self, form: Form, figures: FloatArray, hertz: FloatArray) -> None:
+        self._form, self._figures, self._hertz = form, figures, hertz
+        lag = figures[LAG]
+        self._lag = Split(np.ones((1, 1)), self._hertz * lag) if lag.any() else None
+        self._found: dict[tuple[str, bool, bool], Split | None] = {}
+
+    def at(self, ends: int) -> list[Split | None]:
+        """Each of the form's departures at a corner; None: ideal.
+
+        Bit i of `ends` says whether variable i is at its limit.
+        """
+        rising = _rising(self._form.departures)
+        return [
+            self._departure(symbol, bool(ends >> i & 1), i in rising and bool(ends >> rising[i] & 1))
+            for i, (_, symbol) in enumerate(self._form.departures)
+        ]
+
+    def taken(self, ends: int, i: int, part: int) -> Split | None:
+        """What an addend takes of one of the form's departures at a corner."""
+        rising, symbol = _rising(self._form.departures), self._form.departures[i][1]
+        is_there, rises = bool(ends >> i & 1), i in rising and bool(ends >> rising[i] & 1)
+        return self._departure(symbol, is_there and part != RISES, rises and part != IN_PHASE)
+
+    def _departure(self, symbol: str, is_there: bool, rises: bool) -> Split | None:
+        key = symbol, is_there, rises
+        if key not in self._found:
+            x = self._figures[PLACE[symbol]][None] if is_there else None
+            y = self._figures[PLACE[RISING[symbol].symbol]][None] if rises else None
+            real = x if x is not None and x.any() else None
+            imag = self._hertz * y if y is not None and y.any() else None
+            found = Split(real, imag)
+            is_ideal = real is None and imag is None
+            lags = symbol == OPEN_LOOP_GAIN.symbol and self._lag is not None
+            self._found[key] = None if is_ideal else times(found, self._lag) if lags and self._lag else found
+        return self._found[key]
+
+
+@dataclass(frozen=True)
+class _Nested:
+    """Some of a form's products m_k, nested: that of `place`, and for each departure those that it is a factor of."""
+
+    place: int | None
+    branches: tuple[tuple[int, _Nested], ...]
+
+
+@cache
+def _nested(departures: tuple[tuple[str, str], ...], monomials: tuple[tuple[int, ...], ...]) -> _Nested:
+    def nest(products: Sequence[tuple[int, tuple[int, ...]]]) -> _Nested:
+        place = next((k for k, factors in products if not factors), None)
+        first = dict.fromkeys(factors[0] for _, factors in products if factors)
+        return _Nested(
+            place,
+            tuple((i, nest([(k, factors[1:]) for k, factors in products if factors[:1] == (i,)])) for i in first),
+        )
+
+    return nest(
+        [(k, tuple(sorted(monomial, key=lambda i: _rank(departures, i)))) for k, monomial in enumerate(monomials)]
+    )
+
+
+def polynomial(form: Form, coefficients: Sequence[Split], departures: Sequence[Split | None]) -> Split | None:
+    """sum_k c_k m_k of pairs, from the c_k of stages and the departures of parts; None: 0 for all."""
+
+    def value(of: _Nested) -> Split | None:
+        total = None if of.place is None else coefficients[of.place]
+        for i, inner in of.branches:
+            factor = departures[i]
+            found = None if factor is None else value(inner)
+            if factor is not None and found is not None:
+                total = plus(total, times(factor, found))
+        return total
+
+    return value(_nested(form.departures, form.monomials))
+
+
+def products(form: Form, figures: FloatArray, hertz: FloatArray) -> ComplexArray:
+    """The products m_k of some parts at the frequencies of some stages; shape (terms, parts, stages).
+
+    Parameters
+    ----------
+    figures : ndarray, shape (variables, parts)
+        As `variables` has them; no second pole.
+    """
+    rising = _rising(form.departures)
+    departures = [
+        Split(figures[i][:, None], figures[rising[i]][:, None] * hertz if i in rising else None)
+        for i in range(len(form.departures))
+    ]
+    found = np.empty((len(form.monomials), figures.shape[1], len(hertz)), np.complex128)
+    for product_k, monomial in zip(found, form.monomials, strict=True):
+        product_k.real, product_k.imag = reduce(times, (departures[i] for i in monomial)).whole()
+    return found
+
+
+def figures_of(form: Form, of_part: FloatArray) -> FloatArray:
+    """Figures of parts, in the order of `FIGURES`, handed to each amplifier's variables."""
+    return of_part[[PLACE[figure.symbol] for _, figure in variables(form)]]
+
+
+def mattering(form: Form, used: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Which of `FIGURES` matter to stages, from the products that occur in them; shapes (terms, stages)."""
+    found = np.zeros((len(FIGURES), used.shape[1]), dtype=bool)
+    for k, monomial in enumerate(form.monomials):
+        for i in monomial:
+            symbol = form.departures[i][1]
+            found[PLACE[symbol]] |= used[k]
+            if symbol in RISING:
+                found[PLACE[RISING[symbol].symbol]] |= used[k]
+    return found

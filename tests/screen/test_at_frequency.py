@@ -1,0 +1,228 @@
+"""Stages at a frequency against complex solves at 60 digits, and their corners against all corners."""
+
+from __future__ import annotations
+
+import random
+from dataclasses import replace
+from itertools import product
+
+import mpmath
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+
+import oracle
+from gainassay.contracts.moves import MOVES
+from gainassay.contracts.signals import Signals
+from gainassay.forms import coefficients
+from gainassay.forms.form import Form, derive
+from gainassay.forms.library import library
+from gainassay.forms.topology import Topology
+from gainassay.screen import at_frequency, spots
+from gainassay.screen.boxes import StageBox, box
+from gainassay.screen.corners import PartSide
+from gainassay.screen.kernel import UNBOUNDED, Outcome
+from gainassay.screen.spots import SpotSide
+
+LIBRARY = library()
+Array = NDArray[np.float64]
+
+
+def stages_of(
+    topology: Topology,
+    values: list[dict[str, float]],
+    hertz: list[float],
+    tolerance: float,
+    phase_limit: float = np.inf,
+) -> StageBox:
+    at = np.array([[one[element.name] for one in values] for element in topology.elements])
+    spreads = np.zeros((len(MOVES), *at.shape))
+    spreads[0] = np.where(np.isfinite(at) & (at > 0.0), tolerance, 0.0)
+    count = len(values)
+    signals = Signals(np.array([hertz]), np.zeros(count, dtype=bool), np.full(count, phase_limit))
+    return replace(box(at, spreads, np.ones(count), np.full(count, np.nan)), signals=signals)
+
+
+def side_of(form: Form, box: StageBox, figures: Array) -> SpotSide:
+    assert box.signals is not None
+    return spots.side(form, box, spots.spots_of(box.signals), figures[:-1].max(axis=1))
+
+
+def parts_of(figures: Array) -> PartSide:
+    """Parts of figures a, g_id, r_o, 1/GBW, 2 pi c_id, 1/f_2."""
+    return at_frequency.part_side(figures[:-1], figures[:-1], figures[-1], np.zeros(figures[:-1].shape, np.uint8))
+
+
+def screened(form: Form, box: StageBox, figures: Array) -> tuple[SpotSide, Outcome, Array, Array]:
+    """Stages against parts, with the terms at the worst and at the nominal."""
+    parts, stages = parts_of(figures), side_of(form, box, figures)
+    outcome = at_frequency.screen(form, stages, parts)
+    terms = np.array(list(at_frequency.account(form, stages, parts, outcome)))
+    return stages, outcome, terms, np.array(list(at_frequency.nominal_account(form, stages, parts, outcome)))
+
+
+def random_figures(rng: random.Random, hertz: float) -> list[float]:
+    """Of a part that is some use at a frequency."""
+    gbw, r_id = hertz * 10.0 ** rng.uniform(1.5, 5), 10.0 ** rng.uniform(5, 12)
+    return [
+        10.0 ** -rng.uniform(3, 6),
+        1.0 / r_id,
+        10.0 ** rng.uniform(0, 2.5),
+        1.0 / gbw,
+        rng.choice([0.0, 2.0 * np.pi * 10.0 ** rng.uniform(-12.5, -10.5)]),
+        rng.choice([0.0, 0.3 / gbw]),
+    ]
+
+
+@pytest.mark.oracle
+@pytest.mark.parametrize("topology", LIBRARY.values(), ids=LIBRARY)
+def test_magnitude_phase_and_account(topology: Topology) -> None:
+    """Nominal figures of random stages and parts against a solve, to 1e-9 of the error."""
+    rng = random.Random(f"{topology.name} magnitude")
+    form = derive(topology)
+    hertz = [10.0 ** rng.uniform(0, 6) for _ in range(4)]
+    values = [oracle.random_values(topology, rng, f) for f in hertz]
+    figures = np.array([random_figures(rng, f) for f in hertz]).T
+    _, outcome, _, terms = screened(form, stages_of(topology, values, hertz, 0.0), figures)
+    assert outcome.phase is not None
+    for i, f in enumerate(hertz):
+        ohms = oracle.impedances(topology, values[i], f)
+        a, g, r_o, b, c, lag = figures[:, i].tolist()
+        with mpmath.workdps(oracle.DIGITS):
+            f_2 = 1 / mpmath.mpf(lag) if lag else oracle.OPEN
+            inverse = mpmath.mpc(a, mpmath.mpf(f) * mpmath.mpf(b)) * mpmath.mpc(1, mpmath.mpf(f) / f_2)
+            part = oracle.Part(1 / inverse, 1 / mpmath.mpc(g, mpmath.mpf(f) * mpmath.mpf(c)), r_o)
+            ratio = oracle.gain(topology, ohms, part) / oracle.gain(topology, ohms, oracle.IDEAL)
+            error = float(abs(ratio) - 1)
+        size = np.abs(terms[:, i, i]).sum()
+        assert abs(outcome.error_nominal[i, i] - error) <= 1e-9 * size, (values[i], f)
+        assert terms[:, i, i].sum() == pytest.approx(outcome.error_nominal[i, i], rel=0, abs=1e-12 * size)
+
+
+def brute_force(form: Form, stages: StageBox, figures: Array, reference: complex) -> tuple[Array, Array]:
+    """Magnitude and phase errors of one pair at every corner of its box."""
+    assert stages.signals is not None
+    moving = np.flatnonzero(stages.own.moves()[:, 0])
+    low, high = (end[:, 0] for end in stages.ends())
+    bits = (np.arange(1 << len(moving))[:, None] >> np.arange(len(moving))) & 1
+    values = np.repeat(stages.values, len(bits), axis=1)
+    for place, element in enumerate(moving):
+        values[element] *= np.where(bits[:, place], high[element], low[element])
+    hertz = float(stages.signals.hertz[0, 0])
+    at = coefficients.evaluate(form, coefficients.at_frequency(form, values, np.full(len(bits), hertz)))
+    a, g, r_o, b, c, lag = figures.tolist()
+    found = []
+    for on in product((0.0, 1.0), repeat=5):
+        departures = {
+            "a": (on[0] * a + 1j * hertz * on[1] * b) * (1.0 + 1j * hertz * lag),
+            "g_id": on[2] * g + 1j * hertz * on[3] * c,
+            "r_o": on[4] * r_o,
+        }
+        m = np.array([np.prod([departures[form.departures[i][1]] for i in monomial]) for monomial in form.monomials])
+        e = at.gain_ideal / reference - 1.0
+        found.append(e + (1.0 + e) * (at.contrasts.T @ m) / (1.0 + at.loadings.T @ m))
+    w = np.concatenate(found)
+    return np.abs(1.0 + w) - 1.0, np.degrees(np.angle(1.0 + w))
+
+
+def misses(topology: Topology, count: int) -> tuple[list[float], list[float], list[int]]:
+    """Share of the brute-force worst case, of magnitude and of phase, that the corners visited leave out."""
+    rng = random.Random(f"{topology.name} corners")
+    form = derive(topology)
+    magnitude, phase, corners = [], [], []
+    for _ in range(count):
+        hertz = 10.0 ** rng.uniform(1, 5)
+        one = stages_of(topology, [oracle.random_values(topology, rng, hertz)], [hertz], rng.choice([1e-3, 1e-2]), 1.0)
+        figures = np.array([random_figures(rng, hertz) for _ in range(3)]).T
+        side, outcome, terms, _ = screened(form, one, figures)
+        reference = coefficients.gain_ideal(form, coefficients.at_frequency(form, one.values, np.array([hertz])))[0]
+        corners.append(len(side.plans[0].corners))
+        for p in range(3):
+            assert outcome.corner[0, p] != UNBOUNDED
+            assert outcome.phase is not None
+            errors, turns = brute_force(form, one, figures[:, p], complex(reference))
+            magnitude.append(1.0 - abs(outcome.error_worst[0, p]) / np.abs(errors).max())
+            phase.append(1.0 - abs(outcome.phase[0, p]) / np.abs(turns).max())
+            size = np.abs(terms[:, 0, p]).sum()
+            assert terms[:, 0, p].sum() == pytest.approx(outcome.error_worst[0, p], rel=0, abs=1e-12 * size)
+            assert outcome.dominant_value[0, p] == terms[outcome.dominant[0, p], 0, p]
+    return magnitude, phase, corners
+
+
+ONE_AMPLIFIER = [topology for topology in LIBRARY.values() if len(topology.amplifiers) == 1]
+
+
+@pytest.mark.oracle
+@pytest.mark.parametrize("topology", ONE_AMPLIFIER, ids=lambda topology: topology.name)
+def test_corners_visited_are_the_worst_of_all(topology: Topology) -> None:
+    magnitude, phase, _ = misses(topology, 6)
+    assert min(magnitude) > -1e-9
+    assert max(magnitude) < 0.02
+    assert max(phase) < 0.02
+
+
+def test_the_same_bits_whatever_the_blocks() -> None:
+    rng, topology = random.Random("blocks"), LIBRARY["low_pass_2"]
+    form, hertz = derive(topology), [10.0 ** rng.uniform(1, 5) for _ in range(7)]
+    one = stages_of(topology, [oracle.random_values(topology, rng, f) for f in hertz], hertz, 1e-3)
+    figures = np.array([random_figures(rng, hertz[0]) for _ in range(53)]).T
+    parts, stages = parts_of(figures), side_of(form, one, figures)
+    whole = at_frequency.screen(form, stages, parts)
+    for block in (4, 20, 124, 4 * 53 * 3):
+        other = at_frequency.screen(form, stages, parts, block)
+        for name, values in vars(whole).items():
+            if values is not None:
+                np.testing.assert_array_equal(values, getattr(other, name), err_msg=f"{name} {block}")
+
+
+@pytest.mark.source
+@pytest.mark.parametrize(
+    ("r2", "hertz"),
+    [(999e3, 1e3), (99e3, 1e4), (9e3, 1e5), (0.0, 1e6)],
+)
+def test_published_bandwidth(r2: float, hertz: float) -> None:
+    """C45, C29: a part of f_t = 1 MHz has its -3 dB frequency at f_t over the gain (Sedra & Smith, sec. 2.7)."""
+    topology = LIBRARY["non_inverting"]
+    values = {"r1": 1e3, "r2": r2, "r_load": np.inf, "r_source": 0.0}
+    figures = np.array([[0.0], [0.0], [0.0], [1e-6], [0.0], [0.0]])
+    _, outcome, _, _ = screened(derive(topology), stages_of(topology, [values], [hertz], 0.0), figures)
+    assert outcome.phase is not None
+    assert 1.0 + outcome.error_worst[0, 0] == pytest.approx(0.5**0.5, rel=1e-12)
+    assert outcome.phase[0, 0] == pytest.approx(-45.0, rel=1e-12)
+
+
+@pytest.mark.source
+def test_published_inverting_bandwidth() -> None:
+    """C45: gains of -1, -10 and -100 end at 500, 90.9 and 9.9 kHz: the noise gain counts, not the gain."""
+    topology = LIBRARY["inverting"]
+    for r2, khz, digit in ((1e3, 500.0, 1.0), (1e4, 90.9, 0.1), (1e5, 9.9, 0.1)):
+        values = {"r1": 1e3, "r2": r2, "r_load": np.inf, "r_source": 0.0}
+        figures = np.array([[0.0], [0.0], [0.0], [1e-6], [0.0], [0.0]])
+        ends = [(khz - digit) * 1e3, (khz + digit) * 1e3]
+        _, outcome, _, _ = screened(derive(topology), stages_of(topology, [values] * 2, ends, 0.0), figures)
+        below, above = (1.0 + outcome.error_worst[:, 0]).tolist()
+        assert below > 0.5**0.5 > above
+
+
+@pytest.mark.source
+def test_published_differentiator() -> None:
+    """C37: printed 926 adds magnitudes; a phasor gives 996.8423962 at -175.4456 degree."""
+    topology = LIBRARY["differentiator"]
+    values = {"c1": 2e-6, "r1": 0.0, "r2": 1e5, "c2": 0.0, "r_load": np.inf}
+    figures = np.array([[1e-3], [0.0], [0.0], [0.0], [0.0], [0.0]])
+    stages, outcome, _, _ = screened(derive(topology), stages_of(topology, [values], [1e4], 0.0), figures)
+    assert outcome.phase is not None
+    assert stages.gain_ideal[0] == pytest.approx(12566.37061, abs=1e-5)
+    assert stages.gain_ideal[0] * (1.0 + outcome.error_nominal[0, 0]) == pytest.approx(996.8423962, abs=1e-7)
+    assert outcome.phase[0, 0] - 90.0 == pytest.approx(-175.4456, abs=1e-4)
+
+
+@pytest.mark.source
+def test_published_integrator() -> None:
+    """C35: 0.637 is the ideal integrator's; with its feedback resistor the stage has 0.635333619 at 2.5 kHz."""
+    topology = LIBRARY["integrator"]
+    values = {"r1": 1e4, "r2": 1e5, "c1": 1e-8, "r_load": np.inf}
+    figures = np.array([[1 / 2e5], [0.0], [0.0], [1e-6], [0.0], [0.0]])
+    stages, outcome, _, _ = screened(derive(topology), stages_of(topology, [values], [2500.0], 0.0), figures)
+    assert stages.gain_ideal[0] == pytest.approx(0.635333619, abs=1e-9)
+    assert stages.gain_ideal[0] * (1.0 + outcome.error_nominal[0, 0]) == pytest.approx(0.634322702, abs=1e-9)

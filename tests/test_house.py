@@ -104,10 +104,10 @@ def test_schema_files_state_what_they_must(path: Path) -> None:
 def test_names_of_columns_are_said_once() -> None:
     """The job's stand-ins, the departures and the parts table agree on the names of quantities."""
     from gainassay.contracts import documents, tables
-    from gainassay.forms.departures import DEPARTURES
+    from gainassay.forms.departures import FIGURES
 
-    quantities = [departure.quantity for departure in DEPARTURES]
+    quantities = [figure.quantity for figure in FIGURES]
     assert list(documents.schema("job")["properties"]["assume"]["properties"]) == quantities
     columns = {column.name for column in tables.columns("parts")}
-    for departure in DEPARTURES:
+    for departure in FIGURES:
         assert {departure.limit_column, f"{departure.quantity}_typ"} <= columns

@@ -14,18 +14,17 @@ from gainassay.contracts.limits import LIMITS, Limit
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
 from gainassay.forms.coefficients import ComplexArray, FloatArray
-from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
+from gainassay.forms.departures import AT_DC, DEPARTURES, FIGURES, OPEN_LOOP_GAIN, Departure
 from gainassay.forms.evaluation import value
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks, calibrated, monte_carlo, rss, stability
 from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
-from gainassay.screen.corners import term_names
-from gainassay.screen.kernel import UNBOUNDED, nominal_account
+from gainassay.screen.kernel import UNBOUNDED
 from gainassay.screen.limits import PLACES, SIDES
+from gainassay.screen.methods import AT_FREQUENCY, CALIBRATED
 from gainassay.screen.monte_carlo import Lot
 from gainassay.screen.stability import Looked
-from gainassay.screen.verdicts import DOUBTS, LEANINGS, REASONS, VERDICTS, Rules, dominant_names
-from gainassay.tables.bandwidths import Bandwidths
+from gainassay.screen.verdicts import DOUBTS, VERDICTS, Rules, leaning, reason
 from gainassay.tables.eligible import Eligibility
 from gainassay.tables.parts import PartTable
 from gainassay.tables.spreads import Spreads
@@ -207,8 +206,6 @@ class StabilityFigures:
     ----------
     gbw_hz, second_pole_hz : float
         Gain-bandwidth product and second pole [Hz]; nan: not known, inf: not modelled.
-    gbw_from : str
-        The column that `gbw_hz` comes from.
     least_deg : float or None
         The least phase margin of a pass [deg], if the job asks for one.
     doubt : str
@@ -218,7 +215,6 @@ class StabilityFigures:
     """
 
     gbw_hz: float
-    gbw_from: str
     second_pole_hz: float
     least_deg: float | None
     doubt: str
@@ -251,6 +247,11 @@ class Explanation:
     ----------
     calibrated : bool
         Whether errors are of the gain against that at calibration; views are not found then.
+    worst_case : str
+        What the worst case is, as in the verdict table.
+    frequency_hz, phase_error_deg, phase_accuracy_deg : float
+        Of a stage at a frequency, as in the verdict table, with the largest phase error that it may have; its gains are
+        magnitudes, and views and ports are not found. nan at 0 Hz.
     terms : tuple[Term, ...]
         All terms that are not zero, the largest at the worst corner first; both columns sum to the errors.
     limits : tuple[LimitCheck, ...]
@@ -276,6 +277,10 @@ class Explanation:
     evidence: str
     leans_on: str
     dominant_term: str
+    worst_case: str
+    frequency_hz: float
+    phase_error_deg: float
+    phase_accuracy_deg: float
     elements: tuple[ElementValue, ...]
     figures: tuple[Figure, ...]
     terms: tuple[Term, ...]
@@ -360,23 +365,23 @@ def _explanation(
     side, outcome, judgement = screened.stage_side, screened.outcome, screened.judgement
     corner = int(outcome.corner[0, 0])
     unbounded = corner == UNBOUNDED
-    at_nominal = [float(term[0, 0]) * PPM for term in nominal_account(side, screened.part_side)]
+    at_nominal = [float(term[0, 0]) * PPM for term in blocks.nominal_accounts(screened)]
     at_worst = [np.nan if unbounded else float(term[0, 0]) * PPM for term in blocks.accounts(screened)]
-    names = term_names(screened.group.form)
+    method, names = screened.group.method, screened.group.term_names()
     terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
-    leaning = LEANINGS[int(judgement.leaning[0, 0])]
-    reference = float(side.reference[0])
+    leans = leaning(int(judgement.leaning[0, 0]))
+    gain_ideal, reference = (float(gain[0, 0]) for gain in method.gains(side, outcome))
     worst = float(outcome.error_worst[0, 0])
     values = screened.group.box.values[:, screened.chunk.stages][:, 0]
-    at_corner = values if unbounded else side.corner_values[:, screened.group.corner(corner)[0]]
+    at_corner = values if unbounded else side.corner_values[:, method.corner(screened.group.form, side, corner)[0]]
     return Explanation(
         stage=str(of.names[s]),
         part=str(parts.names[p]),
         topology=topology.name,
         summary=topology.summary,
-        calibrated=screened.group.calibrated,
+        calibrated=method is CALIBRATED,
         gain_unit=gain_unit(topology),
-        gain_ideal=float(side.gain_ideal[0]),
+        gain_ideal=gain_ideal,
         target_gain=reference,
         gain_nominal=reference * (1.0 + float(outcome.error_nominal[0, 0])),
         gain_worst=reference * (1.0 + worst),
@@ -385,10 +390,14 @@ def _explanation(
         limit_ppm=float(side.limits[0]) * PPM,
         limit_used=float(judgement.limit_used[0, 0]),
         verdict=VERDICTS[int(judgement.verdict[0, 0])],
-        reason=REASONS[int(judgement.reason[0, 0])],
-        evidence=leaning.evidence,
-        leans_on=leaning.leans_on,
+        reason=reason(int(judgement.reason[0, 0])),
+        evidence=leans.evidence,
+        leans_on=leans.leans_on,
         dominant_term=_dominant(screened),
+        worst_case=method.worst_case,
+        frequency_hz=float(side.hertz[side.spot_of(outcome.corner)[0, 0]]) if method is AT_FREQUENCY else np.nan,
+        phase_error_deg=np.nan if outcome.phase is None else float(outcome.phase[0, 0]),
+        phase_accuracy_deg=float(side.phase_limits[0]) if method is AT_FREQUENCY else np.nan,
         elements=tuple(_elements(screened, spreads.of(np.array([s])), values, at_corner)),
         figures=tuple(_figures(screened, parts, p)),
         terms=tuple(
@@ -399,8 +408,8 @@ def _explanation(
         ),
         limits=tuple(_limits(screened, of, s, parts, p)),
         views=_views(screened, samples),
-        ports=tuple(_ports(topology, values, parts.nominal[:, p])),
-        stability=_stability(screened, parts.bandwidths, p, rules),
+        ports=() if method is AT_FREQUENCY else tuple(_ports(topology, values, parts.nominal[AT_DC, p])),
+        stability=_stability(screened, rules),
     )
 
 
@@ -426,21 +435,19 @@ def _missing(limit: Limit, of: StageGroup, s: int, parts: PartTable, p: int) -> 
 
 def _dominant(screened: Screened) -> str:
     place = int(screened.outcome.dominant[0, 0])
-    return "" if place == NO_TERM else dominant_names(screened.group.form)[place]
+    return "" if place == NO_TERM else screened.group.dominant_names()[place]
 
 
-def _stability(screened: Screened, of_parts: Bandwidths, p: int, rules: Rules) -> StabilityFigures:
+def _stability(screened: Screened, rules: Rules) -> StabilityFigures:
     looked = screened.group.looked(screened.chunk)
     gbw = float(looked.parts.gbw[0])
     assert screened.margins is not None
-    source = "" if np.isnan(gbw) else "gbw_min" if np.isnan(of_parts.gbw_typ[p]) else "gbw_typ"
     return StabilityFigures(
         gbw_hz=gbw,
-        gbw_from=source,
         second_pole_hz=float(looked.parts.second_pole[0]),
         least_deg=rules.phase_margin,
         doubt=DOUBTS[int(screened.margins.doubt[0, 0])],
-        loops=tuple(_loops(looked)) if source else (),
+        loops=() if np.isnan(gbw) else tuple(_loops(looked)),
     )
 
 
@@ -493,11 +500,12 @@ def _elements(
     screened: Screened, spreads: Spreads, values: FloatArray, at_corner: FloatArray
 ) -> Iterator[ElementValue]:
     form, network = screened.group.form, spreads.network[:, 0]
+    untied = screened.group.method is not AT_FREQUENCY and screened.stage_side.untied[0]
     for index, name in enumerate(form.elements):
         fellows = [
             other
             for place, other in enumerate(form.elements)
-            if network[place] == network[index] >= 0 and place != index and not screened.stage_side.untied[0]
+            if network[place] == network[index] >= 0 and place != index and not untied
         ]
         tolerance, temperature, drift = spreads.own[:, index, 0].tolist()
         yield ElementValue(
@@ -526,39 +534,33 @@ def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> It
 
 def _figures(screened: Screened, parts: PartTable, p: int) -> Iterator[Figure]:
     side = screened.part_side
-    for index, departure in enumerate(DEPARTURES):
+    for index in range(len(side.evidence)):
+        departure = FIGURES[index]
         if not parts.modelled[index]:
             continue
         evidence = EVIDENCE[side.evidence[index, 0]]
         is_missing = evidence == EVIDENCE[MISSING]
         nominal, worst = (
-            np.nan if is_missing else _quantity(departure, float(value))
+            np.nan if is_missing else departure.figure(float(value))
             for value in (parts.nominal[index, p], side.limits[index, 0])
         )
         matters = bool(screened.stage_side.matters[index, 0])
-        at_worst = _at_worst(screened, index)
+        at_worst = _at_worst(screened, departure)
         yield Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters, at_worst)
 
 
-def _quantity(departure: Departure, value: float) -> float:
-    """A departure as the data sheet has it."""
-    if not departure.reciprocal:
-        return value
-    return 1.0 / value if value else np.inf
-
-
-def _at_worst(screened: Screened, index: int) -> str:
-    """Where a departure, of which amplifiers, stands at the corner that gives the worst error."""
+def _at_worst(screened: Screened, departure: Departure) -> str:
+    """Where a figure, of which amplifiers, stands at the corner that gives the worst error."""
     group, code = screened.group, int(screened.outcome.corner[0, 0])
     if code == UNBOUNDED:
         return ""
-    place, departure = group.corner(code)[1], DEPARTURES[index]
-    own = [(i, amplifier) for i, (amplifier, symbol) in enumerate(group.form.departures) if symbol == departure.symbol]
-    if group.calibrated:
+    _, place = group.method.corner(group.form, screened.stage_side, code)
+    if group.method is CALIBRATED:
         ends = calibrated.ends(group.form, place)
+        own = [(i, name) for i, (name, symbol) in enumerate(group.form.departures) if symbol == departure.symbol]
         return "; ".join(f"{amplifier}: {_change(screened, departure, ends[i])}" for i, amplifier in own)
-    active = {i for k in group.active_sets[place] for i in group.form.monomials[k]}
-    amplifiers = [amplifier for i, amplifier in own if i in active]
+    at_limits = group.method.at_limits(group.form, screened.stage_side, place)
+    amplifiers = dict.fromkeys(name for name, _ in group.form.departures if (name, departure.symbol) in at_limits)
     return f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
 
 
@@ -567,7 +569,7 @@ def _change(screened: Screened, departure: Departure, end: int) -> str:
     if changed is None:
         raise ValueError("these parts do not change")
     before, after = (
-        f"{_quantity(departure, value):.6g} {departure.unit}" if value else "ideal"
+        f"{departure.figure(value):.6g} {departure.unit}" if value else "ideal"
         for value in changed[end, :, DEPARTURES.index(departure), 0].tolist()
     )
     return f"from {before} to {after}"

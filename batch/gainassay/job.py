@@ -177,7 +177,7 @@ class Job:
     document : Mapping[str, Any]
         The file's content, for the manifest.
     assume : Mapping[str, StandIn]
-        By data-sheet quantity: `a_ol`, `r_id`, `r_o`.
+        By data-sheet quantity: `a_ol`, `r_id`, `r_o`, `gbw`, `c_id`.
     eligible : tuple[Eligible, ...]
         Which parts may serve which stages; a part must keep every rule.
     """

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from gainassay import job as jobs
 from gainassay.contracts.evidence import EVIDENCE
 from gainassay.forms.cache import duty_of
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import AT_DC, DEPARTURES
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.job import Job, Results
@@ -25,7 +25,7 @@ from gainassay.runs import summaries
 from gainassay.runs import tables as run_tables
 from gainassay.runs.folder import File, write
 from gainassay.runs.manifest import manifest
-from gainassay.screen import blocks, boxes, calibrated, corners, limits, need
+from gainassay.screen import at_frequency, blocks, boxes, calibrated, corners, limits, need
 from gainassay.screen.blocks import Group, Screened
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import PartSide, moving_terms
@@ -35,10 +35,9 @@ from gainassay.screen.verdicts import Rules
 from gainassay.tables import eligible
 from gainassay.tables import parts as part_tables
 from gainassay.tables import stages as stage_tables
-from gainassay.tables.bandwidths import SECOND_POLE
 from gainassay.tables.compared import compared
 from gainassay.tables.eligible import Eligibility
-from gainassay.tables.parts import PartTable
+from gainassay.tables.parts import SECOND_POLE, PartTable
 from gainassay.tables.stages import StageGroup, StageTable
 
 MOST_LISTED = 3
@@ -66,7 +65,7 @@ class Prepared:
         """Everything that a user should know before believing the results."""
         unmodelled = tuple(
             f"{self.parts.source}: there is no column for {quantity}; it is not modelled"
-            for quantity in self.parts.not_modelled()
+            for quantity in self.parts.not_modelled(self.stages.any_at_frequency())
         )
         unserved = self.unserved()
         alone = (f"{self.stages.source}: no part is eligible for {_listed(unserved)}",) if unserved else ()
@@ -76,10 +75,9 @@ class Prepared:
         """What the parts table lacks of what the job asks of stability."""
         if not self.job.results.stability and self.job.judge.phase_margin_min_deg is None:
             return
-        of_frequency = self.parts.bandwidths
-        if np.isnan(of_frequency.nominal()).all():
+        if np.isnan(self.parts.gbw()).all():
             yield f"{self.parts.source}: no part has a gbw_typ or gbw_min; no stability is checked"
-        if not of_frequency.has_second_pole:
+        if self.parts.second_pole is None:
             yield f"{self.parts.source}: there is no column for {SECOND_POLE}; it is not modelled"
 
     def pairs(self) -> int:
@@ -169,23 +167,25 @@ def groups_of(prepared: Prepared) -> tuple[Group, ...]:
 def parts_of(group: StageGroup, parts: PartTable) -> PartSide:
     """All parts, under the conditions of a group's stages."""
     limits, evidence = (parts.worst_hot, parts.evidence_hot) if group.hot else (parts.worst, parts.evidence)
+    if group.signals is not None:
+        return at_frequency.part_side(parts.nominal, limits, parts.lag(), evidence)
     if not group.calibrated:
-        return corners.part_side(group.form, parts.nominal, limits, evidence)
+        return corners.part_side(group.form, parts.nominal[AT_DC], limits[AT_DC], evidence[AT_DC])
     weakest = np.maximum(np.maximum(parts.evidence, evidence), parts.evidence_change)
-    return calibrated.part_side(group.form, parts.worst, limits, parts.change, weakest)
+    return calibrated.part_side(group.form, parts.worst[AT_DC], limits[AT_DC], parts.change[AT_DC], weakest[AT_DC])
 
 
 def dynamics_of(parts: PartTable) -> Dynamics:
     """All parts over frequency, at their nominal figures."""
-    of_frequency = parts.bandwidths
-    pole = of_frequency.second_pole if of_frequency.has_second_pole else np.full(len(parts.names), np.inf)
-    return Dynamics(parts.nominal, of_frequency.nominal(), pole)
+    pole = np.full(len(parts.names), np.inf) if parts.second_pole is None else parts.second_pole
+    return Dynamics(parts.nominal[AT_DC], parts.gbw(), pole)
 
 
 def box_of(group: StageGroup) -> StageBox:
     """The stages of a group with their boxes."""
     spreads = group.spreads
-    return boxes.box(group.values, spreads.own, group.limits, group.targets, spreads.network, spreads.ratios)
+    found = boxes.box(group.values, spreads.own, group.limits, group.targets, spreads.network, spreads.ratios)
+    return replace(found, signals=group.signals)
 
 
 def bounds_of(group: StageGroup, parts: PartTable) -> Bounds:
@@ -263,12 +263,12 @@ def screen(prepared: Prepared, workers: int | None = None, after_each: Callable[
 
 def _terms(groups: Sequence[Group]) -> tuple[str, ...]:
     """Terms that any stage of a screen can have, in the order of the accounts."""
-    return tuple(dict.fromkeys(name for group in groups for name in moving_terms(group.form, group.box)))
+    return tuple(dict.fromkeys(name for group in groups for name in moving_terms(group.term_names(), group.box)))
 
 
 def _needs(screened: Screened, rules: Rules) -> NDArray[np.float64]:
-    """What each pair needs; of calibrated stages nothing is found."""
-    if screened.group.calibrated:
+    """What each pair needs, where such is found."""
+    if not screened.group.method.has_more:
         return np.full((len(DEPARTURES), *screened.eligible.shape), np.nan)
     return need.needed(need.of_chunk(screened, rules))
 

@@ -11,6 +11,7 @@ from gainassay.contracts.documents import nearest
 from gainassay.contracts.evidence import MISSING
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
+from gainassay.forms.departures import AT_DC
 from gainassay.forms.evaluation import value
 from gainassay.forms.expression import Expression
 from gainassay.forms.meaningful import Formulas
@@ -72,8 +73,13 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         If the job has no stage of that topology, or no part that is eligible for one.
     """
     each = zip(prepared.stages.groups, prepared.eligibility, strict=True)
-    group, eligibility = next(((g, e) for g, e in each if g.topology == topology), (None, None))
+    group, eligibility = next(((g, e) for g, e in each if g.topology == topology and g.signals is None), (None, None))
     if group is None or eligibility is None:
+        if any(g.topology == topology for g in prepared.stages.groups):
+            raise InputError(
+                f"{prepared.stages.source}: all stages of the topology '{topology.name}' work at a frequency; "
+                "a form is shortened for stages at 0 Hz"
+            )
         names = [g.topology.name for g in prepared.stages.groups]
         hint = nearest(topology.name, names) or f"; there are stages of {', '.join(names)}"
         raise InputError(f"{prepared.stages.source}: no usable stage has the topology '{topology.name}'{hint}")
@@ -113,8 +119,8 @@ def _measure(
     # The exact gains are the same for every formula that is tried.
     exact = [
         (departures, stages.gain_ideal[:, None] * (1.0 + nominal_errors(stages, products)))
-        for departures in (parts.nominal, parts.worst)
-        for products in [part_side(group.form, departures, departures, parts.evidence)]
+        for departures in (parts.nominal[AT_DC], parts.worst[AT_DC])
+        for products in [part_side(group.form, departures, departures, parts.evidence[AT_DC])]
     ]
     height = max(1, PAIRS_AT_A_TIME // len(parts.names))
 

@@ -17,6 +17,7 @@ from gainassay.runs.tables import summary_table
 from gainassay.screen import blocks
 from gainassay.screen.blocks import Group
 from gainassay.screen.boxes import StageBox
+from gainassay.screen.methods import AT_FREQUENCY, CALIBRATED
 from gainassay.screen.need import Asked, bearable, bearable_spread, figure, needed, paired_errors, passing
 from gainassay.screen.verdicts import Rules
 
@@ -41,8 +42,8 @@ def specify(
     """The need table of a job.
 
     Every number is put back before it is told: the part that just meets it is taken through the worst case. Of
-    calibrated stages, whose errors come from changes and not from limits alone, none is found. All is about
-    the gain: operating limits and the phase margin are left out.
+    calibrated stages, whose errors come from changes and not from limits alone, none is found, nor at a frequency.
+    All is about the gain: operating limits and the phase margin are left out.
 
     Parameters
     ----------
@@ -56,11 +57,11 @@ def specify(
     stages, best = (np.array(summary.column(name).to_pylist(), np.str_) for name in ("stage", "best_part"))
     is_outside = (summary.column("pass").to_numpy() + summary.column("unproven").to_numpy()) == 0
     found = {name: np.full(len(stages), np.nan) for name in COLUMNS}
-    is_calibrated = np.zeros(len(stages), dtype=bool)
+    is_calibrated, is_tuned = np.zeros((2, len(stages)), dtype=bool)
     for group in groups:
         at = np.searchsorted(stages, group.stage_names)
-        is_calibrated[at] = group.calibrated
-        if group.calibrated:
+        is_calibrated[at], is_tuned[at] = group.method is CALIBRATED, group.method is AT_FREQUENCY
+        if not group.method.has_more:
             continue
         for name, values in _of_group(group, best[at], is_outside[at], rules).items():
             found[name][at] = values
@@ -69,8 +70,9 @@ def specify(
     columns = {
         "stage": summary.column("stage"),
         "topology": summary.column("topology"),
-        "outlook": pa.array(_outlook(summary, np.isnan(found["floor_a_ol"]) & ~is_calibrated), pa.string()),
+        "outlook": pa.array(_outlook(summary, np.isnan(found["floor_a_ol"]) & ~is_calibrated & ~is_tuned), pa.string()),
         "calibrated": pa.array(is_calibrated.tolist()),
+        "at_frequency": pa.array(is_tuned.tolist()),
         "limit_ppm": summary.column("limit_ppm"),
         "allowed_ppm": allowed,
         "error_elements_ppm": summary.column("error_elements_ppm"),

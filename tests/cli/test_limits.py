@@ -103,10 +103,3 @@ def test_a_need_is_about_the_gain(here: CommandLineHere, write_job: JobWriter) -
     assert json.loads(here("screen", job, "--json").out)["verdicts"]["fail"] == 1
     needs = {row["stage"]: row for row in json.loads(here("need", job, "--json").out)["stages"]}
     assert {row["outlook"] for row in needs.values()} == {"met"}
-
-
-def test_a_frequency_is_said_to_leave_the_gain_at_0_hz(here: CommandLineHere, write_job: JobWriter) -> None:
-    stages = STAGES.replace("v_supply\n", "v_supply,frequency_hz\n").replace("2,10\n", "2,10,1k\n")
-    warned = here("check", write_job(stages=stages.replace("500,1,,\n", "500,1,,,\n"), parts=PARTS)).err
-    assert "all gains are judged at 0 Hz" in warned
-    assert "0 Hz" not in here("check", write_job(stages=STAGES, parts=PARTS)).err

@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+import pandas as pd
 import pyarrow.parquet as pq
 import pytest
 
@@ -19,7 +20,7 @@ if TYPE_CHECKING:
 def test_tables_are_those_of_the_run(write_job: JobWriter) -> None:
     run = service.screen(service.prepare(write_job())).folder
     found = reading.verdicts(run)
-    assert found.to_dict("list") == pq.read_table(run / "verdicts").to_pydict()
+    pd.testing.assert_frame_equal(found, pq.read_table(run / "verdicts").to_pandas())
     assert reading.stages(run)["stage"].tolist() == ["level"]
     assert reading.parts(run)["part"].tolist() == ["amp-1"]
 

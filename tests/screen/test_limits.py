@@ -13,7 +13,7 @@ from gainassay.contracts.limits import LIMITS
 from gainassay.errors import InputError
 from gainassay.screen import blocks, limits
 from gainassay.screen.blocks import Screened
-from gainassay.screen.verdicts import REASONS, VERDICTS, Rules, dominant_names
+from gainassay.screen.verdicts import VERDICTS, Rules, reason
 
 if TYPE_CHECKING:
     from conftest import JobWriter
@@ -27,7 +27,7 @@ STAGE = {
 """Its amplifier puts out 10 V and 6 mA, slopes 0.6283 V/us, and has 1 V at its inputs and a noise gain of 10."""
 
 PART = {
-    **{"part": "amp", "a_ol_min": "1e6", "v_swing_headroom_max": "2", "i_out_max": "20m"},
+    **{"part": "amp", "a_ol_min": "1e6", "gbw_min": "1G", "v_swing_headroom_max": "2", "i_out_max": "20m"},
     **{"v_cm_headroom_low_max": "1", "v_cm_headroom_high_max": "1", "slew_rate_v_us_min": "2", "gain_stable_min": "1"},
     **{"full_power_hz_min": "20k", "v_full_power_peak": "10", "v_supply_min": "5", "v_supply_max": "36"},
     **{"t_part_min_c": "-40", "t_part_max_c": "125"},
@@ -45,8 +45,8 @@ def screened(write_job: JobWriter, stages: Sequence[Cells], parts: Sequence[Cell
 
 def outcome(found: Screened, place: int = 0) -> tuple[str, str]:
     """Verdict and reason of one stage with a part."""
-    verdict, reason = (values[0, place] for values in (found.judgement.verdict, found.judgement.reason))
-    return VERDICTS[verdict], REASONS[reason]
+    verdict, code = (values[0, place] for values in (found.judgement.verdict, found.judgement.reason))
+    return VERDICTS[verdict], reason(int(code))
 
 
 def unchecked(found: Screened) -> str:
@@ -107,7 +107,7 @@ def test_the_first_limit_is_the_reason(write_job: JobWriter) -> None:
     found = screened(write_job, [{}], [{"v_swing_headroom_max": "6", "i_out_max": "1m", "a_ol_min": "2"}])
     assert outcome(found) == ("fail", "outside limit.output_swing")
     assert limits.named(int(found.kept.outside[0, 0])) == "output_swing, output_current"
-    assert dominant_names(found.group.form)[found.outcome.dominant[0, 0]] == "limit.output_swing"
+    assert found.group.dominant_names()[found.outcome.dominant[0, 0]] == "limit.output_swing"
     assert math.isnan(found.outcome.dominant_value[0, 0])
 
 

@@ -13,7 +13,7 @@ from gainassay.forms.library import library
 from gainassay.screen.boxes import with_tolerances
 from gainassay.screen.corners import active_sets, part_side, stage_side
 from gainassay.screen.kernel import screen
-from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, Rules, judge
+from gainassay.screen.verdicts import BITS, VERDICTS, Rules, judge, leaning, reason
 
 PLAIN = Rules()
 FORM = derive(library()["inverting"])
@@ -26,10 +26,10 @@ def judged(evidence: tuple[int, int, int], limit: float, rules: Rules = PLAIN) -
     parts = part_side(FORM, limits, limits, np.array(evidence, np.uint8)[:, None])
     outcome = screen(stages, parts, active_sets(FORM))
     judgement = judge(stages, parts, outcome, rules)
-    leaning = LEANINGS[int(judgement.leaning[0, 0])]
+    leans = leaning(int(judgement.leaning[0, 0]))
     used = float(judgement.limit_used[0, 0])
-    reason = REASONS[int(judgement.reason[0, 0])]
-    return VERDICTS[int(judgement.verdict[0, 0])], leaning.evidence, leaning.leans_on, used, reason
+    why = reason(int(judgement.reason[0, 0]))
+    return VERDICTS[int(judgement.verdict[0, 0])], leans.evidence, leans.leans_on, used, why
 
 
 @pytest.mark.parametrize(
@@ -90,8 +90,9 @@ def test_what_does_not_matter_to_a_stage_is_not_leaned_on() -> None:
 
 
 def test_every_leaning_has_its_weakest_evidence() -> None:
-    assert {leaning.evidence for leaning in LEANINGS} == set(EVIDENCE)
-    for leaning in LEANINGS:
-        words = leaning.leans_on.replace(",", "").split()[1::2]
+    found = [leaning(code) for code in range(1 << BITS * 4)]
+    assert {one.evidence for one in found} == set(EVIDENCE)
+    for one in found:
+        words = one.leans_on.replace(",", "").split()[1::2]
         weakest = max((EVIDENCE.index(word) for word in words), default=0)
-        assert leaning.evidence == EVIDENCE[weakest]
+        assert one.evidence == EVIDENCE[weakest]

@@ -26,6 +26,10 @@ class Signals:
     is_band: NDArray[np.bool_]
     phase_limits: NDArray[np.float64]
 
+    def highest(self) -> NDArray[np.float64]:
+        """The highest frequency of each stage [Hz], nan at 0 Hz; shape (stages,)."""
+        return np.asarray(np.fmax.reduce(self.hertz, axis=0))
+
     def part(self, stages: slice | NDArray[np.intp]) -> Signals:
         """Some of the stages."""
         return Signals(self.hertz[:, stages], self.is_band[stages], self.phase_limits[stages])

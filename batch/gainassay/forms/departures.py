@@ -86,6 +86,9 @@ RISING = {OPEN_LOOP_GAIN.symbol: BANDWIDTH, DIFFERENTIAL_INPUT.symbol: INPUT_CAP
 FIGURES = (*DEPARTURES, *RISING.values())
 """All that a part may be asked for: the departures at 0 Hz, then those that rise with frequency."""
 
+AT_DC = slice(len(DEPARTURES))
+"""Places of the departures at 0 Hz among `FIGURES`."""
+
 
 def term_name(product: list[tuple[str, Departure]], several_amplifiers: bool) -> str:
     """Name of the term of a product of departures, open-loop gain understood beside any other.

@@ -113,7 +113,7 @@ def data(prepared: Prepared) -> dict[str, Any]:
         "pairs": prepared.pairs(),
         "not_eligible": prepared.not_eligible(),
         "never_eligible": prepared.never_eligible(),
-        "not_modelled": parts.not_modelled(),
+        "not_modelled": parts.not_modelled(stages.any_at_frequency()),
         "warnings": prepared.warnings(),
         "rejected": [asdict(reject) for reject in (*stages.rejects, *parts.rejects)],
     }

@@ -36,8 +36,9 @@ def text(found: pa.Table) -> list[str]:
     """A need table: how many stages stand how, the specification lines, and the stages that no part can pass."""
     rows = found.to_pylist()
     groups = {outlook: [row for row in rows if row["outlook"] == outlook] for outlook in OUTLOOKS}
-    others = [row for row in rows if row["outlook"] != "hopeless" and not row["calibrated"]]
+    others = [row for row in rows if row["outlook"] != "hopeless" and not _is_left_out(row)]
     calibrated = [row for row in rows if row["calibrated"]]
+    tuned = [row for row in rows if row["at_frequency"]]
     stands = [[outlook, f"{len(groups[outlook]):,}", MEANINGS[outlook]] for outlook in OUTLOOKS]
     lines = table(["", "", ""], stands, right=[1])[1:]
     if others:
@@ -47,7 +48,10 @@ def text(found: pa.Table) -> list[str]:
     if calibrated:
         lines += ["", "Calibrated, so that needs are not found: what counts is how a part changes"]
         lines += [f"  {row['stage']}: {row['outlook']}, best with {row['part'] or 'no part'}" for row in calibrated]
-    if unmet := [row for row in groups["unmet"] if not row["calibrated"]]:
+    if tuned:
+        lines += ["", "At a frequency, where needs are not found"]
+        lines += [f"  {row['stage']}: {row['outlook']}, best with {row['part'] or 'no part'}" for row in tuned]
+    if unmet := [row for row in groups["unmet"] if not _is_left_out(row)]:
         lines += ["", "No part of the table is inside the limit"]
         lines += [f"  {row['stage']}: {_with_part(row)}" for row in unmet]
     if groups["hopeless"]:
@@ -115,3 +119,8 @@ def _with_part(row: Row) -> str:
 
 def _in_place(row: Row, column: str) -> str:
     return f"resistors within {outward(row[column], False):g} % in place of {row['tolerance_pct']:.6g} %"
+
+
+def _is_left_out(row: Row) -> bool:
+    """Whether needs are not found for the stage."""
+    return bool(row["calibrated"] or row["at_frequency"])

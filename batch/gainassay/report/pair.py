@@ -19,6 +19,7 @@ def text(found: Explanation) -> list[str]:
         f"{found.stage} with {found.part}: {found.verdict}, {found.reason}",
         f"{found.topology}: {found.summary}",
         *(["Calibrated at 25 degrees Celsius: only what moves afterwards counts"] if found.calibrated else []),
+        *_frequency(found),
         "",
         *table(
             ["", "", ""],
@@ -28,6 +29,7 @@ def text(found: Explanation) -> list[str]:
                 ["nominal gain", _gain(found.gain_nominal, unit), _nominal(found.error_nominal_ppm, " ppm")],
                 ["worst case", _gain(found.gain_worst, unit), _error(found.error_worst_ppm)],
                 ["limit", "", f"{found.limit_ppm:.6g} ppm"],
+                *_phase(found),
                 ["limit used", "", "-" if math.isnan(found.limit_used) else f"{found.limit_used:.4g}"],
                 ["evidence", found.evidence, found.leans_on],
             ],
@@ -72,13 +74,33 @@ def text(found: Explanation) -> list[str]:
         "Operating limits, with nominal elements and an ideal op-amp",
         *table(["  limit", "end", "asked", "", "allowed", "margin", ""], [_limit(check) for check in found.limits]),
         "",
-        "Impedances and loop at 0 Hz, with the nominal figures",
-        *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports])[1:],
-        "",
+        *_ports(found),
         *_stability(found.stability),
         "",
         *CAUTIONS,
     ]
+
+
+def _frequency(found: Explanation) -> list[str]:
+    if math.isnan(found.frequency_hz):
+        return []
+    hertz = quantity(found.frequency_hz, "Hz")
+    return [f"At {hertz}: gains and errors are those of the magnitude; the worst case is a {found.worst_case}"]
+
+
+def _phase(found: Explanation) -> list[list[str]]:
+    if math.isnan(found.frequency_hz):
+        return []
+    limit = "" if math.isinf(found.phase_accuracy_deg) else f", limit {found.phase_accuracy_deg:.6g} deg"
+    error = "-" if math.isnan(found.phase_error_deg) else f"{found.phase_error_deg:+.6g} deg"
+    return [["phase error", "", f"{error}{limit}"]]
+
+
+def _ports(found: Explanation) -> list[str]:
+    if not found.ports:
+        return []
+    rows = [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports]
+    return ["Impedances and loop at 0 Hz, with the nominal figures", *table(["", "", ""], rows)[1:], ""]
 
 
 def _limit(check: LimitCheck) -> list[str]:
@@ -105,7 +127,7 @@ def _stability(of: StabilityFigures) -> list[str]:
         for loop in of.loops
     ]
     return [
-        f"Stability, with {of.gbw_from} {quantity(of.gbw_hz, 'Hz')}, second pole {pole} and the nominal figures{asked}",
+        f"Stability, with gbw {quantity(of.gbw_hz, 'Hz')}, second pole {pole} and the nominal figures{asked}",
         *table(["  loop of", "crossover", "phase margin", "gain margin", ""], rows),
         *(["  each amplifier's loop with all others closed"] if len(rows) > 1 else []),
         *([f"  {of.doubt}"] if of.doubt else []),
@@ -155,6 +177,8 @@ def _terms(found: Explanation) -> list[str]:
 def _both_views(found: Explanation) -> list[str]:
     if found.calibrated:
         return ["Root-sum-square and Monte Carlo are not found for calibrated stages"]
+    if not math.isnan(found.frequency_hz):
+        return ["Root-sum-square and Monte Carlo are not found at a frequency"]
     if math.isnan(found.error_worst_ppm):
         return ["Root-sum-square and Monte Carlo are not found where the gain has no finite bound"]
     return [

@@ -64,7 +64,7 @@ def manifest(
             group.topology.name: {"topology": group.topology.content_hash(), "form": content_hash(group.form)}
             for group in stages.groups
         },
-        "not_modelled": list(parts.not_modelled()),
+        "not_modelled": list(parts.not_modelled(stages.any_at_frequency())),
         "warnings": list(warnings),
         "pairs": sum(counts.verdicts.values()),
         "not_eligible": dict(not_eligible),

@@ -12,7 +12,7 @@ import pyarrow as pa
 from gainassay.contracts.limits import LIMITS
 from gainassay.runs.tables import PPM, summary_table
 from gainassay.screen.blocks import Group, Tally
-from gainassay.screen.verdicts import VERDICTS, dominant_names
+from gainassay.screen.verdicts import VERDICTS
 
 
 @dataclass(frozen=True)
@@ -37,7 +37,7 @@ def counts(groups: Sequence[Group], tallies: Sequence[Tally]) -> Counts:
     verdicts = sum((tally.by_stage.sum(axis=0) for tally in tallies), np.zeros(len(VERDICTS), np.int64))
     dominant: dict[str, int] = {}
     for tally in tallies:
-        for name, count in zip(dominant_names(groups[tally.chunk.group].form), tally.dominant.tolist(), strict=True):
+        for name, count in zip(groups[tally.chunk.group].dominant_names(), tally.dominant.tolist(), strict=True):
             dominant[name] = dominant.get(name, 0) + count
     common = sorted(((name, count) for name, count in dominant.items() if count), key=lambda item: (-item[1], item[0]))
     return Counts(dict(zip(VERDICTS, verdicts.tolist(), strict=True)), dict(common), _limits(tallies))

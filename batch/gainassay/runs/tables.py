@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -15,10 +15,10 @@ from gainassay.contracts.limits import LIMITS
 from gainassay.forms.departures import DEPARTURES
 from gainassay.screen import limits
 from gainassay.screen.blocks import Screened, accounts
-from gainassay.screen.corners import term_names
 from gainassay.screen.kernel import UNBOUNDED
+from gainassay.screen.methods import WORST_CASES
 from gainassay.screen.stability import Margins
-from gainassay.screen.verdicts import LEANINGS, REASONS, VERDICTS, dominant_names
+from gainassay.screen.verdicts import VERDICTS, leaning, reason
 from gainassay.screen.views import Views
 from gainassay.tables.rejects import PLACE, Reject
 
@@ -29,7 +29,7 @@ FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 REPEATED = (
     "stage", "part", "topology", "verdict", "reason", "evidence", "leans_on",
-    "gain_ideal", "limit_ppm", "dominant_term", "not_checked",
+    "gain_ideal", "limit_ppm", "dominant_term", "worst_case", "frequency_hz", "not_checked",
 )  # fmt: skip
 """Columns of the verdict table with few different values, which are stored as a dictionary."""
 
@@ -66,10 +66,11 @@ def verdict_table(
     kept = np.flatnonzero(is_kept)
     shape = screened.judgement.verdict.shape
     stage, part = kept // shape[1], kept % shape[1]
-    sides, outcome, names = screened.stage_side, screened.outcome, term_names(screened.group.form)
-    leaning = screened.judgement.leaning.ravel()[kept]
+    group, sides, outcome = screened.group, screened.stage_side, screened.outcome
+    packed = screened.judgement.leaning.ravel()[kept]
+    gain_ideal, reference = (gain[stage, part] for gain in group.method.gains(sides, outcome))
     nominal = outcome.error_nominal.ravel()[kept]
-    unbounded = outcome.corner.ravel()[kept] == UNBOUNDED
+    unbounded, nothing = outcome.corner.ravel()[kept] == UNBOUNDED, np.full(len(kept), np.nan)
 
     def number(values: NDArray[np.float64]) -> pa.Array:
         return pa.array(values, mask=~np.isfinite(values))
@@ -85,24 +86,34 @@ def verdict_table(
             pa.array(place[codes].astype(np.int32), mask=codes < 0), pa.array(once, pa.string())
         )
 
-    evidences = list(dict.fromkeys(leaning.evidence for leaning in LEANINGS))
-    evidence_of = np.array([evidences.index(leaning.evidence) for leaning in LEANINGS])
+    def meant(codes: NDArray[np.int32], meaning: Callable[[int], str]) -> pa.Array:
+        """Codes of words: few of many are used, and only these are looked up."""
+        used = np.flatnonzero(np.bincount(codes, minlength=1))
+        place = np.zeros(used.max(initial=0) + 1, np.int32)
+        place[used] = np.arange(len(used))
+        return words(place[codes], [meaning(code) for code in used.tolist()])
+
     columns = {
         "stage": words(stage, screened.group.stage_names[screened.chunk.stages].tolist()),
         "part": words(part, screened.group.part_names[screened.chunk.parts].tolist()),
         "topology": words(np.zeros(len(kept), np.int32), [screened.group.form.topology]),
         "verdict": words(verdict[kept], VERDICTS),
-        "reason": words(screened.judgement.reason.ravel()[kept], REASONS),
-        "evidence": words(evidence_of[leaning], evidences),
-        "leans_on": words(leaning, [leaning.leans_on for leaning in LEANINGS]),
-        "gain_ideal": number(sides.gain_ideal[stage]),
-        "gain_nominal": number(sides.reference[stage] * (1.0 + nominal)),
+        "reason": meant(screened.judgement.reason.ravel()[kept], reason),
+        "evidence": meant(packed, lambda code: leaning(code).evidence),
+        "leans_on": meant(packed, lambda code: leaning(code).leans_on),
+        "gain_ideal": number(gain_ideal),
+        "gain_nominal": number(reference * (1.0 + nominal)),
         "error_nominal_ppm": number(nominal * PPM),
         "error_worst_ppm": number(outcome.error_worst.ravel()[kept] * PPM),
         "limit_ppm": number(sides.limits[stage] * PPM),
         "limit_used": number(screened.judgement.limit_used.ravel()[kept]),
-        "dominant_term": words(outcome.dominant.ravel()[kept], dominant_names(screened.group.form)),
+        "dominant_term": words(outcome.dominant.ravel()[kept], group.dominant_names()),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
+        "worst_case": words(np.full(len(kept), WORST_CASES.index(group.method.worst_case), np.int32), WORST_CASES),
+        "frequency_hz": number(
+            nothing if group.box.signals is None else sides.hertz[sides.spot_of(outcome.corner)[stage, part]]
+        ),
+        "phase_error_deg": number(nothing if outcome.phase is None else outcome.phase.ravel()[kept]),
     }
     if needs is not None:
         columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
@@ -115,9 +126,8 @@ def verdict_table(
     if screened.margins is not None and stability:
         columns |= {name: number(values.ravel()[kept]) for name, values in _margin_columns(screened.margins).items()}
     if terms:
-        found = zip(names, accounts(screened), strict=True)
+        found = zip(group.term_names(), accounts(screened), strict=True)
         values = {name: term.ravel()[kept] for name, term in found if name in terms}
-        nothing = np.full(len(kept), np.nan)
         for name in terms:
             columns[f"term_{name}_ppm"] = number(np.where(unbounded, np.nan, values.get(name, nothing)) * PPM)
     return pa.table(list(columns.values()), schema=_schema("verdicts", columns))

@@ -97,6 +97,16 @@ def screen(form: Form, stages: SpotSide, parts: PartSide, block: int = PAIRS_PER
     return found
 
 
+def elements_error(stages: SpotSide) -> FloatArray:
+    """As `corners.elements_error`, of magnitudes."""
+    error, _ = _turned(None, None, split(stages.corner_error[None]))
+    size = np.nan_to_num(np.abs(error[0]), nan=np.inf)
+    first = stages.first[stages.begin]
+    largest = np.repeat(np.maximum.reduceat(size, first), np.diff(np.append(first, len(size))))
+    candidates = np.where(size == largest, np.arange(len(size)), len(size))
+    return np.asarray(error[0][np.minimum.reduceat(candidates, first)])
+
+
 def _in_blocks(
     stages: SpotSide, parts: int, block: int
 ) -> Iterator[tuple[NDArray[np.intp], tuple[tuple[int, int], ...], slice, bool]]:

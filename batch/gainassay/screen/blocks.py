@@ -7,39 +7,34 @@ tables. Inside a chunk the kernel cuts as it likes.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, fields, replace
-from typing import TypeVar
+from dataclasses import MISSING, dataclass, fields, replace
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
-from gainassay.screen import calibrated, limits
+from gainassay.screen import limits
 from gainassay.screen.boxes import StageBox
-from gainassay.screen.corners import (
-    PartSide,
-    StageSide,
-    active_sets,
-    elements_error,
-    stage_side,
-    term_names,
-)
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, account, screen
+from gainassay.screen.corners import PartSide
+from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome
 from gainassay.screen.limits import Bounds, Kept
+from gainassay.screen.methods import AT_DC, AT_FREQUENCY, CALIBRATED, Method, Side
 from gainassay.screen.monte_carlo import Lot
-from gainassay.screen.signs import Reach, reach
 from gainassay.screen.stability import Dynamics, Looked, Margins, margins
 from gainassay.screen.verdicts import (
+    DECIDING,
     FAIL,
     LIMIT_TERMS,
     PASS,
+    PHASE_ERROR,
     PHASE_MARGIN,
     UNPROVEN,
     VERDICTS,
     Judgement,
     Rules,
-    dominant_names,
+    is_phase,
     judge,
     with_phase_margin,
 )
@@ -68,10 +63,10 @@ class Group:
         Ordered.
     part_names : ndarray of str, shape (parts,)
         Ordered.
-    calibrated : bool
-        Whether only what moves after a calibration counts.
-    reach : Reach
-        Of all parts: what a chunk leaves out must not depend on which parts are in it.
+    method : Method
+        How they are screened.
+    reach : object
+        What the method keeps of all parts: what a chunk leaves out must not depend on which parts are in it.
     pattern : ndarray of int, shape (stages,)
         Place of each stage's pattern.
     eligible : ndarray of bool, shape (patterns, parts)
@@ -86,10 +81,9 @@ class Group:
     stage_names: NDArray[np.str_]
     part_names: NDArray[np.str_]
     box: StageBox
-    calibrated: bool
+    method: Method
     parts: PartSide
-    active_sets: tuple[tuple[int, ...], ...]
-    reach: Reach
+    reach: Any
     pattern: NDArray[np.intp]
     eligible: NDArray[np.bool_]
     bounds: Bounds
@@ -101,9 +95,13 @@ class Group:
             raise ValueError("these parts have no dynamics")
         return Looked(self.form, self.box.values[:, chunk.stages], self.dynamics.part(chunk.parts))
 
-    def corner(self, code: int) -> tuple[int, int]:
-        """The stage's and the part's corner that an outcome's `corner` stands for."""
-        return divmod(code, calibrated.corners_of_part(self.form) if self.calibrated else len(self.active_sets))
+    def term_names(self) -> tuple[str, ...]:
+        """Names of the terms of a row's account."""
+        return self.method.term_names(self.form)
+
+    def dominant_names(self) -> tuple[str, ...]:
+        """What a pair's dominant term may be: the terms of its account, then what stands for one."""
+        return (*self.term_names(), *DECIDING)
 
 
 @dataclass(frozen=True)
@@ -133,7 +131,7 @@ class Screened:
 
     chunk: Chunk
     group: Group
-    stage_side: StageSide
+    stage_side: Side
     part_side: PartSide
     eligible: NDArray[np.bool_]
     outcome: Outcome
@@ -153,7 +151,7 @@ class Tally:
     by_part : ndarray, shape (parts, verdicts)
         Pairs by verdict, in the order of `VERDICTS`.
     dominant : ndarray, shape (terms,)
-        Pairs by dominant term, in the order of `dominant_names`.
+        Pairs by dominant term, in the order of the group's `dominant_names`.
     outside, unchecked : ndarray, shape (limits,)
         Pairs outside each operating limit, and pairs of which it could not be checked.
     best_part : ndarray of int, shape (stages,)
@@ -192,15 +190,15 @@ def group(
     say what changes after a calibration.
     """
     (stage_names, box), (part_names, side) = stages, parts
+    method = AT_FREQUENCY if box.signals is not None else AT_DC if side.changed is None else CALIBRATED
     return Group(
         form=form,
         stage_names=stage_names,
         part_names=part_names,
         box=box,
-        calibrated=side.changed is not None,
+        method=method,
         parts=side,
-        active_sets=active_sets(form),
-        reach=reach(form, side.limits, box.memberships()),
+        reach=method.reach(form, side, box),
         pattern=patterns[0],
         eligible=patterns[1],
         bounds=bounds,
@@ -233,53 +231,57 @@ def screen_chunk(
 ) -> Screened:
     """Screen one chunk, with both views if a number of samples is given, and with the margins of stability."""
     one = groups[chunk.group]
-    side = calibrated.stage_side if one.calibrated else stage_side
-    stages = side(one.form, one.box.part(chunk.stages), one.reach)
+    stages = one.method.side(one.form, one.box.part(chunk.stages), one.reach)
     parts = one.parts.part(chunk.parts)
     pattern, of_patterns = one.pattern[chunk.stages], one.eligible[:, chunk.parts]
     eligible = of_patterns[pattern]
     outcome = (
-        _screen(one, stages, parts, block)
+        one.method.screen(one.form, stages, parts, block)
         if eligible.all()
         else _screen_eligible(one, stages, parts, pattern, of_patterns, block)
     )
     kept = limits.check(one.bounds.of(chunk.stages, chunk.parts))
     outside = kept.first_outside()
-    judgement = judge(stages, parts, outcome, rules, outside)
+    phase_limits = None if one.box.signals is None else one.box.signals.phase_limits[chunk.stages]
+    judgement = judge(stages, parts, outcome, rules, outside, phase_limits)
     # No term decides where all are 0, as with a part of which nothing is known.
     outcome.dominant[outcome.dominant_value == 0.0] = NO_TERM
-    is_outside = outside != limits.NONE
-    np.copyto(outcome.dominant, outside + np.int16(len(term_names(one.form))), where=is_outside)
-    outcome.dominant_value[is_outside] = np.nan
+    _decide(one, outcome, outside.astype(np.int16) + np.int16(len(one.term_names())), outside != limits.NONE)
+    _decide(one, outcome, one.dominant_names().index(PHASE_ERROR), is_phase(judgement))
     of_loops = None
     if stability or rules.phase_margin is not None:
         of_loops = margins(one.looked(chunk), eligible)
     if of_loops is not None and rules.phase_margin is not None:
         judgement, below = with_phase_margin(judgement, of_loops, rules.phase_margin)
-        outcome.dominant[below] = dominant_names(one.form).index(PHASE_MARGIN)
-        outcome.dominant_value[below] = np.nan
-    bounded = np.full_like(outcome.error_worst, np.nan) if one.calibrated else outcome.error_worst
-    found = None if samples is None else views(lot_of(one, chunk, stages, parts), bounded, samples)
+        _decide(one, outcome, one.dominant_names().index(PHASE_MARGIN), below)
+    found = None
+    if samples is not None:
+        bounded = outcome.error_worst if one.method.has_more else np.full_like(outcome.error_worst, np.nan)
+        found = views(lot_of(one, chunk, stages, parts), bounded, samples)
     return Screened(chunk, one, stages, parts, eligible, outcome, judgement, kept, found, of_loops)
 
 
-def _screen(one: Group, stages: StageSide, parts: PartSide, block: int) -> Outcome:
-    if one.calibrated:
-        return calibrated.screen(one.form, stages, parts, block)
-    return screen(stages, parts, one.active_sets, block)
+def _decide(one: Group, outcome: Outcome, place: NDArray[np.int16] | int, where: NDArray[np.bool_]) -> None:
+    """Put what decides, a place in the group's `dominant_names`, in place of the dominant term."""
+    np.copyto(outcome.dominant, np.asarray(place, np.int16), where=where)
+    outcome.dominant_value[where] = np.nan
 
 
 def accounts(screened: Screened) -> Iterator[FloatArray]:
-    """The terms of each pair's error at its corner, as `kernel.account` gives them."""
-    one, every = screened.group, slice(None)
-    if one.calibrated:
-        return calibrated.account(one.form, screened.stage_side, screened.part_side, every, every, screened.outcome)
-    return account(screened.stage_side, screened.part_side, one.active_sets, every, every, screened.outcome)
+    """The terms of each pair's error at its corner, in the order of the group's `term_names`."""
+    one = screened.group
+    return one.method.account(one.form, screened.stage_side, screened.part_side, screened.outcome)
+
+
+def nominal_accounts(screened: Screened) -> Iterator[FloatArray]:
+    """The terms of each pair's nominal error."""
+    one = screened.group
+    return one.method.nominal_account(one.form, screened.stage_side, screened.part_side, screened.outcome)
 
 
 def _screen_eligible(
     one: Group,
-    stages: StageSide,
+    stages: Side,
     parts: PartSide,
     pattern: NDArray[np.intp],
     eligible: NDArray[np.bool_],
@@ -287,32 +289,28 @@ def _screen_eligible(
 ) -> Outcome:
     """Screen the stages of each pattern against its parts, and leave all other pairs open."""
     shape = (len(pattern), eligible.shape[1])
-    nothing = np.full(shape, np.nan)
-    found = Outcome(
-        nothing,
-        nothing.copy(),
-        np.full(shape, UNBOUNDED, np.int32),
-        np.full(shape, NO_TERM, np.int16),
-        nothing.copy(),
-        None if stages.slack is None else nothing.copy(),
-    )
+    blank: dict[str, Any] = {"corner": np.int32(UNBOUNDED), "dominant": np.int16(NO_TERM)}
+    always = [field.name for field in fields(Outcome) if field.default is MISSING]
+    found: dict[str, Any] = {name: np.full(shape, blank.get(name, np.nan)) for name in always}
     for place in np.unique(pattern):
         rows, columns = np.flatnonzero(pattern == place), np.flatnonzero(eligible[place])
         if len(columns):
-            only = _screen(one, _only(stages, rows), parts.at(columns), block)
+            only = one.method.screen(one.form, _only(stages, rows), parts.at(columns), block)
             for field in fields(Outcome):
-                if getattr(found, field.name) is not None:
-                    getattr(found, field.name)[np.ix_(rows, columns)] = getattr(only, field.name)[rows]
-    return found
+                values = getattr(only, field.name)
+                if values is not None:
+                    whole = found.setdefault(field.name, np.full(shape, blank.get(field.name, np.nan)))
+                    whole[np.ix_(rows, columns)] = values[rows]
+    return Outcome(**found)
 
 
-def _only(stages: StageSide, rows: NDArray[np.intp]) -> StageSide:
+def _only(stages: Side, rows: NDArray[np.intp]) -> Side:
     """The same stages with nothing to visit but for some of them."""
-    plans = [replace(plan, stages=np.intersect1d(plan.stages, rows)) for plan in stages.plans]
+    plans = [replace(plan, stages=plan.stages[np.isin(stages.stages_of(plan), rows)]) for plan in stages.plans]
     return replace(stages, plans=tuple(plan for plan in plans if len(plan.stages)))
 
 
-def lot_of(group: Group, chunk: Chunk, stages: StageSide, parts: PartSide) -> Lot:
+def lot_of(group: Group, chunk: Chunk, stages: Side, parts: PartSide) -> Lot:
     """What the views need of a chunk."""
     box = replace(group.box.part(chunk.stages).at_dc(group.form.kinds), targets=stages.reference)
     return Lot(group.form, box, group.stage_names[chunk.stages], group.part_names[chunk.parts], parts.limits)
@@ -330,7 +328,7 @@ def tally(screened: Screened) -> Tally:
     best = candidate.argmin(axis=1)
     found = best_rank < len(VERDICTS)
     # NO_TERM is -1, counted in the first place and left out.
-    names = dominant_names(screened.group.form)
+    names = screened.group.dominant_names()
     by_place = np.bincount(screened.outcome.dominant[screened.eligible] + 1, minlength=len(names) + 1)
     return Tally(
         chunk=screened.chunk,
@@ -344,7 +342,7 @@ def tally(screened: Screened) -> Tally:
         best_limit_used=np.where(found, used[np.arange(len(best)), best], np.nan),
         gain_ideal=screened.stage_side.gain_ideal,
         limits=screened.stage_side.limits,
-        elements_error=elements_error(screened.stage_side),
+        elements_error=screened.group.method.elements_error(screened.stage_side),
     )
 
 

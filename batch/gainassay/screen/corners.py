@@ -90,6 +90,10 @@ class StageSide:
     slack: Slack | None
     at_calibration: Coefficients | None = None
 
+    def stages_of(self, plan: Plan) -> NDArray[np.intp]:
+        """The stages that a plan is about."""
+        return plan.stages
+
 
 @dataclass(frozen=True)
 class PartSide:
@@ -98,9 +102,10 @@ class PartSide:
     Attributes
     ----------
     nominal, worst : ndarray, shape (terms, parts)
-        The products m_k at the nominal figures, and with every departure at its limit.
+        The products m_k at the nominal figures, and with every departure at its limit; at a frequency these figures
+        themselves, as `at_frequency.part_side` gives them.
     limits : ndarray, shape (departures, parts)
-        The departures at their limits, in the order of `DEPARTURES`.
+        The departures at their limits, in the order of `DEPARTURES`; at a frequency, of `FIGURES`.
     evidence : ndarray of uint8, shape (departures, parts)
         What each limit rests on.
     changed : ndarray, shape (3, 2, departures, parts), or None
@@ -139,11 +144,12 @@ def term_names(form: Form) -> tuple[str, ...]:
     return (SET_POINT, *(f"{name}.{move}" for name in form.elements for move in MOVES), TRACKING, *form.terms)
 
 
-def moving_terms(form: Form, box: StageBox) -> tuple[str, ...]:
-    """Names of the terms that are not 0 from the outset for all of these stages."""
+def moving_terms(names: tuple[str, ...], box: StageBox) -> tuple[str, ...]:
+    """Those of the names of an account's terms that are not 0 from the outset for all of these stages."""
     own = (box.own.low < box.own.high).any(axis=2).T
-    moves: list[bool] = [True, *own.ravel().tolist(), bool(box.common.moves().any()), *(True for _ in form.terms)]
-    return tuple(name for name, moving in zip(term_names(form), moves, strict=True) if moving)
+    of_stage: list[bool] = [True, *own.ravel().tolist(), bool(box.common.moves().any())]
+    moves = [*of_stage, *[True] * (len(names) - len(of_stage))]
+    return tuple(name for name, moving in zip(names, moves, strict=True) if moving)
 
 
 def active_sets(form: Form) -> tuple[tuple[int, ...], ...]:

@@ -91,6 +91,10 @@ class SpotSide:
     part_corners: tuple[int, ...]
     plans: tuple[Plan, ...]
 
+    def stages_of(self, plan: Plan) -> NDArray[np.intp]:
+        """The stages that a plan is about."""
+        return self.stage[plan.stages]
+
     def codes_of(self, spots: NDArray[np.intp]) -> NDArray[np.int32]:
         """The code of each spot's first corner among all of its stage's."""
         first_of_stage = self.first[self.begin[self.stage[spots]]]
@@ -108,6 +112,13 @@ def spots_of(signals: Signals) -> tuple[NDArray[np.intp], FloatArray]:
     is_there = ~np.isnan(signals.hertz.T)
     stage, point = np.nonzero(is_there)
     return stage, signals.hertz.T[stage, point]
+
+
+def stage_side(form: Form, box: StageBox, farthest: FloatArray) -> SpotSide:
+    """As `corners.stage_side`; how far the parts reach is `farthest` of `side`."""
+    if box.signals is None:
+        raise ValueError("these stages work at 0 Hz")
+    return side(form, box, spots_of(box.signals), farthest)
 
 
 def side(form: Form, box: StageBox, spots: tuple[NDArray[np.intp], FloatArray], farthest: FloatArray) -> SpotSide:

@@ -11,6 +11,9 @@ With L the required accuracy and g the guard band (JCGM 106: the acceptance limi
 | up to L (1 - g) | as strong as the basis asks | pass | inside the limit |
 | up to L (1 - g) | weaker | unproven | inside the limit, but leans on ... |
 
+A stage at a frequency may limit its phase error, too: what is inside L and beyond that limit, less the guard band,
+fails.
+
 The basis is `guaranteed` or `typical`; what is assumed or missing never proves a pass. A number that is missing
 is left out of the account, as 0. Its true value could only widen the box, so that `fail` stands, and whatever
 is inside the limit is `unproven`. The operating limits are those of `contracts.limits`; one that is not checked proves
@@ -32,6 +35,8 @@ is missing could only make the margin smaller.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cache
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -39,17 +44,16 @@ from numpy.typing import NDArray
 from gainassay.contracts.evidence import EVIDENCE
 from gainassay.contracts.limits import LIMITS
 from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES
-from gainassay.forms.form import Form
-from gainassay.screen.corners import PartSide, StageSide, term_names
+from gainassay.forms.departures import FIGURES
+from gainassay.screen.corners import PartSide
 from gainassay.screen.kernel import Outcome
 from gainassay.screen.stability import CHECKED, Margins
 
 VERDICTS = ("pass", "fail", "unproven")
 PASS, FAIL, UNPROVEN = range(3)
 
-UNBOUNDED_REASON, OUTSIDE, GUARD_BAND, INSIDE, LEANING, OUTSIDE_LIMIT = range(6)
-PHASE_MARGIN = "limit.phase_margin"
+UNBOUNDED_REASON, OUTSIDE, GUARD_BAND, INSIDE, LEANING, PHASE, PHASE_GUARD_BAND, OUTSIDE_LIMIT = range(8)
+PHASE_ERROR, PHASE_MARGIN = "limit.phase_error", "limit.phase_margin"
 LIMIT_TERMS = tuple(f"limit.{limit.name}" for limit in LIMITS)
 """What stands for the dominant term where a pair is outside an operating limit."""
 
@@ -59,11 +63,13 @@ _REASONS = (
     "inside the limit, but in its guard band",
     "inside the limit",
     "inside the limit, but leans on",
+    "outside the phase limit",
+    "inside the phase limit, but in its guard band",
     *(f"outside {term}" for term in LIMIT_TERMS),
 )
 
 BITS = 2
-"""Bits that hold the evidence for one departure in a leaning."""
+"""Bits that hold the evidence for one figure in a leaning."""
 
 
 @dataclass(frozen=True)
@@ -94,16 +100,16 @@ class Judgement:
     verdict : ndarray of uint8
         Place in `VERDICTS`.
     reason : ndarray of int
-        Place in `REASONS` of the verdict's reason in words.
+        Code of the verdict's reason; `reason` says it in words.
     leaning : ndarray of int
-        The evidence for each departure that matters to the stage, packed; `LEANINGS` says what it means.
+        The evidence for each figure that matters to the stage, packed; `leaning` says what it means.
     limit_used : ndarray
         |error_worst| / required accuracy, the guard band not taken off; nan where there is no finite bound.
     """
 
     verdict: NDArray[np.uint8]
     reason: NDArray[np.int32]
-    leaning: NDArray[np.int16]
+    leaning: NDArray[np.int32]
     limit_used: FloatArray
 
 
@@ -115,14 +121,15 @@ class Leaning:
     leans_on: str
 
 
-def _leaning(code: int) -> Leaning:
-    codes = [(code >> BITS * index) & ((1 << BITS) - 1) for index in range(len(DEPARTURES))]
-    weak = [f"{d.quantity} {EVIDENCE[c]}" for d, c in zip(DEPARTURES, codes, strict=True) if c]
+@cache
+def leaning(code: int) -> Leaning:
+    """The meaning of a packed leaning."""
+    codes = [(code >> BITS * index) & ((1 << BITS) - 1) for index in range(len(FIGURES))]
+    weak = [f"{figure.quantity} {EVIDENCE[c]}" for figure, c in zip(FIGURES, codes, strict=True) if c]
     return Leaning(EVIDENCE[max(codes)], ", ".join(weak))
 
 
-LEANINGS = tuple(_leaning(code) for code in range(1 << BITS * len(DEPARTURES)))
-"""Meaning of every packed leaning."""
+_LEANINGS = 1 << BITS * len(FIGURES)
 
 DOUBTS = (
     "",
@@ -132,26 +139,36 @@ DOUBTS = (
 )
 """Why a phase margin proves nothing, by `Margins.doubt`."""
 
-_OF_LEANING = tuple(
-    f"{words} {leaning.leans_on}" if place == LEANING else words
-    for place, words in enumerate(_REASONS)
-    for leaning in LEANINGS
-)
-UNSTABLE = len(_OF_LEANING)
-"""Place of the reason of a phase margin below the limit; those of `DOUBTS` follow, but for the first."""
+UNSTABLE = len(_REASONS) * _LEANINGS
+"""Code of the reason of a phase margin below the limit; those of `DOUBTS` follow, but for the first."""
 
-REASONS = (*_OF_LEANING, "phase margin below the limit", *(f"inside the limit, but {doubt}" for doubt in DOUBTS[1:]))
-"""Reason in words, for each kind of reason and, within it, each packed leaning; then those of the phase margin."""
+_OF_MARGINS = ("phase margin below the limit", *(f"inside the limit, but {doubt}" for doubt in DOUBTS[1:]))
 
-_WEAKEST = np.array([EVIDENCE.index(leaning.evidence) for leaning in LEANINGS])
+
+def reason(code: int) -> str:
+    """The reason in words of a code: a kind of reason and, within it, a packed leaning; or one of the phase margin."""
+    if code >= UNSTABLE:
+        return _OF_MARGINS[code - UNSTABLE]
+    kind, packed = divmod(code, _LEANINGS)
+    return f"{_REASONS[kind]} {leaning(packed).leans_on}" if kind == LEANING else _REASONS[kind]
+
+
+class Judged(Protocol):
+    """What verdicts need of stages; limits as fractions, shape (stages,), and whether figures matter to them."""
+
+    @property
+    def limits(self) -> FloatArray: ...
+    @property
+    def matters(self) -> NDArray[np.bool_]: ...
 
 
 def judge(
-    stages: StageSide,
+    stages: Judged,
     parts: PartSide,
     outcome: Outcome,
     rules: Rules,
     outside: NDArray[np.int8] | None = None,
+    phase_limits: FloatArray | None = None,
 ) -> Judgement:
     """Verdict, reason, evidence and share of the limit used, for each pair.
 
@@ -159,28 +176,45 @@ def judge(
     ----------
     outside : ndarray of int, shape (stages, parts), optional
         Place of the operating limit that a pair is outside of, negative for none.
+    phase_limits : ndarray, shape (stages,), optional
+        Largest phase error [degree], where the outcome has one.
     """
-    weights = 1 << BITS * np.arange(len(DEPARTURES))
-    of_part = (parts.evidence.astype(np.int16) * weights[:, None].astype(np.int16)).sum(axis=0, dtype=np.int16)
-    seen = (stages.matters * (weights * ((1 << BITS) - 1))[:, None]).sum(axis=0).astype(np.int16)
-    leaning = seen[:, None] & of_part
+    weights = (1 << BITS * np.arange(len(parts.evidence), dtype=np.int32))[:, None]
+    of_part = (parts.evidence * weights).sum(axis=0, dtype=np.int32)
+    seen = (stages.matters * (weights * ((1 << BITS) - 1))).sum(axis=0, dtype=np.int32)
+    packed = seen[:, None] & of_part
     limits = stages.limits[:, None]
     magnitude = np.abs(outcome.error_worst)
     # nan, where there is no finite bound, compares as outside.
     kind = np.where(
         magnitude <= limits * (1.0 - rules.guard_band),
-        np.where(_WEAKEST[leaning] <= rules.basis, INSIDE, LEANING),
+        np.where(packed & _weaker_than(rules.basis), LEANING, INSIDE),
         np.where(magnitude <= limits, GUARD_BAND, np.where(np.isnan(magnitude), UNBOUNDED_REASON, OUTSIDE)),
     )
+    if outcome.phase is not None and phase_limits is not None:
+        share = np.abs(outcome.phase) / phase_limits[:, None]
+        turned = ((kind == INSIDE) | (kind == LEANING)) & (share > 1.0 - rules.guard_band)
+        kind = np.where(turned, np.where(share > 1.0, PHASE, PHASE_GUARD_BAND), kind)
     if outside is not None:
         kind = np.where(outside >= 0, OUTSIDE_LIMIT + outside.astype(kind.dtype), kind)
-    verdict = np.array([FAIL, FAIL, FAIL, PASS, UNPROVEN, *[FAIL] * len(LIMITS)], np.uint8)[kind]
-    return Judgement(verdict, (kind * len(LEANINGS) + leaning).astype(np.int32), leaning, magnitude / limits)
+    verdict = np.array([PASS if k == INSIDE else UNPROVEN if k == LEANING else FAIL for k in range(len(_REASONS))])
+    code = (kind * _LEANINGS + packed).astype(np.int32)
+    return Judgement(verdict.astype(np.uint8)[kind], code, packed, magnitude / limits)
 
 
-def dominant_names(form: Form) -> tuple[str, ...]:
-    """What a pair's dominant term may be: the terms of its account, the operating limits, the phase margin."""
-    return (*term_names(form), *LIMIT_TERMS, PHASE_MARGIN)
+def _weaker_than(basis: int) -> int:
+    """Bits of a leaning of which one is set where some evidence is weaker; a basis is one of the first two."""
+    return sum((((1 << BITS) - 1) & ~basis) << BITS * index for index in range(len(FIGURES)))
+
+
+def is_phase(judgement: Judgement) -> NDArray[np.bool_]:
+    """Whether the phase error decides."""
+    kind = judgement.reason // _LEANINGS
+    return np.asarray((kind == PHASE) | (kind == PHASE_GUARD_BAND))
+
+
+DECIDING = (*LIMIT_TERMS, PHASE_ERROR, PHASE_MARGIN)
+"""What may stand for a pair's dominant term, behind the terms of its account."""
 
 
 def with_phase_margin(judgement: Judgement, margins: Margins, least: float) -> tuple[Judgement, NDArray[np.bool_]]:

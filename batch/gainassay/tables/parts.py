@@ -16,10 +16,9 @@ from gainassay.contracts.quantities import Numbers
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure
+from gainassay.forms.departures import BANDWIDTH, DEPARTURES, FIGURES, OPEN_LOOP_GAIN, Departure
 from gainassay.job import Source, StandIn
-from gainassay.tables import bandwidths, operating, sources
-from gainassay.tables.bandwidths import Bandwidths
+from gainassay.tables import operating, sources
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.operating import Operating
@@ -27,11 +26,12 @@ from gainassay.tables.raw import RawTable
 from gainassay.tables.rejects import Reject, rejected_rows
 
 PER_PCT = 1e-2
+SECOND_POLE = "f_second_pole_hz"
 
 
 @dataclass(frozen=True)
 class PartTable:
-    """A checked parts table, ordered by name. Axis `departures` follows `DEPARTURES`.
+    """A checked parts table, ordered by name. Axis `figures` follows `FIGURES`, which begin with `DEPARTURES`.
 
     Attributes
     ----------
@@ -39,24 +39,25 @@ class PartTable:
         Rows in the file, blank ones apart.
     names : ndarray of str, shape (parts,)
         Names.
-    nominal : ndarray, shape (departures, parts)
+    nominal : ndarray, shape (figures, parts)
         Each departure as the typical figure gives it, else the limit, else the job's stand-in, else 0.
-    worst : ndarray, shape (departures, parts)
+    worst : ndarray, shape (figures, parts)
         Its upper bound in the worst case; the lower bound is 0.
-    evidence : ndarray of uint8, shape (departures, parts)
+    evidence : ndarray of uint8, shape (figures, parts)
         What `worst` rests on, a place in `EVIDENCE`. MISSING: nothing is known, and 0 stands there.
-    worst_hot, evidence_hot : ndarray, shape (departures, parts)
+    worst_hot, evidence_hot : ndarray, shape (figures, parts)
         The same for stages that work over a range of temperatures.
-    change : ndarray, shape (departures, parts)
+    change : ndarray, shape (figures, parts)
         How much the quantity, not the departure, may change after a calibration, up or down as a fraction; inf where
         nothing is known of it.
-    evidence_change : ndarray of uint8, shape (departures, parts)
+    evidence_change : ndarray of uint8, shape (figures, parts)
         What `change` rests on; GUARANTEED where nothing is known of it, since nothing is claimed.
     modelled : tuple[bool, ...]
-        Whether the table or the job says anything about the departure; if not, it is 0 everywhere and of
-        evidence GUARANTEED, since nothing is claimed about it.
-    bandwidths : Bandwidths
-        How the open-loop gain falls with frequency.
+        Whether the table or the job says anything about the figure; if not, it is 0 everywhere and of
+        evidence GUARANTEED, since nothing is claimed about it. Without a gain-bandwidth product nothing holds at
+        a frequency: that is always modelled.
+    second_pole : ndarray, shape (parts,), or None
+        Frequency of the second pole of the open-loop gain [Hz], nan where a cell is blank; none without such a column.
     compared : Mapping[str, Cells]
         The columns that rules compare with the stages'.
     operating : Operating
@@ -77,7 +78,7 @@ class PartTable:
     change: FloatArray
     evidence_change: NDArray[np.uint8]
     modelled: tuple[bool, ...]
-    bandwidths: Bandwidths
+    second_pole: FloatArray | None
     compared: Mapping[str, Cells]
     operating: Operating
     rejects: tuple[Reject, ...]
@@ -92,9 +93,22 @@ class PartTable:
         """Rows that were left out."""
         return rejected_rows(self.rejects)
 
-    def not_modelled(self) -> tuple[str, ...]:
-        """Quantities that the table says nothing about."""
-        return tuple(d.quantity for d, there in zip(DEPARTURES, self.modelled, strict=True) if not there)
+    def not_modelled(self, at_frequency: bool) -> tuple[str, ...]:
+        """Quantities that the table says nothing about, and that matter at 0 Hz or at a frequency."""
+        known = zip(FIGURES, self.modelled, strict=True)
+        return tuple(d.quantity for d, there in known if not there and (at_frequency or d in DEPARTURES))
+
+    def lag(self) -> FloatArray:
+        """1/f of the second pole of the open-loop gain [1/Hz], 0 where none is known; shape (parts,)."""
+        if self.second_pole is None:
+            return np.zeros(len(self.names))
+        return np.where(np.isnan(self.second_pole), 0.0, 1.0 / self.second_pole)
+
+    def gbw(self) -> FloatArray:
+        """The nominal gain-bandwidth product [Hz]; nan where the table has none. Shape (parts,)."""
+        place = FIGURES.index(BANDWIDTH)
+        is_known = self.evidence[place] <= TYPICAL
+        return np.where(is_known, 1.0 / np.where(is_known, self.nominal[place], 1.0), np.nan)
 
 
 def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOTHING) -> PartTable:
@@ -118,14 +132,14 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
     kept = {"part", *compared.columns()}
     checks: list[Checking] = []
     figures: list[list[_Read]] = []
-    of_frequency: list[Bandwidths] = []
+    poles: list[FloatArray] = []
     limits: list[Operating] = []
     for block in sources.blocks(source, known):
         if not checks:
             _require(block)
         checking = Checking.of(block)
-        figures.append([_departure(checking, one, assume.get(one.quantity, StandIn())) for one in DEPARTURES])
-        of_frequency.append(bandwidths.read(checking))
+        figures.append([_departure(checking, one, assume.get(one.quantity, StandIn())) for one in FIGURES])
+        poles.append(checking.column(tables.column("parts", SECOND_POLE)).values)
         limits.append(operating.read_parts(checking))
         # Its text is done with: a table may be larger than the memory.
         checks.append(checking.only(kept))
@@ -150,7 +164,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         change=_of_all(figures, "change", order),
         evidence_change=_of_all(figures, "evidence_change", order),
         modelled=tuple(one.modelled for one in figures[0]),
-        bandwidths=bandwidths.joined(of_frequency).at(order),
+        second_pole=np.concatenate(poles)[order] if SECOND_POLE in raw.header else None,
         compared={name: column.at(order) for name, column in cells.items()},
         operating=operating.at(operating.joined(limits), order),
         rejects=checking.found(),
@@ -169,7 +183,7 @@ def _require(raw: RawTable) -> None:
 
 def _of_all(blocks: list[list[_Read]], figure: str, order: NDArray[np.intp]) -> NDArray[Any]:
     """One figure of each departure, of all blocks in order."""
-    found = np.empty((len(DEPARTURES), len(order)), getattr(blocks[0][0], figure).dtype)
+    found = np.empty((len(FIGURES), len(order)), getattr(blocks[0][0], figure).dtype)
     for own, departures in zip(found, zip(*blocks, strict=True), strict=True):
         own[:] = np.concatenate([getattr(one, figure) for one in departures])[order]
     return found
@@ -186,7 +200,7 @@ def _figure_columns(departure: Departure) -> list[str]:
 
 @dataclass(frozen=True)
 class _Read:
-    """One departure of all rows, as `PartTable` has them; arrays of shape (rows,)."""
+    """One figure of all rows, as `PartTable` has them; arrays of shape (rows,)."""
 
     nominal: FloatArray
     worst: FloatArray
@@ -208,7 +222,8 @@ def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _
     _refuse_crossed(checking, departure, departure.hot_column, hot, typical_column, typical)
     change, evidence_change = _change(checking, departure, stand_in)
 
-    if not set(_figure_columns(departure)) & set(checking.raw.header) and stand_in.value is None:
+    is_modelled = departure is BANDWIDTH or set(_figure_columns(departure)) & set(checking.raw.header)
+    if not is_modelled and stand_in.value is None:
         nothing, certain = np.zeros(len(limit)), np.full(len(limit), GUARANTEED, np.uint8)
         return _Read(nothing, nothing, certain, nothing, certain, change, evidence_change, False)
     assumed = np.nan if stand_in.value is None else stand_in.value
@@ -246,7 +261,10 @@ def _refuse_crossed(
 
 
 def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tuple[FloatArray, NDArray[np.uint8]]:
-    """Change after a calibration as a fraction, and what it rests on."""
+    """Change after a calibration as a fraction, and what it rests on; calibrated stages work at 0 Hz."""
+    if departure not in DEPARTURES:
+        unknown = np.full(len(checking.raw.rows), np.inf)
+        return unknown, np.full(len(unknown), GUARANTEED, np.uint8)
     cells = checking.column(tables.column("parts", departure.change_column))
     assumed = np.inf if stand_in.change_pct is None else stand_in.change_pct * PER_PCT
     evidence = np.where(cells.blank & np.isfinite(assumed), ASSUMED, GUARANTEED)
@@ -255,8 +273,7 @@ def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tupl
 
 def _as_departure(figure: FloatArray, missing: NDArray[np.bool_], departure: Departure) -> FloatArray:
     """The departure of a figure; what is missing is left out of the account, as 0."""
-    known = np.where(missing | np.isnan(figure), np.inf if departure.reciprocal else 0.0, figure)
-    return 1.0 / known if departure.reciprocal else known
+    return departure.of(np.where(missing | np.isnan(figure), np.inf if departure.reciprocal else 0.0, figure))
 
 
 def _figure(checking: Checking, name: str) -> tuple[FloatArray, NDArray[np.bool_]]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from itertools import product
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,6 +13,7 @@ from gainassay.contracts import tables
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.moves import TEMPERATURE
 from gainassay.contracts.quantities import Numbers, text_of
+from gainassay.contracts.signals import Signals
 from gainassay.errors import InputError
 from gainassay.forms import coefficients
 from gainassay.forms.cache import form_of
@@ -19,7 +21,7 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology, driven_by_voltage
 from gainassay.job import Source
-from gainassay.tables import operating, sources, spreads
+from gainassay.tables import operating, signals, sources, spreads
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.operating import Operating
@@ -55,6 +57,8 @@ class StageGroup:
         Whether they work over a range of temperatures.
     calibrated : bool
         Whether their gain is trimmed at 25 degrees Celsius, so that only what moves afterwards counts.
+    signals : Signals or None
+        Of stages that do not work at 0 Hz.
     limits : ndarray, shape (stages,)
         Required accuracy as a fraction.
     targets : ndarray, shape (stages,)
@@ -72,6 +76,7 @@ class StageGroup:
     spreads: Spreads
     hot: bool
     calibrated: bool
+    signals: Signals | None
     limits: FloatArray
     targets: FloatArray
     compared: Mapping[str, Cells]
@@ -103,6 +108,10 @@ class StageTable:
     def used(self) -> int:
         """Stages that can be screened."""
         return sum(len(group.names) for group in self.groups)
+
+    def any_at_frequency(self) -> bool:
+        """Whether a stage works at a frequency."""
+        return any(group.signals is not None for group in self.groups)
 
     def rejected_rows(self) -> int:
         """Rows that were left out."""
@@ -163,13 +172,16 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
     values = {name: checking.column(tables.column("stages", f"<{kind_of[name]}>").of(name)) for name in there}
     moving = spreads.read(checking, sorted(kind_of))
     is_hot, is_calibrated = ~np.isnan(moving.excursion), _calibrated(checking)
-    cells, conditions = read_compared(checking, compared), operating.read_stages(checking)
+    of_signals = signals.read(checking, is_calibrated)
+    cells = read_compared(checking, compared)
+    conditions = {**operating.read_stages(checking), "frequency_hz": of_signals.highest()}
     known |= moving.columns()
 
     groups = []
     for name in sorted(set(chosen) & set(library)):
-        for calibrated, hot in ((False, False), (False, True), (True, False), (True, True)):
-            members = np.flatnonzero((chosen == name) & (is_hot == hot) & (is_calibrated == calibrated))
+        for tuned, calibrated, hot in product((False, True), repeat=3):
+            same = (is_hot == hot) & (is_calibrated == calibrated) & (~np.isnan(of_signals.hertz[0]) == tuned)
+            members = np.flatnonzero((chosen == name) & same)
             if not len(members):
                 continue
             topology = library[name]
@@ -182,6 +194,7 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
                 spreads=spreads.of(moving, checking, topology, members, nominal),
                 hot=hot,
                 calibrated=calibrated,
+                signals=of_signals.part(members) if tuned else None,
                 limits=limits[members],
                 targets=general["target_gain"].values[members],
                 compared={column: found.at(members) for column, found in cells.items()},
@@ -202,19 +215,8 @@ def load(source: Source, library: Mapping[str, Topology], compared: Compared = N
         groups=tuple(groups),
         rejects=checking.found(),
         columns=column_use(raw, "stages", known),
-        warnings=(
-            *unknown_columns(raw, known),
-            *_idle_coefficients(raw.source, moving, is_hot),
-            *_at_0_hz(raw.source, conditions),
-        ),
+        warnings=(*unknown_columns(raw, known), *_idle_coefficients(raw.source, moving, is_hot)),
     )
-
-
-def _at_0_hz(source: str, conditions: Operating) -> tuple[str, ...]:
-    """A warning where stages state a frequency, which no gain is judged at yet."""
-    if np.isnan(conditions["frequency_hz"]).all():
-        return ()
-    return (f"{source}: frequency_hz counts for slew rate and full-power bandwidth; all gains are judged at 0 Hz",)
 
 
 def _idle_coefficients(source: str, moving: SpreadColumns, is_hot: NDArray[np.bool_]) -> tuple[str, ...]:
@@ -293,28 +295,33 @@ def _values(
 
 def _refuse_without_form(checking: Checking, group: StageGroup, members: NDArray[np.intp]) -> None:
     """Reject stages whose values leave no ideal gain to correct."""
-    if not len(members):
-        return
-    found = coefficients.evaluate(group.form, coefficients.at_dc(group.form, group.values))
-    finite: NDArray[np.bool_] = np.isfinite(np.concatenate([found.contrasts, found.loadings])).all(axis=0)
-    positive = coefficients.is_feedback_positive(group.form, found)
-    good = checking.good()
-    elements = ", ".join(name for name in group.form.elements if name in checking.raw.columns) or "topology"
-    for index, position in enumerate(members):
-        if not good[position]:
-            continue
-        gain = found.gain_ideal[index]
-        if gain == 0.0:
-            reason = "these values make the ideal gain at 0 Hz zero"
-        elif not np.isfinite(gain):
-            reason = "these values make the ideal gain at 0 Hz infinite or undefined"
-        elif not finite[index]:
-            reason = "these values make the gain undefined; look for a 0 ohm across a source"
-        elif positive[index]:
-            reason = "these values make the feedback positive: the output would run to its limit"
-        else:
-            continue
-        checking.refuse(int(position), elements, reason)
+    form, good = group.form, checking.good()
+    elements = ", ".join(name for name in form.elements if name in checking.raw.columns) or "topology"
+    at_dc = coefficients.evaluate(form, coefficients.at_dc(form, group.values))
+    positive = coefficients.is_feedback_positive(form, at_dc)
+    found = [(at_dc, ["0 Hz"] * len(members))]
+    if group.signals is not None:
+        found = []
+        for hertz in group.signals.hertz:
+            own = np.where(np.isnan(hertz), group.signals.hertz[0], hertz)
+            at = coefficients.evaluate(form, coefficients.at_frequency(form, group.values, own))
+            found.append((at, [f"{f:g} Hz" for f in own.tolist()]))
+    for at, where in found:
+        finite: NDArray[np.bool_] = np.isfinite(np.concatenate([at.contrasts, at.loadings])).all(axis=0)
+        for index in np.flatnonzero(good[members]).tolist():
+            gain = at.gain_ideal[index]
+            if gain == 0.0:
+                reason = f"these values make the ideal gain at {where[index]} zero"
+            elif not np.isfinite(gain):
+                reason = f"these values make the ideal gain at {where[index]} infinite or undefined"
+            elif not finite[index]:
+                reason = "these values make the gain undefined; look for a 0 ohm across a source"
+            elif positive[index]:
+                reason = "these values make the feedback positive: the output would run to its limit"
+            else:
+                continue
+            checking.refuse(int(members[index]), elements, reason)
+        good = checking.good()
 
 
 def _refuse_bias(checking: Checking, topology: Topology, members: NDArray[np.intp], conditions: Operating) -> None:
@@ -331,6 +338,7 @@ def _ordered(group: StageGroup, order: NDArray[np.intp]) -> StageGroup:
         names=group.names[order],
         values=group.values[:, order],
         spreads=group.spreads.of(order),
+        signals=group.signals and group.signals.part(order),
         limits=group.limits[order],
         targets=group.targets[order],
         compared={column: cells.at(order) for column, cells in group.compared.items()},

@@ -11,6 +11,7 @@ import openpyxl
 import pytest
 
 from gainassay import service
+from gainassay.forms.departures import AT_DC
 
 if TYPE_CHECKING:
     from conftest import CommandLineHere, JobWriter
@@ -32,7 +33,7 @@ def test_a_table_of_another_country_becomes_a_job(here: CommandLineHere, write_j
     (home / "job.toml").write_text(f'stages.from = "stages.csv"\n{out}', encoding="utf-8")
     parts = service.prepare(home / "job.toml").parts
     assert parts.names.tolist() == ["A1", "A2"]
-    assert parts.worst[:, 0].tolist() == [1 / 2e5, 1 / 1.5e6, 75.0]
+    assert parts.worst[AT_DC, 0].tolist() == [1 / 2e5, 1 / 1.5e6, 75.0]
     assert parts.nominal[2].tolist() == [50.0, 40.0]
     assert '# "Package" is like no column' in out
 

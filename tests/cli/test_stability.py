@@ -116,7 +116,6 @@ def test_an_explanation_always_shows_stability(here: CommandLineHere, write_job:
     shown = here("explain", job, "level", "amp-both").out
     assert "Stability, with gbw 10 MHz, second pole 4 MHz and the nominal figures; a pass needs 60 deg" in shown
     seen = json.loads(here("explain", job, "level", "amp-least", "--json").out)["stability"]
-    assert (seen["gbw_from"], seen["gbw_hz"], seen["least_deg"]) == ("gbw_min", 10e6, 60.0)
     assert seen["loops"][0]["crossovers"] == 1
     assert "not checked: gbw missing" in here("explain", job, "level", "amp-no-gbw").out
     assert "f_second_pole_hz missing" in here("explain", job, "level", "amp-no-pole").out

@@ -370,7 +370,7 @@ def _explanation(
     method, names = screened.group.method, screened.group.term_names()
     terms = [Term(*values) for values in zip(names, at_nominal, at_worst, strict=True)]
     leans = leaning(int(judgement.leaning[0, 0]))
-    gain_ideal, reference = (float(gain[0, 0]) for gain in method.gains(side, outcome))
+    gain_ideal, reference = (float(gain[0, 0]) for gain in method.gains(screened.group.form, side, outcome))
     worst = float(outcome.error_worst[0, 0])
     values = screened.group.box.values[:, screened.chunk.stages][:, 0]
     at_corner = values if unbounded else side.corner_values[:, method.corner(screened.group.form, side, corner)[0]]
@@ -395,7 +395,7 @@ def _explanation(
         leans_on=leans.leans_on,
         dominant_term=_dominant(screened),
         worst_case=method.worst_case,
-        frequency_hz=float(side.hertz[side.spot_of(outcome.corner)[0, 0]]) if method is AT_FREQUENCY else np.nan,
+        frequency_hz=np.nan if outcome.hertz is None else float(outcome.hertz[0, 0]),
         phase_error_deg=np.nan if outcome.phase is None else float(outcome.phase[0, 0]),
         phase_accuracy_deg=float(side.phase_limits[0]) if method is AT_FREQUENCY else np.nan,
         elements=tuple(_elements(screened, spreads.of(np.array([s])), values, at_corner)),

@@ -44,8 +44,7 @@ def stages_of(
 
 
 def side_of(form: Form, box: StageBox, figures: Array) -> SpotSide:
-    assert box.signals is not None
-    return spots.side(form, box, spots.spots_of(box.signals), figures[:-1].max(axis=1))
+    return spots.stage_side(form, box, figures[:-1].max(axis=1))
 
 
 def parts_of(figures: Array) -> PartSide:
@@ -161,10 +160,95 @@ def test_corners_visited_are_the_worst_of_all(topology: Topology) -> None:
     assert max(phase) < 0.02
 
 
+def in_band(topology: Topology, values: dict[str, float], low: float, high: float, tolerance: float) -> StageBox:
+    one = stages_of(topology, [values], [low], tolerance)
+    signals = Signals(np.array([[low], [high]]), np.ones(1, dtype=bool), np.full(1, np.inf))
+    return replace(one, signals=signals)
+
+
+PEAKS = {
+    "low_pass_2": {"r1": 1e4, "r2": 1e4, "c1": 1e-7, "c2": 1e-11, "r3": 1e4, "r4": 1e2, "r_load": np.inf},
+    "inverting_coil": {"r1": 10.0, "l1": 1e-3, "r2": 1e4, "c1": 1e-9, "r_load": np.inf},
+    "non_inverting": {"r1": 1e3, "r2": 9e3, "r_load": np.inf, "r_source": 0.0},
+    "differentiator": {"c1": 1e-8, "r1": 10.0, "r2": 1e5, "c2": 0.0, "r_load": np.inf},
+}
+
+
+@pytest.mark.oracle
+@pytest.mark.parametrize("name", PEAKS)
+@pytest.mark.parametrize("tolerance", [0.0, 0.01])
+def test_largest_error_in_a_band(name: str, tolerance: float) -> None:
+    """Against a scan of frequencies, each as a stage of its own: not below it, and above by no more than its steps."""
+    rng, topology = random.Random(name), LIBRARY[name]
+    form, low, high = derive(topology), 37.0, 5.3e5
+    values = {element.name: PEAKS[name].get(element.name, np.inf) for element in topology.elements}
+    figures = np.array([random_figures(rng, 1e4) for _ in range(5)]).T
+    _, outcome, terms, nominal = screened(form, in_band(topology, values, low, high, tolerance), figures)
+    assert outcome.hertz is not None
+    scan = np.geomspace(low, high, 4001).tolist()
+    box = stages_of(topology, [values] * len(scan), scan, tolerance)
+    of_scan = at_frequency.screen(form, side_of(form, box, figures), parts_of(figures)).error_worst
+    largest = np.abs(of_scan).max(axis=0)
+    found = np.abs(outcome.error_worst[0])
+    assert (found >= largest * (1.0 - 1e-9)).all()
+    assert (found <= largest * 1.02).all()
+    # At the frequency that it states.
+    there = stages_of(topology, [values] * 5, outcome.hertz[0].tolist(), tolerance)
+    again = at_frequency.screen(form, side_of(form, there, figures), parts_of(figures))
+    np.testing.assert_allclose(np.diagonal(again.error_worst), outcome.error_worst[0], rtol=1e-4)
+    np.testing.assert_allclose(np.diagonal(again.error_nominal), outcome.error_nominal[0], rtol=1e-9)
+    np.testing.assert_allclose(terms[:, 0].sum(axis=0), outcome.error_worst[0], rtol=1e-9)
+    np.testing.assert_allclose(nominal[:, 0].sum(axis=0), outcome.error_nominal[0], rtol=1e-9)
+    assert (outcome.hertz[0] > low).any()
+
+
+@pytest.mark.oracle
+def test_a_sharp_resonance_between_points_is_found() -> None:
+    """A filter of quality 200, whose peak is far narrower than the points of a band are apart; against a fine scan."""
+    topology = LIBRARY["low_pass_2"]
+    form = derive(topology)
+    values = {"r1": 1e4, "r2": 1e4, "c1": 1.3e-8, "c2": 1.3e-8, "r3": 1e4, "r4": 1.995e4, "r_load": np.inf}
+    resonance = 1.0 / (2.0 * np.pi * 1e4 * 1.3e-8)
+    figures = np.array([[1e-6, 1e-9, 10.0, 1e-9, 0.0, 0.0]]).T
+    assert spots.POINTS_PER_DECADE < 100
+    _, outcome, _, _ = screened(form, in_band(topology, values, 10.0, 1e5, 0.0), figures)
+    scan = (resonance * np.linspace(0.97, 1.03, 4_001)).tolist()
+    box = stages_of(topology, [values] * len(scan), scan, 0.0)
+    of_scan = np.abs(at_frequency.screen(form, side_of(form, box, figures), parts_of(figures)).error_worst[:, 0])
+    assert abs(outcome.error_worst[0, 0]) >= of_scan.max() * (1.0 - 1e-9)
+    assert abs(outcome.error_worst[0, 0]) <= of_scan.max() * (1.0 + 1e-3)
+    assert of_scan.max() > 10.0 * of_scan[0]
+
+
+def test_a_stage_with_several_frequencies_has_the_worst_of_them() -> None:
+    rng, topology = random.Random("several"), LIBRARY["inverting"]
+    form, values = derive(topology), {"r1": 1e4, "r2": 1e5, "r_load": 2e3, "r_source": 0.0}
+    figures = np.array([random_figures(rng, 1e3) for _ in range(9)]).T
+    hertz = [100.0, 2.2e3, 3e4]
+    one = stages_of(topology, [values], hertz[:1], 1e-3)
+    several = replace(one, signals=Signals(np.array([hertz]).T, np.zeros(1, dtype=bool), np.full(1, np.inf)))
+    found = at_frequency.screen(form, side_of(form, several, figures), parts_of(figures))
+    alone = stages_of(topology, [values] * 3, hertz, 1e-3)
+    each = at_frequency.screen(form, side_of(form, alone, figures), parts_of(figures))
+    place = np.abs(each.error_worst).argmax(axis=0)
+    every = np.arange(9)
+    assert found.hertz is not None
+    np.testing.assert_array_equal(found.hertz[0], np.array(hertz)[place])
+    for name in ("error_worst", "error_nominal", "dominant", "dominant_value"):
+        np.testing.assert_array_equal(getattr(found, name)[0], getattr(each, name)[place, every])
+    assert found.phase is not None
+    assert each.phase is not None
+    np.testing.assert_array_equal(np.abs(found.phase[0]), np.abs(each.phase).max(axis=0))
+
+
 def test_the_same_bits_whatever_the_blocks() -> None:
     rng, topology = random.Random("blocks"), LIBRARY["low_pass_2"]
     form, hertz = derive(topology), [10.0 ** rng.uniform(1, 5) for _ in range(7)]
     one = stages_of(topology, [oracle.random_values(topology, rng, f) for f in hertz], hertz, 1e-3)
+    assert one.signals is not None
+    is_band = np.arange(7) == 3
+    ends = np.stack([one.signals.hertz[0], np.where(is_band, 3.0 * one.signals.hertz[0], np.nan)])
+    one = replace(one, signals=Signals(ends, is_band, one.signals.phase_limits))
     figures = np.array([random_figures(rng, hertz[0]) for _ in range(53)]).T
     parts, stages = parts_of(figures), side_of(form, one, figures)
     whole = at_frequency.screen(form, stages, parts)

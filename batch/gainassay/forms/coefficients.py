@@ -207,6 +207,42 @@ def ratios(of: Sequence[Ratio], pairs: Pairs) -> AnyArray:
     return np.array([_ratio(ratio, pairs) for ratio in of]).reshape(len(of), pairs.y.shape[1])
 
 
+def natural_frequencies(form: Form, values: FloatArray) -> FloatArray:
+    """Where the ideal gain of one stage may change abruptly [Hz]: at |s|/(2 pi) of its poles and zeros s, and around.
+
+    The sharper a resonance, the smaller is |Re s|, by multiples of which the points around it are apart.
+
+    Parameters
+    ----------
+    values : ndarray, shape (elements,)
+        As in `at_frequency`.
+    """
+    found = [_roots(form, part, values) for part in (form.gain_ideal.numerator, form.gain_ideal.denominator)]
+    roots = np.concatenate(found)
+    steps = np.array([-4.0, -2.0, -1.0, -0.5, 0.0, 0.5, 1.0, 2.0, 4.0])
+    hertz = (np.abs(roots)[:, None] + np.abs(roots.real)[:, None] * steps) / (2.0 * np.pi)
+    return np.unique(hertz[hertz > 0.0])
+
+
+def _roots(form: Form, polynomial: Polynomial, values: FloatArray) -> ComplexArray:
+    """The roots in s of a polynomial in admittances, of elements that are neither open nor short.
+
+    An inductor's admittance is 1/(s l): to have no powers below the first, a power of s for each is multiplied out.
+    """
+    coils = [kind == "inductor" for kind in form.kinds]
+    degree = {i: max((exponents[i] for _, exponents in polynomial), default=0) for i, coil in enumerate(coils) if coil}
+    in_s: dict[int, float] = {}
+    for coefficient, exponents in polynomial:
+        term, power = float(coefficient), sum(degree.values())
+        for kind, value, exponent in zip(form.kinds, values.tolist(), exponents, strict=True):
+            admittance = value if kind == "capacitor" else 1.0 / value if value else np.inf
+            term *= admittance**exponent if exponent else 1.0
+            power += exponent if kind == "capacitor" else -exponent if kind == "inductor" else 0
+        in_s[power] = in_s.get(power, 0.0) + term
+    row = [in_s.get(power, 0.0) for power in range(max(in_s, default=0), -1, -1)]
+    return np.roots(row).astype(np.complex128) if np.isfinite(row).all() else np.zeros(0, np.complex128)
+
+
 def times(one: AnyArray, other: AnyArray) -> AnyArray:
     """The product of arrays, real or complex.
 

@@ -68,7 +68,7 @@ def verdict_table(
     stage, part = kept // shape[1], kept % shape[1]
     group, sides, outcome = screened.group, screened.stage_side, screened.outcome
     packed = screened.judgement.leaning.ravel()[kept]
-    gain_ideal, reference = (gain[stage, part] for gain in group.method.gains(sides, outcome))
+    gain_ideal, reference = (gain[stage, part] for gain in group.method.gains(group.form, sides, outcome))
     nominal = outcome.error_nominal.ravel()[kept]
     unbounded, nothing = outcome.corner.ravel()[kept] == UNBOUNDED, np.full(len(kept), np.nan)
 
@@ -110,9 +110,7 @@ def verdict_table(
         "dominant_term": words(outcome.dominant.ravel()[kept], group.dominant_names()),
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
         "worst_case": words(np.full(len(kept), WORST_CASES.index(group.method.worst_case), np.int32), WORST_CASES),
-        "frequency_hz": number(
-            nothing if group.box.signals is None else sides.hertz[sides.spot_of(outcome.corner)[stage, part]]
-        ),
+        "frequency_hz": number(nothing if outcome.hertz is None else outcome.hertz.ravel()[kept]),
         "phase_error_deg": number(nothing if outcome.phase is None else outcome.phase.ravel()[kept]),
     }
     if needs is not None:

@@ -23,21 +23,26 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.contracts.moves import MOVES
-from gainassay.forms.coefficients import Coefficients, ComplexArray, FloatArray
+from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
+from gainassay.screen import bands
 from gainassay.screen.corners import SET_POINT, TRACKING, PartSide
 from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, put
 from gainassay.screen.response import (
     Departing,
+    Meeting,
     Split,
+    errors,
+    every,
     over,
     plus,
     polynomial,
     real_product,
     split,
+    splits,
     terms,
     times,
-    variables,
+    turned,
 )
 from gainassay.screen.spots import SpotSide
 
@@ -63,23 +68,25 @@ def term_names(form: Form) -> tuple[str, ...]:
 
 
 def screen(form: Form, stages: SpotSide, parts: PartSide, block: int = PAIRS_PER_BLOCK) -> Outcome:
-    """As `kernel.screen`: of each pair what is found at the spot, of the stage's, with the largest error."""
+    """As `kernel.screen`: of each pair what is found at the frequency, of the stage's, with the largest error."""
     shape = (len(stages.limits), parts.worst.shape[1])
-    nominal, worst, half = (np.full(shape, np.nan) for _ in range(3))
+    nominal, worst, half, hertz = (np.full(shape, np.nan) for _ in range(4))
     corner = np.full(shape, UNBOUNDED, np.int32)
     with np.errstate(all="ignore"):
         for spots, corners, columns, is_first in _in_blocks(stages, shape[1], block):
             of_nominal = _nominal(form, stages, parts, spots, columns)
             error, code, turn = _worst(form, stages, parts, corners, spots, columns)
             here = (stages.stage[spots], columns)
+            where = stages.hertz[spots, None]
             if is_first:
-                nominal[here], worst[here], corner[here], half[here] = of_nominal, error, code, turn
+                nominal[here], worst[here], corner[here], half[here], hertz[here] = of_nominal, error, code, turn, where
                 continue
             # An error without a bound at one frequency has none at all.
             larger = ~(np.abs(error) <= np.abs(worst[here])) & ~np.isnan(worst[here])
             nominal[here] = np.where(larger, of_nominal, nominal[here])
             worst[here] = np.where(larger, error, worst[here])
             corner[here] = np.where(larger, code, corner[here])
+            hertz[here] = np.where(larger, where, hertz[here])
             half[here] = np.where(np.abs(turn) > np.abs(half[here]), turn, half[here])
         half[corner == UNBOUNDED] = np.nan
         found = Outcome(
@@ -89,17 +96,31 @@ def screen(form: Form, stages: SpotSide, parts: PartSide, block: int = PAIRS_PER
             dominant=np.zeros(shape, np.int16),
             dominant_value=np.where(corner == UNBOUNDED, np.nan, 0.0),
             phase=np.degrees(2.0 * np.arctan(half)),
+            hertz=hertz,
         )
-        for some in _at_worst(form, stages, parts, corner, block):
+        bands.refine(form, stages, parts, found)
+        for some in _at_worst(form, stages, parts, found, block):
             place, value = _largest(some.terms, some.is_here.shape)
             some.put(found.dominant, place)
             some.put(found.dominant_value, value)
     return found
 
 
+def gains(form: Form, stages: SpotSide, outcome: Outcome) -> tuple[FloatArray, FloatArray]:
+    """The ideal gain of each pair and the gain that its errors refer to, where its worst error lies [gain unit]."""
+    assert outcome.hertz is not None
+    shape = outcome.hertz.shape
+    gain_ideal, reference = (
+        np.repeat(gain[:, None], shape[1], axis=1) for gain in (stages.gain_ideal, stages.reference)
+    )
+    for row in np.flatnonzero(np.bincount(stages.stage) > 1).tolist():
+        gain_ideal[row], reference[row] = bands.gains(form, stages, row, outcome.hertz[row])
+    return gain_ideal, reference
+
+
 def elements_error(stages: SpotSide) -> FloatArray:
     """As `corners.elements_error`, of magnitudes."""
-    error, _ = _turned(None, None, split(stages.corner_error[None]))
+    error, _ = turned(None, None, split(stages.corner_error[None]))
     size = np.nan_to_num(np.abs(error[0]), nan=np.inf)
     first = stages.first[stages.begin]
     largest = np.repeat(np.maximum.reduceat(size, first), np.diff(np.append(first, len(size))))
@@ -130,34 +151,9 @@ def _cut(shape: tuple[int, int], block: int) -> Iterator[tuple[slice, slice]]:
             yield slice(top, min(top + height, shape[0])), slice(left, min(left + width, shape[1]))
 
 
-def _column(numbers: ComplexArray) -> list[Split]:
-    """Coefficients of stages, each as a column beside the parts."""
-    return [split(of[:, None]) for of in numbers]
-
-
-def _turned(numerator: Split | None, denominator: Split | None, e: Split) -> tuple[FloatArray, FloatArray]:
-    """|1 + W/D| - 1 and the tangent of half its phase, with e taken into W and 1 into D."""
-    w_real, w_imag = (e if numerator is None else plus(e, numerator)).whole()
-    d_real, d_imag = (Split(np.ones((1, 1)), None) if denominator is None else denominator).whole()
-    if denominator is not None:
-        d_real = 1.0 + d_real
-    square = d_real * d_real + d_imag * d_imag
-    along = w_real * d_real + w_imag * d_imag
-    across = w_imag * d_real - w_real * d_imag
-    u = (2.0 * along + (w_real * w_real + w_imag * w_imag)) / square
-    root = np.sqrt(1.0 + u)
-    return u / (1.0 + root), across / (square * root + (square + along))
-
-
 def _nominal(form: Form, stages: SpotSide, parts: PartSide, spots: NDArray[np.intp], columns: slice) -> FloatArray:
     departing = Departing(form, parts.nominal[:, columns], stages.hertz[spots, None])
-    departures = departing.at((1 << len(variables(form))) - 1)
-    error, _ = _turned(
-        polynomial(form, _column(stages.nominal_rises[:, spots]), departures),
-        polynomial(form, _column(stages.nominal.loadings[:, spots]), departures),
-        Split(stages.set_point[spots, None], None),
-    )
-    return error
+    return errors(form, stages.nominally(spots), departing, every(form))[0]
 
 
 def _worst(
@@ -177,13 +173,7 @@ def _worst(
     departing, codes = Departing(form, figures, stages.hertz[spots, None]), stages.codes_of(spots)[:, None]
     bounded = np.ones(shape, dtype=bool)
     for number, (j, q) in enumerate(corners):
-        at = stages.first[spots] + j
-        departures = departing.at(stages.part_corners[q])
-        error, turn = _turned(
-            polynomial(form, _column(stages.corner_rises[:, at]), departures),
-            polynomial(form, _column(stages.corner_loadings[:, at]), departures),
-            split(stages.corner_error[at, None]),
-        )
+        error, turn = errors(form, stages.at(spots, j), departing, stages.part_corners[q])
         code = codes + np.int32(j * len(stages.part_corners) + q)
         bounded &= np.isfinite(error)
         if not number:
@@ -202,32 +192,23 @@ def account(
     form: Form, stages: SpotSide, parts: PartSide, outcome: Outcome, block: int = PAIRS_PER_BLOCK
 ) -> Iterator[FloatArray]:
     """As `kernel.account`, of all pairs, in the order of `term_names`."""
-    shape = outcome.corner.shape
-    found = np.zeros((len(term_names(form)), *shape))
+    found = np.zeros((len(term_names(form)), *outcome.corner.shape))
     with np.errstate(all="ignore"):
-        for some in _at_worst(form, stages, parts, outcome.corner, block):
-            for whole, term in zip(found, some.terms, strict=True):
-                if term is not None:
-                    some.put(whole, term)
+        for some in _at_worst(form, stages, parts, outcome, block):
+            some.fill(found)
     yield from found
 
 
 def nominal_account(form: Form, stages: SpotSide, parts: PartSide, outcome: Outcome) -> Iterator[FloatArray]:
-    """As `kernel.nominal_account`, at the spots of the worst errors."""
-    spot = stages.spot_of(outcome.corner)
-    found = np.zeros((len(term_names(form)), *spot.shape))
-    every = (1 << len(variables(form))) - 1
+    """As `kernel.nominal_account`, at the frequencies of the worst errors."""
+    assert outcome.hertz is not None
+    found = np.zeros((len(term_names(form)), *outcome.corner.shape))
     with np.errstate(all="ignore"):
-        for place in np.unique(spot).tolist():
-            one = np.array([place])
-            set_point = stages.set_point[one]
-            of = Coefficients(set_point, stages.nominal.contrasts[:, one], stages.nominal.loadings[:, one])
-            nothing = np.zeros((len(stages.corner_terms), 1), np.complex128)
-            departing = Departing(form, parts.nominal, stages.hertz[one, None])
-            row = stages.stage[place]
-            for whole, term in zip(found, _terms(form, departing, every, set_point, of, nothing), strict=True):
-                if term is not None:
-                    whole[row] = np.where(spot[row] == place, term, whole[row])
+        for row, hertz in enumerate(outcome.hertz):
+            here = bands.meeting(form, stages, row, None, hertz)
+            departing = Departing(form, parts.nominal, hertz[None])
+            everywhere = np.ones((1, len(hertz)), dtype=bool)
+            _Some(np.array([row]), slice(None), everywhere, _terms(form, departing, every(form), here)).fill(found)
     yield from found
 
 
@@ -244,7 +225,7 @@ class _Some:
     """
 
     stages: NDArray[np.intp]
-    columns: slice
+    columns: slice | NDArray[np.intp]
     is_here: NDArray[np.bool_]
     terms: Iterator[FloatArray | None]
 
@@ -255,24 +236,33 @@ class _Some:
             values if is_all else np.where(self.is_here, values, whole[self.stages, self.columns])
         )
 
+    def fill(self, whole: NDArray[np.float64]) -> None:
+        """Put the terms, the first axis of `whole`, where they are of the pairs that are here."""
+        for place, term in enumerate(self.terms):
+            if term is not None:
+                self.put(whole[place], term)
 
-def _at_worst(form: Form, stages: SpotSide, parts: PartSide, corner: NDArray[np.int32], block: int) -> Iterator[_Some]:
+
+def _at_worst(form: Form, stages: SpotSide, parts: PartSide, found: Outcome, block: int) -> Iterator[_Some]:
     """All pairs at the corners that give their worst errors."""
-    for spots, corners, columns, _ in _in_blocks(stages, corner.shape[1], block):
-        own, codes = corner[stages.stage[spots], columns], stages.codes_of(spots)[:, None]
+    has_spots = ~stages.is_band[stages.stage]
+    for spots, corners, columns, _ in _in_blocks(stages, found.corner.shape[1], block):
+        own, codes = found.corner[stages.stage[spots], columns], stages.codes_of(spots)[:, None]
         for j, q in corners:
             is_here = own == codes + np.int32(j * len(stages.part_corners) + q)
-            rows = np.flatnonzero(is_here.any(axis=1))
-            if not len(rows):
-                continue
-            there = spots[rows]
-            at = stages.first[there] + j
-            of = Coefficients(stages.corner_error[at], stages.corner_contrasts[:, at], stages.corner_loadings[:, at])
-            departing = Departing(form, parts.worst[:, columns], stages.hertz[there, None])
-            found = _terms(
-                form, departing, stages.part_corners[q], stages.set_point[there], of, stages.corner_terms[:, at]
-            )
-            yield _Some(stages.stage[there], columns, is_here[rows], found)
+            rows = np.flatnonzero(is_here.any(axis=1) & has_spots[spots])
+            if len(rows):
+                there = spots[rows]
+                departing = Departing(form, parts.worst[:, columns], stages.hertz[there, None])
+                of_these = _terms(form, departing, stages.part_corners[q], stages.at(there, j))
+                yield _Some(stages.stage[there], columns, is_here[rows], of_these)
+    for row in bands.rows(stages):
+        for places, at, ends in bands.at_worst(stages, row, found.corner[row]):
+            assert found.hertz is not None
+            hertz = found.hertz[row, places]
+            departing = Departing(form, parts.worst[:, places], hertz[None])
+            of_these = _terms(form, departing, ends, bands.meeting(form, stages, row, at, hertz))
+            yield _Some(np.array([row]), places, np.ones((1, len(places)), dtype=bool), of_these)
 
 
 def _largest(terms: Iterator[FloatArray | None], shape: tuple[int, ...]) -> tuple[NDArray[np.int16], FloatArray]:
@@ -291,41 +281,27 @@ def _largest(terms: Iterator[FloatArray | None], shape: tuple[int, ...]) -> tupl
     return place, value
 
 
-def _terms(
-    form: Form,
-    departing: Departing,
-    ends: int,
-    set_point: FloatArray,
-    of: Coefficients,
-    elements: ComplexArray,
-) -> Iterator[FloatArray | None]:
-    """The terms of pairs at a corner of the parts, from what is theirs at one of the stages; None: 0 for all.
-
-    Parameters
-    ----------
-    set_point : ndarray, shape (stages,)
-    of : Coefficients
-        With e as `gain_ideal`; shape (..., stages).
-    elements : ndarray, shape (moves x elements + 1, stages)
-    """
-    e, one, nothing = split(of.gain_ideal[:, None]), Split(np.ones((1, 1)), None), Split(None, None)
-    contrasts, departures = _column(of.contrasts), departing.at(ends)
-    below = polynomial(form, _column(of.loadings), departures)
+def _terms(form: Form, departing: Departing, ends: int, here: Meeting) -> Iterator[FloatArray | None]:
+    """The terms of pairs at a corner of the parts; None: 0 for all."""
+    e, one, nothing = split(here.error), Split(np.ones((1, 1)), None), Split(None, None)
+    contrasts, departures = splits(here.contrasts), departing.at(ends)
+    below = polynomial(form, splits(here.loadings), departures) or nothing
     lift = over(plus(e, one), plus(below, one))
     above = polynomial(form, contrasts, departures) or nothing
     w_real, w_imag = plus(e, times(lift, above)).whole()
     size = 1.0 + np.sqrt((1.0 + w_real) ** 2 + w_imag**2)
     share = Split((2.0 + w_real) / size, -w_imag / size)
-    yield real_product(split(set_point[:, None]), share)
-    for moved in elements:
-        yield real_product(split(moved[:, None]), share)
+    yield real_product(split(here.set_point), share)
+    for moved in here.terms:
+        yield real_product(split(moved), share)
     lifted: dict[Factors, Split | None] = {(): times(lift, share)}
     for term in terms(form):
         total: FloatArray | None = None
         for addend in term.addends:
             factor = _lifted(lifted, departing, ends, addend.factors)
             value = None if factor is None else real_product(contrasts[addend.product], factor)
-            total = value if total is None or value is None else total + value
+            if value is not None:
+                total = value if total is None else total + value
         yield total
 
 

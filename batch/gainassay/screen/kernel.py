@@ -47,8 +47,8 @@ class Outcome:
         That term as a fraction; nan where there is no finite bound.
     beyond : ndarray or None
         The part of the error by which it may lie beyond that corner, since networks track; none for all pairs.
-    phase : ndarray or None
-        At a frequency, the phase error of largest magnitude [degree].
+    phase, hertz : ndarray or None
+        At a frequency, the phase error of largest magnitude [degree], and where the worst error lies [Hz].
     """
 
     error_nominal: FloatArray
@@ -58,6 +58,7 @@ class Outcome:
     dominant_value: FloatArray
     beyond: FloatArray | None = None
     phase: FloatArray | None = None
+    hertz: FloatArray | None = None
 
 
 def screen(

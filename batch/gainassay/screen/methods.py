@@ -56,7 +56,7 @@ class Method:
     term_names: Callable[[Form], tuple[str, ...]]
     account: Callable[[Form, Side, PartSide, Outcome], Iterator[FloatArray]]
     nominal_account: Callable[[Form, Side, PartSide, Outcome], Iterator[FloatArray]]
-    gains: Callable[[Side, Outcome], Gains]
+    gains: Callable[[Form, Side, Outcome], Gains]
     corner: Callable[[Form, Side, int], tuple[int, int]]
     at_limits: Callable[[Form, Side, int], set[tuple[str, str]]]
 
@@ -68,7 +68,7 @@ def _reach(form: Form, parts: PartSide, box: StageBox) -> Reach:
     return reach(form, parts.limits, box.memberships())
 
 
-def _gains(stages: StageSide, outcome: Outcome) -> Gains:
+def _gains(_: Form, stages: StageSide, outcome: Outcome) -> Gains:
     shape = outcome.corner.shape
     gain_ideal, reference = (np.broadcast_to(gain[:, None], shape) for gain in (stages.gain_ideal, stages.reference))
     return gain_ideal, reference
@@ -111,11 +111,6 @@ CALIBRATED = Method(
 )
 
 
-def _spot_gains(stages: SpotSide, outcome: Outcome) -> Gains:
-    spot = stages.spot_of(outcome.corner)
-    return stages.gains_ideal[spot], stages.references[spot]
-
-
 def _spot_limits(form: Form, stages: SpotSide, place: int) -> set[tuple[str, str]]:
     ends = stages.part_corners[place]
     named = enumerate(response.variables(form))
@@ -132,7 +127,7 @@ AT_FREQUENCY = Method(
     term_names=at_frequency.term_names,
     account=at_frequency.account,
     nominal_account=at_frequency.nominal_account,
-    gains=_spot_gains,
+    gains=at_frequency.gains,
     corner=lambda form, stages, code: divmod(code, len(stages.part_corners)),
     at_limits=_spot_limits,
 )

@@ -82,6 +82,20 @@ def _difference(one: FloatArray | None, other: FloatArray | None) -> FloatArray 
     return one if other is None else -other if one is None else one - other
 
 
+def turned(numerator: Split | None, denominator: Split | None, e: Split) -> tuple[FloatArray, FloatArray]:
+    """|1 + W/D| - 1 and the tangent of half its phase, with e taken into W and 1 into D."""
+    w_real, w_imag = (e if numerator is None else plus(e, numerator)).whole()
+    d_real, d_imag = (Split(np.ones((1, 1)), None) if denominator is None else denominator).whole()
+    if denominator is not None:
+        d_real = 1.0 + d_real
+    square = d_real * d_real + d_imag * d_imag
+    along = w_real * d_real + w_imag * d_imag
+    across = w_imag * d_real - w_real * d_imag
+    u = (2.0 * along + (w_real * w_real + w_imag * w_imag)) / square
+    root = np.sqrt(1.0 + u)
+    return u / (1.0 + root), across / (square * root + (square + along))
+
+
 # What a pair's box consists of
 
 
@@ -89,6 +103,11 @@ def variables(form: Form) -> tuple[tuple[str, Departure], ...]:
     """The figures of a part in each amplifier: those of the form's departures, then what rises of them."""
     own = tuple((amplifier, _BY_SYMBOL[symbol]) for amplifier, symbol in form.departures)
     return (*own, *((amplifier, RISING[symbol]) for amplifier, symbol in form.departures if symbol in RISING))
+
+
+def every(form: Form) -> int:
+    """The corner of the part at which all variables are at their limits."""
+    return (1 << len(variables(form))) - 1
 
 
 @cache
@@ -289,3 +308,39 @@ def mattering(form: Form, used: NDArray[np.bool_]) -> NDArray[np.bool_]:
             if symbol in RISING:
                 found[PLACE[RISING[symbol].symbol]] |= used[k]
     return found
+
+
+# Stages and parts together
+
+
+@dataclass(frozen=True)
+class Meeting:
+    """Stages where they meet parts; arrays whose last two axes broadcast against (stages, parts).
+
+    Attributes
+    ----------
+    set_point, error, rises, contrasts, loadings, terms : ndarray
+        As `set_point` and `corner_error` to `corner_terms` of a `spots.SpotSide`.
+    """
+
+    set_point: FloatArray
+    error: ComplexArray
+    rises: ComplexArray
+    contrasts: ComplexArray
+    loadings: ComplexArray
+    terms: ComplexArray
+
+
+def splits(numbers: ComplexArray) -> list[Split]:
+    """Numbers along the first axis, each as real and imaginary parts."""
+    return [split(of) for of in numbers]
+
+
+def errors(form: Form, here: Meeting, departing: Departing, ends: int) -> tuple[FloatArray, FloatArray]:
+    """The magnitude error and the tangent of half the phase error of pairs at a corner of the parts."""
+    departures = departing.at(ends)
+    return turned(
+        polynomial(form, splits(here.rises), departures),
+        polynomial(form, splits(here.loadings), departures),
+        split(here.error),
+    )

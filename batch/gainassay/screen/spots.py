@@ -14,18 +14,20 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from gainassay.contracts.signals import Signals
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import AnyArray, Coefficients, ComplexArray, FloatArray, Slopes, over, times
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.corners import elements_terms
-from gainassay.screen.response import figures_of, mattering, products, variables
+from gainassay.screen.response import Meeting, figures_of, mattering, products, variables
 from gainassay.screen.signs import FALLS, FIXED, OPEN, RISES
-from gainassay.screen.visits import Plan, factors_at, visit, with_a_bound
+from gainassay.screen.visits import Factors, Plan, factors_at, visit, with_a_bound
 
 SHARE = 0.03
 """Of the poorest figures of the parts table: those of a good part, with which slopes are looked at, too."""
+
+POINTS_PER_DECADE = 32
+"""Of a band, before the largest error is searched for between points."""
 
 NEGLIGIBLE = 2e-3
 """A variable that moves the gain by no larger share of what all do together is taken one way only."""
@@ -40,6 +42,8 @@ class SpotSide:
 
     Attributes
     ----------
+    box : StageBox
+        Of the stages.
     gain_ideal, reference, limits, phase_limits : ndarray, shape (stages,)
         Magnitude of the ideal gain at the stage's first frequency and of the gain that errors refer to there
         [gain unit]; required accuracy as a fraction; largest phase error [degree].
@@ -48,8 +52,8 @@ class SpotSide:
     begin : ndarray of int, shape (stages,)
         The first of each stage's spots; the spots of all stages stand in a row.
     stage : ndarray of int, shape (spots,)
-    hertz, gains_ideal, references, set_point : ndarray, shape (spots,)
-        Of each spot: frequency [Hz], magnitudes as above, and (gain_ideal - reference)/reference.
+    hertz, set_point : ndarray, shape (spots,)
+        Of each spot: frequency [Hz], and (gain_ideal - reference)/reference.
     nominal : Coefficients
         G_ideal, n_k - d_k and d_k at the nominal values; shape (..., spots).
     first : ndarray of int, shape (spots,)
@@ -62,12 +66,15 @@ class SpotSide:
         (1 + e)(n_k - d_k) + e d_k, e being the error of the ideal gain.
     corner_terms : ndarray of complex, shape (moves x elements + 1, corners)
         As in `corners.StageSide`, each with its phase.
+    factors : Factors
+        On the nominal values at the corners.
     part_corners : tuple[int, ...]
         The corners of a part: bit i says whether variable i is at its limit.
     plans : tuple[Plan, ...]
         Which corners to visit; every spot is in one of them, and a corner of the part is a place in `part_corners`.
     """
 
+    box: StageBox
     gain_ideal: FloatArray
     reference: FloatArray
     limits: FloatArray
@@ -76,8 +83,6 @@ class SpotSide:
     begin: NDArray[np.intp]
     stage: NDArray[np.intp]
     hertz: FloatArray
-    gains_ideal: FloatArray
-    references: FloatArray
     set_point: FloatArray
     nominal: Coefficients
     first: NDArray[np.intp]
@@ -88,8 +93,44 @@ class SpotSide:
     corner_rises: ComplexArray
     nominal_rises: ComplexArray
     corner_terms: ComplexArray
+    factors: Factors
     part_corners: tuple[int, ...]
     plans: tuple[Plan, ...]
+
+    @property
+    def is_band(self) -> NDArray[np.bool_]:
+        """Which stages have a band; shape (stages,)."""
+        if self.box.signals is None:
+            raise ValueError("these stages work at 0 Hz")
+        return self.box.signals.is_band
+
+    def hertz_of(self, row: int) -> FloatArray:
+        """The frequencies of a stage's spots [Hz]."""
+        return np.asarray(self.hertz[self.stage == row])
+
+    def at(self, spots: NDArray[np.intp], j: int) -> Meeting:
+        """A corner of some spots, where they meet parts."""
+        at = self.first[spots] + j
+        return Meeting(
+            self.set_point[spots, None],
+            self.corner_error[at, None],
+            self.corner_rises[:, at, None],
+            self.corner_contrasts[:, at, None],
+            self.corner_loadings[:, at, None],
+            self.corner_terms[:, at, None],
+        )
+
+    def nominally(self, spots: NDArray[np.intp]) -> Meeting:
+        """Some spots with nominal values, where they meet parts."""
+        set_point = self.set_point[spots, None]
+        return Meeting(
+            set_point,
+            set_point.astype(np.complex128),
+            self.nominal_rises[:, spots, None],
+            self.nominal.contrasts[:, spots, None],
+            self.nominal.loadings[:, spots, None],
+            np.zeros((len(self.corner_terms), 1, 1), np.complex128),
+        )
 
     def stages_of(self, plan: Plan) -> NDArray[np.intp]:
         """The stages that a plan is about."""
@@ -100,44 +141,44 @@ class SpotSide:
         first_of_stage = self.first[self.begin[self.stage[spots]]]
         return ((self.first[spots] - first_of_stage) * len(self.part_corners)).astype(np.int32)
 
-    def spot_of(self, corner: NDArray[np.int32]) -> NDArray[np.intp]:
-        """The spot whose corner gives each pair's worst error; shape (stages, parts)."""
-        first_of_stage = self.first[self.begin][:, None]
-        at = first_of_stage + np.maximum(corner, 0) // len(self.part_corners)
-        return np.asarray(np.searchsorted(self.first, at, side="right") - 1)
 
+def spots_of(form: Form, box: StageBox) -> tuple[NDArray[np.intp], FloatArray]:
+    """The stage and the frequency [Hz] of each spot, ordered by both.
 
-def spots_of(signals: Signals) -> tuple[NDArray[np.intp], FloatArray]:
-    """The stage and the frequency of each spot, of stages without a band."""
-    is_there = ~np.isnan(signals.hertz.T)
-    stage, point = np.nonzero(is_there)
-    return stage, signals.hertz.T[stage, point]
+    Of a band both ends, points between them and the natural frequencies of the ideal gain, where a sharp resonance may
+    hide between points.
+    """
+    signals = box.signals
+    if signals is None:
+        raise ValueError("these stages work at 0 Hz")
+    each = []
+    for stage, (is_band, hertz) in enumerate(zip(signals.is_band.tolist(), signals.hertz.T, strict=True)):
+        if is_band:
+            low, high = hertz[:2].tolist()
+            points = 1 + int(np.ceil(POINTS_PER_DECADE * np.log10(high / low)))
+            natural = coefficients.natural_frequencies(form, box.values[:, stage])
+            inside = natural[(natural > low) & (natural < high)]
+            each.append(np.unique(np.concatenate([[low, high], np.geomspace(low, high, points)[1:-1], inside])))
+        else:
+            each.append(hertz[~np.isnan(hertz)])
+    return np.repeat(np.arange(len(each)), [len(hertz) for hertz in each]), np.concatenate(each)
 
 
 def stage_side(form: Form, box: StageBox, farthest: FloatArray) -> SpotSide:
-    """As `corners.stage_side`; how far the parts reach is `farthest` of `side`."""
-    if box.signals is None:
-        raise ValueError("these stages work at 0 Hz")
-    return side(form, box, spots_of(box.signals), farthest)
-
-
-def side(form: Form, box: StageBox, spots: tuple[NDArray[np.intp], FloatArray], farthest: FloatArray) -> SpotSide:
     """Evaluate a form's coefficient functions at the spots of some stages, nominally and at the corners to visit.
 
     Parameters
     ----------
-    spots : ndarray of int and ndarray, each of shape (spots,)
-        Stage and frequency [Hz] of each spot, ordered by stage; every stage has one.
     farthest : ndarray, shape (figures,)
         The largest of each of `FIGURES` over the whole parts table.
     """
     signals = box.signals
     if signals is None:
         raise ValueError("these stages work at 0 Hz")
-    of_stage, hertz = spots
+    of_stage, hertz = spots_of(form, box)
     at_spots = box.part(of_stage)
     nominal = coefficients.evaluate(form, coefficients.at_frequency(form, at_spots.values, hertz))
-    magnitude = _magnitude(nominal.gain_ideal)
+    magnitude = magnitude_of(nominal.gain_ideal)
     references = np.where(np.isnan(at_spots.targets), magnitude, np.abs(at_spots.targets))
     with np.errstate(divide="ignore", invalid="ignore"):
         complex_reference = times(nominal.gain_ideal, references / magnitude)
@@ -160,6 +201,7 @@ def side(form: Form, box: StageBox, spots: tuple[NDArray[np.intp], FloatArray], 
     begin = np.searchsorted(of_stage, np.arange(len(box.limits)))
     masks = sorted({q for plan in visited.plans for _, q in plan.corners})
     return SpotSide(
+        box=box,
         gain_ideal=magnitude[begin],
         reference=references[begin],
         limits=box.limits,
@@ -168,8 +210,6 @@ def side(form: Form, box: StageBox, spots: tuple[NDArray[np.intp], FloatArray], 
         begin=begin,
         stage=of_stage,
         hertz=hertz,
-        gains_ideal=magnitude,
-        references=references,
         set_point=set_point,
         nominal=nominal,
         first=visited.first,
@@ -177,19 +217,22 @@ def side(form: Form, box: StageBox, spots: tuple[NDArray[np.intp], FloatArray], 
         corner_error=error,
         corner_contrasts=at.contrasts,
         corner_loadings=at.loadings,
-        corner_rises=_rises(at, error),
-        nominal_rises=_rises(nominal, set_point),
+        corner_rises=rises(at, error),
+        nominal_rises=rises(nominal, set_point),
         corner_terms=elements_terms(at_spots.values[:, spot], factors, complex_reference[spot], ideal),
+        factors=factors,
         part_corners=tuple(masks),
         plans=with_a_bound(tuple(_numbered(plan, masks) for plan in visited.plans), regular),
     )
 
 
-def _rises(at: Coefficients, error: AnyArray) -> ComplexArray:
+def rises(at: Coefficients, error: AnyArray) -> ComplexArray:
+    """(1 + e)(n_k - d_k) + e d_k."""
     return np.asarray(times(at.contrasts, 1.0 + error) + times(at.loadings, error))
 
 
-def _magnitude(z: ComplexArray) -> FloatArray:
+def magnitude_of(z: ComplexArray) -> FloatArray:
+    """|z|, rounded the same wherever a number stands in the array."""
     return np.asarray(np.sqrt(z.real * z.real + z.imag * z.imag))
 
 

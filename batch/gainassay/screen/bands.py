@@ -1,0 +1,190 @@
+"""Stages whose signal may have any frequency of a band: each pair at the frequency at which its own error is largest.
+
+The spots of a stage (`spots.spots_of`) are points of its band. From the point with the largest error, at the corner
+that gives it, the search goes on between its neighbours, to `TOLERANCE` of the frequency.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from gainassay.forms import coefficients
+from gainassay.forms.coefficients import ComplexArray, FloatArray, over, times
+from gainassay.forms.form import Form
+from gainassay.screen.boxes import product
+from gainassay.screen.corners import PartSide, elements_terms
+from gainassay.screen.kernel import UNBOUNDED, Outcome
+from gainassay.screen.response import Departing, Meeting, errors, every
+from gainassay.screen.spots import POINTS_PER_DECADE, SpotSide, magnitude_of, rises
+from gainassay.screen.visits import Factors
+
+TOLERANCE = 1e-5
+"""Of the frequency of the largest error. An error near its largest changes by far less."""
+
+SECTION = (math.sqrt(5.0) - 1.0) / 2.0
+"""By how much a golden section shortens an interval."""
+
+SECTIONS = math.ceil(math.log(TOLERANCE / (10.0 ** (2.0 / POINTS_PER_DECADE) - 1.0)) / math.log(SECTION))
+"""Enough for the widest interval: two steps between points."""
+
+STEP = 1e-4
+"""By what share of its frequency an end of a band is left to see whether the error rises inside."""
+
+PAIRS_AT_A_TIME = 8_192
+
+Corners = tuple[NDArray[np.intp], NDArray[np.intp], int]
+"""Parts, the corner of the stage that each of them is at, and the corner of the parts."""
+
+
+def rows(stages: SpotSide) -> list[int]:
+    """The stages with a band."""
+    return [int(row) for row in np.flatnonzero(stages.is_band)]
+
+
+def at_worst(stages: SpotSide, row: int, corner: NDArray[np.int32]) -> Iterator[Corners]:
+    """The corners at which parts have their worst errors with a stage, a corner of the parts after the other."""
+    bounded = np.flatnonzero(corner != UNBOUNDED)
+    of_stage, q = np.divmod(corner[bounded], len(stages.part_corners))
+    for place in np.unique(q).tolist():
+        here = np.flatnonzero(q == place)
+        for left in range(0, len(here), PAIRS_AT_A_TIME):
+            some = here[left : left + PAIRS_AT_A_TIME]
+            yield bounded[some], stages.first[stages.begin[row]] + of_stage[some], stages.part_corners[place]
+
+
+def meeting(form: Form, stages: SpotSide, row: int, at: NDArray[np.intp] | None, hertz: FloatArray) -> Meeting:
+    """A stage at frequencies [Hz], each where it meets one part: at corners, or nominally."""
+    elements, nothing = stages.box.values[:, row, None], np.ones((1, len(stages.box.values), len(hertz)))
+    nominal = np.repeat(elements, len(hertz), axis=1)
+    factors = Factors(nothing, nothing)
+    if at is not None:
+        factors = Factors(stages.factors.own[:, :, at], stages.factors.together[:, :, at])
+
+    def ideal(values: FloatArray) -> ComplexArray:
+        return coefficients.gain_ideal(form, coefficients.at_frequency(form, values, hertz))
+
+    gain_ideal, reference = gains(form, stages, row, hertz)
+    complex_reference = times(ideal(nominal), reference / gain_ideal)
+    values = nominal * product(factors.own) * product(factors.together)
+    of = coefficients.evaluate(form, coefficients.at_frequency(form, values, hertz))
+    error = over(of.gain_ideal - complex_reference, complex_reference)
+    return Meeting(
+        ((gain_ideal - reference) / reference)[None],
+        error[None],
+        rises(of, error)[:, None],
+        of.contrasts[:, None],
+        of.loadings[:, None],
+        elements_terms(nominal, factors, complex_reference, ideal)[:, None]
+        if at is not None
+        else np.zeros((len(stages.corner_terms), 1, 1), np.complex128),
+    )
+
+
+def gains(form: Form, stages: SpotSide, row: int, hertz: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Magnitudes of the ideal gain of a stage and of the gain that errors refer to, at frequencies [gain unit]."""
+    values = np.repeat(stages.box.values[:, row, None], len(hertz), axis=1)
+    magnitude = magnitude_of(coefficients.gain_ideal(form, coefficients.at_frequency(form, values, hertz)))
+    target = stages.box.targets[row]
+    return magnitude, magnitude if np.isnan(target) else np.full(len(hertz), abs(target))
+
+
+@dataclass(frozen=True)
+class _Pairs:
+    """A stage with some parts, at corners of the stage, one each, and a corner of the parts.
+
+    Attributes
+    ----------
+    figures : ndarray, shape (figures + 1, parts)
+        As in `PartSide.worst`.
+    """
+
+    form: Form
+    stages: SpotSide
+    row: int
+    at: NDArray[np.intp]
+    ends: int
+    figures: FloatArray
+
+    def errors(self, hertz: FloatArray, which: NDArray[np.intp]) -> FloatArray:
+        """The errors of some of the pairs at frequencies [Hz]."""
+        here = meeting(self.form, self.stages, self.row, self.at[which], hertz)
+        departing = Departing(self.form, self.figures[:, which], hertz[None])
+        found, _ = errors(self.form, here, departing, self.ends)
+        return np.asarray(found[0])
+
+
+def refine(form: Form, stages: SpotSide, parts: PartSide, found: Outcome) -> None:
+    """Take the pairs of stages with a band from the points with the largest errors to the largest errors.
+
+    The search is made at each corner that the point visits: their largest errors lie at frequencies of their own.
+    """
+    assert found.hertz is not None
+    for row in rows(stages):
+        points = stages.hertz_of(row)
+        spots = stages.begin[row] + np.searchsorted(points, found.hertz[row])
+        for plan in stages.plans:
+            here = np.flatnonzero(np.isin(spots, plan.stages) & (found.corner[row] != UNBOUNDED))
+            for left in range(0, len(here), PAIRS_AT_A_TIME):
+                columns = here[left : left + PAIRS_AT_A_TIME]
+                _refine(form, stages, parts, row, spots[columns], columns, plan.corners, found)
+
+
+def _refine(
+    form: Form,
+    stages: SpotSide,
+    parts: PartSide,
+    row: int,
+    spots: NDArray[np.intp],
+    columns: NDArray[np.intp],
+    corners: Sequence[tuple[int, int]],
+    found: Outcome,
+) -> None:
+    assert found.hertz is not None
+    point = stages.hertz[spots]
+    hertz, error, corner = point, found.error_worst[row, columns], found.corner[row, columns]
+    for j, q in corners:
+        pairs = _Pairs(form, stages, row, stages.first[spots] + j, stages.part_corners[q], parts.worst[:, columns])
+        best = _largest(pairs, point)
+        at_best = pairs.errors(best, np.arange(len(best)))
+        code = stages.codes_of(spots) + np.int32(j * len(stages.part_corners) + q)
+        worse = np.abs(at_best) > np.abs(error)
+        hertz, error, corner = (
+            np.where(worse, new, old) for new, old in ((best, hertz), (at_best, error), (code, corner))
+        )
+    found.hertz[row, columns], found.error_worst[row, columns], found.corner[row, columns] = hertz, error, corner
+    departing = Departing(form, parts.nominal[:, columns], hertz[None])
+    nominal, _ = errors(form, meeting(form, stages, row, None, hertz), departing, every(form))
+    found.error_nominal[row, columns] = nominal[0]
+
+
+def _largest(pairs: _Pairs, point: FloatArray) -> FloatArray:
+    """The frequency near a point of the band at which the error of each pair is the largest [Hz]."""
+    points, which = pairs.stages.hertz_of(pairs.row), np.arange(len(point))
+    place = np.searchsorted(points, point)
+    low, high = points[np.maximum(place - 1, 0)], points[np.minimum(place + 1, len(points) - 1)]
+    inside = point * np.where(low == point, 1.0 + STEP, 1.0 - STEP)
+    falls = np.abs(pairs.errors(inside, which)) <= np.abs(pairs.errors(point, which))
+    searched = np.flatnonzero(((low < point) & (point < high)) | ~falls)
+    best = point.copy()
+    if len(searched):
+        best[searched] = _golden(lambda at: np.abs(pairs.errors(at, searched)), low[searched], high[searched])
+    return best
+
+
+def _golden(size: Callable[[FloatArray], FloatArray], low: FloatArray, high: FloatArray) -> FloatArray:
+    """Where a function with one maximum in each interval is the largest, by golden sections."""
+    left, right = high - SECTION * (high - low), low + SECTION * (high - low)
+    at_left, at_right = size(left), size(right)
+    for _ in range(SECTIONS):
+        is_left = at_left > at_right
+        low, high = np.where(is_left, low, left), np.where(is_left, right, high)
+        new = np.where(is_left, high - SECTION * (high - low), low + SECTION * (high - low))
+        at_new = size(new)
+        left, right = np.where(is_left, new, right), np.where(is_left, left, new)
+        at_left, at_right = np.where(is_left, at_new, at_right), np.where(is_left, at_left, at_new)
+    return np.where(at_left > at_right, left, right)

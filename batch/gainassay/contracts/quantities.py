@@ -90,6 +90,11 @@ class Numbers:
     blank: NDArray[np.bool_]
     refused: dict[int, str]
 
+    @staticmethod
+    def nothing(count: int) -> Numbers:
+        """A column that is not there: blank in each row, and without room of its own."""
+        return Numbers(np.broadcast_to(np.nan, count), np.broadcast_to(True, count), {})
+
 
 @dataclass(frozen=True)
 class Writing:

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from gainassay.contracts import tables
 from gainassay.forms.coefficients import FloatArray
 from gainassay.tables.checks import Checking
+from gainassay.tables.order import gathered
 
 SECOND_POLE = "f_second_pole_hz"
 
@@ -34,19 +35,15 @@ class Bandwidths:
     second_pole: FloatArray
     has_second_pole: bool
 
-    def at(self, order: NDArray[np.intp]) -> Bandwidths:
-        """The figures of the parts at some places."""
-        return Bandwidths(self.gbw_min[order], self.gbw_typ[order], self.second_pole[order], self.has_second_pole)
-
     def nominal(self) -> FloatArray:
         """The gain-bandwidth product [Hz]: typical where given, else the limit; nan where neither is."""
         return np.where(np.isnan(self.gbw_typ), self.gbw_min, self.gbw_typ)
 
 
-def joined(blocks: Sequence[Bandwidths]) -> Bandwidths:
-    """The figures of all parts, from those of some after the other."""
+def of_all(blocks: Sequence[Bandwidths], order: NDArray[np.intp]) -> Bandwidths:
+    """The figures of the parts at some places, from those of blocks of rows."""
     least, typical, pole = (
-        np.concatenate([getattr(block, name) for block in blocks]) for name in ("gbw_min", "gbw_typ", "second_pole")
+        gathered([getattr(block, name) for block in blocks], order) for name in ("gbw_min", "gbw_typ", "second_pole")
     )
     return Bandwidths(least, typical, pole, blocks[0].has_second_pole)
 

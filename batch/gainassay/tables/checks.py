@@ -6,7 +6,6 @@ import json
 import re
 from collections.abc import Collection, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
-from itertools import takewhile
 
 import numpy as np
 import pyarrow as pa
@@ -19,14 +18,12 @@ from gainassay.contracts.quantities import Numbers, Writing, in_text, numbers, t
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.job import Heading
+from gainassay.tables import order
 from gainassay.tables.raw import RawTable, is_number, joined, shown, starts_of
 from gainassay.tables.rejects import PLACE, Reject, by_reason
 
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
-
-SHORT_NAME = 32
-"""Bytes of names that are ordered by their bytes as numbers."""
 
 TOTAL = "(?i)(?:grand |sub ?)?totals?:?|summe:?|gesamt:?"
 """What spreadsheets write below a table in the column of names."""
@@ -136,7 +133,7 @@ class Checking:
         """A column's numbers, its refused cells rejected; all blank if the table does not have it."""
         count = len(self.raw.rows)
         if column.name not in self.raw.columns:
-            return Numbers(np.full(count, np.nan), np.ones(count, dtype=bool), {})
+            return Numbers.nothing(count)
         if column not in self.read:
             heading = self.raw.headings.get(column.name)
             writing = Writing(heading.unit if heading else "", self.raw.decimal)
@@ -161,9 +158,9 @@ class Checking:
             self.refuse(
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
             )
-        self.by_name = _by_name(text)
+        self.by_name = order.by_name(text)
         self.ordered = text.take(pa.array(self.by_name))
-        for positions in _repeated(self.ordered, self.by_name):
+        for positions in order.repeated(self.ordered, self.by_name):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):
                 others = [other for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
@@ -183,51 +180,11 @@ class Checking:
     def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
         """Positions of the rows without a reject, by their names, and these names; after `names`."""
         kept = self.good()[self.by_name]
-        return self.by_name[kept], _as_numpy(self.ordered.filter(pa.array(kept)))
+        return self.by_name[kept], order.as_numpy(self.ordered.filter(pa.array(kept)))
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
         return tuple(sorted([*self.raw.ragged, *self.refused.values()], key=PLACE))
-
-
-def _by_name(names: pa.Array) -> NDArray[np.intp]:
-    """Positions by name, in the order of code points; short names go by their bytes as numbers, which is faster."""
-    longest = pc.max(pc.binary_length(names)).as_py() or 0
-    if longest > SHORT_NAME:
-        return np.asarray(pc.sort_indices(names)).astype(np.intp)
-    ends = [(end or "").encode() for end in pc.min_max(names).as_py().values()]
-    # What all start with orders nothing.
-    start = len(list(takewhile(lambda pair: pair[0] == pair[1], zip(*ends, strict=False))))
-    words = max(1, -(-(longest - start) // 8))
-    own = np.ascontiguousarray(_padded(names, start + 8 * words)[:, start:])
-    numbers = own.view(">u8").astype(np.uint64).T
-    return np.argsort(numbers[0]) if words == 1 else np.lexsort(numbers[::-1])
-
-
-def _padded(texts: pa.Array, width: int) -> NDArray[np.uint8]:
-    """Bytes of texts, each followed by zeros as far as `width`; shape (texts, width)."""
-    padded = pc.ascii_rpad(texts, width, padding="\0")
-    return np.frombuffer(padded.buffers()[2], dtype=np.uint8, count=width * len(texts)).reshape(-1, width)
-
-
-def _as_numpy(names: pa.Array) -> NDArray[np.str_]:
-    """Names as an array; those of ASCII alone by their bytes, which is faster."""
-    longest = pc.max(pc.binary_length(names)).as_py() or 0
-    if 0 < longest <= SHORT_NAME and pc.all(pc.string_is_ascii(names)).as_py():
-        return np.asarray(_padded(names, longest).view(f"S{longest}")[:, 0].astype(np.str_))
-    return np.asarray(names.to_numpy(zero_copy_only=False).astype(np.str_))
-
-
-def _repeated(by_name: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
-    """Positions of each name that stands more than once, blank ones apart; names in their order, and its positions."""
-    same = np.asarray(pc.equal(by_name[1:], by_name[:-1])) & np.asarray(pc.not_equal(by_name[1:], ""))
-    found: list[list[int]] = []
-    for place in np.flatnonzero(same):
-        starts = not place or not same[place - 1]
-        if starts:
-            found.append([int(order[place])])
-        found[-1].append(int(order[place + 1]))
-    return [sorted(positions) for positions in found]
 
 
 def _listed(rows: list[int], count: int) -> str:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import json
 import re
-from collections.abc import Collection, Iterable, Mapping, Sequence
+import unicodedata
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -24,6 +25,12 @@ from gainassay.tables.rejects import PLACE, Reject, by_reason
 
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
+
+UNSEEN = (
+    r"(?P<mark>[\p{Cc}\p{Cf}\p{Zl}\p{Zp}\x{34f}\x{115f}\x{1160}\x{2800}\x{3164}\x{ffa0}"
+    r"\x{fe00}-\x{fe0f}\x{e0100}-\x{e01ef}])"
+)
+"""Controls, marks of format and direction, fillers: two names that look the same may differ by them."""
 
 TOTAL = "(?i)(?:grand |sub ?)?totals?:?|summe:?|gesamt:?"
 """What spreadsheets write below a table in the column of names."""
@@ -144,16 +151,8 @@ class Checking:
     def names(self, column: str) -> pa.Array:
         """The names in a key column, as text; blank, unprintable and repeated names are rejected."""
         text = text_of(self.cells(column))
-        faults = (
-            (pc.equal(text, ""), "is blank; each row needs a name"),
-            (pc.match_substring_regex(text, r"\p{Cc}"), "holds a control character; use printable text"),
-            (
-                pc.greater(pc.utf8_length(text), LONGEST_NAME),
-                f"is longer than {LONGEST_NAME} characters; shorten the name",
-            ),
-        )
-        for where, reason in faults:
-            self.refuse_all(column, dict.fromkeys(np.flatnonzero(np.asarray(where)).tolist(), reason))
+        for faults in _faults_of_names(text):
+            self.refuse_all(column, faults)
         if len(text) and re.fullmatch(TOTAL, text[-1].as_py()):
             self.refuse(
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
@@ -185,6 +184,29 @@ class Checking:
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
         return tuple(sorted([*self.raw.ragged, *self.refused.values()], key=PLACE))
+
+
+def _faults_of_names(names: pa.Array) -> Iterator[dict[int, str]]:
+    """Reasons for names that cannot be ones, by their positions; of several for one name the first counts."""
+    yield dict.fromkeys(_places(pc.equal(names, "")), "is blank; each row needs a name")
+    # The others need no second look, and most are among them.
+    odd = _places(pc.invert(pc.ascii_is_printable(names)))
+    marks = pc.extract_regex(names.take(pa.array(odd, pa.int64())), UNSEEN).field("mark").to_pylist()
+    yield {place: _unseen(mark) for place, mark in zip(odd, marks, strict=True) if mark}
+    too_long = pc.greater(pc.utf8_length(names), LONGEST_NAME)
+    yield dict.fromkeys(_places(too_long), f"is longer than {LONGEST_NAME} characters; shorten the name")
+
+
+def _unseen(mark: str) -> str:
+    """Why a name that holds a mark which is not seen cannot be one."""
+    if unicodedata.category(mark) == "Cc":
+        return "holds a control character; use printable text"
+    return f"holds a character that is not seen: U+{ord(mark):04X}; remove it"
+
+
+def _places(where: pa.Array) -> list[int]:
+    found: list[int] = np.flatnonzero(np.asarray(where)).tolist()
+    return found
 
 
 def _listed(rows: list[int], count: int) -> str:

@@ -45,7 +45,7 @@ def as_numpy(names: pa.Array) -> NDArray[np.str_]:
     """Names as an array; those of ASCII alone by their bytes, which is faster."""
     longest = pc.max(pc.binary_length(names)).as_py() or 0
     if 0 < longest <= SHORT_NAME and pc.all(pc.string_is_ascii(names)).as_py():
-        return np.asarray(_padded(names, longest).view(f"S{longest}")[:, 0].astype(np.str_))
+        return _padded(names, longest).astype(np.uint32).view(f"U{longest}")[:, 0]
     return np.asarray(names.to_numpy(zero_copy_only=False).astype(np.str_))
 
 

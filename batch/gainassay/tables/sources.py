@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Iterator, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from itertools import chain
 from pathlib import Path
 
@@ -18,8 +19,8 @@ from gainassay.tables.headings import Headings, headings
 from gainassay.tables.raw import Piece, RawTable, joined
 
 READERS: Mapping[str, Callable[[Path, Source], Iterator[Piece]]] = {
-    "csv": csv_files.read,
-    "parquet": lambda path, _: parquet_files.read(path),
+    "csv": lambda path, source: _read_ahead(csv_files.read(path, source)),
+    "parquet": lambda path, _: _read_ahead(parquet_files.read(path)),
     "workbook": lambda path, source: map(workbooks.read, [path], [source]),
     "database": databases.read_file,
 }
@@ -113,6 +114,15 @@ def _file(path: Path, source: Source) -> Iterator[Piece]:
         )
     _refuse_other_options(source, kind)
     return READERS[kind](path, source)
+
+
+def _read_ahead(pieces: Iterator[Piece]) -> Iterator[Piece]:
+    """The same pieces, each of them read while the one before is worked on."""
+    with ThreadPoolExecutor(max_workers=1) as reader:
+        coming = reader.submit(next, pieces, None)
+        while (piece := coming.result()) is not None:
+            coming = reader.submit(next, pieces, None)
+            yield piece
 
 
 def _refuse_other_options(source: Source, kind: str) -> None:

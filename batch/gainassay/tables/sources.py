@@ -149,18 +149,29 @@ def _paths(at: str) -> list[Path]:
 
 
 def _under(folder: Path) -> Iterator[Path]:
-    """All files of a folder and of those in it; one that cannot be looked into is a fault, and not passed over."""
+    """All files of a folder and of those in it; one that is not looked into is a fault, and not passed over."""
 
     def fail(error: OSError) -> None:
         raise error
 
-    for home, _, names in os.walk(folder, onerror=fail):
+    for home, folders, names in os.walk(folder, onerror=fail):
+        for path in (Path(home, name) for name in folders):
+            if path.is_symlink() and not _is_a_programs_own(path.relative_to(folder)):
+                raise InputError(
+                    f"{path}: is a link to a folder, which is not followed; name that folder itself, or use a pattern, "
+                    f"such as {path}/*.csv"
+                )
         yield from (Path(home, name) for name in names)
 
 
 def _is_table(path: Path) -> bool:
-    """Whether a file in a folder is one of its tables; what starts with a dot or underscore is a program's own."""
-    return path.suffix.lower() in KINDS and not any(part.startswith((".", "_")) for part in path.parts)
+    """Whether a file in a folder is one of its tables."""
+    return path.suffix.lower() in KINDS and not _is_a_programs_own(path)
+
+
+def _is_a_programs_own(path: Path) -> bool:
+    """Whether a path starts with a dot or underscore, or a folder in it does."""
+    return any(part.startswith((".", "_")) for part in path.parts)
 
 
 def _all_of_a_kind(at: str, paths: list[Path]) -> list[Path]:

@@ -98,6 +98,25 @@ def test_two_columns_that_may_be_the_same_are_both_in_doubt(here: CommandLineHer
     assert here("map", path).out.count("several columns may be this one") == 2
 
 
+@pytest.mark.parametrize(
+    ("header", "kept", "left"),
+    [
+        ("Aol min,Aol min (dB)", {"Aol min": "a_ol_min"}, "Aol min (dB)"),
+        ("Aol min (dB),Aol min", {"Aol min (dB)": "a_ol_db_min"}, "Aol min"),
+        ("a_ol_min,Aol min (dB)", {}, "Aol min (dB)"),
+    ],
+)
+def test_one_of_two_columns_for_one_figure_is_proposed(
+    here: CommandLineHere, tmp_path: Path, header: str, kept: dict[str, str], left: str
+) -> None:
+    path = tmp_path / "parts.csv"
+    path.write_text(f"part,{header}\na,{'100,1e5' if header.startswith('Aol min (dB)') else '1e5,100'}\n")
+    assert proposed(here, path)["parts"].get("columns", {}) == kept
+    (doubt, line) = [line for line in here("map", path).out.splitlines() if line.startswith("# ")][-2:]
+    assert "gives the same figure, and a row may give only one of the two" in doubt
+    assert line.startswith(f'# "{left}" = ')
+
+
 def test_stages_of_a_workbook(here: CommandLineHere, tmp_path: Path) -> None:
     book = openpyxl.Workbook()
     for row in (

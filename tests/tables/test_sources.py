@@ -180,6 +180,18 @@ def test_a_folder_that_cannot_be_looked_into_is_not_passed_over(
         sources.read(Source("parts", str(tmp_path)), {})
 
 
+def test_a_link_to_a_folder_is_not_passed_over(tmp_path: Path) -> None:
+    for place in ("here", "there"):
+        (tmp_path / place).mkdir()
+        (tmp_path / place / "a.csv").write_text("part,a_ol_min\na,1\n")
+    (tmp_path / "here" / "_own").symlink_to(tmp_path / "there")
+    assert len(sources.read(Source("parts", str(tmp_path / "here")), {}).rows) == 1
+    (tmp_path / "here" / "linked").symlink_to(tmp_path / "there")
+    with pytest.raises(InputError, match=r"linked: is a link to a folder, which is not followed"):
+        sources.read(Source("parts", str(tmp_path / "here")), {})
+    assert len(sources.read(Source("parts", f"{tmp_path}/here/*/*.csv"), {}).rows) >= 1
+
+
 def test_a_pipe_is_not_waited_for(tmp_path: Path) -> None:
     os.mkfifo(tmp_path / "table.csv")
     with pytest.raises(InputError, match="is no file"):

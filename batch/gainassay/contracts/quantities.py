@@ -22,6 +22,9 @@ EXACT = 1 << 53
 CELLS_AT_A_TIME = 1 << 16
 """A block of cells with one that is no plain number is looked at text by text; the others are not."""
 
+A_FEW = 16
+"""Cells that mostly show whether those of a block are plain numbers."""
+
 NUMBER = r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)"
 """Decimal text. ASCII digits only: other parsers disagree on full-width digits, `1_000`, `0x10` and `1,5`."""
 
@@ -89,6 +92,11 @@ class Numbers:
     values: NDArray[np.float64]
     blank: NDArray[np.bool_]
     refused: dict[int, str]
+
+    @staticmethod
+    def nothing(count: int) -> Numbers:
+        """A column that is not there: blank in each row, and without room of its own."""
+        return Numbers(np.broadcast_to(np.nan, count), np.broadcast_to(True, count), {})
 
 
 @dataclass(frozen=True)
@@ -174,6 +182,8 @@ def _all_plain(cells: pa.Array, decimal: str) -> NDArray[np.float64] | None:
             return None
         cells = pc.replace_substring(cells, ",", ".")
     try:
+        # A cast that fails goes on to the last cell, and words an error for each.
+        cells[:A_FEW].cast(pa.float64())
         found = cells.cast(pa.float64())
     except pa.ArrowInvalid:
         return None

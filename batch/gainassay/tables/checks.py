@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import json
 import re
-from collections.abc import Collection, Iterable, Mapping, Sequence
+import unicodedata
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
-from itertools import takewhile
 
 import numpy as np
 import pyarrow as pa
@@ -19,14 +19,18 @@ from gainassay.contracts.quantities import Numbers, Writing, in_text, numbers, t
 from gainassay.contracts.tables import Column
 from gainassay.errors import InputError
 from gainassay.job import Heading
+from gainassay.tables import order
 from gainassay.tables.raw import RawTable, is_number, joined, shown, starts_of
 from gainassay.tables.rejects import PLACE, Reject, by_reason
 
 LONGEST_NAME = 200
 """Characters of the name of a stage or part."""
 
-SHORT_NAME = 32
-"""Bytes of names that are ordered by their bytes as numbers."""
+UNSEEN = (
+    r"(?P<mark>[\p{Cc}\p{Cf}\p{Zl}\p{Zp}\x{34f}\x{115f}\x{1160}\x{2800}\x{3164}\x{ffa0}"
+    r"\x{fe00}-\x{fe0f}\x{e0100}-\x{e01ef}])"
+)
+"""Controls, marks of format and direction, fillers: two names that look the same may differ by them."""
 
 TOTAL = "(?i)(?:grand |sub ?)?totals?:?|summe:?|gesamt:?"
 """What spreadsheets write below a table in the column of names."""
@@ -136,7 +140,7 @@ class Checking:
         """A column's numbers, its refused cells rejected; all blank if the table does not have it."""
         count = len(self.raw.rows)
         if column.name not in self.raw.columns:
-            return Numbers(np.full(count, np.nan), np.ones(count, dtype=bool), {})
+            return Numbers.nothing(count)
         if column not in self.read:
             heading = self.raw.headings.get(column.name)
             writing = Writing(heading.unit if heading else "", self.raw.decimal)
@@ -147,23 +151,15 @@ class Checking:
     def names(self, column: str) -> pa.Array:
         """The names in a key column, as text; blank, unprintable and repeated names are rejected."""
         text = text_of(self.cells(column))
-        faults = (
-            (pc.equal(text, ""), "is blank; each row needs a name"),
-            (pc.match_substring_regex(text, r"\p{Cc}"), "holds a control character; use printable text"),
-            (
-                pc.greater(pc.utf8_length(text), LONGEST_NAME),
-                f"is longer than {LONGEST_NAME} characters; shorten the name",
-            ),
-        )
-        for where, reason in faults:
-            self.refuse_all(column, dict.fromkeys(np.flatnonzero(np.asarray(where)).tolist(), reason))
+        for faults in _faults_of_names(text):
+            self.refuse_all(column, faults)
         if len(text) and re.fullmatch(TOTAL, text[-1].as_py()):
             self.refuse(
                 len(text) - 1, column, "names a total, and stands in the last row; remove the row, or rename it"
             )
-        self.by_name = _by_name(text)
+        self.by_name = order.by_name(text)
         self.ordered = text.take(pa.array(self.by_name))
-        for positions in _repeated(self.ordered, self.by_name):
+        for positions in order.repeated(self.ordered, self.by_name):
             rows = [int(self.raw.rows[position]) for position in positions]
             for place, row in zip(positions, rows, strict=True):
                 others = [other for other in rows[: MOST_LISTED + 1] if other != row][:MOST_LISTED]
@@ -183,51 +179,34 @@ class Checking:
     def in_order(self) -> tuple[NDArray[np.intp], NDArray[np.str_]]:
         """Positions of the rows without a reject, by their names, and these names; after `names`."""
         kept = self.good()[self.by_name]
-        return self.by_name[kept], _as_numpy(self.ordered.filter(pa.array(kept)))
+        return self.by_name[kept], order.as_numpy(self.ordered.filter(pa.array(kept)))
 
     def found(self) -> tuple[Reject, ...]:
         """The rejects, in the order of the file."""
         return tuple(sorted([*self.raw.ragged, *self.refused.values()], key=PLACE))
 
 
-def _by_name(names: pa.Array) -> NDArray[np.intp]:
-    """Positions by name, in the order of code points; short names go by their bytes as numbers, which is faster."""
-    longest = pc.max(pc.binary_length(names)).as_py() or 0
-    if longest > SHORT_NAME:
-        return np.asarray(pc.sort_indices(names)).astype(np.intp)
-    ends = [(end or "").encode() for end in pc.min_max(names).as_py().values()]
-    # What all start with orders nothing.
-    start = len(list(takewhile(lambda pair: pair[0] == pair[1], zip(*ends, strict=False))))
-    words = max(1, -(-(longest - start) // 8))
-    own = np.ascontiguousarray(_padded(names, start + 8 * words)[:, start:])
-    numbers = own.view(">u8").astype(np.uint64).T
-    return np.argsort(numbers[0]) if words == 1 else np.lexsort(numbers[::-1])
+def _faults_of_names(names: pa.Array) -> Iterator[dict[int, str]]:
+    """Reasons for names that cannot be ones, by their positions; of several for one name the first counts."""
+    yield dict.fromkeys(_places(pc.equal(names, "")), "is blank; each row needs a name")
+    # The others need no second look, and most are among them.
+    odd = _places(pc.invert(pc.ascii_is_printable(names)))
+    marks = pc.extract_regex(names.take(pa.array(odd, pa.int64())), UNSEEN).field("mark").to_pylist()
+    yield {place: _unseen(mark) for place, mark in zip(odd, marks, strict=True) if mark}
+    too_long = pc.greater(pc.utf8_length(names), LONGEST_NAME)
+    yield dict.fromkeys(_places(too_long), f"is longer than {LONGEST_NAME} characters; shorten the name")
 
 
-def _padded(texts: pa.Array, width: int) -> NDArray[np.uint8]:
-    """Bytes of texts, each followed by zeros as far as `width`; shape (texts, width)."""
-    padded = pc.ascii_rpad(texts, width, padding="\0")
-    return np.frombuffer(padded.buffers()[2], dtype=np.uint8, count=width * len(texts)).reshape(-1, width)
+def _unseen(mark: str) -> str:
+    """Why a name that holds a mark which is not seen cannot be one."""
+    if unicodedata.category(mark) == "Cc":
+        return "holds a control character; use printable text"
+    return f"holds a character that is not seen: U+{ord(mark):04X}; remove it"
 
 
-def _as_numpy(names: pa.Array) -> NDArray[np.str_]:
-    """Names as an array; those of ASCII alone by their bytes, which is faster."""
-    longest = pc.max(pc.binary_length(names)).as_py() or 0
-    if 0 < longest <= SHORT_NAME and pc.all(pc.string_is_ascii(names)).as_py():
-        return np.asarray(_padded(names, longest).view(f"S{longest}")[:, 0].astype(np.str_))
-    return np.asarray(names.to_numpy(zero_copy_only=False).astype(np.str_))
-
-
-def _repeated(by_name: pa.Array, order: NDArray[np.intp]) -> list[list[int]]:
-    """Positions of each name that stands more than once, blank ones apart; names in their order, and its positions."""
-    same = np.asarray(pc.equal(by_name[1:], by_name[:-1])) & np.asarray(pc.not_equal(by_name[1:], ""))
-    found: list[list[int]] = []
-    for place in np.flatnonzero(same):
-        starts = not place or not same[place - 1]
-        if starts:
-            found.append([int(order[place])])
-        found[-1].append(int(order[place + 1]))
-    return [sorted(positions) for positions in found]
+def _places(where: pa.Array) -> list[int]:
+    found: list[int] = np.flatnonzero(np.asarray(where)).tolist()
+    return found
 
 
 def _listed(rows: list[int], count: int) -> str:

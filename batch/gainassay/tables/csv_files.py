@@ -6,6 +6,7 @@ import codecs
 import csv
 import hashlib
 from collections.abc import Iterator, Sequence
+from functools import partial
 from itertools import islice
 from pathlib import Path
 from typing import Any
@@ -40,7 +41,7 @@ def read(path: Path, source: Source) -> Iterator[Piece]:
         If the file cannot be read as CSV in the encoding that the job names, or in UTF-8.
     """
     encoding, header_row = _encoding(path, source.encoding), source.header_row or 1
-    sha256, quotes = _scanned(path, encoding)
+    sha256 = _hashed(path, encoding)
     header, has_more = _header(path, encoding, source.delimiter or ",", header_row)
     ragged: list[Reject] = []
     row, last = (
@@ -54,7 +55,7 @@ def read(path: Path, source: Source) -> Iterator[Piece]:
         yield Piece(str(path), _columns(path, header, header_row, batch), rows)
         if len(batch):
             row, last = int(rows[-1]), batch
-    if quotes % 2 and any("\n" in (cells[-1].as_py() or "") for cells in last.columns if len(cells)):
+    if any("\n" in (cells[-1].as_py() or "") for cells in last.columns if len(cells)) and _quotes(path, encoding) % 2:
         raise InputError(f"{path}: row {row}: a quote is opened and never closed; close or remove it")
     nothing = _columns(path, header, header_row, last.slice(len(last)))
     yield Piece(str(path), nothing, np.array([], np.int64), sha256, tuple(ragged))
@@ -148,16 +149,16 @@ def _opened(path: Path, header: list[str], encoding: str, delimiter: str, header
     )
 
 
-def _scanned(path: Path, encoding: str) -> tuple[str, int]:
-    """Hash of a file, and the number of double quotes in its text."""
-    digest, decoder, quotes, place = hashlib.sha256(), codecs.getincrementaldecoder(encoding)(), 0, 0
+def _hashed(path: Path, encoding: str) -> str:
+    """Hash of a file, whose text must be in its encoding."""
+    digest, decoder, place = hashlib.sha256(), codecs.getincrementaldecoder(encoding)(), 0
     try:
         with path.open("rb") as file:
             while chunk := file.read(1 << 20):
                 if not place and encoding == "utf-8":
                     _refuse_other_marks(path, chunk)
                 digest.update(chunk)
-                quotes += decoder.decode(chunk).count('"')
+                decoder.decode(chunk)
                 place += len(chunk)
         decoder.decode(b"", final=True)
     except UnicodeError as error:
@@ -166,7 +167,13 @@ def _scanned(path: Path, encoding: str) -> tuple[str, int]:
             f"{path}: is not {encoding.upper()} text (byte {at}); save it as CSV in UTF-8, or say "
             "its encoding in the job"
         ) from None
-    return digest.hexdigest(), quotes
+    return digest.hexdigest()
+
+
+def _quotes(path: Path, encoding: str) -> int:
+    """Number of double quotes in the text of a file."""
+    with path.open(encoding=encoding, newline="") as file:
+        return sum(text.count('"') for text in iter(partial(file.read, 1 << 20), ""))
 
 
 def _refuse_other_marks(path: Path, start: bytes) -> None:

@@ -11,6 +11,7 @@ from gainassay.contracts import tables
 from gainassay.contracts.limits import LIMITS, WITH_A_DEFAULT
 from gainassay.forms.coefficients import FloatArray
 from gainassay.tables.checks import Checking
+from gainassay.tables.order import gathered
 
 Operating = Mapping[str, FloatArray]
 """Such columns by name, each of shape (rows,), nan where a cell is blank."""
@@ -36,9 +37,9 @@ def read_parts(checking: Checking) -> Operating:
     return _read(checking, "parts", OF_PARTS)
 
 
-def joined(blocks: Sequence[Operating]) -> Operating:
-    """The same of all rows, from those of some after the other."""
-    return {name: np.concatenate([block[name] for block in blocks]) for name in blocks[0]}
+def of_all(blocks: Sequence[Operating], order: NDArray[np.intp]) -> Operating:
+    """The same of the rows at some places, from those of blocks of rows."""
+    return {name: gathered([block[name] for block in blocks], order) for name in blocks[0]}
 
 
 def at(operating: Operating, rows: NDArray[np.intp]) -> Operating:

@@ -22,6 +22,7 @@ from gainassay.tables import operating, sources
 from gainassay.tables.checks import Checking, ColumnUse, column_use, nothing_left, require_columns, unknown_columns
 from gainassay.tables.compared import NOTHING, Cells, Compared, read_compared
 from gainassay.tables.operating import Operating
+from gainassay.tables.order import gathered
 from gainassay.tables.raw import RawTable
 from gainassay.tables.rejects import Reject, rejected_rows
 
@@ -164,9 +165,9 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         change=_of_all(figures, "change", order),
         evidence_change=_of_all(figures, "evidence_change", order),
         modelled=tuple(one.modelled for one in figures[0]),
-        second_pole=np.concatenate(poles)[order] if SECOND_POLE in raw.header else None,
+        second_pole=gathered(poles, order) if SECOND_POLE in raw.header else None,
         compared={name: column.at(order) for name, column in cells.items()},
-        operating=operating.at(operating.joined(limits), order),
+        operating=operating.of_all(limits, order),
         rejects=checking.found(),
         columns=column_use(raw, "parts", known),
         warnings=unknown_columns(raw, known),
@@ -185,7 +186,7 @@ def _of_all(blocks: list[list[_Read]], figure: str, order: NDArray[np.intp]) -> 
     """One figure of each departure, of all blocks in order."""
     found = np.empty((len(FIGURES), len(order)), getattr(blocks[0][0], figure).dtype)
     for own, departures in zip(found, zip(*blocks, strict=True), strict=True):
-        own[:] = np.concatenate([getattr(one, figure) for one in departures])[order]
+        own[:] = gathered([getattr(one, figure) for one in departures], order)
     return found
 
 

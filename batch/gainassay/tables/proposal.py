@@ -108,7 +108,19 @@ def propose(source: Source, known: Mapping[str, Column]) -> Proposal:
         for guess in guesses
     ]
     missing = tuple(c.name for c in known.values() if c.required and c.name not in taken)
-    return Proposal(source, found, tuple(guesses), missing)
+    return Proposal(source, found, tuple(_one_of_each_figure(guesses, found, known)), missing)
+
+
+def _one_of_each_figure(guesses: Sequence[Guess], found: Sequence[str], known: Mapping[str, Column]) -> Iterator[Guess]:
+    """The guesses, those in doubt whose figure another column gives already, though in another unit."""
+    givers = {known[name].in_place_of or name: name for name in found}
+    for guess in guesses:
+        if not guess.ours or guess.doubts:
+            yield guess
+            continue
+        giver = givers.setdefault(known[guess.ours].in_place_of or guess.ours, guess.theirs)
+        doubt = f"'{giver}' gives the same figure, and a row may give only one of the two"
+        yield guess if giver == guess.theirs else replace(guess, doubts=(doubt,))
 
 
 def _with_dialect(source: Source) -> Source:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Iterator, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from itertools import chain
 from pathlib import Path
 
@@ -18,8 +19,8 @@ from gainassay.tables.headings import Headings, headings
 from gainassay.tables.raw import Piece, RawTable, joined
 
 READERS: Mapping[str, Callable[[Path, Source], Iterator[Piece]]] = {
-    "csv": csv_files.read,
-    "parquet": lambda path, _: parquet_files.read(path),
+    "csv": lambda path, source: _read_ahead(csv_files.read(path, source)),
+    "parquet": lambda path, _: _read_ahead(parquet_files.read(path)),
     "workbook": lambda path, source: map(workbooks.read, [path], [source]),
     "database": databases.read_file,
 }
@@ -115,6 +116,15 @@ def _file(path: Path, source: Source) -> Iterator[Piece]:
     return READERS[kind](path, source)
 
 
+def _read_ahead(pieces: Iterator[Piece]) -> Iterator[Piece]:
+    """The same pieces, each of them read while the one before is worked on."""
+    with ThreadPoolExecutor(max_workers=1) as reader:
+        coming = reader.submit(next, pieces, None)
+        while (piece := coming.result()) is not None:
+            coming = reader.submit(next, pieces, None)
+            yield piece
+
+
 def _refuse_other_options(source: Source, kind: str) -> None:
     if source.table and source.query:
         raise InputError(f"{source.at}: in [{source.section}]: table and query are both given; give one of the two")
@@ -139,18 +149,29 @@ def _paths(at: str) -> list[Path]:
 
 
 def _under(folder: Path) -> Iterator[Path]:
-    """All files of a folder and of those in it; one that cannot be looked into is a fault, and not passed over."""
+    """All files of a folder and of those in it; one that is not looked into is a fault, and not passed over."""
 
     def fail(error: OSError) -> None:
         raise error
 
-    for home, _, names in os.walk(folder, onerror=fail):
+    for home, folders, names in os.walk(folder, onerror=fail):
+        for path in (Path(home, name) for name in folders):
+            if path.is_symlink() and not _is_a_programs_own(path.relative_to(folder)):
+                raise InputError(
+                    f"{path}: is a link to a folder, which is not followed; name that folder itself, or use a pattern, "
+                    f"such as {path}/*.csv"
+                )
         yield from (Path(home, name) for name in names)
 
 
 def _is_table(path: Path) -> bool:
-    """Whether a file in a folder is one of its tables; what starts with a dot or underscore is a program's own."""
-    return path.suffix.lower() in KINDS and not any(part.startswith((".", "_")) for part in path.parts)
+    """Whether a file in a folder is one of its tables."""
+    return path.suffix.lower() in KINDS and not _is_a_programs_own(path)
+
+
+def _is_a_programs_own(path: Path) -> bool:
+    """Whether a path starts with a dot or underscore, or a folder in it does."""
+    return any(part.startswith((".", "_")) for part in path.parts)
 
 
 def _all_of_a_kind(at: str, paths: list[Path]) -> list[Path]:

@@ -178,7 +178,7 @@ def parts_of(group: StageGroup, parts: PartTable) -> PartSide:
 def dynamics_of(parts: PartTable) -> Dynamics:
     """All parts over frequency, at their nominal figures."""
     pole = np.full(len(parts.names), np.inf) if parts.second_pole is None else parts.second_pole
-    return Dynamics(parts.nominal[AT_DC], parts.gbw(), pole)
+    return Dynamics(parts.nominal, parts.gbw(), pole)
 
 
 def box_of(group: StageGroup) -> StageBox:

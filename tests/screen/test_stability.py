@@ -11,6 +11,7 @@ import numpy as np
 import pytest
 
 from forms import networks
+from gainassay.forms.departures import FIGURES
 from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
@@ -35,9 +36,16 @@ BLANK = {("resistor", "open"): np.inf, ("capacitor", "open"): 0.0, ("inductor", 
 
 
 def part(
-    a_ol: float = 1e5, gbw: float = 1e6, second_pole: float = np.inf, r_id: float = np.inf, r_o: float = 0.0
+    a_ol: float = 1e5,
+    gbw: float = 1e6,
+    second_pole: float = np.inf,
+    r_id: float = np.inf,
+    r_o: float = 0.0,
+    c_id: float = 0.0,
 ) -> Dynamics:
-    return Dynamics(np.array([[1.0 / a_ol], [1.0 / r_id], [r_o]]), np.array([gbw]), np.array([second_pole]))
+    figures = {"a_ol": 1.0 / a_ol, "r_id": 1.0 / r_id, "r_o": r_o, "gbw": 1.0 / gbw, "c_id": 2.0 * np.pi * c_id}
+    nominal = np.array([[figures[figure.quantity]] for figure in FIGURES])
+    return Dynamics(nominal, np.array([gbw]), np.array([second_pole]))
 
 
 def looked(topology: str, elements: Mapping[str, float], of_part: Dynamics) -> Looked:
@@ -143,14 +151,15 @@ def return_ratio(
     """At a frequency, by the nodal solve at 60 digits."""
     with mpmath.workdps(networks.DIGITS):
         at = mpmath.mpf(hertz)
-        a, g_id, r_o = (mpmath.mpf(float(value)) for value in of_part.nominal[:, 0])
+        figures = dict(zip((figure.quantity for figure in FIGURES), of_part.nominal[:, 0].tolist(), strict=True))
+        a, g_id, r_o, c = (mpmath.mpf(figures[quantity]) for quantity in ("a_ol", "r_id", "r_o", "c_id"))
         gbw, pole = float(of_part.gbw[0]), float(of_part.second_pole[0])
         inverse = (a + 1j * at / gbw) * (1 + 1j * at / pole)
         several = len(topology.amplifiers) > 1
         values = {name: mpmath.mpf(value) for name, value in elements.items()}
         for amplifier in topology.amplifiers:
             suffix = f"_{amplifier.name}" if several else ""
-            values |= {f"A{suffix}": 1 / inverse, f"r_id{suffix}": 1 / g_id, f"r_o{suffix}": r_o}
+            values |= {f"A{suffix}": 1 / inverse, f"r_id{suffix}": 1 / (g_id + 1j * at * c), f"r_o{suffix}": r_o}
         s = 2j * mpmath.pi * at
         return complex(networks.return_ratio(topology, networks.impedances(topology, values, s), name))
 
@@ -160,7 +169,7 @@ def return_ratio(
 def test_return_ratios_against_a_nodal_solve(name: str) -> None:
     """Of every topology and amplifier; at each crossover found, |T| is 1 and the phase is as told."""
     rng, topology = random.Random(name), LIBRARY[name]
-    of_part = part(10.0 ** rng.uniform(4, 6), 10.0 ** rng.uniform(5, 7), 10.0 ** rng.uniform(5, 8), 1e6, 70.0)
+    of_part = part(10.0 ** rng.uniform(4, 6), 10.0 ** rng.uniform(5, 7), 10.0 ** rng.uniform(5, 8), 1e6, 70.0, 3e-12)
     elements = values_of(topology, rng)
     one = looked(name, elements, of_part)
     hertz = np.array([0.1, 37.0, 4e3, 5e5, 2e7])
@@ -215,7 +224,8 @@ def test_no_bit_depends_on_blocks_or_on_what_else_is_looked_at(monkeypatch: pyte
     rng = np.random.default_rng(5)
     values = np.array([np.zeros(9), 10 ** rng.uniform(2, 4, 9), 10 ** rng.uniform(3, 6, 9), 10 ** rng.uniform(2, 5, 9)])
     parts = Dynamics(
-        10 ** np.array([rng.uniform(-7, -4, 14), rng.uniform(-7, -5, 14), rng.uniform(0, 3, 14)]),
+        10
+        ** np.array([rng.uniform(low, high, 14) for low, high in ((-7, -4), (-7, -5), (0, 3), (-8, -4), (-12, -10))]),
         10 ** rng.uniform(4, 8, 14),
         10 ** rng.uniform(5, 8, 14),
     )

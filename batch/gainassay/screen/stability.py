@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import AnyArray, ComplexArray, FloatArray
-from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN
+from gainassay.forms.departures import DEPARTURES, FIGURES, OPEN_LOOP_GAIN, RISING
 from gainassay.forms.form import Form
 from gainassay.screen.corners import products
 from gainassay.screen.monte_carlo import some
@@ -49,8 +49,8 @@ class Dynamics:
 
     Attributes
     ----------
-    nominal : ndarray, shape (departures, parts)
-        The departures at 0 Hz, in the order of `DEPARTURES`.
+    nominal : ndarray, shape (figures, parts)
+        In the order of `FIGURES`; of the gain-bandwidth product `gbw` is taken.
     gbw : ndarray, shape (parts,)
         Gain-bandwidth product [Hz]; nan where it is not known.
     second_pole : ndarray, shape (parts,)
@@ -69,10 +69,13 @@ class Dynamics:
         """The departures at some frequencies; shape (departures, ...), `hertz` being broadcast against the parts."""
         shape = np.broadcast_shapes(hertz.shape, self.gbw.shape)
         found = np.empty((len(DEPARTURES), *shape), complex)
-        found[:] = self.nominal.reshape(len(DEPARTURES), *(1,) * (len(shape) - 1), -1)
         pole = np.where(np.isnan(self.second_pole), np.inf, self.second_pole)
-        place = DEPARTURES.index(OPEN_LOOP_GAIN)
-        found[place] = (found[place] + 1j * (hertz / self.gbw)) * (1.0 + 1j * (hertz / pole))
+        for place, departure in enumerate(DEPARTURES):
+            found[place] = self.nominal[place]
+            if departure is OPEN_LOOP_GAIN:
+                found[place] = (found[place] + 1j * (hertz / self.gbw)) * (1.0 + 1j * (hertz / pole))
+            elif departure.symbol in RISING:
+                found[place] += 1j * (hertz * self.nominal[FIGURES.index(RISING[departure.symbol])])
         return found
 
 

@@ -527,7 +527,7 @@ def _ports(topology: Topology, values: FloatArray, departures: FloatArray) -> It
 def _figures(screened: Screened, parts: PartTable, p: int) -> Iterator[Figure]:
     side = screened.part_side
     for index, departure in enumerate(DEPARTURES):
-        if not parts.modelled[index]:
+        if not (parts.modelled[index] and screened.group.form.has(departure)):
             continue
         evidence = EVIDENCE[side.evidence[index, 0]]
         is_missing = evidence == EVIDENCE[MISSING]
@@ -553,21 +553,27 @@ def _at_worst(screened: Screened, index: int) -> str:
     if code == UNBOUNDED:
         return ""
     place, departure = group.corner(code)[1], DEPARTURES[index]
-    own = [(i, amplifier) for i, (amplifier, symbol) in enumerate(group.form.departures) if symbol == departure.symbol]
+    own = {
+        i: " ".join([amplifier, *_which(departure, symbol)])
+        for i, (amplifier, symbol) in enumerate(group.form.departures)
+        if symbol in departure.symbols
+    }
     if group.calibrated:
-        ends = calibrated.ends(group.form, place)
-        return "; ".join(f"{amplifier}: {_change(screened, departure, ends[i])}" for i, amplifier in own)
+        at = calibrated.departures_at(group.form, screened.part_side, place, slice(0, 1))
+        return "; ".join(f"{name}: {_change(departure, *at[i, :, 0].tolist())}" for i, name in own.items())
     active = {i for k in group.active_sets[place] for i in group.form.monomials[k]}
-    amplifiers = [amplifier for i, amplifier in own if i in active]
-    return f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
+    at_limit = [name for i, name in own.items() if i in active]
+    return f"limit ({', '.join(at_limit)})" if at_limit else "ideal"
 
 
-def _change(screened: Screened, departure: Departure, end: int) -> str:
-    changed = screened.part_side.changed
-    if changed is None:
-        raise ValueError("these parts do not change")
-    before, after = (
-        f"{_quantity(departure, value):.6g} {departure.unit}" if value else "ideal"
-        for value in changed[end, :, DEPARTURES.index(departure), 0].tolist()
+def _which(departure: Departure, symbol: str) -> list[str]:
+    """What tells one of a departure's several symbols from the others: its sign, or where it acts."""
+    place = departure.symbols.index(symbol)
+    return ["+-"[place]] if departure.is_signed else [where.replace("_", " ") for where in departure.places[place:][:1]]
+
+
+def _change(departure: Departure, before: float, after: float) -> str:
+    was, becomes = (
+        f"{_quantity(departure, value):.6g} {departure.unit}" if value else "ideal" for value in (before, after)
     )
-    return f"from {before} to {after}"
+    return f"from {was} to {becomes}"

@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 
 from gainassay import job as jobs
 from gainassay.contracts.evidence import EVIDENCE
-from gainassay.forms.cache import duty_of
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.cache import duty_of, form_of
+from gainassay.forms.departures import BASIC, DEPARTURES, derived_with
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.job import Job, Results
@@ -68,9 +68,18 @@ class Prepared:
             f"{self.parts.source}: there is no column for {quantity}; it is not modelled"
             for quantity in self.parts.not_modelled()
         )
+        unmodelled += tuple(self._of_calibrated())
         unserved = self.unserved()
         alone = (f"{self.stages.source}: no part is eligible for {_listed(unserved)}",) if unserved else ()
         return (*self.stages.warnings, *self.parts.warnings, *unmodelled, *self._of_stability(), *alone)
+
+    def _of_calibrated(self) -> Iterator[str]:
+        """What the parts table gives and the forms of calibrated stages have not."""
+        if not any(group.calibrated for group in self.stages.groups):
+            return
+        left = set(derived_with(self.parts.modelled)) - set(derived_with(self.parts.modelled, calibrated=True))
+        for departure in sorted(left, key=DEPARTURES.index):
+            yield f"{self.stages.source}: of calibrated stages {departure.quantity} is not modelled"
 
     def _of_stability(self) -> Iterator[str]:
         """What the parts table lacks of what the job asks of stability."""
@@ -146,8 +155,26 @@ def prepare(path: Path, views: bool | None = None) -> Prepared:
     of_stages, of_parts = compared(job.eligible, stage_tables.kinds(topologies))
     stages = stage_tables.load(job.stages, topologies, of_stages)
     parts = part_tables.load(job.parts, job.assume, of_parts)
+    stages = _with_departures(stages, parts)
     eligibility = tuple(eligible.relate(job.eligible, group, parts) for group in stages.groups)
     return Prepared(started, job, topologies, stages, parts, eligibility)
+
+
+def _with_departures(stages: StageTable, parts: PartTable) -> StageTable:
+    """The stages with the forms of all departures that the parts model.
+
+    Raises
+    ------
+    InputError
+        If a form would be too large.
+    """
+    if derived_with(parts.modelled) == BASIC:
+        return stages
+    groups = tuple(
+        replace(group, form=form_of(group.topology, derived_with(parts.modelled, group.calibrated)))
+        for group in stages.groups
+    )
+    return replace(stages, groups=groups)
 
 
 def groups_of(prepared: Prepared) -> tuple[Group, ...]:

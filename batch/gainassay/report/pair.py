@@ -6,6 +6,7 @@ import math
 
 from gainassay.cautions import CAUTIONS
 from gainassay.explanation import Explanation, LimitCheck, PortFigure, StabilityFigures, ViewFigures
+from gainassay.forms.departures import BASIC
 from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
@@ -72,7 +73,7 @@ def text(found: Explanation) -> list[str]:
         "Operating limits, with nominal elements and an ideal op-amp",
         *table(["  limit", "end", "asked", "", "allowed", "margin", ""], [_limit(check) for check in found.limits]),
         "",
-        "Impedances and loop at 0 Hz, with the nominal figures",
+        f"Impedances and loop at 0 Hz, with the nominal figures of {', '.join(d.quantity for d in BASIC)}",
         *table(["", "", ""], [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports])[1:],
         "",
         *_stability(found.stability),

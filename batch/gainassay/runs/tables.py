@@ -105,7 +105,11 @@ def verdict_table(
         "dominant_ppm": number(outcome.dominant_value.ravel()[kept] * PPM),
     }
     if needs is not None:
-        columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
+        columns |= {
+            f"need_{departure.quantity}": number(of.ravel()[kept])
+            for departure, of in zip(DEPARTURES, needs, strict=True)
+            if screened.group.form.has(departure)
+        }
     if screened.views is not None:
         columns |= {name: number(values.ravel()[kept]) for name, values in _views_columns(screened.views).items()}
     if margins:

@@ -18,6 +18,7 @@ from gainassay.forms.form import Form
 from gainassay.screen import calibrated, limits
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import (
+    ActiveSets,
     PartSide,
     StageSide,
     active_sets,
@@ -88,7 +89,7 @@ class Group:
     box: StageBox
     calibrated: bool
     parts: PartSide
-    active_sets: tuple[tuple[int, ...], ...]
+    active_sets: ActiveSets
     reach: Reach
     pattern: NDArray[np.intp]
     eligible: NDArray[np.bool_]

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
-from itertools import product
+from itertools import chain, product
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +21,9 @@ Place = Callable[[tuple[bool, ...]], int]
 
 MOST_OPEN_ELEMENTS = 14
 """Beyond this the corners of one stage, two to that power, are too many to visit."""
+
+MOST_OPEN_FIGURES = 12
+"""The same of one part: as many as two amplifiers have, and more than three have of `departures.BASIC`."""
 
 
 @dataclass(frozen=True)
@@ -111,19 +114,42 @@ def _recipe(form: Form, place: Place, pattern: NDArray[np.int8]) -> _Recipe:
             f"the gain either way; at most {MOST_OPEN_ELEMENTS} can be taken to every corner"
         )
     found = set()
+    figures = form.figures()
+    _refuse_too_many(form, sum(is_open[count + first] for first, *_ in figures))
     for extreme in (RISES, FALLS):
         choices = [
             (False, True) if unknown else (direction == extreme,)
             for direction, unknown in zip(pattern.tolist(), is_open, strict=True)
         ]
         element_ends = list(product(*choices[:count]))
-        departure_sets = {place(at_limit) for at_limit in product(*choices[count:])}
+        departure_sets = {place(at_limit) for at_limit in _at_limit(figures, choices[count:])}
         found |= {(ends[::-1], q) for ends in element_ends for q in departure_sets}
     # Ordered by the last element first, as the bits of a number are, then by the part's corner.
     ordered = sorted(found)
     stage_corners = sorted({ends for ends, _ in ordered})
     number = {ends: j for j, ends in enumerate(stage_corners)}
     return _Recipe(tuple(ends[::-1] for ends in stage_corners), tuple((number[ends], q) for ends, q in ordered))
+
+
+def _at_limit(figures: Sequence[tuple[int, ...]], choices: Sequence[tuple[bool, ...]]) -> Iterator[tuple[bool, ...]]:
+    """Which departures are at their limits, at each corner of the part that their choices leave."""
+    ends = [
+        # One with a sign is at an end where one of its two symbols is at the limit and the other 0.
+        [(marked, not marked) for marked in choices[first]]
+        if others and len(choices[first]) == 2
+        else list(product(*(choices[place] for place in (first, *others))))
+        for first, *others in figures
+    ]
+    return (tuple(chain.from_iterable(marks)) for marks in product(*ends))
+
+
+def _refuse_too_many(form: Form, open_figures: int) -> None:
+    if open_figures > MOST_OPEN_FIGURES:
+        raise InputError(
+            f"topology '{form.topology}': {open_figures} figures of its amplifiers may each move the gain of a stage "
+            f"either way, or nothing is proved of it; at most {MOST_OPEN_FIGURES} can be taken to every corner. Leave "
+            "the poorest parts out, or the columns of a quantity that matters least, such as r_icm or cmrr"
+        )
 
 
 @dataclass(frozen=True)

@@ -40,7 +40,8 @@ class PartTable:
     names : ndarray of str, shape (parts,)
         Names.
     nominal : ndarray, shape (departures, parts)
-        Each departure as the typical figure gives it, else the limit, else the job's stand-in, else 0.
+        Each departure as the typical figure gives it, else the limit, else the job's stand-in, else 0; and 0 where its
+        sign is not known.
     worst : ndarray, shape (departures, parts)
         Its upper bound in the worst case; the lower bound is 0.
     evidence : ndarray of uint8, shape (departures, parts)
@@ -224,7 +225,7 @@ def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _
     over_temperature = np.where(hot_given, hot, figure * stand_in.hot_times)
     weaker = np.where(evidence == MISSING, MISSING, ASSUMED) if stand_in.hot_times != 1.0 else evidence
     return _Read(
-        nominal=_as_departure(nominal, np.isnan(nominal), departure),
+        nominal=_as_departure(nominal, np.isnan(nominal) | departure.is_signed, departure),
         worst=worst,
         evidence=evidence.astype(np.uint8),
         worst_hot=np.maximum(worst, _as_departure(over_temperature, evidence == MISSING, departure)),

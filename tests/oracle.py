@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import random
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import mpmath
 import numpy as np
@@ -24,11 +24,18 @@ OPEN = float("inf")
 
 @dataclass(frozen=True)
 class Part:
-    """An op-amp; the default is ideal. a_ol [V/V], complex at a frequency; r_id and r_o [ohm]."""
+    """An op-amp; the default is ideal. a_ol and cmrr, of either sign, [V/V]; all others [ohm].
+
+    r_icp and r_icn are the common-mode resistances from the plus and from the minus input to ground. At a frequency
+    all but r_o may be complex.
+    """
 
     a_ol: float | mpmath.mpc = OPEN
-    r_id: float = OPEN
+    r_id: float | mpmath.mpc = OPEN
     r_o: float = 0.0
+    r_icp: float | mpmath.mpc = OPEN
+    r_icn: float | mpmath.mpc = OPEN
+    cmrr: float | mpmath.mpc = OPEN
 
 
 IDEAL = Part()
@@ -50,6 +57,9 @@ def _tableau(
     ]
     part_of = {a.name: parts if isinstance(parts, Part) else parts[a.name] for a in topology.amplifiers}
     branches += [(f"r_id {a.name}", a.plus, a.minus, part_of[a.name].r_id) for a in topology.amplifiers]
+    for a in topology.amplifiers:
+        common = (("r_icp", a.plus, part_of[a.name].r_icp), ("r_icn", a.minus, part_of[a.name].r_icn))
+        branches += [(f"{figure} {a.name}", pin, GROUND, ohm) for figure, pin, ohm in common if ohm < OPEN]
     sources = list(topology.input)
     names = [
         *(("v", node) for node in nodes),
@@ -86,15 +96,17 @@ def _tableau(
     for amplifier in topology.amplifiers:
         part = part_of[amplifier.name]
         flows(f"out {amplifier.name}", GROUND, amplifier.out)
+        # A common mode of 1 V comes to the output as a difference of 1 V would, CMRR times smaller.
+        of_common = 1 / (2 * mpmath.mpmathify(part.cmrr))
         if part.a_ol == OPEN:
-            voltage(row, amplifier.plus, mpmath.mpf(1))
-            voltage(row, amplifier.minus, mpmath.mpf(-1))
+            voltage(row, amplifier.plus, 1 + of_common)
+            voltage(row, amplifier.minus, of_common - 1)
         else:
             a_ol = mpmath.mpmathify(part.a_ol)
             voltage(row, amplifier.out, mpmath.mpf(1))
             matrix[row, column["i", f"out {amplifier.name}"]] += mpmath.mpf(part.r_o)
-            voltage(row, amplifier.plus, -a_ol)
-            voltage(row, amplifier.minus, a_ol)
+            voltage(row, amplifier.plus, -a_ol * (1 + of_common))
+            voltage(row, amplifier.minus, a_ol * (1 - of_common))
         row += 1
     drive = [mpmath.mpf(1)] if len(sources) == 1 else [mpmath.mpf(1) / 2, mpmath.mpf(-1) / 2]
     if not held and len(sources) == 2:
@@ -147,7 +159,8 @@ def gains(
     ohms : mapping
         Resistances, each of shape (cases,); an element that is 0 everywhere joins its nodes into one.
     parts : sequence
-        For each amplifier a_ol, r_id and r_o, each of shape (cases,).
+        For each amplifier a_ol, r_id, r_o and, unless they are infinite, the other figures of `Part` in its order, each
+        of shape (cases,).
     """
     alias: dict[str, str] = {}
 
@@ -184,18 +197,21 @@ def gains(
             for element in topology.elements
             if np.any(ohms[element.name])
         ]
-        for amplifier, (_, r_id, _) in zip(topology.amplifiers, parts, strict=True):
+        for amplifier, (_, r_id, _, *more) in zip(topology.amplifiers, parts, strict=True):
             branches.append((node(amplifier.plus), node(amplifier.minus), 1.0 / r_id))
+            for pin, r_ic in zip((amplifier.plus, amplifier.minus), more, strict=False):
+                branches.append((node(pin), GROUND, 1.0 / r_ic))
     for first, second, siemens in branches:
         for here, there in ((first, second), (second, first)):
             if here in place:
                 add_voltage(place[here], here, siemens)
                 add_voltage(place[here], there, -siemens)
-    for index, (amplifier, (a_ol, _, r_o)) in enumerate(zip(topology.amplifiers, parts, strict=True)):
+    for index, (amplifier, (a_ol, _, r_o, *more)) in enumerate(zip(topology.amplifiers, parts, strict=True)):
         row, slope = len(unknown) + index, 1.0 / a_ol
+        of_common = 0.5 / more[2] if len(more) > 2 else 0.0
         matrix[:, place[node(amplifier.out)], row] -= 1.0
-        add_voltage(row, node(amplifier.plus), 1.0)
-        add_voltage(row, node(amplifier.minus), -1.0)
+        add_voltage(row, node(amplifier.plus), 1.0 + of_common)
+        add_voltage(row, node(amplifier.minus), of_common - 1.0)
         add_voltage(row, node(amplifier.out), -slope)
         matrix[:, row, row] -= slope * r_o
     if not held:
@@ -243,6 +259,12 @@ def random_values(topology: Topology, rng: random.Random, hertz: float) -> dict[
 def random_part(rng: random.Random) -> Part:
     """A part over the whole range that the screen is meant for."""
     return Part(10.0 ** rng.uniform(2, 9), 10.0 ** rng.uniform(3, 14), 10.0 ** rng.uniform(-2, 4))
+
+
+def random_common_mode(rng: random.Random, part: Part) -> Part:
+    """The same part with all that its common mode does to it, over the whole range."""
+    r_icp, r_icn = (10.0 ** rng.uniform(4, 14) for _ in range(2))
+    return replace(part, r_icp=r_icp, r_icn=r_icn, cmrr=rng.choice([1.0, -1.0]) * 10.0 ** rng.uniform(1, 8))
 
 
 def network(

@@ -14,8 +14,9 @@ from gainassay.contracts.limits import LIMITS, Limit
 from gainassay.errors import InputError
 from gainassay.forms.cache import formulas_of
 from gainassay.forms.coefficients import ComplexArray, FloatArray
-from gainassay.forms.departures import AT_DC, DEPARTURES, FIGURES, OPEN_LOOP_GAIN, Departure
+from gainassay.forms.departures import AT_DC, DEPARTURES, FIGURES, OPEN_LOOP_GAIN, PLACE, RISING, Departure
 from gainassay.forms.evaluation import value
+from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks, calibrated, monte_carlo, rss, stability
 from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
@@ -536,7 +537,7 @@ def _figures(screened: Screened, parts: PartTable, p: int) -> Iterator[Figure]:
     side = screened.part_side
     for index in range(len(side.evidence)):
         departure = FIGURES[index]
-        if not parts.modelled[index]:
+        if not (parts.modelled[index] and _is_in_form(screened.group.form, departure)):
             continue
         evidence = EVIDENCE[side.evidence[index, 0]]
         is_missing = evidence == EVIDENCE[MISSING]
@@ -549,27 +550,38 @@ def _figures(screened: Screened, parts: PartTable, p: int) -> Iterator[Figure]:
         yield Figure(departure.quantity, departure.unit, nominal, worst, evidence, matters, at_worst)
 
 
+def _is_in_form(form: Form, departure: Departure) -> bool:
+    return any(departure in (DEPARTURES[PLACE[symbol]], RISING.get(symbol)) for _, symbol in form.departures)
+
+
 def _at_worst(screened: Screened, departure: Departure) -> str:
     """Where a figure, of which amplifiers, stands at the corner that gives the worst error."""
     group, code = screened.group, int(screened.outcome.corner[0, 0])
     if code == UNBOUNDED:
         return ""
-    _, place = group.method.corner(group.form, screened.stage_side, code)
-    if group.method is CALIBRATED:
-        ends = calibrated.ends(group.form, place)
-        own = [(i, name) for i, (name, symbol) in enumerate(group.form.departures) if symbol == departure.symbol]
-        return "; ".join(f"{amplifier}: {_change(screened, departure, ends[i])}" for i, amplifier in own)
-    at_limits = group.method.at_limits(group.form, screened.stage_side, place)
-    amplifiers = dict.fromkeys(name for name, _ in group.form.departures if (name, departure.symbol) in at_limits)
-    return f"limit ({', '.join(amplifiers)})" if amplifiers else "ideal"
+    method, form = group.method, group.form
+    _, place = method.corner(form, screened.stage_side, code)
+    own = {
+        i: " ".join([amplifier, *_which(DEPARTURES[PLACE[symbol]], symbol)])
+        for i, (amplifier, symbol) in enumerate(form.departures)
+        if departure in (DEPARTURES[PLACE[symbol]], RISING.get(symbol))
+    }
+    if method is CALIBRATED:
+        at = calibrated.departures_at(form, screened.part_side, place, slice(0, 1))
+        return "; ".join(f"{name}: {_change(departure, *at[i, :, 0].tolist())}" for i, name in own.items())
+    at_limits = method.at_limits(form, screened.stage_side, place)
+    names = [name for i, name in own.items() if (i, departure.quantity) in at_limits]
+    return f"limit ({', '.join(names)})" if names else "ideal"
 
 
-def _change(screened: Screened, departure: Departure, end: int) -> str:
-    changed = screened.part_side.changed
-    if changed is None:
-        raise ValueError("these parts do not change")
-    before, after = (
-        f"{departure.figure(value):.6g} {departure.unit}" if value else "ideal"
-        for value in changed[end, :, DEPARTURES.index(departure), 0].tolist()
+def _which(departure: Departure, symbol: str) -> list[str]:
+    """What tells one of a departure's several symbols from the others: its sign, or where it acts."""
+    place = departure.symbols.index(symbol)
+    return ["+-"[place]] if departure.is_signed else [where.replace("_", " ") for where in departure.places[place:][:1]]
+
+
+def _change(departure: Departure, before: float, after: float) -> str:
+    was, becomes = (
+        f"{departure.figure(value):.6g} {departure.unit}" if value else "ideal" for value in (before, after)
     )
-    return f"from {before} to {after}"
+    return f"from {was} to {becomes}"

@@ -15,8 +15,9 @@ from numpy.typing import NDArray
 
 from gainassay import job as jobs
 from gainassay.contracts.evidence import EVIDENCE
-from gainassay.forms.cache import duty_of
-from gainassay.forms.departures import AT_DC, DEPARTURES
+from gainassay.forms.cache import duty_of, form_of
+from gainassay.forms.departures import AT_DC, BASIC, DEPARTURES, derived_with
+from gainassay.forms.form import Form
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
 from gainassay.job import Job, Results
@@ -67,9 +68,18 @@ class Prepared:
             f"{self.parts.source}: there is no column for {quantity}; it is not modelled"
             for quantity in self.parts.not_modelled(self.stages.any_at_frequency())
         )
+        unmodelled += tuple(self._of_calibrated())
         unserved = self.unserved()
         alone = (f"{self.stages.source}: no part is eligible for {_listed(unserved)}",) if unserved else ()
         return (*self.stages.warnings, *self.parts.warnings, *unmodelled, *self._of_stability(), *alone)
+
+    def _of_calibrated(self) -> Iterator[str]:
+        """What the parts table gives and the forms of calibrated stages have not."""
+        if not any(group.calibrated for group in self.stages.groups):
+            return
+        left = set(derived_with(self.parts.modelled)) - set(derived_with(self.parts.modelled, calibrated=True))
+        for departure in sorted(left, key=DEPARTURES.index):
+            yield f"{self.stages.source}: of calibrated stages {departure.quantity} is not modelled"
 
     def _of_stability(self) -> Iterator[str]:
         """What the parts table lacks of what the job asks of stability."""
@@ -144,8 +154,26 @@ def prepare(path: Path, views: bool | None = None) -> Prepared:
     of_stages, of_parts = compared(job.eligible, stage_tables.kinds(topologies))
     stages = stage_tables.load(job.stages, topologies, of_stages)
     parts = part_tables.load(job.parts, job.assume, of_parts)
+    stages = _with_departures(stages, parts)
     eligibility = tuple(eligible.relate(job.eligible, group, parts) for group in stages.groups)
     return Prepared(started, job, topologies, stages, parts, eligibility)
+
+
+def _with_departures(stages: StageTable, parts: PartTable) -> StageTable:
+    """The stages with the forms of all departures that the parts model.
+
+    Raises
+    ------
+    InputError
+        If a form would be too large.
+    """
+    groups = tuple(replace(group, form=_form(group, parts)) for group in stages.groups)
+    return replace(stages, groups=groups)
+
+
+def _form(group: StageGroup, parts: PartTable) -> Form:
+    departures = derived_with(parts.modelled, group.calibrated, group.signals is not None)
+    return group.form if departures == BASIC else form_of(group.topology, departures)
 
 
 def groups_of(prepared: Prepared) -> tuple[Group, ...]:
@@ -168,7 +196,7 @@ def parts_of(group: StageGroup, parts: PartTable) -> PartSide:
     """All parts, under the conditions of a group's stages."""
     limits, evidence = (parts.worst_hot, parts.evidence_hot) if group.hot else (parts.worst, parts.evidence)
     if group.signals is not None:
-        return at_frequency.part_side(parts.nominal, limits, parts.lag(), evidence)
+        return at_frequency.part_side(parts.nominal, limits, parts.lags(), evidence)
     if not group.calibrated:
         return corners.part_side(group.form, parts.nominal[AT_DC], limits[AT_DC], evidence[AT_DC])
     weakest = np.maximum(np.maximum(parts.evidence, evidence), parts.evidence_change)

@@ -10,8 +10,8 @@ import numpy as np
 from gainassay.contracts.documents import nearest
 from gainassay.contracts.evidence import MISSING
 from gainassay.errors import InputError
-from gainassay.forms.cache import formulas_of
-from gainassay.forms.departures import AT_DC
+from gainassay.forms.cache import form_of, formulas_of
+from gainassay.forms.departures import AT_DC, BASIC
 from gainassay.forms.evaluation import value
 from gainassay.forms.expression import Expression
 from gainassay.forms.meaningful import Formulas
@@ -65,7 +65,7 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
     """A form shortened as far as its verified deviation, over all eligible pairs, stays within a share of the accuracy.
 
     Deviations are those of the gain at the nominal elements, with the parts' nominal figures and with their
-    limits, against the exact gain from the form's coefficient functions.
+    limits, against the exact gain from the coefficient functions of the form that formulas are of.
 
     Raises
     ------
@@ -87,7 +87,7 @@ def shorten(prepared: Prepared, topology: Topology, within: float) -> ShortForm:
         raise InputError(f"{prepared.parts.source}: no part is eligible for a stage of the topology '{topology.name}'")
     absent = left_out(topology, group.values)
     formulas = formulas_of(topology, absent)
-    unknown = int(((prepared.parts.evidence == MISSING).any(axis=0) & eligibility.serving()).sum())
+    unknown = int(((prepared.parts.evidence[: len(BASIC)] == MISSING).any(axis=0) & eligibility.serving()).sum())
     found = shorten_formula(formulas.gain.whole, within, _measure(group, prepared.parts, eligibility, formulas))
     stage, part = str(group.names[found.deviation.stage]), str(prepared.parts.names[found.deviation.part])
     if not found.deviation.share <= within:
@@ -114,13 +114,13 @@ def _measure(
 ) -> Callable[[Expression], Deviation]:
     """A function that gives the deviation of a formula over all eligible pairs of a job."""
     pattern, eligible = eligibility.patterns()
-    none = np.full(len(group.names), np.nan)
-    stages = stage_side(group.form, with_tolerances(group.values, np.zeros_like(group.values), group.limits, none))
+    none, form = np.full(len(group.names), np.nan), form_of(group.topology)
+    stages = stage_side(form, with_tolerances(group.values, np.zeros_like(group.values), group.limits, none))
     # The exact gains are the same for every formula that is tried.
     exact = [
         (departures, stages.gain_ideal[:, None] * (1.0 + nominal_errors(stages, products)))
         for departures in (parts.nominal[AT_DC], parts.worst[AT_DC])
-        for products in [part_side(group.form, departures, departures, parts.evidence[AT_DC])]
+        for products in [part_side(form, departures, departures, parts.evidence[AT_DC])]
     ]
     height = max(1, PAIRS_AT_A_TIME // len(parts.names))
 
@@ -129,7 +129,7 @@ def _measure(
         with np.errstate(all="ignore"):
             for top in range(0, len(group.names), height):
                 rows = slice(top, top + height)
-                elements = {name: row[rows, None] for name, row in zip(group.form.elements, group.values, strict=True)}
+                elements = {name: row[rows, None] for name, row in zip(form.elements, group.values, strict=True)}
                 for departures, gains in exact:
                     found = value(formula, {**elements, **formulas.data_sheet(departures[:, None])})
                     share = np.abs(found / gains[rows] - 1.0) / group.limits[rows, None]

@@ -28,14 +28,6 @@ PER_CENT = 1e2
 GAIN = DEPARTURES.index(OPEN_LOOP_GAIN)
 
 
-COLUMNS = (
-    "floor_a_ol",
-    *(f"{verb}_{departure.quantity}" for departure in DEPARTURES for verb in ("has", "need")),
-    *("tolerance_pct", "tolerance_ideal_pct", "tolerance_part_pct"),
-)
-"""Columns of the need table that are found for each group."""
-
-
 def specify(
     groups: Sequence[Group], rules: Rules, workers: int, after_each: Callable[[int], None] | None = None
 ) -> pa.Table:
@@ -56,7 +48,7 @@ def specify(
     summary = summaries.stage_summary(groups, tallies)
     stages, best = (np.array(summary.column(name).to_pylist(), np.str_) for name in ("stage", "best_part"))
     is_outside = (summary.column("pass").to_numpy() + summary.column("unproven").to_numpy()) == 0
-    found = {name: np.full(len(stages), np.nan) for name in COLUMNS}
+    found = {name: np.full(len(stages), np.nan) for name in _columns(groups)}
     is_calibrated, is_tuned = np.zeros((2, len(stages)), dtype=bool)
     for group in groups:
         at = np.searchsorted(stages, group.stage_names)
@@ -88,6 +80,16 @@ def specify(
             name: pa.array(values, mask=~np.isfinite(values)) if isinstance(values, np.ndarray) else values
             for name, values in columns.items()
         },
+    )
+
+
+def _columns(groups: Sequence[Group]) -> tuple[str, ...]:
+    """Columns of the need table that are found for each group."""
+    asked = [departure for departure in DEPARTURES if any(group.form.has(departure) for group in groups)]
+    return (
+        "floor_a_ol",
+        *(f"{verb}_{departure.quantity}" for departure in asked for verb in ("has", "need")),
+        *("tolerance_pct", "tolerance_ideal_pct", "tolerance_part_pct"),
     )
 
 
@@ -124,6 +126,8 @@ def _of_group(
     need = _needed(group, box, has, is_there)
     columns = {"floor_a_ol": floor}
     for kind, departure in enumerate(DEPARTURES):
+        if not group.form.has(departure):
+            continue
         columns[f"has_{departure.quantity}"] = np.where(is_known[kind], figure(departure, has[kind]), np.nan)
         columns[f"need_{departure.quantity}"] = need[kind]
     loosest = _loosest(group)

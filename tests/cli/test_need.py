@@ -14,7 +14,7 @@ import pytest
 
 from gainassay import service
 from gainassay.contracts import tables
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import BASIC, DEPARTURES
 from gainassay.runs.reading import verdicts
 from gainassay.screen import blocks
 
@@ -33,6 +33,12 @@ PARTS = """part,a_ol_min,a_ol_typ,r_id_min,r_o_max
 good,100000,,1M,100
 poor,5000,,100k,300
 typical,,200000,10M,50
+"""
+
+ALL_FIGURES = """part,a_ol_min,a_ol_typ,r_id_min,r_o_max,r_icm_min,cmrr_db_min
+good,100000,,1M,100,1G,120
+poor,5000,,100k,300,100M,90
+typical,,200000,10M,50,1G,120
 """
 
 
@@ -61,7 +67,7 @@ def test_a_need_written_into_the_parts_table_passes_and_a_digit_worse_fails(
     assert row["part"] == "good"
     has = {"part": "own", "a_ol_min": row["has_a_ol"], "r_id_min": row["has_r_id"], "r_o_max": row["has_r_o"]}
     own = []
-    for departure in DEPARTURES:
+    for departure in BASIC:
         need = row[f"need_{departure.quantity}"]
         worse = need * (0.9999 if departure.reciprocal else 1.0001)
         own += [
@@ -84,7 +90,7 @@ def test_the_floor_is_that_of_a_part_ideal_otherwise(here: CommandLineHere, writ
 
 
 def test_every_column_is_as_its_schema_says(here: CommandLineHere, write_job: JobWriter, tmp_path: Path) -> None:
-    job, file = write_job(stages=STAGES, parts=PARTS), tmp_path / "need.parquet"
+    job, file = write_job(stages=STAGES, parts=ALL_FIGURES), tmp_path / "need.parquet"
     shown = rows_of(here("need", job, "--to", file, "--json").out)
     written = pq.read_table(file)
     described = tables.columns("need")
@@ -167,9 +173,9 @@ def test_verdict_tables_hold_needs_on_request(
 ) -> None:
     names = [f"need_{departure.quantity}" for departure in DEPARTURES]
     assert [column.name for column in tables.columns("verdicts") if column.name.startswith("need_")] == names
-    job = write_job("[results]\nneed = true\n[judge]\nguard_band_pct = 10\n", stages=STAGES, parts=PARTS)
+    job = write_job("[results]\nneed = true\n[judge]\nguard_band_pct = 10\n", stages=STAGES, parts=ALL_FIGURES)
     whole = verdicts(service.screen(service.prepare(job)).folder)
-    assert list(whole.columns[-3:]) == names
+    assert list(whole.columns[-5:]) == names
     ratio = whole["need_a_ol"] / whole["part"].astype(str).map({"good": 1e5, "poor": 5e3, "typical": 2e5})
     is_inside = whole["verdict"] != "fail"
     assert (ratio[is_inside] <= 1.0).all()

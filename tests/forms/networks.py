@@ -1,7 +1,7 @@
 """Networks for tests: random ones, and a nodal solve at 60 digits of what the formulas say of them.
 
 The solve shares nothing with the package: every amplifier is a node of its own that a source holds at
-A_OL (v+ - v-), with r_o as a resistor from there to the output.
+A_OL (v+ - v- + (v+ + v-)/(2 CMRR)), with r_o as a resistor from there to the output.
 """
 
 from __future__ import annotations
@@ -17,7 +17,10 @@ from gainassay.forms.topology import GROUND, Topology
 DIGITS = 60
 
 Values = Mapping[str, mpmath.mpf]
-"""By the names that formulas use: impedances of elements, and A, r_id, r_o of amplifiers."""
+"""By the names that formulas use: impedances of elements, and A, r_id, r_o of amplifiers.
+
+Where there are r_icp, r_icn and CMRR, they count; formulas do not know them.
+"""
 
 
 UNSEEN = {
@@ -187,7 +190,14 @@ def return_ratio(topology: Topology, values: Values, amplifier: str) -> mpmath.m
     voltages = solve(topology, values, held=held, forced=amplifier)
     pins = next(a for a in topology.amplifiers if a.name == amplifier)
     suffix = f"_{amplifier}" if len(topology.amplifiers) > 1 else ""
-    return -values[f"A{suffix}"] * (voltages[pins.plus] - voltages[pins.minus])
+    of_plus, of_minus = _gains_of_inputs(values, suffix)
+    return -values[f"A{suffix}"] * (of_plus * voltages[pins.plus] - of_minus * voltages[pins.minus])
+
+
+def _gains_of_inputs(values: Values, suffix: str) -> tuple[mpmath.mpf, mpmath.mpf]:
+    """By how much A_OL is larger from the plus and smaller from the minus input, since the common mode counts."""
+    half = 1 / (2 * values.get(f"CMRR{suffix}", mpmath.inf))
+    return 1 + half, 1 - half
 
 
 def solve(
@@ -207,6 +217,8 @@ def solve(
     for amplifier in topology.amplifiers:
         suffix = f"_{amplifier.name}" if several else ""
         branches.append((amplifier.plus, amplifier.minus, values[f"r_id{suffix}"]))
+        branches.append((amplifier.plus, GROUND, values.get(f"r_icp{suffix}", mpmath.inf)))
+        branches.append((amplifier.minus, GROUND, values.get(f"r_icn{suffix}", mpmath.inf)))
         branches.append((f"inside {amplifier.name}", amplifier.out, values[f"r_o{suffix}"]))
     for first, second, impedance in branches:
         for here, there in ((first, second), (second, first)):
@@ -233,6 +245,7 @@ def solve(
         if amplifier.name == forced:
             hold(f"inside {amplifier.name}", 1)
         else:
-            hold(f"inside {amplifier.name}", 0, {amplifier.plus: a_ol, amplifier.minus: -a_ol})
+            of_plus, of_minus = _gains_of_inputs(values, suffix)
+            hold(f"inside {amplifier.name}", 0, {amplifier.plus: a_ol * of_plus, amplifier.minus: -a_ol * of_minus})
     solution = mpmath.lu_solve(matrix, right)
     return {node: solution[index] for node, index in place.items()}

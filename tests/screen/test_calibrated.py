@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 import oracle
 from gainassay.contracts.moves import MOVES
 from gainassay.forms import soundness
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import BASIC
 from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
@@ -46,7 +46,7 @@ def departing(rng: np.random.Generator, room: Array, limits: Array, change: Arra
     """Data-sheet numbers of one amplifier at calibration and afterwards, as the columns allow."""
     before: list[Array] = []
     after: list[Array] = []
-    for place, departure in enumerate(DEPARTURES):
+    for place, departure in enumerate(BASIC):
         share, later, turn = ends_or_inside(rng, (3, INSIDE))
         c = change[place, 0]
         with np.errstate(divide="ignore"):
@@ -78,8 +78,8 @@ def test_nothing_drawn_exceeds_the_worst_case(topology: Topology, seed: int) -> 
     spreads = np.where(present, [[0.01], [rng.choice([1e-3, 5e-3])], [rng.choice([0.0, 2e-3])]], 0.0) * scale
     spreads[0, ~toleranced] = 0.0
     room = np.array([[10.0 ** -rng.uniform(3, 6)], [10.0 ** -rng.uniform(5, 8)], [10.0 ** rng.uniform(0, 2.5)]])
-    limits = room * np.array([[rng.choice([1.0, 3.0])] for _ in DEPARTURES])
-    change = np.array([[rng.choice([0.0, 0.02, 0.3, np.inf])] for _ in DEPARTURES])
+    limits = room * np.array([[rng.choice([1.0, 3.0])] for _ in BASIC])
+    change = np.array([[rng.choice([0.0, 0.02, 0.3, np.inf])] for _ in BASIC])
     one = box(values[:, None], spreads[:, :, None], np.ones(1), np.full(1, np.nan))
     _, outcome, terms = screened(form, one, room, limits, change)
     found = float(outcome.error_worst[0, 0])

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 import oracle
 from gainassay.contracts.moves import MOVES, TOLERANCE
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import BASIC
 from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
@@ -57,7 +57,7 @@ def scaled(box: StageBox, factor: Array) -> StageBox:
 
 
 def as_departure(kind: int, figures: Array) -> Array:
-    return np.asarray(1.0 / figures if DEPARTURES[kind].reciprocal else figures)
+    return np.asarray(1.0 / figures if BASIC[kind].reciprocal else figures)
 
 
 def worst_at_every_corner(form: Form, box: StageBox, worst: Array) -> Array:
@@ -95,7 +95,7 @@ def test_a_need_put_back_just_passes_at_every_corner_and_one_step_worse_fails(to
     box, table = boxes(topology, rng, 3 if few else 10), some_parts(rng, 2 if few else 5)
     found = needed(Asked(form, box, table[:, None, :], table))
     solved = 0
-    for kind, departure in enumerate(DEPARTURES):
+    for kind, departure in enumerate(BASIC):
         for p, limits in enumerate(table.T):
             figures = found[kind, :, p]
             worst = np.repeat(limits[:, None], len(box.limits), axis=1)
@@ -122,7 +122,7 @@ def test_a_need_put_back_is_at_the_limit_by_nodal_solves(topology: Topology) -> 
         worst = table[:, 0].copy()
         worst[kind] = as_departure(kind, found[kind])[s]
         largest = float(np.abs(corner_errors(topology, box, s, worst)).max())
-        if found[kind, s] == DEPARTURES[kind].poorest:
+        if found[kind, s] == BASIC[kind].poorest:
             assert largest <= box.limits[s]
         else:
             assert largest == pytest.approx(box.limits[s], rel=1e-7)
@@ -256,7 +256,7 @@ def test_a_stage_whose_resistors_track_passes_with_what_it_needs(name: str) -> N
     box = box_of(values, spreads, np.full(3, 0.02), np.full(3, np.nan), network, ratios)
     limits = np.array([[1e-4], [1e-6], [200.0]])
     needs = needed(Asked(form, box, limits[:, :, None], limits))[:, :, 0]
-    for kind, departure in enumerate(DEPARTURES):
+    for kind, departure in enumerate(BASIC):
         assert (needs[kind] != departure.poorest).any()
         worst = np.repeat(limits, 3, axis=1)
         worst[kind] = as_departure(kind, needs[kind])

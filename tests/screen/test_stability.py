@@ -44,7 +44,7 @@ def part(
     c_id: float = 0.0,
 ) -> Dynamics:
     figures = {"a_ol": 1.0 / a_ol, "r_id": 1.0 / r_id, "r_o": r_o, "gbw": 1.0 / gbw, "c_id": 2.0 * np.pi * c_id}
-    nominal = np.array([[figures[figure.quantity]] for figure in FIGURES])
+    nominal = np.array([[figures.get(figure.quantity, 0.0)] for figure in FIGURES])
     return Dynamics(nominal, np.array([gbw]), np.array([second_pole]))
 
 
@@ -220,12 +220,15 @@ def test_a_crossover_on_a_point_of_the_grid_is_found(hertz: float) -> None:
     assert found("follower", {}, part(1e18, hertz))[0] == pytest.approx(hertz, rel=1e-11)
 
 
+ENDS = ((-7, -4), (-7, -5), (0, 3), (-9, -8), (-5, -4), (-8, -4), (-12, -10), (-12, -10))
+"""Decades of the figures of a part, in their order."""
+
+
 def test_no_bit_depends_on_blocks_or_on_what_else_is_looked_at(monkeypatch: pytest.MonkeyPatch) -> None:
     rng = np.random.default_rng(5)
     values = np.array([np.zeros(9), 10 ** rng.uniform(2, 4, 9), 10 ** rng.uniform(3, 6, 9), 10 ** rng.uniform(2, 5, 9)])
     parts = Dynamics(
-        10
-        ** np.array([rng.uniform(low, high, 14) for low, high in ((-7, -4), (-7, -5), (0, 3), (-8, -4), (-12, -10))]),
+        10 ** np.array([rng.uniform(low, high, 14) for low, high in ENDS]),
         10 ** rng.uniform(4, 8, 14),
         10 ** rng.uniform(5, 8, 14),
     )

@@ -22,8 +22,9 @@ FORM = derive(library()["inverting"])
 def judged(evidence: tuple[int, int, int], limit: float, rules: Rules = PLAIN) -> tuple[str, str, str, float, str]:
     values = np.array([[0.0], [1e4], [1e5], [np.inf]])
     stages = stage_side(FORM, with_tolerances(values, np.zeros_like(values), np.array([limit]), np.array([np.nan])))
-    limits = np.array([[1e-5], [1e-7], [50.0]])
-    parts = part_side(FORM, limits, limits, np.array(evidence, np.uint8)[:, None])
+    limits = np.array([[1e-5], [1e-7], [50.0], [0.0], [0.0]])
+    of_part = (*evidence, GUARANTEED, GUARANTEED)
+    parts = part_side(FORM, limits, limits, np.array(of_part, np.uint8)[:, None])
     outcome = screen(stages, parts, active_sets(FORM))
     judgement = judge(stages, parts, outcome, rules)
     leans = leaning(int(judgement.leaning[0, 0]))
@@ -80,11 +81,12 @@ def test_guard_band_and_basis(evidence: int, limit: float, rules: Rules, verdict
 def test_what_does_not_matter_to_a_stage_is_not_leaned_on() -> None:
     values = np.array([[0.0], [1e4], [1e5], [np.inf]])
     stages = stage_side(FORM, with_tolerances(values, np.zeros_like(values), np.array([1e-2]), np.array([np.nan])))
-    limits = np.array([[1e-5], [0.0], [50.0]])
-    parts = part_side(FORM, limits, limits, np.array([[GUARANTEED], [MISSING], [GUARANTEED]], np.uint8))
+    limits = np.array([[1e-5], [0.0], [50.0], [0.0], [0.0]])
+    evidence = np.array([[GUARANTEED], [MISSING], [GUARANTEED], [GUARANTEED], [MISSING]], np.uint8)
+    parts = part_side(FORM, limits, limits, evidence)
     outcome = screen(stages, parts, active_sets(FORM))
-    without = replace(stages, matters=np.array([[True], [False], [True]]))
-    assert stages.matters.all()
+    without = replace(stages, matters=np.array([[True], [False], [True], [False], [False]]))
+    assert stages.matters[:, 0].tolist() == [True, True, True, False, False]
     assert VERDICTS[int(judge(stages, parts, outcome, Rules()).verdict[0, 0])] == "unproven"
     assert VERDICTS[int(judge(without, parts, outcome, Rules()).verdict[0, 0])] == "pass"
 

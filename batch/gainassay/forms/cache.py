@@ -8,7 +8,7 @@ import json
 import logging
 import os
 import tempfile
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import asdict
 from functools import cache
 from pathlib import Path
@@ -17,6 +17,7 @@ from typing import Any, TypeVar
 from platformdirs import user_cache_path
 
 from gainassay.forms import duty, meaningful, soundness
+from gainassay.forms.departures import BASIC, Departure
 from gainassay.forms.duty import Duty, Work
 from gainassay.forms.form import Form, Ratio, derive
 from gainassay.forms.meaningful import Formulas
@@ -43,11 +44,16 @@ def folder() -> Path:
     return Path(chosen) if chosen else user_cache_path("gainassay", appauthor=False)
 
 
-def form_of(topology: Topology) -> Form:
+def form_of(topology: Topology, departures: Sequence[Departure] = BASIC) -> Form:
     """The form of a topology: read from the cache, or derived and kept there.
 
     A cache entry that is damaged in any way is derived anew. A cache folder that cannot be written costs
     time, not the run.
+
+    Parameters
+    ----------
+    departures : sequence of Departure
+        Those that its amplifiers have.
 
     Raises
     ------
@@ -57,11 +63,11 @@ def form_of(topology: Topology) -> Form:
 
     def made() -> Form:
         soundness.network(topology)
-        form = derive(topology)
+        form = derive(topology, departures)
         soundness.function(topology, form)
         return form
 
-    path = folder() / "forms" / f"{_key(topology, FORM_CODE, {})}.json"
+    path = folder() / "forms" / f"{_key(topology, FORM_CODE, {}, departures)}.json"
     return _kept(path, made, asdict, _form)
 
 
@@ -107,9 +113,12 @@ def formulas_of(topology: Topology, absent: Mapping[str, str] | None = None) -> 
     return _kept(path, made, Formulas.to_tree, Formulas.from_tree)
 
 
-def _key(topology: Topology, code: tuple[str, ...], absent: Mapping[str, str]) -> str:
-    """SHA-256 of the topology's content, of what is left out, and of the deriving code."""
-    return _sha256([topology.content_hash(), sorted(absent.items()), _code_hash(code)])
+def _key(
+    topology: Topology, code: tuple[str, ...], absent: Mapping[str, str], departures: Sequence[Departure] = BASIC
+) -> str:
+    """SHA-256 of the topology's content, of what is left out and what is in it, and of the deriving code."""
+    quantities = [departure.quantity for departure in departures]
+    return _sha256([topology.content_hash(), sorted(absent.items()), quantities, _code_hash(code)])
 
 
 @cache

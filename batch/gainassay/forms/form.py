@@ -12,11 +12,12 @@ admittances, in lowest terms. n_k - d_k is subtracted here, as polynomials, so n
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from gainassay.errors import InputError
 from gainassay.forms import nodal
-from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN, Departure, term_name
+from gainassay.forms.departures import BASIC, DEPARTURES, OPEN_LOOP_GAIN, PLACE, Departure, term_name
 from gainassay.forms.multiaffine import MultiAffine
 from gainassay.forms.slopes import Polynomial, Slope, polynomial, slopes
 from gainassay.forms.topology import Topology
@@ -50,7 +51,7 @@ class Form:
     monomials : tuple[tuple[int, ...], ...]
         The products m_k, each as indices into `departures`.
     terms : tuple[str, ...]
-        Name of each term of the error account, one for each monomial.
+        For each monomial the name of the term of the error account that it is part of.
     gain_ideal : Ratio
         G_ideal [gain unit].
     contrasts, loadings : tuple[Ratio, ...]
@@ -74,6 +75,10 @@ class Form:
     denominator: Polynomial
     slopes: tuple[Slope, ...]
 
+    def __hash__(self) -> int:
+        """Of what tells forms apart in practice: all of a form takes milliseconds."""
+        return hash((self.topology, self.elements, self.departures, self.terms))
+
     def loops(self) -> tuple[int, ...]:
         """Places of the monomials that are products of 1/A_OL alone.
 
@@ -84,19 +89,46 @@ class Form:
         return tuple(
             place
             for place, monomial in enumerate(self.monomials)
-            if all(self.departures[departure][1] == OPEN_LOOP_GAIN.symbol for departure in monomial)
+            if all(self.departures[departure][1] in OPEN_LOOP_GAIN.symbols for departure in monomial)
         )
 
+    def has(self, departure: Departure) -> bool:
+        """Whether its amplifiers have a departure."""
+        return any(symbol in departure.symbols for _, symbol in self.departures)
 
-def derive(topology: Topology) -> Form:
+    def figures(self) -> tuple[tuple[int, ...], ...]:
+        """Places of the departures that are one quantity of an amplifier: two, the second against the first, if signed.
+
+        The order is that of the departures.
+        """
+        found: dict[tuple[str, str], list[int]] = {}
+        for place, (amplifier, symbol) in enumerate(self.departures):
+            departure = DEPARTURES[PLACE[symbol]]
+            found.setdefault((amplifier, departure.symbols[0] if departure.is_signed else symbol), []).append(place)
+        return tuple(tuple(places) for places in found.values())
+
+    def accounts(self) -> dict[str, tuple[int, ...]]:
+        """Places of the monomials in each term of the error account, by its name."""
+        found: dict[str, list[int]] = {}
+        for place, name in enumerate(self.terms):
+            found.setdefault(name, []).append(place)
+        return {name: tuple(places) for name, places in found.items()}
+
+
+def derive(topology: Topology, departures: Sequence[Departure] = BASIC) -> Form:
     """The form of a topology.
+
+    Parameters
+    ----------
+    departures : sequence of Departure
+        Those that its amplifiers have.
 
     Raises
     ------
     InputError
         If the ideal gain is zero, infinite or undefined, so that there is no ideal gain to correct.
     """
-    gain = nodal.derive(topology)
+    gain = nodal.derive(topology, departures)
     numerators = gain.numerator.collect(gain.departure_mask())
     denominators = gain.denominator.collect(gain.departure_mask())
     where = topology.where()
@@ -140,8 +172,7 @@ def _departures_in(product: int, first: int) -> tuple[int, ...]:
 
 
 def _name(monomial: tuple[int, ...], departures: tuple[tuple[str, str], ...], several: bool) -> str:
-    by_symbol: dict[str, Departure] = {departure.symbol: departure for departure in DEPARTURES}
-    return term_name([(departures[i][0], by_symbol[departures[i][1]]) for i in monomial], several)
+    return term_name([(departures[i][0], DEPARTURES[PLACE[departures[i][1]]]) for i in monomial], several)
 
 
 class Ratios:

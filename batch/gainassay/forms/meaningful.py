@@ -13,12 +13,12 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, fields
-from itertools import cycle
+from itertools import cycle, islice
 from typing import Any
 
 from gainassay.errors import InputError
 from gainassay.forms import nodal, proof, render
-from gainassay.forms.departures import DEPARTURES, OPEN_LOOP_GAIN
+from gainassay.forms.departures import BASIC, DEPARTURES, OPEN_LOOP_GAIN
 from gainassay.forms.expression import ONE, Expression, Quantity, length, product, quotient, total
 from gainassay.forms.multiaffine import MultiAffine, factors
 from gainassay.forms.nodal import NetworkFunction
@@ -125,7 +125,7 @@ class Formulas:
         amplifiers = [q for q in self.quantities if q.kind not in ("resistor", "capacitor", "inductor")]
         return {
             quantity.name: 1.0 / value if quantity.reciprocal else value
-            for quantity, value in zip(amplifiers, cycle(departures), strict=False)
+            for quantity, value in zip(amplifiers, cycle(islice(departures, len(BASIC))), strict=False)
         }
 
     def stated(self) -> tuple[Stated, ...]:
@@ -267,7 +267,7 @@ def quantities(topology: Topology) -> tuple[Quantity, ...]:
         Quantity(index, element.name, element.kind, reciprocal=True) for index, element in enumerate(topology.elements)
     ]
     taken = {element.name for element in topology.elements}
-    pairs = [(amplifier.name, departure) for amplifier in topology.amplifiers for departure in DEPARTURES]
+    pairs = [(amplifier.name, departure) for amplifier in topology.amplifiers for departure in BASIC]
     styles = ["{quantity}_{amplifier}", "{amplifier}.{quantity}"]
     if len(topology.amplifiers) == 1:
         styles.insert(0, "{quantity}")
@@ -338,7 +338,7 @@ def return_ratio(
     gain: NetworkFunction, named: tuple[Quantity, ...], amplifier: str, writer: Writer | None = None
 ) -> Expression | None:
     """The return ratio of an amplifier, the other amplifiers at work, proved; None if there is no loop."""
-    position = len(gain.elements) + gain.departures.index((amplifier, OPEN_LOOP_GAIN.symbol))
+    position = len(gain.elements) + gain.departures.index((amplifier, *OPEN_LOOP_GAIN.symbols))
     rest, lead = gain.denominator.split(1 << position)
     if not rest or not lead:
         return None

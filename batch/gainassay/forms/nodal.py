@@ -3,24 +3,26 @@
 Unknowns are the voltages of the nodes that no source holds, and the output current i_o of each amplifier.
 Every node but ground has the row of Kirchhoff's current law; each amplifier adds the row
 
-    (v+ - v-) - a v_out - a r_o i_o = 0,    a = 1/A_OL,
+    (v+ - v-) + (v+ + v-) c/2 - a v_out - a r_o i_o = 0,    a = 1/A_OL,
 
 which stays finite as A_OL goes to infinity. An element enters by its admittance y, the input resistance by
-g_id = 1/r_id. Every symbol has rank one in the matrix, so N and D are multi-affine in all of them.
+g_id = 1/r_id, the common-mode resistances from both inputs to ground by g_icp and g_icn. c = 1/CMRR may have either
+sign and is c_pos - c_neg. Every symbol has rank one in the matrix, so N and D are multi-affine in all of them.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import Self
 
 from gainassay.errors import InputError
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import BASIC, Departure
 from gainassay.forms.multiaffine import MultiAffine, TooLargeError, determinant
 from gainassay.forms.topology import GROUND, Topology, driven_by_voltage, output_is_current
 
-MOST_PRODUCTS = 5_000
+MOST_PRODUCTS = 10_000
 """Products of symbols in a determinant; beyond, forms take minutes to find and nobody can read them."""
 
 RIGHT_HAND_SIDE = -1
@@ -74,15 +76,20 @@ class Impedance(NetworkFunction):
     """The driving-point impedance of a topology between two of its nodes."""
 
 
-def derive(topology: Topology) -> Gain:
+def derive(topology: Topology, departures: Sequence[Departure] = BASIC) -> Gain:
     """The gain of a topology.
+
+    Parameters
+    ----------
+    departures : sequence of Departure
+        Those that its amplifiers have.
 
     Raises
     ------
     InputError
         If the nodal equations have no unique solution even with a real amplifier.
     """
-    system = _driven(topology)
+    system = _driven(topology, departures=departures)
     # A balanced pair of voltages is +1 and -1 in place of +1/2 and -1/2, so that coefficients stay integers.
     scale = len(topology.input) if driven_by_voltage(topology) else 1
     numerator = system.output_voltage()
@@ -155,7 +162,12 @@ def feedback(topology: Topology) -> tuple[tuple[tuple[MultiAffine, ...], ...], M
     return brought, systems[0].whole
 
 
-def _driven(topology: Topology, drive: Mapping[str, int] | None = None, is_ideal: bool = False) -> _System:
+def _driven(
+    topology: Topology,
+    drive: Mapping[str, int] | None = None,
+    is_ideal: bool = False,
+    departures: Sequence[Departure] = BASIC,
+) -> _System:
     """The equations of a topology with its input driven, by the signal if nothing else is said.
 
     Raises
@@ -165,7 +177,7 @@ def _driven(topology: Topology, drive: Mapping[str, int] | None = None, is_ideal
     """
     held = driven_by_voltage(topology)
     drive = dict(zip(topology.input, (1, -1), strict=False)) if drive is None else drive
-    system = _System.of(topology, {GROUND: 0, **(drive if held else {})}, {} if held else drive, is_ideal)
+    system = _System.of(topology, {GROUND: 0, **(drive if held else {})}, {} if held else drive, is_ideal, departures)
     if not system.whole:
         raise InputError(
             f"{topology.where()}: its nodal equations have no unique solution; "
@@ -187,9 +199,13 @@ class _System:
 
     @staticmethod
     def of(
-        topology: Topology, potential: Mapping[str, int], injected: Mapping[str, int], is_ideal: bool = False
+        topology: Topology,
+        potential: Mapping[str, int],
+        injected: Mapping[str, int],
+        is_ideal: bool = False,
+        departures: Sequence[Departure] = BASIC,
     ) -> _System:
-        names = _Names.of(topology)
+        names = _Names.of(topology, departures)
         rows, columns = _equations(topology, names, potential, injected)
         if is_ideal:
             elements = (1 << len(names.elements)) - 1
@@ -283,14 +299,20 @@ class _Names:
     departures: tuple[tuple[str, str], ...]
 
     @staticmethod
-    def of(topology: Topology) -> _Names:
+    def of(topology: Topology, departures: Sequence[Departure] = BASIC) -> _Names:
+        symbols = [symbol for departure in departures for symbol in departure.symbols]
         return _Names(
             tuple(element.name for element in topology.elements),
-            tuple((amplifier.name, departure.symbol) for amplifier in topology.amplifiers for departure in DEPARTURES),
+            tuple((amplifier.name, symbol) for amplifier in topology.amplifiers for symbol in symbols),
         )
 
     def symbol(self, name: str | tuple[str, str]) -> MultiAffine:
         return MultiAffine.symbol((*self.elements, *self.departures).index(name))
+
+    def departure(self, amplifier: str, symbol: str) -> MultiAffine:
+        """A departure of an amplifier, 0 where it has none of the kind."""
+        is_there = (amplifier, symbol) in self.departures
+        return self.symbol((amplifier, symbol)) if is_there else MultiAffine({})
 
 
 def _equations(
@@ -331,16 +353,21 @@ def _equations(
     if test:
         add_admittance(*test)
 
-    one = MultiAffine.constant(1)
     for index, amplifier in enumerate(topology.amplifiers):
         row, current = len(unknown) + index, len(nodes) + index
-        a, g_id, r_o = (names.symbol((amplifier.name, departure.symbol)) for departure in DEPARTURES)
-        add_admittance(amplifier.plus, amplifier.minus, g_id)
-        add(row_of[amplifier.out], current, -one)
-        add_voltage(row, amplifier.plus, one)
-        add_voltage(row, amplifier.minus, -one)
+        of = partial(names.departure, amplifier.name)
+        add_admittance(amplifier.plus, amplifier.minus, of("g_id"))
+        add_admittance(amplifier.plus, GROUND, of("g_icp"))
+        add_admittance(amplifier.minus, GROUND, of("g_icn"))
+        add(row_of[amplifier.out], current, MultiAffine.constant(-1))
+        # The row doubled, where c/2 is in it, so that coefficients stay integers.
+        c = of("c_pos") - of("c_neg")
+        whole = MultiAffine.constant(2 if c else 1)
+        a = of("a").times(whole)
+        add_voltage(row, amplifier.plus, c + whole)
+        add_voltage(row, amplifier.minus, c - whole)
         add_voltage(row, amplifier.out, -a)
-        add(row, current, -a.times(r_o))
+        add(row, current, -a.times(of("r_o")))
 
     for node, current_in in injected.items():
         add(row_of[node], RIGHT_HAND_SIDE, MultiAffine.constant(current_in))

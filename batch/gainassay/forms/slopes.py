@@ -18,7 +18,7 @@ from gainassay.forms.multiaffine import MultiAffine
 Polynomial = tuple[tuple[int, tuple[int, ...]], ...]
 """Terms (coefficient, exponent of each variable), in a fixed order."""
 
-MOST_PRODUCTS = 20_000
+MOST_PRODUCTS = 70_000
 """Products of terms that a slope may take to form whole; beyond it forming and bounding it costs more than it saves."""
 
 MOST_SCALED = 4_000_000

@@ -12,7 +12,7 @@ from gainassay.forms.form import Form, Ratio
 from gainassay.forms.multiaffine import factors
 from gainassay.forms.topology import GROUND, Amplifier, Topology, driven_by_voltage, output_is_current
 
-RESERVED = ("s", *(name for departure in DEPARTURES for name in (departure.symbol, departure.quantity)))
+RESERVED = ("s", *(name for departure in DEPARTURES for name in (*departure.symbols, departure.quantity)))
 """Names that a formula gives to an amplifier's own quantities and to the complex frequency."""
 
 

@@ -62,9 +62,14 @@ def text(found: pa.Table) -> list[str]:
 
 def _specification(rows: list[Row]) -> list[str]:
     header = ["  stage", "outlook", f"floor of {OPEN_LOOP_GAIN.quantity}", "best part"]
-    for departure in DEPARTURES:
+    for departure in _asked(rows[0]):
         header += [f"{departure.quantity} at {'least' if departure.reciprocal else 'most'}", "has"]
     return table(header, [list(_line(row)) for row in rows])
+
+
+def _asked(row: Row) -> list[Departure]:
+    """The departures whose figures a row speaks of."""
+    return [departure for departure in DEPARTURES if f"need_{departure.quantity}" in row]
 
 
 def _line(row: Row) -> Iterator[str]:
@@ -72,7 +77,7 @@ def _line(row: Row) -> Iterator[str]:
     yield row["outlook"]
     yield _needed(OPEN_LOOP_GAIN, row["floor_a_ol"])
     yield row["part"] or "-"
-    for departure in DEPARTURES:
+    for departure in _asked(row):
         has = row[f"has_{departure.quantity}"]
         yield _needed(departure, row[f"need_{departure.quantity}"]) if row["part"] else "-"
         yield "-" if has is None else _figure(departure, has)

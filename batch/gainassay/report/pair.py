@@ -6,6 +6,7 @@ import math
 
 from gainassay.cautions import CAUTIONS
 from gainassay.explanation import Explanation, LimitCheck, PortFigure, StabilityFigures, ViewFigures
+from gainassay.forms.departures import BASIC
 from gainassay.report.text import element, ppm, quantity, table
 
 BAR = 24
@@ -100,7 +101,9 @@ def _ports(found: Explanation) -> list[str]:
     if not found.ports:
         return []
     rows = [[f"  {p.symbol}", _port(p), p.meaning] for p in found.ports]
-    return ["Impedances and loop at 0 Hz, with the nominal figures", *table(["", "", ""], rows)[1:], ""]
+    figures = ", ".join(departure.quantity for departure in BASIC)
+    header = f"Impedances and loop at 0 Hz, with the nominal figures of {figures}"
+    return [header, *table(["", "", ""], rows)[1:], ""]
 
 
 def _limit(check: LimitCheck) -> list[str]:

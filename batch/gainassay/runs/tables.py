@@ -114,7 +114,11 @@ def verdict_table(
         "phase_error_deg": number(nothing if outcome.phase is None else outcome.phase.ravel()[kept]),
     }
     if needs is not None:
-        columns |= {f"need_{d.quantity}": number(of.ravel()[kept]) for d, of in zip(DEPARTURES, needs, strict=True)}
+        columns |= {
+            f"need_{departure.quantity}": number(of.ravel()[kept])
+            for departure, of in zip(DEPARTURES, needs, strict=True)
+            if screened.group.form.has(departure)
+        }
     if screened.views is not None:
         columns |= {name: number(values.ravel()[kept]) for name, values in _views_columns(screened.views).items()}
     if margins:

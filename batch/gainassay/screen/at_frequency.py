@@ -47,18 +47,18 @@ from gainassay.screen.response import (
 from gainassay.screen.spots import SpotSide
 
 
-def part_side(nominal: FloatArray, worst: FloatArray, lag: FloatArray, evidence: NDArray[np.uint8]) -> PartSide:
+def part_side(nominal: FloatArray, worst: FloatArray, lags: FloatArray, evidence: NDArray[np.uint8]) -> PartSide:
     """The figures of some parts; products are formed where they meet frequencies.
 
     Parameters
     ----------
     nominal, worst : ndarray, shape (figures, parts)
         In the order of `FIGURES`.
-    lag : ndarray, shape (parts,)
-        1/f of the second pole [1/Hz], 0 where there is none.
+    lags : ndarray, shape (2, parts)
+        What is taken as it stands: the rows of `response.LAGGING` [1/Hz], 0 where there is none.
     evidence : ndarray of uint8, shape (figures, parts)
     """
-    return PartSide(np.vstack([nominal, lag]), np.vstack([worst, lag]), worst, evidence)
+    return PartSide(np.vstack([nominal, lags]), np.vstack([worst, lags]), worst, evidence)
 
 
 def term_names(form: Form) -> tuple[str, ...]:

@@ -10,7 +10,9 @@ worst case; over what is held every combination of ends is visited.
 
 A departure is at calibration anywhere within its limit. Afterwards it has changed by no more than the part says;
 where the part says nothing it may again be anywhere within its limit. What it is at calibration is held, so that it is
-taken to be ideal, too, before and after: each kind of departure in all amplifiers at once.
+taken to be ideal, too, before and after: each kind of departure in all amplifiers at once. One of either sign is in no
+form of calibrated stages: it can turn the direction in which others move the gain, and what is held at a limit on both
+sides of the calibration would have to be visited, too.
 """
 
 from __future__ import annotations
@@ -26,7 +28,7 @@ from numpy.typing import NDArray
 from gainassay.contracts.moves import DRIFT, TEMPERATURE, TOLERANCE
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import Coefficients, FloatArray
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import DEPARTURES, PLACE
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.corners import PartSide, StageSide, elements_terms, ideal_at_dc, is_regular, matters, monomials
@@ -39,6 +41,7 @@ from gainassay.screen.kernel import (
     beyond_corners,
     find_dominant,
     in_blocks,
+    summed,
     undoing,
 )
 from gainassay.screen.signs import FIXED, OPEN, Reach
@@ -70,7 +73,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             known.of[variables:],
         ]
     )
-    visited = visit(form, of[None], _place, 2 * variables)
+    visited = visit(form, of[None], _place, form.figures(), 2 * variables)
     stage = visited.stage
     before = box.values[:, stage] * _all(held, stage, visited.is_upper[variables:])
     factors = factors_at(moving, stage, visited.is_upper[:variables])
@@ -97,6 +100,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             corner_loadings=now.loadings,
             corner_error=error,
             corner_terms=terms,
+            accounts=tuple(form.accounts().values()),
             plans=with_a_bound(tuple(_with_ideal_ones(form, plan) for plan in visited.plans), regular),
             regular=regular,
             matters=matters(form, known.box, now, visited.first),
@@ -114,10 +118,11 @@ def _place(rises: Sequence[bool]) -> int:
 @cache
 def _ideal_sets(form: Form) -> tuple[tuple[bool, ...], ...]:
     """Which of the form's departures may be ideal throughout: first none, and each set that leaves other products."""
-    kinds = [departure.symbol for departure in DEPARTURES]
+    kinds = [PLACE[symbol] for _, symbol in form.departures]
+    different = list(dict.fromkeys(kinds))
     found = {}
-    for are_ideal in combinations((False, True), repeat=len(kinds)):
-        ideal = tuple(are_ideal[kinds.index(symbol)] for _, symbol in form.departures)
+    for are_ideal in combinations((False, True), repeat=len(different)):
+        ideal = tuple(are_ideal[different.index(kind)] for kind in kinds)
         # Of the sets that leave the same products the last is the largest.
         found[tuple(any(ideal[i] for i in monomial) for monomial in form.monomials)] = ideal
     return tuple(found.values())
@@ -163,7 +168,7 @@ def part_side(
     evidence : ndarray of uint8, shape (departures, parts)
         What all this rests on.
     """
-    is_reciprocal = np.array([departure.reciprocal for departure in DEPARTURES])[:, None]
+    is_reciprocal = np.array([departure.reciprocal for departure in DEPARTURES[: len(room)]])[:, None]
     with np.errstate(divide="ignore", invalid="ignore"):
         least = np.where(is_reciprocal, 1.0 / (1.0 + change), np.maximum(0.0, 1.0 - change))
         most = np.where(is_reciprocal, np.where(change < 1.0, 1.0 / (1.0 - change), np.inf), 1.0 + change)
@@ -284,13 +289,17 @@ def _sum(terms: Sequence[FloatArray], start: FloatArray) -> FloatArray:
 
 def _products(form: Form, parts: PartSide, q: int, columns: slice) -> FloatArray:
     """The products m_k at and after calibration at a corner of the part; shape (2, terms, parts)."""
+    return monomials(form, departures_at(form, parts, q, columns)).swapaxes(0, 1)
+
+
+def departures_at(form: Form, parts: PartSide, q: int, columns: slice) -> FloatArray:
+    """The form's departures at and after calibration at a corner of the part; shape (departures, 2, parts)."""
     assert parts.changed is not None
-    place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
     values = [
-        parts.changed[end, :, place[symbol], columns]
+        parts.changed[end, :, PLACE[symbol], columns]
         for end, (_, symbol) in zip(ends(form, q), form.departures, strict=True)
     ]
-    return monomials(form, np.array(values)).swapaxes(0, 1)
+    return np.array(values)
 
 
 def account(
@@ -311,5 +320,8 @@ def account(
         yield shares[at] * share
     yield together[at] * share + (0.0 if outcome.beyond is None else outcome.beyond[rows, columns])
     lift = 1.0 + stages.corner_error[at]
-    for before, after in zip(was.numerators, now.numerators, strict=True):
-        yield (lift * after / now.denominator - before / was.denominator) * share
+
+    def of_product(k: int) -> FloatArray:
+        return (lift * now.numerators[k] / now.denominator - was.numerators[k] / was.denominator) * share
+
+    yield from summed(stages.accounts, of_product)

@@ -12,8 +12,9 @@ depends on the stage and on the whole parts table, never on other stages nor on 
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import cache
 from itertools import product
 
 import numpy as np
@@ -22,7 +23,7 @@ from numpy.typing import NDArray
 from gainassay.contracts.moves import MOVES
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import AnyArray, Coefficients, FloatArray
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import DEPARTURES, PLACE
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.boxes import product as product_of_moves
@@ -33,6 +34,9 @@ from gainassay.screen.visits import MOST_OPEN_ELEMENTS, Factors, Plan, factors_a
 SET_POINT = "set_point"
 TRACKING = "tracking"
 """The term of what the members of networks do together."""
+
+MOST_LISTED = 14
+"""Departures whose corners are listed: those of two amplifiers."""
 
 
 @dataclass(frozen=True)
@@ -57,6 +61,8 @@ class StageSide:
     corner_terms : ndarray, shape (moves x elements + 1, corners)
         Share of each of `MOVES` of each element, then of what the members of all networks do together, in that; with
         `set_point` they sum to it.
+    accounts : tuple[tuple[int, ...], ...]
+        Places of the products m_k in each term of the part's account, in the order of `term_names`.
     plans : tuple[Plan, ...]
         Which corners to visit; every stage is in one of them.
     regular : ndarray of bool, shape (stages,)
@@ -83,6 +89,7 @@ class StageSide:
     corner_loadings: FloatArray
     corner_error: FloatArray
     corner_terms: FloatArray
+    accounts: tuple[tuple[int, ...], ...]
     plans: tuple[Plan, ...]
     regular: NDArray[np.bool_]
     matters: NDArray[np.bool_]
@@ -141,7 +148,7 @@ class PartSide:
 
 def term_names(form: Form) -> tuple[str, ...]:
     """Names of all terms of a row's account, in its order: set-point, elements, networks, departures."""
-    return (SET_POINT, *(f"{name}.{move}" for name in form.elements for move in MOVES), TRACKING, *form.terms)
+    return (SET_POINT, *(f"{name}.{move}" for name in form.elements for move in MOVES), TRACKING, *form.accounts())
 
 
 def moving_terms(names: tuple[str, ...], box: StageBox) -> tuple[str, ...]:
@@ -152,14 +159,54 @@ def moving_terms(names: tuple[str, ...], box: StageBox) -> tuple[str, ...]:
     return tuple(name for name, moving in zip(names, moves, strict=True) if moving)
 
 
-def active_sets(form: Form) -> tuple[tuple[int, ...], ...]:
-    """The sets of products m_k that are not 0 at some corner of the departures' box, each once, smallest first.
+@dataclass(frozen=True)
+class ActiveSets(Sequence[tuple[int, ...]]):
+    """The sets of products m_k that are not 0 at some corner of the departures' box, each in a place of its own.
 
     Every amplifier's departures are taken for themselves: two amplifiers of one part number need not share
-    their errors.
+    their errors. Of a form with more than `MOST_LISTED` departures a set's place is the number whose bits say which
+    of them are at their limits, and a set may stand in several places.
+
+    Attributes
+    ----------
+    masks : tuple[int, ...]
+        For each product the departures in it, as bits.
+    departures : int
+        How many there are.
+    places : Mapping[tuple[int, ...], int] or None
+        The place of each set, smallest sets first; none if they are too many to list.
     """
-    sets = {_active(form, at_limit) for at_limit in product((False, True), repeat=len(form.departures))}
-    return tuple(sorted(sets, key=lambda active: (len(active), active)))
+
+    masks: tuple[int, ...]
+    departures: int
+    places: Mapping[tuple[int, ...], int] | None
+    listed: tuple[tuple[int, ...], ...]
+
+    def __len__(self) -> int:
+        return 1 << self.departures if self.places is None else len(self.listed)
+
+    def __getitem__(self, place: int) -> tuple[int, ...]:  # type: ignore[override]
+        return _active(self.masks, place) if self.places is None else self.listed[place]
+
+    def place(self, at_limit: Sequence[bool]) -> int:
+        """The place of the set where the marked departures are at their limits and the others 0."""
+        bits = sum(1 << departure for departure, marked in enumerate(at_limit) if marked)
+        return bits if self.places is None else self.places[_active(self.masks, bits)]
+
+
+@cache
+def active_sets(form: Form) -> ActiveSets:
+    """The corners of a part, as sets of products."""
+    masks, count = tuple(sum(1 << i for i in monomial) for monomial in form.monomials), len(form.departures)
+    if count > MOST_LISTED:
+        return ActiveSets(masks, count, None, ())
+    sets = sorted({_active(masks, bits) for bits in range(1 << count)}, key=lambda active: (len(active), active))
+    return ActiveSets(masks, count, {active: place for place, active in enumerate(sets)}, tuple(sets))
+
+
+def _active(masks: Sequence[int], bits: int) -> tuple[int, ...]:
+    """The products m_k whose departures are all among the marked ones."""
+    return tuple(k for k, mask in enumerate(masks) if not mask & ~bits)
 
 
 def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> StageSide:
@@ -179,10 +226,9 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
     box = box.at_dc(form.kinds)
     nominal = coefficients.evaluate(form, coefficients.at_dc(form, box.values))
     reference = np.where(np.isnan(box.targets), nominal.gain_ideal, box.targets)
-    places = {active: q for q, active in enumerate(active_sets(form))}
     known = what_is_known(form, box, reached)
     variables = len(known.of) - len(form.departures)
-    visited = visit(form, known.of[None], lambda at_limit: places[_active(form, at_limit)], variables)
+    visited = visit(form, known.of[None], active_sets(form).place, form.figures(), variables)
     stage, box = visited.stage, known.box
     factors = factors_at(box, stage, visited.is_upper)
     values = box.values[:, stage] * product_of_moves(factors.own) * product_of_moves(factors.together)
@@ -205,6 +251,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             corner_loadings=at_corners.loadings,
             corner_error=corner_error,
             corner_terms=terms,
+            accounts=tuple(form.accounts().values()),
             plans=with_a_bound(visited.plans, regular),
             regular=regular,
             matters=matters(form, box, at_corners, visited.first),
@@ -222,11 +269,6 @@ def is_regular(form: Form, at: Coefficients, gain_ideal: FloatArray) -> NDArray[
         & (np.sign(at.gain_ideal) == np.sign(gain_ideal))
         & ~coefficients.is_feedback_positive(form, at)
     )
-
-
-def _active(form: Form, at_limit: Sequence[bool]) -> tuple[int, ...]:
-    """The products m_k that are not 0 where the marked departures are at their limits and the others 0."""
-    return tuple(k for k, monomial in enumerate(form.monomials) if all(at_limit[departure] for departure in monomial))
 
 
 def elements_error(side: StageSide) -> FloatArray:
@@ -262,17 +304,18 @@ def products(form: Form, of_part: AnyArray) -> AnyArray:
 
 def by_amplifier(form: Form, of_part: AnyArray) -> AnyArray:
     """Departures of a part, in the order of `DEPARTURES`, handed to every amplifier; in the order of the form's."""
-    place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
-    return of_part[[place[symbol] for _, symbol in form.departures]]
+    return of_part[[PLACE[symbol] for _, symbol in form.departures]]
 
 
 def figure_names(form: Form) -> tuple[str, ...]:
-    """The data-sheet quantity behind each of the form's departures, with its amplifier where there are several."""
-    quantity = {departure.symbol: departure.quantity for departure in DEPARTURES}
+    """The data-sheet quantity behind each of `Form.figures`, with its amplifier where there are several."""
     several = len({amplifier for amplifier, _ in form.departures}) > 1
-    return tuple(
-        f"{amplifier}.{quantity[symbol]}" if several else quantity[symbol] for amplifier, symbol in form.departures
-    )
+    names = []
+    for amplifier, symbol in (form.departures[first] for first, *_ in form.figures()):
+        departure = DEPARTURES[PLACE[symbol]]
+        where = departure.places[departure.symbols.index(symbol) :][:1]
+        names.append(".".join([amplifier] * several + [departure.quantity, *where]))
+    return tuple(names)
 
 
 def monomials(form: Form, departures: AnyArray) -> AnyArray:
@@ -347,10 +390,8 @@ def matters(form: Form, box: StageBox, at_corners: Coefficients, first: NDArray[
         corners[moved] *= ends[is_upper, moved[:, None], s]
         used[:, s] |= _used(coefficients.evaluate(form, coefficients.at_dc(form, corners))).any(axis=1)
     matters = np.zeros((len(DEPARTURES), values.shape[1]), dtype=bool)
-    for index, departure in enumerate(DEPARTURES):
-        for k, monomial in enumerate(form.monomials):
-            if any(form.departures[i][1] == departure.symbol for i in monomial):
-                matters[index] |= used[k]
+    for k, monomial in enumerate(form.monomials):
+        matters[list({PLACE[form.departures[i][1]] for i in monomial})] |= used[k]
     return matters
 
 

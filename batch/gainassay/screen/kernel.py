@@ -11,8 +11,9 @@ that).
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import reduce
 from typing import Any
 
 import numpy as np
@@ -279,16 +280,24 @@ def account(
         yield shares[at]
     yield together[at] if outcome.beyond is None else together[at] + outcome.beyond[rows, columns]
 
-    is_active = np.zeros((len(parts.worst), len(active_sets)))
-    for place, active in enumerate(active_sets):
-        is_active[list(active), place] = 1.0
+    visited = np.flatnonzero(np.bincount(q.ravel()))
+    is_active = np.zeros((len(parts.worst), len(visited)))
+    for place, code in enumerate(visited.tolist()):
+        is_active[list(active_sets[code]), place] = 1.0
+    q = np.searchsorted(visited, q)
     products = parts.worst[:, columns]
     denominator = np.ones(corner.shape)
     for k, factor in enumerate(products):
         denominator += stages.corner_loadings[k][at] * (is_active[k][q] * factor)
     lift = (1.0 + stages.corner_error[at]) / denominator
-    for k, factor in enumerate(products):
-        yield lift * (stages.corner_contrasts[k][at] * (is_active[k][q] * factor))
+    for term in summed(stages.accounts, lambda k: stages.corner_contrasts[k][at] * (is_active[k][q] * products[k])):
+        yield lift * term
+
+
+def summed(accounts: Sequence[Sequence[int]], of_product: Callable[[int], FloatArray]) -> Iterator[FloatArray]:
+    """Of each term of the part's account what its products m_k give, added in their order."""
+    for products in accounts:
+        yield reduce(np.add, map(of_product, products))
 
 
 def nominal_account(stages: StageSide, parts: PartSide) -> Iterator[FloatArray]:
@@ -300,8 +309,8 @@ def nominal_account(stages: StageSide, parts: PartSide) -> Iterator[FloatArray]:
     numerator, denominator = np.zeros(shape), np.ones(shape)
     add_products(stages.contrasts[..., None], stages.loadings[..., None], parts.nominal, numerator, denominator)
     lift = (1.0 + stages.set_point[:, None]) / denominator
-    for contrast, factor in zip(stages.contrasts, parts.nominal, strict=True):
-        yield lift * (contrast[:, None] * factor)
+    for term in summed(stages.accounts, lambda k: stages.contrasts[k][:, None] * parts.nominal[k]):
+        yield lift * term
 
 
 def _dominant(
@@ -360,19 +369,38 @@ def _dominant_at(
     np.divide(np.abs(raised)[:, None], lift, out=lift)
     magnitude, found, mark = np.empty(shape), np.empty(shape, np.int16), np.empty(shape, np.int16)
     magnitude[:] = np.abs(start)[:, None]
-    # A term's sign is the same along a row; it is carried as the last bit of the term's place.
+    # A term's sign is carried as the last bit of the term's place.
     found[:] = (2 * first + np.signbit(start))[:, None]
-    for k, contrast in zip(active, contrasts, strict=True):
-        if contrast.any():
-            np.multiply(np.abs(contrast)[:, None], products[k], out=size)
+    of_product = {k: contrast for k, contrast in zip(active, contrasts, strict=True) if contrast.any()}
+    for place, members in enumerate(stages.accounts, 1 + len(stages.corner_terms)):
+        inside = {k: of_product[k] for k in members if k in of_product}
+        if inside:
+            is_negative = _magnitude(inside, products, size)
             np.multiply(lift, size, out=size)
             np.greater(size, magnitude, out=larger)
             np.maximum(magnitude, size, out=magnitude)
-            code = 2 * (1 + len(stages.corner_terms) + k) + np.signbit(contrast * raised)
+            code = 2 * place + (is_negative ^ (raised < 0.0)[:, None])
             # Places rise: the largest is the last that exceeded all before it, so the first of the largest.
-            np.maximum(found, np.multiply(larger.view(np.int8), code.astype(np.int16)[:, None], out=mark), out=found)
+            np.maximum(found, np.multiply(larger.view(np.int8), code.astype(np.int16), out=mark), out=found)
     np.multiply(magnitude, 1 - 2 * (found & 1), out=magnitude)
     return found >> 1, magnitude
+
+
+def _magnitude(contrasts: Mapping[int, FloatArray], products: FloatArray, size: FloatArray) -> NDArray[np.bool_]:
+    """Fill in the magnitude of the sum of some products m_k with their contrasts.
+
+    Returns
+    -------
+    ndarray of bool, shape (rows, 1) or (rows, columns)
+        Whether the sum is negative: of one product all along a row.
+    """
+    (first, contrast), *more = contrasts.items()
+    if not more:
+        np.multiply(np.abs(contrast)[:, None], products[first], out=size)
+        return np.asarray(np.signbit(contrast)[:, None])
+    total = reduce(np.add, (contrast[:, None] * products[k] for k, contrast in contrasts.items()))
+    np.abs(total, out=size)
+    return np.asarray(np.signbit(total))
 
 
 def put(target: NDArray[Any], source: NDArray[Any], where: NDArray[np.bool_]) -> None:
@@ -385,8 +413,9 @@ def put(target: NDArray[Any], source: NDArray[Any], where: NDArray[np.bool_]) ->
 
 
 def undoing(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns: slice) -> NDArray[np.int16]:
-    """Place of the term whose loading pulls the denominator furthest below one."""
+    """Place of the term with the product whose loading pulls the denominator furthest below one."""
     first = 1 + len(stages.corner_terms)
+    term_of = {k: term for term, members in enumerate(stages.accounts) for k in members}
     end = np.append(stages.first[1:], stages.corner_loadings.shape[1])
     lowest_loading = np.array([stages.corner_loadings[:, stages.first[s] : end[s]].min(axis=1) for s in rows]).T
     products = parts.worst[:, columns]
@@ -396,5 +425,5 @@ def undoing(stages: StageSide, parts: PartSide, rows: NDArray[np.intp], columns:
         pull = loading[:, None] * factor
         lower = pull < lowest
         np.copyto(lowest, pull, where=lower)
-        np.copyto(place, first + k, where=lower)
+        np.copyto(place, first + term_of[k], where=lower)
     return place

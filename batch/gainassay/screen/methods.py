@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from gainassay.forms.coefficients import FloatArray
+from gainassay.forms.departures import FIGURES, PLACE
 from gainassay.forms.form import Form
 from gainassay.screen import at_frequency, calibrated, corners, kernel, response, spots
 from gainassay.screen.boxes import StageBox
@@ -21,6 +22,7 @@ Side = Any
 """A `StageSide`, or a `SpotSide` of stages at a frequency; a method takes what it makes."""
 
 Gains = tuple[FloatArray, FloatArray]
+AtLimit = tuple[int, str]
 
 
 @dataclass(frozen=True)
@@ -44,7 +46,8 @@ class Method:
     corner : callable
         The stage's and the part's corner that an outcome's `corner` stands for.
     at_limits : callable
-        The amplifiers and symbols that are at their limits at a corner of the part; none of calibrated stages.
+        The form's departures, by place, and the quantities of theirs that are at their limits at a corner of the part;
+        none of calibrated stages.
     """
 
     worst_case: str
@@ -58,7 +61,7 @@ class Method:
     nominal_account: Callable[[Form, Side, PartSide, Outcome], Iterator[FloatArray]]
     gains: Callable[[Form, Side, Outcome], Gains]
     corner: Callable[[Form, Side, int], tuple[int, int]]
-    at_limits: Callable[[Form, Side, int], set[tuple[str, str]]]
+    at_limits: Callable[[Form, Side, int], set[AtLimit]]
 
 
 EVERY = slice(None)
@@ -74,8 +77,9 @@ def _gains(_: Form, stages: StageSide, outcome: Outcome) -> Gains:
     return gain_ideal, reference
 
 
-def _at_limits(form: Form, _: StageSide, place: int) -> set[tuple[str, str]]:
-    return {form.departures[i] for k in active_sets(form)[place] for i in form.monomials[k]}
+def _at_limits(form: Form, _: StageSide, place: int) -> set[AtLimit]:
+    inside = {i for k in active_sets(form)[place] for i in form.monomials[k]}
+    return {(i, FIGURES[PLACE[form.departures[i][1]]].quantity) for i in inside}
 
 
 AT_DC = Method(
@@ -111,10 +115,10 @@ CALIBRATED = Method(
 )
 
 
-def _spot_limits(form: Form, stages: SpotSide, place: int) -> set[tuple[str, str]]:
+def _spot_limits(form: Form, stages: SpotSide, place: int) -> set[AtLimit]:
     ends = stages.part_corners[place]
-    named = enumerate(response.variables(form))
-    return {(amplifier, figure.symbol) for i, (amplifier, figure) in named if ends >> i & 1}
+    at_limit = (one for i, one in enumerate(response.variables(form)) if ends >> i & 1)
+    return {(one.departure, FIGURES[one.place].quantity) for one in at_limit}
 
 
 AT_FREQUENCY = Method(

@@ -110,8 +110,13 @@ def part_samples(lot: Lot, columns: NDArray[np.intp], samples: int) -> FloatArra
     """Samples of the products m_k of some of the parts; shape (terms, parts, samples)."""
     form = lot.form
     drawn = [uniform("part", name, (len(form.departures), samples)) for name in lot.part_names[columns].tolist()]
+    shares = np.stack(drawn, axis=1)
+    for up, *down in form.figures():
+        if down:  # one number of either sign, in two symbols of which one is 0
+            signed = 2.0 * shares[up] - 1.0
+            shares[up], shares[down] = np.maximum(signed, 0.0), np.maximum(-signed, 0.0)
     limits = by_amplifier(form, lot.limits[:, columns])
-    return monomials(form, limits[:, :, None] * np.stack(drawn, axis=1))
+    return monomials(form, limits[:, :, None] * shares)
 
 
 def errors(stages: StageSamples, place: int, products: FloatArray) -> FloatArray:

@@ -25,7 +25,7 @@ from numpy.typing import NDArray
 
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES, Departure
+from gainassay.forms.departures import DEPARTURES, PLACE, Departure
 from gainassay.forms.form import Form
 from gainassay.screen.blocks import Screened
 from gainassay.screen.boxes import StageBox
@@ -103,9 +103,13 @@ def needed(asked: Asked) -> FloatArray:
     -------
     ndarray, shape (departures, stages, parts)
         [unit of the quantity]; `Departure.poorest` where the pair would bear even that, nan where no figure is good
-        enough.
+        enough, and for a quantity that the form has not.
     """
-    return np.stack([figure(departure, bearable(asked, kind)) for kind, departure in enumerate(DEPARTURES)])
+    found = np.full((len(asked.table), len(asked.box.limits), asked.others.shape[2]), np.nan)
+    for kind, (needs, departure) in enumerate(zip(found, DEPARTURES, strict=False)):
+        if asked.form.has(departure):
+            needs[:] = figure(departure, bearable(asked, kind))
+    return found
 
 
 def figure(departure: Departure, limit: FloatArray) -> FloatArray:
@@ -177,10 +181,7 @@ def _bearable_within(asked: Asked, kind: int, reached: float, upto: FloatArray) 
     side = stage_side(asked.form, asked.box, reach(asked.form, table, asked.box.memberships()))
     others = asked.others.copy()
     others[kind] = 1.0
-    degrees = [
-        sum(asked.form.departures[i][1] == DEPARTURES[kind].symbol for i in monomial)
-        for monomial in asked.form.monomials
-    ]
+    degrees = [sum(PLACE[asked.form.departures[i][1]] == kind for i in monomial) for monomial in asked.form.monomials]
     rest, sets = products(asked.form, others), active_sets(asked.form)
     allowed = np.broadcast_to(side.limits[:, None], upto.shape)
     found = _bearable(side, rest, degrees, sets, allowed, upto)

@@ -1,8 +1,9 @@
 """The departures of parts at a frequency, and polynomials in them.
 
 At s = j 2 pi f a departure is x + j f y, x being what it is at 0 Hz and y what rises: 1/A = 1/A_OL + j f/GBW, an input
-admittance 1/r + j f 2 pi c. A second pole of the open-loop gain makes 1/A (x + j f y)(1 + j f/f_2). The products m_k,
-and with them the form, are as at 0 Hz. x and y are the variables of a pair's box, each between 0 and its limit.
+admittance 1/r + j f 2 pi c. A second pole of the open-loop gain makes 1/A (x + j f y)(1 + j f/f_2), and a common-mode
+rejection that falls 1/CMRR likewise. The products m_k, and with them the form, are as at 0 Hz. x and y are the
+variables of a pair's box, each between 0 and its limit.
 
 Complex numbers are kept as real and imaginary parts. A library's complex product may round differently by the place
 of a number in an array, and a verdict must not; and much of what meets here is real.
@@ -19,14 +20,28 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import AnyArray, ComplexArray, FloatArray
-from gainassay.forms.departures import DEPARTURES, FIGURES, OPEN_LOOP_GAIN, RISING, Departure, term_name
+from gainassay.forms.departures import (
+    COMMON_MODE_REJECTION,
+    DEPARTURES,
+    FIGURES,
+    OPEN_LOOP_GAIN,
+    PLACE,
+    RISING,
+    Departure,
+    term_name,
+)
 from gainassay.forms.form import Form
 
-LAG = len(FIGURES)
-"""Place of 1/f_2, the second pole's, behind the figures of a part."""
+LAGGING = {
+    symbol: len(FIGURES) + number
+    for number, departure in enumerate((OPEN_LOOP_GAIN, COMMON_MODE_REJECTION))
+    for symbol in departure.symbols
+}
+"""Places, behind the figures of a part, of 1/f of what makes a departure rise altogether: the open-loop gain's second
+pole, and where the common-mode rejection begins to fall."""
 
-PLACE = {departure.symbol: place for place, departure in enumerate(FIGURES)}
-_BY_SYMBOL = {departure.symbol: departure for departure in DEPARTURES}
+ROWS = len(FIGURES) + 2
+"""Figures and these."""
 
 
 @dataclass(frozen=True)
@@ -99,10 +114,37 @@ def turned(numerator: Split | None, denominator: Split | None, e: Split) -> tupl
 # What a pair's box consists of
 
 
-def variables(form: Form) -> tuple[tuple[str, Departure], ...]:
+@dataclass(frozen=True)
+class Variable:
+    """A figure of the part, as one of the form's departures has it.
+
+    Attributes
+    ----------
+    departure : int
+        Place among the form's.
+    place : int
+        Of the figure in `FIGURES`.
+    """
+
+    departure: int
+    place: int
+
+
+def variables(form: Form) -> tuple[Variable, ...]:
     """The figures of a part in each amplifier: those of the form's departures, then what rises of them."""
-    own = tuple((amplifier, _BY_SYMBOL[symbol]) for amplifier, symbol in form.departures)
-    return (*own, *((amplifier, RISING[symbol]) for amplifier, symbol in form.departures if symbol in RISING))
+    return _variables(form.departures)
+
+
+@cache
+def _variables(departures: tuple[tuple[str, str], ...]) -> tuple[Variable, ...]:
+    own = tuple(Variable(i, PLACE[symbol]) for i, (_, symbol) in enumerate(departures))
+    rising = ((i, RISING[symbol]) for i, (_, symbol) in enumerate(departures) if symbol in RISING)
+    return (*own, *(Variable(i, FIGURES.index(figure)) for i, figure in rising))
+
+
+def figures(form: Form) -> tuple[tuple[int, ...], ...]:
+    """As `Form.figures`, of the variables."""
+    return (*form.figures(), *((i,) for i in range(len(form.departures), len(variables(form)))))
 
 
 def every(form: Form) -> int:
@@ -168,20 +210,20 @@ def _terms(departures: tuple[tuple[str, str], ...], monomials: tuple[tuple[int, 
 
 
 def _figure(symbol: str, part: int) -> Departure:
-    return RISING[symbol] if part == RISES else _BY_SYMBOL[symbol]
+    return RISING[symbol] if part == RISES else DEPARTURES[PLACE[symbol]]
 
 
 def _rank(departures: tuple[tuple[str, str], ...], i: int) -> tuple[int, int]:
     """What is mostly complex comes first, so that few sums or products are multiplied by it."""
     symbol = departures[i][1]
-    return (0 if symbol == OPEN_LOOP_GAIN.symbol else 1 if symbol in RISING else 2, i)
+    return (0 if symbol in OPEN_LOOP_GAIN.symbols else 1 if symbol in RISING else 2, i)
 
 
 def _taken(departures: tuple[tuple[str, str], ...], monomial: tuple[int, ...], i: int) -> tuple[int, ...]:
     """What addends take, one after the other, of a departure in a product."""
     amplifier, symbol = departures[i]
     burdened = any(departures[other][0] == amplifier for other in monomial if other != i)
-    if symbol not in RISING or (symbol == OPEN_LOOP_GAIN.symbol and burdened):
+    if symbol not in RISING or (symbol in OPEN_LOOP_GAIN.symbols and burdened):
         return (WHOLE,)
     return (IN_PHASE, RISES)
 
@@ -194,15 +236,13 @@ class Departing:
 
     Parameters
     ----------
-    figures : ndarray, shape (figures + 1, parts)
-        Those of `FIGURES`, then 1/f_2.
+    figures : ndarray, shape (ROWS, parts)
+        Those of `FIGURES`, then those of `LAGGING`.
     hertz : ndarray, shape (stages, 1) or (stages, parts)
     """
 
     def __init__(self, form: Form, figures: FloatArray, hertz: FloatArray) -> None:
         self._form, self._figures, self._hertz = form, figures, hertz
-        lag = figures[LAG]
-        self._lag = Split(np.ones((1, 1)), self._hertz * lag) if lag.any() else None
         self._found: dict[tuple[str, bool, bool], Split | None] = {}
 
     def at(self, ends: int) -> list[Split | None]:
@@ -225,15 +265,19 @@ class Departing:
     def _departure(self, symbol: str, is_there: bool, rises: bool) -> Split | None:
         key = symbol, is_there, rises
         if key not in self._found:
-            x = self._figures[PLACE[symbol]][None] if is_there else None
-            y = self._figures[PLACE[RISING[symbol].symbol]][None] if rises else None
-            real = x if x is not None and x.any() else None
-            imag = self._hertz * y if y is not None and y.any() else None
-            found = Split(real, imag)
-            is_ideal = real is None and imag is None
-            lags = symbol == OPEN_LOOP_GAIN.symbol and self._lag is not None
-            self._found[key] = None if is_ideal else times(found, self._lag) if lags and self._lag else found
+            real = self._row(PLACE[symbol]) if is_there else None
+            rising = self._row(FIGURES.index(RISING[symbol])) if rises else None
+            found = Split(real, None if rising is None else self._hertz * rising)
+            lag = self._row(LAGGING[symbol]) if symbol in LAGGING else None
+            if lag is not None:
+                found = times(found, Split(np.ones((1, 1)), self._hertz * lag))
+            self._found[key] = None if real is None and rising is None else found
         return self._found[key]
+
+    def _row(self, place: int) -> FloatArray | None:
+        """A figure of the parts, beside the stages; None: it is 0 for all."""
+        row = self._figures[place][None]
+        return row if row.any() else None
 
 
 @dataclass(frozen=True)
@@ -295,18 +339,16 @@ def products(form: Form, figures: FloatArray, hertz: FloatArray) -> ComplexArray
 
 def figures_of(form: Form, of_part: FloatArray) -> FloatArray:
     """Figures of parts, in the order of `FIGURES`, handed to each amplifier's variables."""
-    return of_part[[PLACE[figure.symbol] for _, figure in variables(form)]]
+    return of_part[[variable.place for variable in variables(form)]]
 
 
 def mattering(form: Form, used: NDArray[np.bool_]) -> NDArray[np.bool_]:
     """Which of `FIGURES` matter to stages, from the products that occur in them; shapes (terms, stages)."""
     found = np.zeros((len(FIGURES), used.shape[1]), dtype=bool)
-    for k, monomial in enumerate(form.monomials):
-        for i in monomial:
-            symbol = form.departures[i][1]
-            found[PLACE[symbol]] |= used[k]
-            if symbol in RISING:
-                found[PLACE[RISING[symbol].symbol]] |= used[k]
+    for variable in variables(form):
+        for k, monomial in enumerate(form.monomials):
+            if variable.departure in monomial:
+                found[variable.place] |= used[k]
     return found
 
 

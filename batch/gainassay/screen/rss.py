@@ -2,7 +2,8 @@
 
 Every quantity that moves the gain is taken as independent of all others and rectangular between its ends: each factor
 on an element (`boxes.Range`), each factor common to a network, and each departure of each amplifier between 0 and its
-limit. With every quantity x_i in the middle of its range, a_i its half width (JCGM 100:2008, 4.3.7 and 5.1.2),
+limit, one of either sign between both. With every quantity x_i in the middle of its range, and with its half width a_i
+(JCGM 100:2008, 4.3.7 and 5.1.2),
 
     mean = error(x),    u^2 = sum_i (d error/d ln x_i)^2 (a_i/x_i)^2/3.
 
@@ -103,7 +104,8 @@ def error_and_sensitivities(
     products : ndarray, shape (terms, parts)
         The products m_k with every departure in the middle of its range.
     wanted : sequence of int
-        Places among elements, networks and the form's departures, in this order.
+        Places among elements, networks and the form's figures, in this order. For a figure of either sign, whose
+        middle is 0, the derivative is that in its share of its limit.
 
     Yields
     ------
@@ -116,7 +118,7 @@ def error_and_sensitivities(
     gain, correction = 1.0 + stages.error[:, None], numerator / denominator
     lift = gain / denominator
     yield stages.error[:, None] + gain * correction
-    of_stage = len(stages.slopes.gain_ideal)
+    of_stage, figures = len(stages.slopes.gain_ideal), form.figures()
     for place in wanted:
         rise, load = np.zeros(shape), np.zeros(shape)
         if place < of_stage:
@@ -124,8 +126,10 @@ def error_and_sensitivities(
             add_products(slopes.contrasts[place, ..., None], slopes.loadings[place, ..., None], products, rise, load)
             alone = gain * (1.0 + correction) * slopes.gain_ideal[place, :, None]
         else:
-            inside = [k for k, monomial in enumerate(form.monomials) if place - of_stage in monomial]
-            add_products(contrasts[inside], loadings[inside], products[inside], rise, load)
+            for direction, departure in zip((1.0, -1.0), figures[place - of_stage], strict=False):
+                inside = [k for k, monomial in enumerate(form.monomials) if departure in monomial]
+                moved = direction * products[inside]
+                add_products(contrasts[inside], loadings[inside], moved, rise, load)
             alone = np.zeros(1)
         yield alone + lift * (rise - correction * load)
 
@@ -175,10 +179,10 @@ def _estimate(form: Form, stages: Middle, products: FloatArray) -> tuple[FloatAr
     spreads = root_sum_square(stages.spreads)[:, :, None]
     # One that moves in none of these stages would add 0.
     moving = [place for place, spread in enumerate(spreads) if spread.any()]
-    departures = range(len(spreads), len(spreads) + len(form.departures))
-    found = error_and_sensitivities(form, stages, products, [*moving, *departures])
+    figures = range(len(spreads), len(spreads) + len(form.figures()))
+    found = error_and_sensitivities(form, stages, products, [*moving, *figures])
     mean = next(found)
-    factors = [*(spreads[place] for place in moving), *(RECTANGULAR for _ in departures)]
+    factors = [*(spreads[place] for place in moving), *(RECTANGULAR for _ in figures)]
     return mean, root_sum_square(slope * factor for slope, factor in zip(found, factors, strict=True))
 
 
@@ -191,9 +195,9 @@ class Entry:
     name : str
         Of what moves an element, the joined names of a network's members, or a figure of the part.
     half_width : float
-        Of its range, over the middle.
+        Of its range, over the middle; 1 where that is 0.
     sensitivity : float
-        Derivative of the error in its logarithm.
+        Derivative of the error in its logarithm, or in its share of its limit where its middle is 0.
     """
 
     name: str
@@ -209,7 +213,7 @@ def budget(form: Form, box: StageBox, limits: FloatArray) -> tuple[Entry, ...]:
     """What makes up the uncertainty of one pair; parameters as of `estimates`, for one stage and one part."""
     stages = middle(form, box)
     of_stage = len(form.elements) + box.common.low.shape[1]
-    every = range(of_stage + len(form.departures))
+    every = range(of_stage + len(form.figures()))
     _, *slopes = (
         float(found[0, 0]) for found in error_and_sensitivities(form, stages, in_the_middle(form, limits), every)
     )

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import FloatArray
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import PLACE
 from gainassay.forms.form import Form
 from gainassay.forms.slopes import Polynomial, of_common_factor
 from gainassay.forms.soundness import sign
@@ -24,9 +24,9 @@ from gainassay.screen.boxes import StageBox
 ROUNDING = 1e-12
 """Share of a polynomial's magnitudes that bounds its rounding error: thousands of terms of some tens of factors."""
 
-DECADES = 100
-"""Decades that elements may be away from 1 ohm, all together, and departures from 1: so no product of two of each
-overflows or underflows, and a bound that comes out as 0 is 0."""
+DECADES = 300
+"""Decades that the elements of a stage may be away from 1 ohm, all together, and the departures of two products m_k
+from 1, together with them: so no term of a slope overflows or underflows, and a bound that comes out as 0 is 0."""
 
 TERMS_AT_A_TIME = 4_000_000
 """So that the terms of a long slope, for some stages at a time, take some megabytes; no bit depends on it."""
@@ -97,8 +97,8 @@ class Reach:
     loops : tuple[Bounded, ...]
         The coefficients in D, times that of no departures, that must not be negative; those are left out whose
         sign is known whatever the values.
-    usable : bool
-        Whether the parts' numbers are ones that a proof may rest on.
+    decades : float
+        Decades that a product m_k has to itself of `DECADES`, at most.
     """
 
     form: Form
@@ -111,7 +111,7 @@ class Reach:
     ideal: Bounded
     whole: Bounded
     loops: tuple[Bounded, ...]
-    usable: bool
+    decades: float
 
 
 @dataclass(frozen=True)
@@ -141,8 +141,7 @@ def reach(form: Form, worst: FloatArray, networks: Iterable[tuple[bool, ...]] = 
     networks : iterable
         The sets of elements that make up a network in some stage.
     """
-    place = {departure.symbol: index for index, departure in enumerate(DEPARTURES)}
-    limits = worst[[place[symbol] for _, symbol in form.departures]]
+    limits = worst[[PLACE[symbol] for _, symbol in form.departures]]
     count = len(form.elements)
     loops = {sum(1 << departure for departure in form.monomials[k]): k for k in form.loops()}
     open_loops = [mask for mask, k in loops.items() if form.loadings[k].numerator and not sign(form.loadings[k]) > 0]
@@ -151,6 +150,7 @@ def reach(form: Form, worst: FloatArray, networks: Iterable[tuple[bool, ...]] = 
         mask = sum(e << i for i, e in enumerate(exponents[count:]))
         by_product.setdefault(mask, []).append((value, exponents))
     nothing = (0,) * len(form.departures)
+    decades = _decades(limits).max(axis=1, initial=0.0).tolist()
     # Ideal gain and denominator are taken as parts of one fraction, homogeneous to the same degrees.
     fraction = [exponents[:count] for _, exponents in (*form.numerator, *form.denominator)]
     degrees = np.array(fraction, np.intp).max(axis=0)
@@ -175,7 +175,7 @@ def reach(form: Form, worst: FloatArray, networks: Iterable[tuple[bool, ...]] = 
         ideal=_bounded([term for term in form.numerator if term[1][count:] == nothing], limits, degrees),
         whole=_bounded(form.denominator, limits, degrees),
         loops=tuple(_bounded(_without_departures(by_product[mask], count), limits, degrees) for mask in open_loops),
-        usable=bool(_decades(limits).max(axis=1, initial=0.0).sum() <= DECADES),
+        decades=max((sum(decades[i] for i in monomial) for monomial in form.monomials), default=0.0),
     )
 
 
@@ -304,7 +304,7 @@ def _directions(reached: Reach, box: StageBox) -> Directions:
                 together = np.where(is_network, -_direction(*bounds(slope, low, high)), together)
         together[~common] = FIXED
         decades = _decades(np.where(low.y * high.z == 0.0, 1.0, box.values))
-        proved = reached.usable & (decades.sum(axis=0) <= DECADES) & (box.ends()[0] > 0.0).all(axis=0)
+        proved = (decades.sum(axis=0) + 2.0 * reached.decades <= DECADES) & (box.ends()[0] > 0.0).all(axis=0)
         of_ideal, of_whole = (_sign(*bounds(polynomial, low, high)) for polynomial in (reached.ideal, reached.whole))
         proved &= (of_ideal != 0) & (of_whole != 0)
         for polynomial in reached.loops:

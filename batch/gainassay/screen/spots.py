@@ -19,7 +19,7 @@ from gainassay.forms.coefficients import AnyArray, Coefficients, ComplexArray, F
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.corners import elements_terms
-from gainassay.screen.response import Meeting, figures_of, mattering, products, variables
+from gainassay.screen.response import Meeting, figures, figures_of, mattering, products, variables
 from gainassay.screen.signs import FALLS, FIXED, OPEN, RISES
 from gainassay.screen.visits import Factors, Plan, factors_at, visit, with_a_bound
 
@@ -183,7 +183,7 @@ def stage_side(form: Form, box: StageBox, farthest: FloatArray) -> SpotSide:
     with np.errstate(divide="ignore", invalid="ignore"):
         complex_reference = times(nominal.gain_ideal, references / magnitude)
     known = _directions(form, at_spots, hertz, farthest, np.isfinite(signals.phase_limits)[of_stage])
-    visited = visit(form, known, _mask, len(known[0]) - len(variables(form)))
+    visited = visit(form, known, _mask, figures(form), len(known[0]) - len(variables(form)))
     spot = visited.stage
     factors = factors_at(at_spots, spot, visited.is_upper)
     values = at_spots.values[:, spot] * product(factors.own) * product(factors.together)
@@ -314,8 +314,8 @@ def _slopes(form: Form, box: StageBox, values: FloatArray, hertz: FloatArray, fa
     pairs = coefficients.at_frequency(form, values, hertz)
     at, slope = coefficients.evaluate(form, pairs), coefficients.slopes(form, pairs)
     reach = figures_of(form, farthest)
-    figures = np.column_stack([np.zeros_like(reach), reach, SHARE * reach, *np.diag(reach)])
-    moves = _moves(form, box, hertz, at, slope, figures, reach)
+    of_parts = np.column_stack([np.zeros_like(reach), reach, SHARE * reach, *np.diag(reach)])
+    moves = _moves(form, box, hertz, at, slope, of_parts, reach)
     with np.errstate(divide="ignore", invalid="ignore"):
         share = _apart(lambda part: np.nan_to_num(np.abs(part) / np.abs(part).sum(axis=0)).max(axis=1), moves)
     least, most = (_apart(lambda part, end=end: end(part, axis=1), moves) for end in (np.min, np.max))
@@ -328,18 +328,18 @@ def _moves(
     hertz: FloatArray,
     at: Coefficients,
     slope: Slopes,
-    figures: FloatArray,
+    of_parts: FloatArray,
     reach: FloatArray,
 ) -> ComplexArray:
     """By how much each element, network and figure moves ln(gain) over its range; shape (variables, parts, spots).
 
     Parameters
     ----------
-    figures : ndarray, shape (variables of the part, parts)
-        Of the parts with which slopes are looked at.
+    of_parts : ndarray, shape (variables of the part, parts)
+        The figures with which slopes are looked at.
     reach : ndarray, shape (variables of the part,)
     """
-    m = products(form, figures, hertz)
+    m = products(form, of_parts, hertz)
     top, bottom = 1.0 + _total(at.contrasts + at.loadings, m), 1.0 + _total(at.loadings, m)
 
     def change(contrasts: ComplexArray, loadings: ComplexArray, moved: ComplexArray) -> ComplexArray:
@@ -361,7 +361,7 @@ def _moves(
         for place, wide in enumerate(common):
             found.append(np.where((box.network == place)[:, None], of_elements, 0.0).sum(axis=0) * wide)
         for i, most in enumerate(reach):
-            moved = figures.copy()
+            moved = of_parts.copy()
             moved[i] += most
             found.append(change(at.contrasts, at.loadings, products(form, moved, hertz) - m))
         moves = np.array(found)

@@ -74,8 +74,8 @@ class Dynamics:
             found[place] = self.nominal[place]
             if departure is OPEN_LOOP_GAIN:
                 found[place] = (found[place] + 1j * (hertz / self.gbw)) * (1.0 + 1j * (hertz / pole))
-            elif departure.symbol in RISING:
-                found[place] += 1j * (hertz * self.nominal[FIGURES.index(RISING[departure.symbol])])
+            elif departure.symbols[0] in RISING:
+                found[place] += 1j * (hertz * self.nominal[FIGURES.index(RISING[departure.symbols[0]])])
         return found
 
 
@@ -122,7 +122,7 @@ class Margins:
 def amplifiers(form: Form) -> tuple[str, ...]:
     """The amplifiers of a form, each of which has a loop."""
     inside = {departure for monomial in form.monomials for departure in monomial}
-    is_loop = [symbol == OPEN_LOOP_GAIN.symbol and i in inside for i, (_, symbol) in enumerate(form.departures)]
+    is_loop = [symbol in OPEN_LOOP_GAIN.symbols and i in inside for i, (_, symbol) in enumerate(form.departures)]
     return tuple(amplifier for (amplifier, _), loop in zip(form.departures, is_loop, strict=True) if loop)
 
 
@@ -175,7 +175,7 @@ def margins_of(looked: Looked, amplifier: str, wanted: NDArray[np.bool_] | None 
 
 def inverse_loop_gain(form: Form, amplifier: str, loadings: ComplexArray, of_part: ComplexArray) -> ComplexArray:
     """1/T of an amplifier from the loadings d_k and the products m_k, broadcast against each other behind axis k."""
-    place = form.departures.index((amplifier, OPEN_LOOP_GAIN.symbol))
+    place = form.departures.index((amplifier, *OPEN_LOOP_GAIN.symbols))
     is_own = [place in monomial for monomial in form.monomials]
     own = _total(loadings[is_own], of_part[is_own])
     return own if all(is_own) else own / (1.0 + _total(loadings[np.invert(is_own)], of_part[np.invert(is_own)]))

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms.coefficients import FloatArray, Pairs
-from gainassay.forms.departures import DEPARTURES
+from gainassay.forms.departures import DEPARTURES, PLACE
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.signs import (
@@ -106,10 +106,9 @@ def _slack(reached: Reach, box: StageBox) -> Slack:
 
 def _powers(form: Form, polynomial: Bounded) -> list[Powers]:
     """The exponents of each of its products, those of all amplifiers together."""
-    kinds = [departure.symbol for departure in DEPARTURES]
-    found = np.zeros((len(polynomial.powers), len(kinds)), np.intp)
+    found = np.zeros((len(polynomial.powers), len(DEPARTURES)), np.intp)
     for index, (_, symbol) in enumerate(form.departures):
-        found[:, kinds.index(symbol)] += polynomial.powers[:, index]
+        found[:, PLACE[symbol]] += polynomial.powers[:, index]
     return [tuple(row) for row in found.tolist()]
 
 

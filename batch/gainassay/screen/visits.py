@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
-from itertools import product
+from itertools import chain, product
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +21,9 @@ Place = Callable[[tuple[bool, ...]], int]
 
 MOST_OPEN_ELEMENTS = 14
 """Beyond this the corners of one stage, two to that power, are too many to visit."""
+
+MOST_OPEN_FIGURES = 12
+"""The same of one part: as many as two amplifiers have, and more than three have of `departures.BASIC`."""
 
 
 @dataclass(frozen=True)
@@ -101,7 +104,9 @@ class _Recipe:
     corners: tuple[tuple[int, int], ...]
 
 
-def _recipe(form: Form, place: Place, patterns: NDArray[np.int8], count: int) -> _Recipe:
+def _recipe(
+    form: Form, place: Place, patterns: NDArray[np.int8], figures: Sequence[tuple[int, ...]], count: int
+) -> _Recipe:
     """For the largest and for the smallest of each quantity, all ends of the variables of open direction."""
     found = set()
     for pattern in patterns:
@@ -111,19 +116,41 @@ def _recipe(form: Form, place: Place, patterns: NDArray[np.int8], count: int) ->
                 f"topology '{form.topology}': {sum(is_open[:count])} elements of a stage may each move "
                 f"the gain either way; at most {MOST_OPEN_ELEMENTS} can be taken to every corner"
             )
+        _refuse_too_many(form, sum(is_open[count + first] for first, *_ in figures))
         for extreme in (RISES, FALLS):
             choices = [
                 (False, True) if unknown else (direction == extreme,)
                 for direction, unknown in zip(pattern.tolist(), is_open, strict=True)
             ]
             element_ends = list(product(*choices[:count]))
-            departure_sets = {place(at_limit) for at_limit in product(*choices[count:])}
+            departure_sets = {place(at_limit) for at_limit in _at_limit(figures, choices[count:])}
             found |= {(ends[::-1], q) for ends in element_ends for q in departure_sets}
     # Ordered by the last element first, as the bits of a number are, then by the part's corner.
     ordered = sorted(found)
     stage_corners = sorted({ends for ends, _ in ordered})
     number = {ends: j for j, ends in enumerate(stage_corners)}
     return _Recipe(tuple(ends[::-1] for ends in stage_corners), tuple((number[ends], q) for ends, q in ordered))
+
+
+def _at_limit(figures: Sequence[tuple[int, ...]], choices: Sequence[tuple[bool, ...]]) -> Iterator[tuple[bool, ...]]:
+    """Which departures are at their limits, at each corner of the part that their choices leave."""
+    ends = [
+        # One with a sign is at an end where one of its two symbols is at the limit and the other 0.
+        [(marked, not marked) for marked in choices[first]]
+        if others and len(choices[first]) == 2
+        else list(product(*(choices[place] for place in (first, *others))))
+        for first, *others in figures
+    ]
+    return (tuple(chain.from_iterable(marks)) for marks in product(*ends))
+
+
+def _refuse_too_many(form: Form, open_figures: int) -> None:
+    if open_figures > MOST_OPEN_FIGURES:
+        raise InputError(
+            f"topology '{form.topology}': {open_figures} figures of its amplifiers may each move the gain of a stage "
+            f"either way, or nothing is proved of it; at most {MOST_OPEN_FIGURES} can be taken to every corner. Leave "
+            "the poorest parts out, or the columns of a quantity that matters least, such as r_icm or cmrr"
+        )
 
 
 @dataclass(frozen=True)
@@ -147,13 +174,15 @@ class Visited:
     plans: tuple[Plan, ...]
 
 
-def visit(form: Form, known: NDArray[np.int8], place: Place, count: int) -> Visited:
+def visit(form: Form, known: NDArray[np.int8], place: Place, figures: Sequence[tuple[int, ...]], count: int) -> Visited:
     """The corners to visit, from what is known of each stage.
 
     Parameters
     ----------
     known : ndarray of int8, shape (quantities, variables, stages)
         As in `signs.Directions`, for each quantity whose extremes are looked for.
+    figures : sequence of tuples of int
+        The variables of the part that are one quantity, as `Form.figures` gives them.
     count : int
         Of the variables how many, the first, belong to the stage.
 
@@ -165,7 +194,7 @@ def visit(form: Form, known: NDArray[np.int8], place: Place, count: int) -> Visi
     # Two of the same pattern visit the same corners; there are few patterns.
     patterns, pattern_of = np.unique(known, axis=2, return_inverse=True)
     pattern_of = pattern_of.reshape(-1)
-    recipes = [_recipe(form, place, pattern, count) for pattern in np.moveaxis(patterns, 2, 0)]
+    recipes = [_recipe(form, place, pattern, figures, count) for pattern in np.moveaxis(patterns, 2, 0)]
     counts = np.array([len(recipe.ends) for recipe in recipes], np.intp)[pattern_of]
     first = np.concatenate([[0], np.cumsum(counts)[:-1]])
     stage = np.repeat(np.arange(len(counts)), counts)

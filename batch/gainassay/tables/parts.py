@@ -27,7 +27,7 @@ from gainassay.tables.raw import RawTable
 from gainassay.tables.rejects import Reject, rejected_rows
 
 PER_PCT = 1e-2
-SECOND_POLE = "f_second_pole_hz"
+SECOND_POLE, CMRR_CORNER = "f_second_pole_hz", "f_cmrr_hz"
 
 
 @dataclass(frozen=True)
@@ -41,7 +41,8 @@ class PartTable:
     names : ndarray of str, shape (parts,)
         Names.
     nominal : ndarray, shape (figures, parts)
-        Each departure as the typical figure gives it, else the limit, else the job's stand-in, else 0.
+        Each departure as the typical figure gives it, else the limit, else the job's stand-in, else 0; and 0 where its
+        sign is not known.
     worst : ndarray, shape (figures, parts)
         Its upper bound in the worst case; the lower bound is 0.
     evidence : ndarray of uint8, shape (figures, parts)
@@ -59,6 +60,8 @@ class PartTable:
         a frequency: that is always modelled.
     second_pole : ndarray, shape (parts,), or None
         Frequency of the second pole of the open-loop gain [Hz], nan where a cell is blank; none without such a column.
+    cmrr_corner : ndarray, shape (parts,)
+        Frequency above which the common-mode rejection falls [Hz], nan where none is given.
     compared : Mapping[str, Cells]
         The columns that rules compare with the stages'.
     operating : Operating
@@ -80,6 +83,7 @@ class PartTable:
     evidence_change: NDArray[np.uint8]
     modelled: tuple[bool, ...]
     second_pole: FloatArray | None
+    cmrr_corner: FloatArray
     compared: Mapping[str, Cells]
     operating: Operating
     rejects: tuple[Reject, ...]
@@ -99,11 +103,12 @@ class PartTable:
         known = zip(FIGURES, self.modelled, strict=True)
         return tuple(d.quantity for d, there in known if not there and (at_frequency or d in DEPARTURES))
 
-    def lag(self) -> FloatArray:
-        """1/f of the second pole of the open-loop gain [1/Hz], 0 where none is known; shape (parts,)."""
-        if self.second_pole is None:
-            return np.zeros(len(self.names))
-        return np.where(np.isnan(self.second_pole), 0.0, 1.0 / self.second_pole)
+    def lags(self) -> FloatArray:
+        """1/f of the second pole and of where the common-mode rejection falls [1/Hz], 0 for none; shape (2, parts)."""
+        poles = np.array(
+            [self.second_pole if self.second_pole is not None else np.full(len(self.names), np.nan), self.cmrr_corner]
+        )
+        return np.where(np.isnan(poles), 0.0, 1.0 / poles)
 
     def gbw(self) -> FloatArray:
         """The nominal gain-bandwidth product [Hz]; nan where the table has none. Shape (parts,)."""
@@ -134,6 +139,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
     checks: list[Checking] = []
     figures: list[list[_Read]] = []
     poles: list[FloatArray] = []
+    cmrr_corners: list[FloatArray] = []
     limits: list[Operating] = []
     for block in sources.blocks(source, known):
         if not checks:
@@ -141,6 +147,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         checking = Checking.of(block)
         figures.append([_departure(checking, one, assume.get(one.quantity, StandIn())) for one in FIGURES])
         poles.append(checking.column(tables.column("parts", SECOND_POLE)).values)
+        cmrr_corners.append(checking.column(tables.column("parts", CMRR_CORNER)).values)
         limits.append(operating.read_parts(checking))
         # Its text is done with: a table may be larger than the memory.
         checks.append(checking.only(kept))
@@ -166,6 +173,7 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
         evidence_change=_of_all(figures, "evidence_change", order),
         modelled=tuple(one.modelled for one in figures[0]),
         second_pole=gathered(poles, order) if SECOND_POLE in raw.header else None,
+        cmrr_corner=gathered(cmrr_corners, order),
         compared={name: column.at(order) for name, column in cells.items()},
         operating=operating.of_all(limits, order),
         rejects=checking.found(),
@@ -240,7 +248,7 @@ def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _
     over_temperature = np.where(hot_given, hot, figure * stand_in.hot_times)
     weaker = np.where(evidence == MISSING, MISSING, ASSUMED) if stand_in.hot_times != 1.0 else evidence
     return _Read(
-        nominal=_as_departure(nominal, np.isnan(nominal), departure),
+        nominal=_as_departure(nominal, np.isnan(nominal) | departure.is_signed, departure),
         worst=worst,
         evidence=evidence.astype(np.uint8),
         worst_hot=np.maximum(worst, _as_departure(over_temperature, evidence == MISSING, departure)),

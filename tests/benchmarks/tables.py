@@ -1,10 +1,11 @@
 """How long tables take to be read and checked, as ratios to what pyarrow takes to read the same files.
 
     python tests/benchmarks/tables.py [ROWS]
+    python tests/benchmarks/tables.py --large [GB]
 
 The goals, for a million parts of 15 columns: from Parquet in the order of pyarrow's own read and one second; from CSV
 within three times pyarrow's own read; from a database as its driver allows. Peak memory is that of a process that does
-nothing else.
+nothing else. `--large` measures CSV files of some 2 GB instead, a long one and a wide one.
 """
 
 from __future__ import annotations
@@ -26,9 +27,11 @@ from gainassay.job import Source
 from gainassay.tables import parts
 
 COLUMNS = 15
+CELLS = 1_500_000
+"""Of the block that a large file repeats."""
 
 
-def table(rows: int) -> pa.Table:
+def table(rows: int, width: int = COLUMNS) -> pa.Table:
     """Parts with a fifth of their figures blank, and columns that nothing reads."""
     rng = np.random.default_rng(2031)
 
@@ -45,7 +48,7 @@ def table(rows: int) -> pa.Table:
         "r_o_typ": figures(1, 10),
         "r_o_max": figures(10, 100),
     }
-    others = {f"other_{place}": figures(1, 100) for place in range(COLUMNS - len(columns))}
+    others = {f"other_{place}": figures(1, 100) for place in range(width - len(columns))}
     return pa.table({**columns, **others})
 
 
@@ -54,10 +57,10 @@ def as_text(cells: pa.ChunkedArray) -> pa.ChunkedArray:
     return cells.cast(pa.string())
 
 
-def seconds(work: Callable[[], object]) -> float:
-    """The best of three."""
+def seconds(work: Callable[[], object], times: int = 3) -> float:
+    """The best of some times."""
     found = []
-    for _ in range(3):
+    for _ in range(times):
         started = time.perf_counter()
         work()
         found.append(time.perf_counter() - started)
@@ -76,7 +79,38 @@ def peak(path: Path, table: str) -> float:
     return int(done.stdout) / 2**20
 
 
+def write_large(path: Path, size: int, width: int) -> int:
+    """A CSV file of at least so many bytes, whose rows have names of their own and repeat each other's figures."""
+    rows = CELLS // width
+    block, count = table(rows, width), 0
+    with path.open("wb") as file, pacsv.CSVWriter(file, block.schema) as writer:
+        while file.tell() < size:
+            names = pa.array([f"amp-{(number * 7919) % rows:06d}-{count:06d}" for number in range(rows)])
+            writer.write_table(block.set_column(0, "part", names))
+            count += 1
+    return count * rows
+
+
+def large(gigabytes: float) -> None:
+    """Print what CSV files of that size take, a long one and a wide one."""
+    print(f"{'rows':>12}{'columns':>9}{'MB':>7}{'own s':>8}{'ours s':>8}{'ratio':>7}{'peak GiB':>10}")
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder, "parts.csv")
+        for width in (COLUMNS, 20 * COLUMNS):
+            rows = write_large(path, int(gigabytes * 1e9), width)
+            own = seconds(lambda: pacsv.read_csv(path), times=1)
+            ours = seconds(lambda: parts.load(Source("parts", str(path)), {}), times=1)
+            print(
+                f"{rows:12,}{width:9}{path.stat().st_size / 1e6:7.0f}{own:8.1f}{ours:8.1f}{ours / own:7.1f}"
+                f"{peak(path, ''):10.2f}",
+                flush=True,
+            )
+
+
 def main() -> None:
+    if sys.argv[1:2] == ["--large"]:
+        large(float(sys.argv[2]) if len(sys.argv) > 2 else 2.0)
+        return
     rows = int(sys.argv[1]) if len(sys.argv) > 1 else 1_000_000
     with tempfile.TemporaryDirectory() as folder:
         home = Path(folder)

@@ -53,6 +53,5 @@ def read(checking: Checking) -> Bandwidths:
     least, typical, pole = (
         checking.column(tables.column("parts", name)).values for name in ("gbw_min", "gbw_typ", SECOND_POLE)
     )
-    for position in np.flatnonzero(typical < least).tolist():
-        checking.refuse(position, "gbw_min, gbw_typ", "the minimum lies above the typical figure")
+    checking.refuse_where(typical < least, "gbw_min, gbw_typ", "the minimum lies above the typical figure")
     return Bandwidths(least, typical, pole, SECOND_POLE in checking.raw.columns)

@@ -1,10 +1,12 @@
 """How long tables take to be read and checked, as ratios to what pyarrow takes to read the same files.
 
     python tests/benchmarks/tables.py [ROWS]
+    python tests/benchmarks/tables.py --large [GB]
 
 The goals, for a million parts of 15 columns: from Parquet in the order of pyarrow's own read and one second; from CSV
-within three times pyarrow's own read; from a database as its driver allows. Peak memory is that of a process that does
-nothing else.
+within three times pyarrow's own read; from a database as its driver allows. Beside each time by the clock stands the
+processors' (`cpu`), which others' work lengthens less. Peak memory is that of a process that does
+nothing else. `--large` measures CSV files of some 2 GB instead, a long one and a wide one.
 """
 
 from __future__ import annotations
@@ -15,6 +17,7 @@ import sys
 import tempfile
 import time
 from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -26,9 +29,13 @@ from gainassay.job import Source
 from gainassay.tables import parts
 
 COLUMNS = 15
+CELLS = 1_500_000
+"""Of the block that a large file repeats."""
+
+TITLES = ("MB", "own s", "ours s", "ratio", "more s", "own cpu", "ours cpu", "ratio", "peak GiB")
 
 
-def table(rows: int) -> pa.Table:
+def table(rows: int, width: int = COLUMNS) -> pa.Table:
     """Parts with a fifth of their figures blank, and columns that nothing reads."""
     rng = np.random.default_rng(2031)
 
@@ -45,7 +52,7 @@ def table(rows: int) -> pa.Table:
         "r_o_typ": figures(1, 10),
         "r_o_max": figures(10, 100),
     }
-    others = {f"other_{place}": figures(1, 100) for place in range(COLUMNS - len(columns))}
+    others = {f"other_{place}": figures(1, 100) for place in range(width - len(columns))}
     return pa.table({**columns, **others})
 
 
@@ -54,14 +61,14 @@ def as_text(cells: pa.ChunkedArray) -> pa.ChunkedArray:
     return cells.cast(pa.string())
 
 
-def seconds(work: Callable[[], object]) -> float:
-    """The best of three."""
+def seconds(work: Callable[[], object], times: int = 3) -> tuple[float, float]:
+    """By the clock, and of all threads' work together; the best of some times."""
     found = []
-    for _ in range(3):
-        started = time.perf_counter()
+    for _ in range(times):
+        started = time.perf_counter(), time.process_time()
         work()
-        found.append(time.perf_counter() - started)
-    return min(found)
+        found.append((time.perf_counter() - started[0], time.process_time() - started[1]))
+    return min(clock for clock, _ in found), min(work for _, work in found)
 
 
 def peak(path: Path, table: str) -> float:
@@ -76,7 +83,43 @@ def peak(path: Path, table: str) -> float:
     return int(done.stdout) / 2**20
 
 
+def print_titles() -> None:
+    print(f"{'':18}", *(f"{title:>9}" for title in TITLES))
+
+
+def print_line(name: str, path: Path, own: tuple[float, float], ours: tuple[float, float], peak: float) -> None:
+    clock, work = ours[0] / own[0], ours[1] / own[1]
+    figures = (path.stat().st_size / 1e6, own[0], ours[0], clock, ours[0] - own[0], own[1], ours[1], work, peak)
+    print(f"{name:18}", *(f"{figure:9.2f}" for figure in figures), flush=True)
+
+
+def write_large(path: Path, size: int, width: int) -> int:
+    """A CSV file of at least so many bytes, whose rows have names of their own and repeat each other's figures."""
+    rows = CELLS // width
+    block, count = table(rows, width), 0
+    with path.open("wb") as file, pacsv.CSVWriter(file, block.schema) as writer:
+        while file.tell() < size:
+            names = pa.array([f"amp-{(number * 7919) % rows:06d}-{count:06d}" for number in range(rows)])
+            writer.write_table(block.set_column(0, "part", names))
+            count += 1
+    return count * rows
+
+
+def large(gigabytes: float) -> None:
+    """Print what CSV files of that size take, a long one and a wide one."""
+    print_titles()
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder, "parts.csv")
+        for width in (COLUMNS, 20 * COLUMNS):
+            rows = write_large(path, int(gigabytes * 1e9), width)
+            own, ours = partial(pacsv.read_csv, path), partial(parts.load, Source("parts", str(path)), {})
+            print_line(f"{rows:,} x {width}", path, seconds(own, times=1), seconds(ours, times=1), peak(path, ""))
+
+
 def main() -> None:
+    if sys.argv[1:2] == ["--large"]:
+        large(float(sys.argv[2]) if len(sys.argv) > 2 else 2.0)
+        return
     rows = int(sys.argv[1]) if len(sys.argv) > 1 else 1_000_000
     with tempfile.TemporaryDirectory() as folder:
         home = Path(folder)
@@ -104,7 +147,7 @@ def main() -> None:
             return lambda: parts.load(Source("parts", str(home / name), table=table), {})
 
         print(f"{rows:,} rows x {numbers.num_columns} columns")
-        print(f"{'':18}{'MB':>6}{'own s':>8}{'ours s':>8}{'ratio':>7}{'more s':>8}{'peak GiB':>10}")
+        print_titles()
         for name, own, said in (
             ("numbers.parquet", lambda: pq.read_table(home / "numbers.parquet"), ""),
             ("text.parquet", lambda: pq.read_table(home / "text.parquet"), ""),
@@ -112,12 +155,7 @@ def main() -> None:
             ("units.csv", lambda: pacsv.read_csv(home / "units.csv"), ""),
             ("numbers.sqlite", driver, "parts"),
         ):
-            theirs, ours = seconds(own), seconds(load(name, said))
-            size = (home / name).stat().st_size / 1e6
-            print(
-                f"{name:18}{size:6.0f}{theirs:8.2f}{ours:8.2f}{ours / theirs:7.1f}{ours - theirs:8.2f}"
-                f"{peak(home / name, said):10.2f}"
-            )
+            print_line(name, home / name, seconds(own), seconds(load(name, said)), peak(home / name, said))
 
 
 if __name__ == "__main__":

@@ -84,17 +84,21 @@ class Checking:
 
     def refuse(self, position: int, column: str, reason: str) -> None:
         """Reject the row at `position` for its cell in `column` (several columns: joined by commas)."""
-        value = ", ".join(self.cell(name, position) for name in column.split(", "))
-        self._add(position, column, reason, value, self.cell(self.raw.key, position))
+        self.refuse_all(column, {position: reason})
+
+    def refuse_where(self, where: NDArray[np.bool_], column: str, reason: str) -> None:
+        """Reject the rows where a mask holds, as `refuse` one."""
+        self.refuse_all(column, dict.fromkeys(np.flatnonzero(where).tolist(), reason))
 
     def refuse_all(self, column: str, reasons: Mapping[int, str]) -> None:
-        """Reject many rows for their cells in one column, each with its reason by its position."""
+        """Reject rows for their cells in `column` (several columns: joined by commas), each with its own reason."""
         if not reasons:
             return
         places = pa.array(reasons.keys(), pa.int64())
-        values, names = (self._shown(name, places) for name in (column, self.raw.key))
-        for (position, reason), value, name in zip(reasons.items(), values, names, strict=True):
-            self._add(position, column, reason, value, name)
+        cells = zip(*(self._shown(name, places) for name in column.split(", ")), strict=True)
+        names = self._shown(self.raw.key, places)
+        for (position, reason), values, name in zip(reasons.items(), cells, names, strict=True):
+            self._add(position, column, reason, ", ".join(values), name)
 
     def _add(self, position: int, column: str, reason: str, value: str, name: str) -> None:
         if (position, column) not in self.refused:

@@ -123,9 +123,8 @@ def read_compared(checking: Checking, compared: Compared) -> dict[str, Cells]:
     found = {column.name: _cells(checking, column, is_word=False) for column in compared.numbers}
     found |= {column.name: _cells(checking, column, is_word=True) for column in compared.words}
     for low, high in compared.ranges:
-        for position in np.flatnonzero(found[low].values > found[high].values):
-            if checking.good()[position]:
-                checking.refuse(int(position), f"{low}, {high}", "the low end of the range lies above its high end")
+        crossed = (found[low].values > found[high].values) & checking.good()
+        checking.refuse_where(crossed, f"{low}, {high}", "the low end of the range lies above its high end")
     return found
 
 

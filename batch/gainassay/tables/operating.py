@@ -51,6 +51,5 @@ def _read(checking: Checking, table: str, names: Sequence[str]) -> Operating:
     found = {name: checking.column(tables.column(table, name)).values for name in names}
     for low, high, fault in ORDERED:
         if low in found:
-            for position in np.flatnonzero(found[low] > found[high]):
-                checking.refuse(int(position), f"{low}, {high}", fault)
+            checking.refuse_where(found[low] > found[high], f"{low}, {high}", fault)
     return found

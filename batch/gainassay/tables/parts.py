@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -263,10 +263,11 @@ def _refuse_crossed(
     checking: Checking, departure: Departure, limit_column: str, limit: FloatArray, column: str, typical: FloatArray
 ) -> None:
     crossed = typical < limit if departure.reciprocal else typical > limit
-    for position in np.flatnonzero(crossed):
-        named = f"{_filled_column(checking, limit_column, position)}, {_filled_column(checking, column, position)}"
-        relation = "the minimum lies above" if departure.reciprocal else "the maximum lies below"
-        checking.refuse(int(position), named, f"{relation} the typical figure")
+    relation = "the minimum lies above" if departure.reciprocal else "the maximum lies below"
+    for limits, is_limit in _givers(checking, limit_column):
+        for figures, is_figure in _givers(checking, column):
+            where = crossed & is_limit & is_figure
+            checking.refuse_where(where, f"{limits}, {figures}", f"{relation} the typical figure")
 
 
 def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tuple[FloatArray, NDArray[np.uint8]]:
@@ -292,8 +293,8 @@ def _figure(checking: Checking, name: str) -> tuple[FloatArray, NDArray[np.bool_
     for column in tables.columns("parts"):
         if column.in_place_of == name:
             other = checking.column(column)
-            for position in np.flatnonzero(~own.blank & ~other.blank):
-                checking.refuse(int(position), f"{name}, {column.name}", "both are given; give one of the two")
+            both = ~own.blank & ~other.blank
+            checking.refuse_where(both, f"{name}, {column.name}", "both are given; give one of the two")
             values = np.where(given, values, _from_decibel(column, other))
             given = given | ~other.blank
     return values, given
@@ -308,7 +309,11 @@ def _from_decibel(column: Column, cells: Numbers) -> FloatArray:
     return np.asarray(ratios[np.asarray(coded.indices)])
 
 
-def _filled_column(checking: Checking, name: str, position: np.intp) -> str:
-    """The column, of those that give a figure, in which a row gives it."""
-    names = [name, *(column.name for column in tables.columns("parts") if column.in_place_of == name)]
-    return next((n for n in names if checking.cell(n, int(position)).strip()), name)
+def _givers(checking: Checking, name: str) -> Iterator[tuple[str, NDArray[np.bool_]]]:
+    """The columns that may give a figure, and where each does, being the first that is filled."""
+    left = np.ones(len(checking.raw.rows), dtype=bool)
+    for column in tables.columns("parts"):
+        if name in (column.name, column.in_place_of):
+            blank = checking.column(column).blank
+            yield column.name, left & ~blank
+            left &= blank

@@ -59,7 +59,7 @@ def _tableau(
     branches += [(f"r_id {a.name}", a.plus, a.minus, part_of[a.name].r_id) for a in topology.amplifiers]
     for a in topology.amplifiers:
         common = (("r_icp", a.plus, part_of[a.name].r_icp), ("r_icn", a.minus, part_of[a.name].r_icn))
-        branches += [(f"{figure} {a.name}", pin, GROUND, ohm) for figure, pin, ohm in common if ohm < OPEN]
+        branches += [(f"{figure} {a.name}", pin, GROUND, ohm) for figure, pin, ohm in common if ohm != OPEN]
     sources = list(topology.input)
     names = [
         *(("v", node) for node in nodes),

@@ -64,9 +64,11 @@ class Prepared:
 
     def warnings(self) -> tuple[str, ...]:
         """Everything that a user should know before believing the results."""
+        # The others that are not modelled are named by the run's summary and manifest.
         unmodelled = tuple(
-            f"{self.parts.source}: there is no column for {quantity}; it is not modelled"
-            for quantity in self.parts.not_modelled(self.stages.any_at_frequency())
+            f"{self.parts.source}: there is no column for {departure.quantity}; it is not modelled"
+            for departure in BASIC
+            if departure.quantity in self.parts.not_modelled(at_frequency=False)
         )
         unmodelled += tuple(self._of_calibrated())
         unserved = self.unserved()

@@ -33,7 +33,7 @@ def test_a_table_of_another_country_becomes_a_job(here: CommandLineHere, write_j
     (home / "job.toml").write_text(f'stages.from = "stages.csv"\n{out}', encoding="utf-8")
     parts = service.prepare(home / "job.toml").parts
     assert parts.names.tolist() == ["A1", "A2"]
-    assert parts.worst[AT_DC, 0].tolist() == [1 / 2e5, 1 / 1.5e6, 75.0]
+    assert parts.worst[AT_DC, 0].tolist() == [1 / 2e5, 1 / 1.5e6, 75.0, 0.0, 0.0]
     assert parts.nominal[2].tolist() == [50.0, 40.0]
     assert '# "Package" is like no column' in out
 
@@ -52,7 +52,7 @@ def test_a_table_of_another_country_becomes_a_job(here: CommandLineHere, write_j
         ("AolMin (dB)", ["90", "95"], "a_ol_db_min"),
         ("A_OL_MIN_HOT [dB]", ["90", "95"], "a_ol_db_min_hot"),
         ("Gain bandwidth typ (MHz)", ["1"], {"is": "gbw_typ", "unit": "MHz"}),
-        ("Common mode input resistance typ", ["1G"], None),
+        ("Common mode input resistance typ", ["1G"], "r_icm_typ"),
         ("Colour", ["red"], None),
     ],
 )

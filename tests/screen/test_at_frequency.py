@@ -179,7 +179,7 @@ ONE_AMPLIFIER = [topology for topology in LIBRARY.values() if len(topology.ampli
 @pytest.mark.oracle
 @pytest.mark.parametrize("topology", ONE_AMPLIFIER, ids=lambda topology: topology.name)
 def test_common_mode(topology: Topology) -> None:
-    """With common-mode input resistance and capacitance, and a rejection that falls, of the sign that is nominal here."""
+    """With common-mode input resistance and capacitance, and a rejection that falls; all of them nominally."""
     rng = random.Random(f"{topology.name} common mode")
     form = derive(topology, DEPARTURES)
     # Every variable is at its limit nominally: so that the rejection does not cancel, only its positive part is in.

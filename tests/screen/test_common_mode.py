@@ -27,7 +27,7 @@ LIBRARY = library()
 FIGURES = 6
 """Of an amplifier, as `oracle.gains` takes them."""
 
-POINTS = 3_000
+POINTS = 2_000
 ALL = slice(0, 1)
 
 

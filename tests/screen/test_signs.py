@@ -261,7 +261,7 @@ def test_a_table_with_poorer_parts_changes_no_number_beyond_rounding() -> None:
 
 def test_numbers_beyond_all_use_are_not_leaned_on() -> None:
     form = derive(LIBRARY["inverting"])
-    values = np.array([[0.0], [1e-160], [1e5], [np.inf]])
+    values = np.array([[0.0], [1e-300], [1e5], [np.inf]])
     box = with_tolerances(values, np.array([[0.0], [0.1], [0.1], [0.0]]), np.ones(1), np.array([np.nan]))
     limits = np.array([[1e-5], [1e-7], [50.0]])
     assert corners(stage_side(form, box, reach(form, limits)))[0] == corners(stage_side(form, box))[0]

@@ -38,7 +38,7 @@ def load(job: Path) -> PartTable:
 def test_columns_go_by_their_own_names(write_job: JobWriter) -> None:
     found = load(write_job(COLUMNS, parts=THEIRS))
     assert found.names.tolist() == ["A"]
-    assert found.worst[AT_DC, 0].tolist() == [1 / 2e5, 1 / 1.5e6, 75.0]
+    assert found.worst[AT_DC, 0].tolist() == [1 / 2e5, 1 / 1.5e6, 75.0, 0.0, 0.0]
     (reject,) = found.rejects
     assert (reject.row, reject.name, reject.column, reject.value) == (3, "B", "Zin (MOhm)", "x")
     assert found.columns.found == ()
@@ -51,7 +51,7 @@ def test_a_value_stands_in_every_row(write_job: JobWriter) -> None:
     job = write_job('[parts.columns]\nr_o_max = { value = "1k2" }\n', parts="part,a_ol_min\nA,1e5\nB,2e5\n")
     found = load(job)
     assert found.worst[2].tolist() == [1200.0, 1200.0]
-    assert found.modelled[AT_DC] == (True, False, True)
+    assert found.modelled[AT_DC] == (True, False, True, False, False)
 
 
 def test_what_is_said_of_two_columns_is_called_by_both_names(write_job: JobWriter) -> None:

@@ -110,6 +110,11 @@ def test_a_limit_may_equal_the_typical_figure(write_job: JobWriter) -> None:
         ({"r_o_typ": "40"}, "r_o = { typical_times = 2, value = 300 }", ("r_o", 40.0, 80.0, "typical")),
         ({}, "r_o = { typical_times = 2, value = 300 }", ("r_o", 300.0, 300.0, "assumed")),
         ({"r_o_max": "0"}, "", ("r_o", 0.0, 0.0, "guaranteed")),
+        # Common mode: of the CMRR's sign nothing is known, so that it is nominally none.
+        ({"r_icm_min": "10M", "r_icm_typ": "100M"}, "", ("r_icm", 1e-8, 1e-7, "guaranteed")),
+        ({"cmrr_db_min": "80", "cmrr_db_typ": "100"}, "", ("cmrr", 0.0, 1e-4, "guaranteed")),
+        ({"cmrr_typ": "1e5"}, "cmrr = { typical_times = 0.5 }", ("cmrr", 0.0, 2e-5, "typical")),
+        ({}, "cmrr = { value = 1000 }", ("cmrr", 0.0, 1e-3, "assumed")),
         ({}, "", ("r_o", 0.0, 0.0, "missing")),
     ],
 )
@@ -139,7 +144,7 @@ def test_what_has_no_column_and_no_stand_in_is_not_modelled(
 ) -> None:
     row = {"part": "amp", **dict.fromkeys(columns, "100")}
     parts = load(write_job(f"[assume]\n{assume}\n", parts=[row]))
-    assert parts.not_modelled(at_frequency=False) == not_modelled
+    assert parts.not_modelled(at_frequency=False) == (*not_modelled, "r_icm", "cmrr")
     assert {departure(parts, quantity) for quantity in not_modelled} <= {(0.0, 0.0, "guaranteed")}
 
 

@@ -245,7 +245,7 @@ def _determinant(topology: Topology, rows: list[dict[int, MultiAffine]], columns
     if found is None or len(found.terms) > MOST_PRODUCTS:
         raise InputError(
             f"{topology.where()}: its elements are meshed too densely: the determinant of its nodal equations has more "
-            f"than {MOST_PRODUCTS:,} products; split the network into stages"
+            f"than {MOST_PRODUCTS:,} products; split the network into stages, or leave columns of r_icm and cmrr out"
         )
     return found
 

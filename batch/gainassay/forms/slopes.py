@@ -21,6 +21,9 @@ Polynomial = tuple[tuple[int, tuple[int, ...]], ...]
 MOST_PRODUCTS = 70_000
 """Products of terms that a slope may take to form whole; beyond it forming and bounding it costs more than it saves."""
 
+MOST_PACKED = 31
+"""Variables whose two exponents fit into one integer."""
+
 MOST_SCALED = 4_000_000
 """Products of terms that the slope of a common factor may take."""
 
@@ -68,11 +71,11 @@ def of_common_factor(numerator: Polynomial, denominator: Polynomial, members: Se
     Returns
     -------
     Polynomial or None
-        None where it would take more than `MOST_SCALED` products of terms.
+        None where it would take more than `MOST_SCALED` products of terms, or has more than `MOST_PACKED` variables.
     """
-    if len(numerator) * len(denominator) > MOST_SCALED:
-        return None
     variables = len(denominator[0][1])
+    if len(numerator) * len(denominator) > MOST_SCALED or variables > MOST_PACKED:
+        return None
     chosen = sum(1 << i for i, member in enumerate(members) if member)
     (top, over), (bottom, under) = (_masks(polynomial) for polynomial in (numerator, denominator))
     counts = [np.bitwise_count(masks & chosen).astype(np.int64) for masks in (top, bottom)]

@@ -78,12 +78,10 @@ def verdict_table(
     def words(codes: NDArray[np.integer], meanings: Sequence[str]) -> pa.Array:
         """Coded words as a dictionary that holds each once: pyarrow writes one with repeats as plain text, whose
         missing cells are whatever lay in memory."""
-        once = list(dict.fromkeys(meanings))
-        place = np.array(
-            [once.index(meaning) for meaning in meanings] if len(once) < len(meanings) else range(len(once))
-        )
+        once = {meaning: place for place, meaning in enumerate(dict.fromkeys(meanings))}
+        place = np.array([once[meaning] for meaning in meanings])
         return pa.DictionaryArray.from_arrays(
-            pa.array(place[codes].astype(np.int32), mask=codes < 0), pa.array(once, pa.string())
+            pa.array(place[codes].astype(np.int32), mask=codes < 0), pa.array(list(once), pa.string())
         )
 
     def meant(codes: NDArray[np.int32], meaning: Callable[[int], str]) -> pa.Array:

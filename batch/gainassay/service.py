@@ -220,7 +220,7 @@ def box_of(group: StageGroup) -> StageBox:
 
 def bounds_of(group: StageGroup, parts: PartTable) -> Bounds:
     """The operating limits of a group's stages and all parts."""
-    asked = limits.conditions(group.form, duty_of(group.topology), group.values, group.operating)
+    asked = limits.conditions(group.form, duty_of(group.topology), group.values, group.operating, group.signals)
     return limits.bounds(asked, parts.operating)
 
 

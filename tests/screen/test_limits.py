@@ -57,6 +57,11 @@ def margin(found: Screened, name: str) -> float:
     return float(dict(limits.margins(found.group.bounds))[name][0, 0])
 
 
+INTEGRATOR = {"topology": "integrator", "r1": "1k", "c1": "1n", "r2": "1e12", "r_load": ""}
+"""Its output current flows into c1: 10 V times 2 pi 10 kHz 1 nF."""
+
+BAND = {"frequency_hz": "", "f_min_hz": "100", "f_max_hz": "10k"}
+
 EDGES = [
     # limit, cells of the stage, column of the part, its edge, and whether more of it is worse
     ("output_swing", {}, "v_swing_headroom_max", 5.0, True),
@@ -68,6 +73,8 @@ EDGES = [
     ("output_current", {}, "i_out_max", 6e-3, False),
     ("output_current", {"v_in_dc": "-0.2"}, "i_out_max", 7.2e-3, False),
     ("output_current", {"r_load": ""}, "i_out_max", 1e-3, False),
+    ("output_current", INTEGRATOR, "i_out_max", 2.0 * math.pi * 1e4 * 1e-9 * 10.0, False),
+    ("output_current", {**INTEGRATOR, **BAND}, "i_out_max", 2.0 * math.pi * 1e4 * 1e-9 * 10.0, False),
     ("input_range", {}, "v_cm_headroom_low_max", 14.0, True),
     ("input_range", {}, "v_cm_headroom_high_max", 14.0, True),
     ("input_range", {"v_ground": "13"}, "v_cm_headroom_low_max", 12.0, True),
@@ -75,6 +82,7 @@ EDGES = [
     ("input_range", {"v_in_dc": "0.2"}, "v_cm_headroom_high_max", 13.8, True),
     ("input_range", {"v_out_peak": "2", "v_supply": "20", "v_ground": "0.1"}, "v_cm_headroom_low_max", -0.1, True),
     ("slew_rate", {}, "slew_rate_v_us_min", SLOPE, False),
+    ("slew_rate", BAND, "slew_rate_v_us_min", SLOPE, False),
     ("full_power", {}, "full_power_hz_min", 10e3, False),
     ("full_power", {}, "v_full_power_peak", 5.0, False),
     ("stable_gain", {}, "gain_stable_min", 10.0, True),

@@ -7,6 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+POINTS = 65
+"""At which what a stage asks of its amplifiers is looked at in a band."""
+
 
 @dataclass(frozen=True)
 class Signals:
@@ -25,6 +28,14 @@ class Signals:
     hertz: NDArray[np.float64]
     is_band: NDArray[np.bool_]
     phase_limits: NDArray[np.float64]
+
+    def points(self) -> NDArray[np.float64]:
+        """Frequencies of each stage, in a band spread over it, as many for all [Hz]; shape (points, stages)."""
+        single = np.where(np.isnan(self.hertz), self.hertz[0], self.hertz)
+        if not self.is_band.any():
+            return single
+        ends = np.where(self.is_band, self.hertz[:2], single[[0, 0]])
+        return np.concatenate([single, np.geomspace(ends[0], ends[1], POINTS)])
 
     def highest(self) -> NDArray[np.float64]:
         """The highest frequency of each stage [Hz], nan at 0 Hz; shape (stages,)."""

@@ -5,19 +5,21 @@ Every comparison comes down to
     margin = (what the stage leaves) - (what the part takes) >= 0,
 
 one number of the stage and one of the part. What an amplifier must do follows from `forms.duty`: with ideal amplifiers,
-nominal elements, and the network as it is at 0 Hz. Noise gains are those at 0 Hz and far above all corner frequencies,
-where capacitors are shorts: the smaller counts. What lies on a limit is inside it.
+nominal elements, and the network as it is at 0 Hz or at the stage's frequencies. Noise gains are those at 0 Hz and far
+above all corner frequencies, where capacitors are shorts: the smaller counts. What lies on a limit is inside it.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from functools import reduce
 
 import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.contracts.limits import LIMITS
+from gainassay.contracts.signals import Signals
 from gainassay.forms import coefficients
 from gainassay.forms.coefficients import FloatArray, Pairs
 from gainassay.forms.duty import Duty, Work
@@ -197,16 +199,27 @@ def named(code: int) -> str:
     return ", ".join(limit.name for place, limit in enumerate(LIMITS) if code >> place & 1)
 
 
-def conditions(form: Form, duty: Duty, values: FloatArray, operating: Operating) -> Conditions:
+def conditions(
+    form: Form, duty: Duty, values: FloatArray, operating: Operating, signals: Signals | None = None
+) -> Conditions:
     """What stages of one topology ask.
 
     Parameters
     ----------
     values : ndarray, shape (elements, stages)
         Nominal values [ohm, F, H], as in `StageGroup`.
+    signals : Signals, optional
+        Of stages at a frequency; the most that is asked at any of theirs counts.
     """
     at_dc, peak = coefficients.at_dc(form, values), operating["v_out_peak"]
-    v_out, i_out, v_in = (np.abs(of) * peak for of in _amounts(duty.of_signal, at_dc))
+    each = (
+        [(at_dc, np.full(values.shape[1], np.nan))]
+        if signals is None
+        else [(coefficients.at_frequency(form, values, hertz), hertz) for hertz in signals.points()]
+    )
+    asked = [[np.abs(of) * peak for of in _amounts(duty.of_signal, pairs)] for pairs, _ in each]
+    v_out, i_out, v_in = (reduce(np.maximum, of) for of in zip(*asked, strict=True))
+    slews = [_slope(hertz, of[0].max(axis=0)) for (_, hertz), of in zip(each, asked, strict=True)]
     bias = np.nan_to_num(operating["v_in_dc"])
     nothing = np.zeros_like(v_out)
     at_rest = (nothing,) * 3 if duty.of_bias is None else (of * bias for of in _amounts(duty.of_bias, at_dc))
@@ -221,7 +234,7 @@ def conditions(form: Form, duty: Duty, values: FloatArray, operating: Operating)
         v_in_up=(v_in + v_in_rest).max(axis=0),
         v_in_down=(v_in - v_in_rest).max(axis=0),
         noise_gain=np.minimum(*noise_gains),
-        slew=_slope(operating["frequency_hz"], v_out.max(axis=0)),
+        slew=reduce(np.maximum, slews),
         above=supply - ground,
         below=ground,
         v_supply=supply,

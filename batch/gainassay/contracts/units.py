@@ -80,6 +80,7 @@ NOTATIONS = {
         symbols=tuple(f"{part}/{kelvin}" for part in ("ppm", "PPM") for kelvin in ("K", *CELSIUS)),
         others={f"%/{kelvin}": 4 for kelvin in ("K", *CELSIUS)},
     ),
+    "degree": Notation(symbols=("degree", "deg", "\u00b0")),
     "degree Celsius": Notation(
         symbols=("degree Celsius", *CELSIUS),
         foreign={**dict.fromkeys(("K", "kelvin"), NO_CELSIUS), **dict.fromkeys(("F", "\u00b0F", "degF"), NO_CELSIUS)},

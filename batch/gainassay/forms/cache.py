@@ -9,7 +9,7 @@ import logging
 import os
 import tempfile
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import asdict
+from dataclasses import asdict, replace
 from functools import cache
 from pathlib import Path
 from typing import Any, TypeVar
@@ -128,8 +128,8 @@ def _code_hash(names: tuple[str, ...]) -> str:
 
 
 def content_hash(form: Form) -> str:
-    """SHA-256 of a form's content."""
-    return _sha256(asdict(form))
+    """SHA-256 of a form's content: of N and D, which all the rest of it follows from."""
+    return _sha256(asdict(replace(form, contrasts=(), loadings=(), slopes=())))
 
 
 def _sha256(value: Any) -> str:

@@ -13,8 +13,14 @@ STAGES = (
     {"stage": "flow-gain", "topology": "non_inverting", "r1": "1k", "r2": "47k", "accuracy_pct": "1", "tol_pct": "0.1"},
 )
 PARTS = (
-    {"part": "example-1", "a_ol_db_min": "100", "a_ol_db_typ": "120", "r_id_min": "1M", "r_o_max": "100"},
-    {"part": "example-2", "a_ol_db_typ": "90", "r_id_typ": "1e12", "r_o_typ": "50"},
+    {
+        **{"part": "example-1", "a_ol_db_min": "100", "a_ol_db_typ": "120", "r_id_min": "1M", "r_o_max": "100"},
+        **{"r_icm_min": "100M", "cmrr_db_min": "90", "gbw_min": "1M", "c_id_max": "5p", "c_icm_max": "3p"},
+    },
+    {
+        **{"part": "example-2", "a_ol_db_typ": "90", "r_id_typ": "1e12", "r_o_typ": "50"},
+        **{"r_icm_typ": "1e12", "cmrr_db_typ": "80", "gbw_typ": "5M", "c_id_typ": "3p", "c_icm_typ": "3p"},
+    },
 )
 """Invented, as a user's own rows will take their place."""
 
@@ -45,6 +51,7 @@ def _job() -> Iterator[str]:
     yield f"# {documents.schema('job')['description']}"
     yield "# A key behind a '#' is not in force; the value beside it is what holds then."
     yield "# What is said of stages goes for parts, too."
+    yield "# Delete the columns of parts.csv that you have no numbers for: a blank cell is a number that is missing."
     yield ""
     yield 'stages.from = "stages.csv"'
     yield 'parts.from  = "parts.csv"'

@@ -11,6 +11,7 @@ from typing import Any
 
 from gainassay.cautions import CAUTIONS
 from gainassay.forms.cache import content_hash
+from gainassay.forms.departures import DEPARTURES, PLACE
 from gainassay.job import Job
 from gainassay.runs.folder import File
 from gainassay.runs.summaries import Counts
@@ -60,10 +61,7 @@ def manifest(
             }
             for name, table in tables.items()
         },
-        "forms": {
-            group.topology.name: {"topology": group.topology.content_hash(), "form": content_hash(group.form)}
-            for group in stages.groups
-        },
+        "forms": _forms(stages),
         "not_modelled": list(parts.not_modelled(stages.any_at_frequency())),
         "warnings": list(warnings),
         "pairs": sum(counts.verdicts.values()),
@@ -78,3 +76,15 @@ def manifest(
         "cautions": list(CAUTIONS),
         "files": [asdict(file) for file in sorted(files, key=lambda file: file.path)],
     }
+
+
+def _forms(stages: StageTable) -> dict[str, Any]:
+    """Hashes of each topology and of the forms that its stages have: one for each set of departures."""
+    found: dict[str, Any] = {}
+    for group in stages.groups:
+        entry = found.setdefault(group.topology.name, {"topology": group.topology.content_hash(), "forms": {}})
+        quantities = dict.fromkeys(DEPARTURES[PLACE[symbol]].quantity for _, symbol in group.form.departures)
+        named = ", ".join(quantities)
+        if named not in entry["forms"]:
+            entry["forms"][named] = content_hash(group.form)
+    return found

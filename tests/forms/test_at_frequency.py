@@ -46,6 +46,18 @@ def test_complex_gain(topology: Topology) -> None:
         assert abs(terms.sum() - error) <= 1e-9 * np.abs(terms).sum(), (values, hertz)
 
 
+@pytest.mark.parametrize("topology", LIBRARY.values(), ids=LIBRARY)
+def test_polynomials_in_s_are_the_coefficient_functions(topology: Topology) -> None:
+    rng, form = random.Random(f"{topology.name} in s"), derive(topology)
+    values = [oracle.random_values(topology, rng, 1e3) for _ in range(3)]
+    at = np.array([[one[name] for one in values] for name in form.elements])
+    which, hertz = np.array([2, 0, 1, 2]), np.array([1e3, 27.0, 4e4, 3e3])
+    found = coefficients.in_s(form, at).at(which, hertz)
+    expected = coefficients.evaluate(form, coefficients.at_frequency(form, at[:, which], hertz))
+    for name, wanted in vars(expected).items():
+        np.testing.assert_allclose(getattr(found, name), wanted, rtol=1e-9, atol=1e-12 * np.abs(wanted).max())
+
+
 @pytest.mark.oracle
 @pytest.mark.parametrize("name", ["low_pass_2", "differentiator", "inverting_coil"])
 def test_slopes(name: str) -> None:

@@ -207,6 +207,70 @@ def ratios(of: Sequence[Ratio], pairs: Pairs) -> AnyArray:
     return np.array([_ratio(ratio, pairs) for ratio in of]).reshape(len(of), pairs.y.shape[1])
 
 
+@dataclass(frozen=True)
+class InS:
+    """A form's coefficient functions of some stages as ratios of polynomials in s = j 2 pi f.
+
+    Attributes
+    ----------
+    ratios : tuple of pairs of ndarray
+        Numerator and denominator of G_ideal, of the n_k - d_k and of the d_k, each of shape (powers of s, stages).
+    """
+
+    ratios: tuple[tuple[FloatArray, FloatArray], ...]
+
+    def at(self, stages: NDArray[np.intp], hertz: FloatArray) -> Coefficients:
+        """The coefficient functions of stages at frequencies [Hz], one for one."""
+        omega = 2.0 * np.pi * hertz
+        with np.errstate(divide="ignore", invalid="ignore"):
+            values = np.array(
+                [over(*(_at(polynomial[:, stages], omega) for polynomial in ratio)) for ratio in self.ratios]
+            )
+        count = len(values) // 2
+        return Coefficients(values[0], values[1 : 1 + count], values[1 + count :])
+
+
+def in_s(form: Form, values: FloatArray) -> InS:
+    """The coefficient functions of a form in s; `values` as in `at_frequency`."""
+    reactive = np.array(form.kinds)[:, None] != "resistor"
+    is_capacitor = np.array(form.kinds)[:, None] == "capacitor"
+    with np.errstate(divide="ignore"):
+        pairs = _scaled(np.where(reactive & is_capacitor, 1.0 / values, values))
+    each = (form.gain_ideal, *form.contrasts, *form.loadings)
+    return InS(tuple(tuple(_in_s(form, part, ratio, pairs) for part in _parts(ratio)) for ratio in each))  # type: ignore[misc]
+
+
+def _parts(ratio: Ratio) -> tuple[Polynomial, Polynomial]:
+    return ratio.numerator, ratio.denominator
+
+
+def _in_s(form: Form, polynomial: Polynomial, ratio: Ratio, pairs: Pairs) -> FloatArray:
+    """The coefficients of the powers of s; a capacitor's y is proportional to s, and an inductor's z."""
+    powers, degrees = _all_powers(ratio, pairs), ratio.degrees()
+    most = sum(degree for degree, kind in zip(degrees, form.kinds, strict=True) if kind != "resistor")
+    found = np.zeros((most + 1, pairs.y.shape[1]))
+    for product, exponents in _products(polynomial, powers, pairs.y.shape[1]):
+        each = zip(form.kinds, exponents, degrees, strict=True)
+        found[sum(_power_of_s(kind, exponent, degree) for kind, exponent, degree in each)] += product
+    return found
+
+
+def _power_of_s(kind: str, exponent: int, degree: int) -> int:
+    return exponent if kind == "capacitor" else degree - exponent if kind == "inductor" else 0
+
+
+def _at(polynomial: FloatArray, omega: FloatArray) -> ComplexArray:
+    """A polynomial in s at s = j omega: even powers are real, odd ones imaginary, signs turning by twos."""
+    found = np.zeros(omega.shape, np.complex128)
+    square = -omega * omega
+    for part, first in ((found.real, 0), (found.imag, 1)):
+        for coefficient in polynomial[first::2][::-1]:
+            part *= square
+            part += coefficient
+    found.imag *= omega
+    return found
+
+
 def natural_frequencies(form: Form, values: FloatArray) -> FloatArray:
     """Where the ideal gain of one stage may change abruptly [Hz]: at |s|/(2 pi) of its poles and zeros s, and around.
 
@@ -217,30 +281,10 @@ def natural_frequencies(form: Form, values: FloatArray) -> FloatArray:
     values : ndarray, shape (elements,)
         As in `at_frequency`.
     """
-    found = [_roots(form, part, values) for part in (form.gain_ideal.numerator, form.gain_ideal.denominator)]
-    roots = np.concatenate(found)
+    roots = np.concatenate([np.roots(polynomial[::-1, 0]) for polynomial in in_s(form, values[:, None]).ratios[0]])
     steps = np.array([-4.0, -2.0, -1.0, -0.5, 0.0, 0.5, 1.0, 2.0, 4.0])
     hertz = (np.abs(roots)[:, None] + np.abs(roots.real)[:, None] * steps) / (2.0 * np.pi)
     return np.unique(hertz[hertz > 0.0])
-
-
-def _roots(form: Form, polynomial: Polynomial, values: FloatArray) -> ComplexArray:
-    """The roots in s of a polynomial in admittances, of elements that are neither open nor short.
-
-    An inductor's admittance is 1/(s l): to have no powers below the first, a power of s for each is multiplied out.
-    """
-    coils = [kind == "inductor" for kind in form.kinds]
-    degree = {i: max((exponents[i] for _, exponents in polynomial), default=0) for i, coil in enumerate(coils) if coil}
-    in_s: dict[int, float] = {}
-    for coefficient, exponents in polynomial:
-        term, power = float(coefficient), sum(degree.values())
-        for kind, value, exponent in zip(form.kinds, values.tolist(), exponents, strict=True):
-            admittance = value if kind == "capacitor" else 1.0 / value if value else np.inf
-            term *= admittance**exponent if exponent else 1.0
-            power += exponent if kind == "capacitor" else -exponent if kind == "inductor" else 0
-        in_s[power] = in_s.get(power, 0.0) + term
-    row = [in_s.get(power, 0.0) for power in range(max(in_s, default=0), -1, -1)]
-    return np.roots(row).astype(np.complex128) if np.isfinite(row).all() else np.zeros(0, np.complex128)
 
 
 def times(one: AnyArray, other: AnyArray) -> AnyArray:

@@ -7,14 +7,14 @@ that gives it, the search goes on between its neighbours, to `TOLERANCE` of the 
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from gainassay.forms import coefficients
-from gainassay.forms.coefficients import ComplexArray, FloatArray, over, times
+from gainassay.forms.coefficients import ComplexArray, FloatArray, InS, over, times
 from gainassay.forms.form import Form
 from gainassay.screen.boxes import product
 from gainassay.screen.corners import PartSide, elements_terms
@@ -34,6 +34,9 @@ SECTIONS = math.ceil(math.log(TOLERANCE / (10.0 ** (2.0 / POINTS_PER_DECADE) - 1
 
 STEP = 1e-4
 """By what share of its frequency an end of a band is left to see whether the error rises inside."""
+
+WORTH = 0.3
+"""The share of a pair's largest error at a point that a corner must have there to be searched."""
 
 PAIRS_AT_A_TIME = 8_192
 
@@ -99,67 +102,90 @@ class _Pairs:
 
     Attributes
     ----------
-    figures : ndarray, shape (figures + 1, parts)
+    nominal, corners : InS
+        Of the stage, with nominal values and at its corners; `at` counts the latter from its first.
+    figures : ndarray, shape (ROWS, parts)
         As in `PartSide.worst`.
     """
 
     form: Form
     stages: SpotSide
     row: int
+    nominal: InS
+    corners: InS
     at: NDArray[np.intp]
     ends: int
     figures: FloatArray
 
+    def some(self, which: NDArray[np.bool_]) -> _Pairs:
+        """Some of the pairs."""
+        return replace(self, at=self.at[which], figures=self.figures[:, which])
+
     def errors(self, hertz: FloatArray, which: NDArray[np.intp]) -> FloatArray:
         """The errors of some of the pairs at frequencies [Hz]."""
-        here = meeting(self.form, self.stages, self.row, self.at[which], hertz)
+        ideal, of = self.nominal.at(np.zeros_like(which), hertz).gain_ideal, self.corners.at(self.at[which], hertz)
+        target = self.stages.box.targets[self.row]
+        scale = 1.0 if np.isnan(target) else abs(target) / magnitude_of(ideal)
+        reference = times(ideal, np.asarray(scale))
+        error = over(of.gain_ideal - reference, reference)
+        nothing = np.zeros((0, 1, 1), np.complex128)
+        here = Meeting(np.zeros((1, 1)), error[None], rises(of, error)[:, None], nothing, of.loadings[:, None], nothing)
         departing = Departing(self.form, self.figures[:, which], hertz[None])
         found, _ = errors(self.form, here, departing, self.ends)
-        return np.asarray(found[0])
+        return np.broadcast_to(found[0], hertz.shape)
 
 
 def refine(form: Form, stages: SpotSide, parts: PartSide, found: Outcome) -> None:
     """Take the pairs of stages with a band from the points with the largest errors to the largest errors.
 
-    The search is made at each corner that the point visits: their largest errors lie at frequencies of their own.
+    The search is made at each corner that the point visits and that is not far better there than the worst: their
+    largest errors lie at frequencies of their own.
     """
     assert found.hertz is not None
     for row in rows(stages):
-        points = stages.hertz_of(row)
-        spots = stages.begin[row] + np.searchsorted(points, found.hertz[row])
-        for plan in stages.plans:
-            here = np.flatnonzero(np.isin(spots, plan.stages) & (found.corner[row] != UNBOUNDED))
-            for left in range(0, len(here), PAIRS_AT_A_TIME):
-                columns = here[left : left + PAIRS_AT_A_TIME]
-                _refine(form, stages, parts, row, spots[columns], columns, plan.corners, found)
+        point, at_point = found.hertz[row].copy(), np.abs(found.error_worst[row])
+        first = stages.first[stages.begin[row]]
+        end = np.append(stages.first, stages.corner_values.shape[1])[np.flatnonzero(stages.stage == row)[-1] + 1]
+        nominal = coefficients.in_s(form, stages.box.values[:, row, None])
+        corners = coefficients.in_s(form, stages.corner_values[:, first:end])
+        for columns, at, codes, ends in _corners_of(stages, row, point, found.corner[row]):
+            pairs = _Pairs(form, stages, row, nominal, corners, at - first, ends, parts.worst[:, columns])
+            everything = np.arange(len(at))
+            worth = np.abs(pairs.errors(point[columns], everything)) >= WORTH * at_point[columns]
+            if not worth.any():
+                continue
+            pairs, columns, codes = pairs.some(worth), columns[worth], codes[worth]
+            best = _largest(pairs, point[columns])
+            error = pairs.errors(best, np.arange(len(best)))
+            # Of a pair that stands here more than once the last is kept, the one with the largest error.
+            order = np.argsort(np.abs(error), kind="stable")
+            order = order[np.abs(error[order]) > np.abs(found.error_worst[row, columns[order]])]
+            for whole, values in ((found.hertz, best), (found.error_worst, error), (found.corner, codes)):
+                whole[row, columns[order]] = values[order]
+        bounded = np.flatnonzero(found.corner[row] != UNBOUNDED)
+        for left in range(0, len(bounded), PAIRS_AT_A_TIME):
+            columns = bounded[left : left + PAIRS_AT_A_TIME]
+            hertz = found.hertz[row, columns]
+            departing = Departing(form, parts.nominal[:, columns], hertz[None])
+            of_nominal, _ = errors(form, meeting(form, stages, row, None, hertz), departing, every(form))
+            found.error_nominal[row, columns] = of_nominal[0]
 
 
-def _refine(
-    form: Form,
-    stages: SpotSide,
-    parts: PartSide,
-    row: int,
-    spots: NDArray[np.intp],
-    columns: NDArray[np.intp],
-    corners: Sequence[tuple[int, int]],
-    found: Outcome,
-) -> None:
-    assert found.hertz is not None
-    point = stages.hertz[spots]
-    hertz, error, corner = point, found.error_worst[row, columns], found.corner[row, columns]
-    for j, q in corners:
-        pairs = _Pairs(form, stages, row, stages.first[spots] + j, stages.part_corners[q], parts.worst[:, columns])
-        best = _largest(pairs, point)
-        at_best = pairs.errors(best, np.arange(len(best)))
-        code = stages.codes_of(spots) + np.int32(j * len(stages.part_corners) + q)
-        worse = np.abs(at_best) > np.abs(error)
-        hertz, error, corner = (
-            np.where(worse, new, old) for new, old in ((best, hertz), (at_best, error), (code, corner))
-        )
-    found.hertz[row, columns], found.error_worst[row, columns], found.corner[row, columns] = hertz, error, corner
-    departing = Departing(form, parts.nominal[:, columns], hertz[None])
-    nominal, _ = errors(form, meeting(form, stages, row, None, hertz), departing, every(form))
-    found.error_nominal[row, columns] = nominal[0]
+def _corners_of(
+    stages: SpotSide, row: int, point: FloatArray, corner: NDArray[np.int32]
+) -> Iterator[tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.int32], int]]:
+    """The parts at every corner that their points visit: as in `Corners`, with the corners' codes."""
+    spots = stages.begin[row] + np.searchsorted(stages.hertz_of(row), point)
+    for plan in stages.plans:
+        here = np.flatnonzero(np.isin(spots, plan.stages) & (corner != UNBOUNDED))
+        for q in dict.fromkeys(q for _, q in plan.corners):
+            own = np.array([j for j, of_part in plan.corners if of_part == q])
+            columns, j = np.repeat(here, len(own)), np.tile(own, len(here))
+            codes = stages.codes_of(spots[columns]) + (j * len(stages.part_corners) + q).astype(np.int32)
+            for left in range(0, len(columns), PAIRS_AT_A_TIME):
+                some = slice(left, left + PAIRS_AT_A_TIME)
+                at = stages.first[spots[columns[some]]] + j[some]
+                yield columns[some], at, codes[some], stages.part_corners[q]
 
 
 def _largest(pairs: _Pairs, point: FloatArray) -> FloatArray:

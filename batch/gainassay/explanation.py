@@ -19,8 +19,8 @@ from gainassay.forms.evaluation import value
 from gainassay.forms.form import Form
 from gainassay.forms.topology import Topology, gain_unit
 from gainassay.screen import blocks, calibrated, monte_carlo, rss, stability
-from gainassay.screen.blocks import NO_TERM, Chunk, Group, Screened, lot_of
-from gainassay.screen.kernel import UNBOUNDED
+from gainassay.screen.blocks import Chunk, Group, Screened, lot_of
+from gainassay.screen.kernel import NO_TERM, UNBOUNDED
 from gainassay.screen.limits import PLACES, SIDES
 from gainassay.screen.methods import AT_FREQUENCY, CALIBRATED
 from gainassay.screen.monte_carlo import Lot

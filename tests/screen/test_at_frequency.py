@@ -311,6 +311,16 @@ def test_the_same_bits_whatever_the_blocks() -> None:
                 np.testing.assert_array_equal(values, getattr(other, name), err_msg=f"{name} {block}")
 
 
+def test_next_to_nothing_left_of_a_gain_is_an_error_of_minus_one() -> None:
+    """Where rounding would make the square of the magnitude negative."""
+    topology = LIBRARY["inverting"]
+    values = {"r1": 1e3, "r2": 1e4, "r_load": np.inf, "r_source": 0.0}
+    hertz = [10.0**rise for rise in range(9, 18)]
+    figures = np.array([figures_of(a_ol=1e-5, gbw=1e-6, second_pole=1e-6)]).T
+    _, outcome, _, _ = screened(derive(topology), stages_of(topology, [values] * len(hertz), hertz, 1e-3), figures)
+    np.testing.assert_allclose(outcome.error_worst[:, 0], -1.0, atol=1e-6)
+
+
 @pytest.mark.source
 @pytest.mark.parametrize(
     ("r2", "hertz"),

@@ -27,23 +27,9 @@ from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.screen import bands
 from gainassay.screen.corners import SET_POINT, TRACKING, PartSide
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome, put
-from gainassay.screen.response import (
-    Departing,
-    Meeting,
-    Split,
-    errors,
-    every,
-    over,
-    plus,
-    polynomial,
-    real_product,
-    split,
-    splits,
-    terms,
-    times,
-    turned,
-)
+from gainassay.screen.kernel import NO_TERM, PAIRS_PER_BLOCK, UNBOUNDED, Outcome, put
+from gainassay.screen.response import Departing, Meeting, errors, every, polynomial, terms, turned
+from gainassay.screen.split import ONE, Split, over, plus, real_product, split, splits, times
 from gainassay.screen.spots import SpotSide
 
 
@@ -93,7 +79,7 @@ def screen(form: Form, stages: SpotSide, parts: PartSide, block: int = PAIRS_PER
             error_nominal=nominal,
             error_worst=worst,
             corner=corner,
-            dominant=np.zeros(shape, np.int16),
+            dominant=np.where(corner == UNBOUNDED, np.int16(NO_TERM), np.int16(0)),
             dominant_value=np.where(corner == UNBOUNDED, np.nan, 0.0),
             phase=np.degrees(2.0 * np.arctan(half)),
             hertz=hertz,
@@ -283,10 +269,10 @@ def _largest(terms: Iterator[FloatArray | None], shape: tuple[int, ...]) -> tupl
 
 def _terms(form: Form, departing: Departing, ends: int, here: Meeting) -> Iterator[FloatArray | None]:
     """The terms of pairs at a corner of the parts; None: 0 for all."""
-    e, one, nothing = split(here.error), Split(np.ones((1, 1)), None), Split(None, None)
+    e, nothing = split(here.error), Split(None, None)
     contrasts, departures = splits(here.contrasts), departing.at(ends)
     below = polynomial(form, splits(here.loadings), departures) or nothing
-    lift = over(plus(e, one), plus(below, one))
+    lift = over(plus(e, ONE), plus(below, ONE))
     above = polynomial(form, contrasts, departures) or nothing
     w_real, w_imag = plus(e, times(lift, above)).whole()
     size = 1.0 + np.sqrt((1.0 + w_real) ** 2 + w_imag**2)

@@ -18,7 +18,7 @@ from gainassay.forms.form import Form
 from gainassay.screen import limits
 from gainassay.screen.boxes import StageBox
 from gainassay.screen.corners import PartSide
-from gainassay.screen.kernel import PAIRS_PER_BLOCK, UNBOUNDED, Outcome
+from gainassay.screen.kernel import NO_TERM, PAIRS_PER_BLOCK, UNBOUNDED, Outcome
 from gainassay.screen.limits import Bounds, Kept
 from gainassay.screen.methods import AT_DC, AT_FREQUENCY, CALIBRATED, Method, Side
 from gainassay.screen.monte_carlo import Lot
@@ -45,9 +45,6 @@ Written = TypeVar("Written")
 PAIRS_PER_CHUNK = 1_000_000
 """Pairs in a chunk at most, and so rows of a verdict file at most. Part of the output format: do not tune it."""
 
-
-NO_TERM = -1
-"""Stands for the dominant term where no term differs from 0."""
 
 RANK = {PASS: 0, UNPROVEN: 1, FAIL: 2}
 """Which verdict makes a better part for a stage."""

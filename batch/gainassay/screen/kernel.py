@@ -27,6 +27,9 @@ from gainassay.screen.visits import Plan
 PAIRS_PER_BLOCK = 32_768
 """Pairs evaluated at a time: enough that Python's own time does not count, few enough to stay in the cache."""
 
+NO_TERM = -1
+"""Stands for the dominant term where no term differs from 0."""
+
 UNBOUNDED = -1
 """Stands for a pair's corner where the worst case has no finite bound."""
 

@@ -4,9 +4,6 @@ At s = j 2 pi f a departure is x + j f y, x being what it is at 0 Hz and y what 
 admittance 1/r + j f 2 pi c. A second pole of the open-loop gain makes 1/A (x + j f y)(1 + j f/f_2), and a common-mode
 rejection that falls 1/CMRR likewise. The products m_k, and with them the form, are as at 0 Hz. x and y are the
 variables of a pair's box, each between 0 and its limit.
-
-Complex numbers are kept as real and imaginary parts. A library's complex product may round differently by the place
-of a number in an array, and a verdict must not; and much of what meets here is real.
 """
 
 from __future__ import annotations
@@ -19,7 +16,7 @@ from itertools import product
 import numpy as np
 from numpy.typing import NDArray
 
-from gainassay.forms.coefficients import AnyArray, ComplexArray, FloatArray
+from gainassay.forms.coefficients import ComplexArray, FloatArray
 from gainassay.forms.departures import (
     COMMON_MODE_REJECTION,
     DEPARTURES,
@@ -31,6 +28,7 @@ from gainassay.forms.departures import (
     term_name,
 )
 from gainassay.forms.form import Form
+from gainassay.screen.split import ONE, Split, plus, split, splits, times
 
 LAGGING = {
     symbol: len(FIGURES) + number
@@ -42,76 +40,6 @@ pole, and where the common-mode rejection begins to fall."""
 
 ROWS = len(FIGURES) + 2
 """Figures and these."""
-
-
-@dataclass(frozen=True)
-class Split:
-    """Complex numbers; `imag` is None where all are real, `real` where all are imaginary."""
-
-    real: FloatArray | None
-    imag: FloatArray | None
-
-    def whole(self) -> tuple[FloatArray, FloatArray]:
-        """Real and imaginary part, 0 where there is none."""
-        zero = np.zeros((1, 1))
-        return zero if self.real is None else self.real, zero if self.imag is None else self.imag
-
-
-def split(numbers: AnyArray) -> Split:
-    """Numbers as real and imaginary parts."""
-    real, imag = (np.ascontiguousarray(part) if part.any() else None for part in (numbers.real, numbers.imag))
-    return Split(real, imag)
-
-
-def times(one: Split, other: Split) -> Split:
-    """The product."""
-    return Split(real_product(one, other), _sum(_product(one.real, other.imag), _product(one.imag, other.real)))
-
-
-def over(one: Split, other: Split) -> Split:
-    """The quotient."""
-    real, imag = other.whole()
-    square = real * real + imag * imag
-    return times(one, Split(real / square, -imag / square))
-
-
-def plus(one: Split | None, other: Split) -> Split:
-    """The sum."""
-    return other if one is None else Split(_sum(one.real, other.real), _sum(one.imag, other.imag))
-
-
-def real_product(one: Split, other: Split) -> FloatArray | None:
-    """The real part of the product; None: 0."""
-    return _difference(_product(one.real, other.real), _product(one.imag, other.imag))
-
-
-def _product(one: FloatArray | None, other: FloatArray | None) -> FloatArray | None:
-    return None if one is None or other is None else one * other
-
-
-def _sum(one: FloatArray | None, other: FloatArray | None) -> FloatArray | None:
-    return other if one is None else one if other is None else one + other
-
-
-def _difference(one: FloatArray | None, other: FloatArray | None) -> FloatArray | None:
-    return one if other is None else -other if one is None else one - other
-
-
-def turned(numerator: Split | None, denominator: Split | None, e: Split) -> tuple[FloatArray, FloatArray]:
-    """|1 + W/D| - 1 and the tangent of half its phase, with e taken into W and 1 into D."""
-    w_real, w_imag = (e if numerator is None else plus(e, numerator)).whole()
-    d_real, d_imag = (Split(np.ones((1, 1)), None) if denominator is None else denominator).whole()
-    if denominator is not None:
-        d_real = 1.0 + d_real
-    square = d_real * d_real + d_imag * d_imag
-    along = w_real * d_real + w_imag * d_imag
-    across = w_imag * d_real - w_real * d_imag
-    u = (2.0 * along + (w_real * w_real + w_imag * w_imag)) / square
-    root = np.sqrt(1.0 + u)
-    return u / (1.0 + root), across / (square * root + (square + along))
-
-
-# What a pair's box consists of
 
 
 @dataclass(frozen=True)
@@ -270,7 +198,7 @@ class Departing:
             found = Split(real, None if rising is None else self._hertz * rising)
             lag = self._row(LAGGING[symbol]) if symbol in LAGGING else None
             if lag is not None:
-                found = times(found, Split(np.ones((1, 1)), self._hertz * lag))
+                found = times(found, Split(ONE.real, self._hertz * lag))
             self._found[key] = None if real is None and rising is None else found
         return self._found[key]
 
@@ -373,9 +301,17 @@ class Meeting:
     terms: ComplexArray
 
 
-def splits(numbers: ComplexArray) -> list[Split]:
-    """Numbers along the first axis, each as real and imaginary parts."""
-    return [split(of) for of in numbers]
+def turned(numerator: Split | None, denominator: Split | None, e: Split) -> tuple[FloatArray, FloatArray]:
+    """|1 + W/D| - 1 and the tangent of half its phase, with e taken into W and 1 into D."""
+    w_real, w_imag = (e if numerator is None else plus(e, numerator)).whole()
+    d_real, d_imag = ONE.whole() if denominator is None else plus(ONE, denominator).whole()
+    square = d_real * d_real + d_imag * d_imag
+    along = w_real * d_real + w_imag * d_imag
+    across = w_imag * d_real - w_real * d_imag
+    u = (2.0 * along + (w_real * w_real + w_imag * w_imag)) / square
+    # Not the root of 1 + u, which rounding takes below 0 where next to nothing is left of the gain.
+    root = np.sqrt(((d_real + w_real) ** 2 + (d_imag + w_imag) ** 2) / square)
+    return u / (1.0 + root), across / (square * root + (square + along))
 
 
 def errors(form: Form, here: Meeting, departing: Departing, ends: int) -> tuple[FloatArray, FloatArray]:

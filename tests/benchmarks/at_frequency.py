@@ -16,7 +16,7 @@ import numpy as np
 
 from gainassay.contracts.signals import Signals
 from gainassay.forms.cache import duty_of
-from gainassay.forms.departures import AT_DC
+from gainassay.forms.departures import AT_DC, FIGURES
 from gainassay.forms.form import Form, derive
 from gainassay.forms.library import library
 from gainassay.forms.topology import Topology
@@ -77,14 +77,15 @@ def main() -> None:
     rng = np.random.default_rng(5)
     a, g = 10.0 ** -rng.uniform(3.5, 6.5, parts), 10.0 ** -rng.uniform(5, 10, parts)
     r_o, b = 10.0 ** rng.uniform(0.5, 3, parts), 10.0 ** -rng.uniform(5.5, 8, parts)
-    worst = np.array([a, g, r_o, b, np.zeros(parts)])
+    known = {"a_ol": a, "r_id": g, "r_o": r_o, "gbw": b}
+    worst = np.array([known.get(figure.quantity, np.zeros(parts)) for figure in FIGURES])
     ratios = []
     for topology in library().values():
-        form, box, evidence = derive(topology), stages_of(topology, stages), np.zeros((5, parts), np.uint8)
+        form, box, evidence = derive(topology), stages_of(topology, stages), np.zeros((len(FIGURES), parts), np.uint8)
         dc_side = part_side(form, worst[AT_DC] / 3.0, worst[AT_DC], evidence[AT_DC])
         dc, dc_corners = measured(group(topology, form, box, dc_side))
         signals = Signals(np.full((1, stages), HERTZ), np.zeros(stages, dtype=bool), np.full(stages, np.inf))
-        tuned = at_frequency.part_side(worst / 3.0, worst, np.zeros(parts), evidence)
+        tuned = at_frequency.part_side(worst / 3.0, worst, np.zeros((2, parts)), evidence)
         hertz, corners = measured(group(topology, form, replace(box, signals=signals), tuned))
         ratios.append(hertz / dc)
         print(

@@ -197,9 +197,13 @@ def slopes(form: Form, pairs: Pairs) -> Slopes:
             found[place] = _slopes(ratio, pairs)
         return found.swapaxes(0, 1)
 
+    return Slopes(slopes_of_ideal(form, pairs), table(form.contrasts), table(form.loadings))
+
+
+def slopes_of_ideal(form: Form, pairs: Pairs) -> AnyArray:
+    """The slopes of the logarithm of G_ideal alone, shape (elements, stages)."""
     with np.errstate(divide="ignore", invalid="ignore"):
-        relative = over(_slopes(form.gain_ideal, pairs), gain_ideal(form, pairs))
-    return Slopes(relative, table(form.contrasts), table(form.loadings))
+        return over(_slopes(form.gain_ideal, pairs), gain_ideal(form, pairs))
 
 
 def ratios(of: Sequence[Ratio], pairs: Pairs) -> AnyArray:

@@ -251,16 +251,29 @@ def _directions(
 ) -> NDArray[np.int8]:
     """Which way each variable moves magnitude and phase; shape (2, elements + networks + variables, spots).
 
-    Slopes are looked at with the nominal elements and at both ends that these point to, with several departures. Of
-    spots that `with_phase` is not true of, the phase is left out.
+    Slopes are looked at with the nominal elements and at both corners of them between which the ideal gain moves most,
+    with several parts. Of spots that `with_phase` is not true of, the phase is left out.
     """
-    looked = _slopes(form, box, box.values, hertz, farthest)
+    pairs = coefficients.at_frequency(form, box.values, hertz)
+    rises_with_value = (_turn(form) * coefficients.slopes_of_ideal(form, pairs).real) > 0.0
     low, high = box.ends()
-    rising = looked.least.real[: len(form.elements)] + looked.most.real[: len(form.elements)] > 0.0
-    for one, other in ((low, high), (high, low)):
-        looked = looked.joined(_slopes(form, box, box.values * np.where(rising, one, other), hertz, farthest))
+    values = np.concatenate(
+        [
+            box.values * factor
+            for factor in (1.0, np.where(rises_with_value, low, high), np.where(rises_with_value, high, low))
+        ],
+        axis=1,
+    )
+    # All three at once: of few spots the calls take the time.
+    three = np.tile(np.arange(len(hertz)), 3)
+    looked = _slopes(form, box.part(three), values, hertz[three], farthest)
     magnitude, phase = (_layer(looked, part) for part in (np.real, np.imag))
     return np.array([magnitude, np.where(with_phase, phase, magnitude)])
+
+
+def _turn(form: Form) -> FloatArray:
+    """A capacitance is the inverse of what slopes are in; shape (elements, 1)."""
+    return np.where(np.array(form.kinds) == "capacitor", -1.0, 1.0)[:, None]
 
 
 @dataclass(frozen=True)
@@ -280,14 +293,6 @@ class _Looked:
     least: ComplexArray
     most: ComplexArray
     share: ComplexArray
-
-    def joined(self, other: _Looked) -> _Looked:
-        """Both, as one."""
-        return _Looked(
-            _apart(np.minimum, self.least, other.least),
-            _apart(np.maximum, self.most, other.most),
-            _apart(np.maximum, self.share, other.share),
-        )
 
 
 def _apart(function: Callable[..., FloatArray], *of: ComplexArray) -> ComplexArray:
@@ -310,16 +315,23 @@ def _layer(looked: _Looked, part: Callable[[ComplexArray], FloatArray]) -> NDArr
 
 
 def _slopes(form: Form, box: StageBox, values: FloatArray, hertz: FloatArray, farthest: FloatArray) -> _Looked:
-    """Slopes with ideal parts, with figures as far as they reach, with a share of that, and with each figure alone."""
+    """Slopes with ideal parts, with figures as far as they reach, with a share of that, and with each figure alone.
+
+    The spots stand three times in a row, and are looked at as one.
+    """
     pairs = coefficients.at_frequency(form, values, hertz)
     at, slope = coefficients.evaluate(form, pairs), coefficients.slopes(form, pairs)
     reach = figures_of(form, farthest)
     of_parts = np.column_stack([np.zeros_like(reach), reach, SHARE * reach, *np.diag(reach)])
     moves = _moves(form, box, hertz, at, slope, of_parts, reach)
     with np.errstate(divide="ignore", invalid="ignore"):
-        share = _apart(lambda part: np.nan_to_num(np.abs(part) / np.abs(part).sum(axis=0)).max(axis=1), moves)
-    least, most = (_apart(lambda part, end=end: end(part, axis=1), moves) for end in (np.min, np.max))
-    return _Looked(least, most, share)
+        share = _apart(lambda part: np.nan_to_num(np.abs(part) / np.abs(part).sum(axis=0)), moves)
+
+    def over_all(function: Callable[..., FloatArray], of: ComplexArray) -> ComplexArray:
+        each = of.reshape(len(of), of.shape[1], 3, -1)
+        return _apart(lambda part: function(part, axis=(1, 2)), each)
+
+    return _Looked(over_all(np.min, moves), over_all(np.max, moves), over_all(np.max, share))
 
 
 def _moves(
@@ -346,9 +358,7 @@ def _moves(
         return over(_total(contrasts + loadings, moved), top) - over(_total(loadings, moved), bottom)
 
     with np.errstate(all="ignore"):
-        # A capacitance is the inverse of what the slopes are in.
-        turn = np.where(np.array(form.kinds) == "capacitor", -1.0, 1.0)[:, None, None]
-        of_elements = turn * np.array(
+        of_elements = _turn(form)[..., None] * np.array(
             [
                 ideal + change(contrasts, loadings, m)
                 for ideal, contrasts, loadings in zip(slope.gain_ideal, slope.contrasts, slope.loadings, strict=True)

@@ -159,16 +159,17 @@ def load(source: Source, assume: Mapping[str, StandIn], compared: Compared = NOT
     rows = len(raw.rows) + len(raw.ragged)
     if not len(order):
         raise InputError(nothing_left(raw.source, rows, checking.found(), "part"))
+    worst, evidence = (_of_all(figures, name, order) for name in ("worst", "evidence"))
     return PartTable(
         source=raw.source,
         sha256=raw.sha256,
         rows=rows,
         names=names,
         nominal=_of_all(figures, "nominal", order),
-        worst=_of_all(figures, "worst", order),
-        evidence=_of_all(figures, "evidence", order),
-        worst_hot=_of_all(figures, "worst_hot", order),
-        evidence_hot=_of_all(figures, "evidence_hot", order),
+        worst=worst,
+        evidence=evidence,
+        worst_hot=_hot(figures, "worst", order, worst),
+        evidence_hot=_hot(figures, "evidence", order, evidence),
         change=_of_all(figures, "change", order),
         evidence_change=_of_all(figures, "evidence_change", order),
         modelled=tuple(one.modelled for one in figures[0]),
@@ -190,12 +191,24 @@ def _require(raw: RawTable) -> None:
         raise InputError(f"{raw.source}: the open-loop gain is missing; a column {' or '.join(gain_columns)} is needed")
 
 
-def _of_all(blocks: list[list[_Read]], figure: str, order: NDArray[np.intp]) -> NDArray[Any]:
-    """One figure of each departure, of all blocks in order."""
-    found = np.empty((len(FIGURES), len(order)), getattr(blocks[0][0], figure).dtype)
-    for own, departures in zip(found, zip(*blocks, strict=True), strict=True):
-        own[:] = gathered([getattr(one, figure) for one in departures], order)
-    return found
+def _of_all(blocks: list[list[_Read]], name: str, order: NDArray[np.intp]) -> NDArray[Any]:
+    """What the blocks say of each figure, of all rows in order; what is the same in all rows takes no room."""
+    each = ([getattr(one, name) for one in of_figure] for of_figure in zip(*blocks, strict=True))
+    rows = [gathered(of_figure, order) for of_figure in each]
+    if not any(row.strides[0] for row in rows):
+        return np.broadcast_to(np.array([row[0] for row in rows])[:, None], (len(rows), len(order)))
+    return np.stack(rows)
+
+
+def _hot(blocks: list[list[_Read]], name: str, order: NDArray[np.intp], cold: NDArray[Any]) -> NDArray[Any]:
+    """The same over temperature: that at 25 degrees Celsius itself where no block says otherwise."""
+    same = all(getattr(one, f"{name}_hot") is getattr(one, name) for block in blocks for one in block)
+    return cold if same else _of_all(blocks, f"{name}_hot", order)
+
+
+def _everywhere(value: float | np.uint8, checking: Checking) -> NDArray[Any]:
+    """One value in all rows, which takes no room."""
+    return np.broadcast_to(value, len(checking.raw.rows))
 
 
 def _figure_columns(departure: Departure) -> list[str]:
@@ -223,18 +236,19 @@ class _Read:
 
 def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _Read:
     """Read one departure of all rows."""
+    change, evidence_change = _change(checking, departure, stand_in)
+    if stand_in.value is None and not set(_figure_columns(departure)) & set(checking.raw.header):
+        # What the table has no column for is not modelled; but without a bandwidth nothing holds at a frequency.
+        is_needed = departure is BANDWIDTH
+        nothing = _everywhere(0.0, checking)
+        certain = _everywhere(np.uint8(MISSING if is_needed else GUARANTEED), checking)
+        return _Read(nothing, nothing, certain, nothing, certain, change, evidence_change, is_needed)
     limit_column, typical_column = departure.limit_column, f"{departure.quantity}_typ"
     limit, limit_given = _figure(checking, limit_column)
     typical, typical_given = _figure(checking, typical_column)
     hot, hot_given = _figure(checking, departure.hot_column)
     _refuse_crossed(checking, departure, limit_column, limit, typical_column, typical)
     _refuse_crossed(checking, departure, departure.hot_column, hot, typical_column, typical)
-    change, evidence_change = _change(checking, departure, stand_in)
-
-    is_modelled = departure is BANDWIDTH or set(_figure_columns(departure)) & set(checking.raw.header)
-    if not is_modelled and stand_in.value is None:
-        nothing, certain = np.zeros(len(limit)), np.full(len(limit), GUARANTEED, np.uint8)
-        return _Read(nothing, nothing, certain, nothing, certain, change, evidence_change, False)
     assumed = np.nan if stand_in.value is None else stand_in.value
     figure = np.where(limit_given, limit, np.where(typical_given, typical * stand_in.typical_times, assumed))
     nominal = np.where(typical_given, typical, np.where(limit_given, limit, np.where(hot_given, hot, assumed)))
@@ -244,13 +258,17 @@ def _departure(checking: Checking, departure: Departure, stand_in: StandIn) -> _
     # A limit over temperature holds at 25 degrees Celsius too.
     only_hot = hot_given & ~limit_given
     figure, evidence = np.where(only_hot, hot, figure), np.where(only_hot, GUARANTEED, evidence)
+    evidence = evidence.astype(np.uint8)
     worst = _as_departure(figure, evidence == MISSING, departure)
+    nominal = _as_departure(nominal, np.isnan(nominal) | departure.is_signed, departure)
+    if stand_in.hot_times == 1.0 and not hot_given.any():
+        return _Read(nominal, worst, evidence, worst, evidence, change, evidence_change, True)
     over_temperature = np.where(hot_given, hot, figure * stand_in.hot_times)
     weaker = np.where(evidence == MISSING, MISSING, ASSUMED) if stand_in.hot_times != 1.0 else evidence
     return _Read(
-        nominal=_as_departure(nominal, np.isnan(nominal) | departure.is_signed, departure),
+        nominal=nominal,
         worst=worst,
-        evidence=evidence.astype(np.uint8),
+        evidence=evidence,
         worst_hot=np.maximum(worst, _as_departure(over_temperature, evidence == MISSING, departure)),
         evidence_hot=np.where(hot_given, GUARANTEED, weaker).astype(np.uint8),
         change=change,
@@ -272,9 +290,10 @@ def _refuse_crossed(
 
 def _change(checking: Checking, departure: Departure, stand_in: StandIn) -> tuple[FloatArray, NDArray[np.uint8]]:
     """Change after a calibration as a fraction, and what it rests on; calibrated stages work at 0 Hz."""
-    if departure not in DEPARTURES:
-        unknown = np.full(len(checking.raw.rows), np.inf)
-        return unknown, np.full(len(unknown), GUARANTEED, np.uint8)
+    if departure not in DEPARTURES or (
+        stand_in.change_pct is None and departure.change_column not in checking.raw.header
+    ):
+        return _everywhere(np.inf, checking), _everywhere(np.uint8(GUARANTEED), checking)
     cells = checking.column(tables.column("parts", departure.change_column))
     assumed = np.inf if stand_in.change_pct is None else stand_in.change_pct * PER_PCT
     evidence = np.where(cells.blank & np.isfinite(assumed), ASSUMED, GUARANTEED)

@@ -168,9 +168,13 @@ def test_terms_are_named_once() -> None:
 
 
 def test_what_no_column_speaks_of_is_not_in_the_form() -> None:
-    assert derived_with([True, False, False, False, False]) == BASIC
-    assert derived_with([True, True, True, False, True]) == (*BASIC, DEPARTURES[4])
-    form = derive(LIBRARY["difference"], derived_with([True, True, True, False, True]))
+    nothing_rises = [False] * 3
+    assert derived_with([True, False, False, False, False, *nothing_rises]) == BASIC
+    assert derived_with([True, True, True, False, True, *nothing_rises]) == (*BASIC, DEPARTURES[4])
+    rises = [True, True, True, False, False, True, False, True]
+    assert derived_with(rises) == BASIC
+    assert derived_with(rises, at_frequency=True) == (*BASIC, DEPARTURES[3])
+    form = derive(LIBRARY["difference"], derived_with([True, True, True, False, True, *nothing_rises]))
     assert {symbol for _, symbol in form.departures} == {"a", "g_id", "r_o", "c_pos", "c_neg"}
 
 
@@ -221,7 +225,7 @@ def test_a_need_put_back_just_passes(name: str) -> None:
 @pytest.mark.parametrize("change", [0.1, np.inf])
 def test_nothing_drawn_exceeds_the_worst_case_of_a_calibrated_stage(name: str, change: float) -> None:
     topology, rng = LIBRARY[name], random.Random(f"{name} {change}")
-    form, limits = derive(topology, derived_with([True] * 5, calibrated=True)), limits_of(rng)
+    form, limits = derive(topology, derived_with([True] * 8, calibrated=True)), limits_of(rng)
     assert not form.has(DEPARTURES[4])
     limits[4] = 0.0
     box = box_of(topology, oracle.random_ohms(topology, rng, 1e3, 1e5), 0.0)

@@ -21,7 +21,8 @@ def test_tables_are_those_of_the_run(write_job: JobWriter) -> None:
     run = service.screen(service.prepare(write_job())).folder
     found = reading.verdicts(run)
     pd.testing.assert_frame_equal(found, pq.read_table(run / "verdicts").to_pandas())
-    assert reading.stages(run)["stage"].tolist() == ["level"]
+    pd.testing.assert_frame_equal(reading.verdicts(str(run)), found)
+    assert reading.stages(str(run))["stage"].tolist() == ["level"]
     assert reading.parts(run)["part"].tolist() == ["amp-1"]
 
 

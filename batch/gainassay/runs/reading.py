@@ -13,12 +13,12 @@ from gainassay.errors import InputError
 from gainassay.runs.folder import MANIFEST, file_of
 
 
-def verdicts(run: Path) -> pd.DataFrame:
+def verdicts(run: Path | str) -> pd.DataFrame:
     """The verdict table of a committed run, a row for each pair.
 
     Parameters
     ----------
-    run : Path
+    run : Path or str
         The run folder.
 
     Raises
@@ -26,20 +26,21 @@ def verdicts(run: Path) -> pd.DataFrame:
     InputError
         If the folder is no committed run, has no verdict table in Parquet, or a file is not what the manifest says.
     """
+    run = Path(run)
     listed = [name for name in _files(run) if name.startswith("verdicts/") and name.endswith(".parquet")]
     if not listed:
         raise InputError(f"{run}: the run keeps no verdict table in Parquet; see [results] in its job")
     return _frame([pq.read_table(_intact(run, name)) for name in listed])
 
 
-def stages(run: Path) -> pd.DataFrame:
+def stages(run: Path | str) -> pd.DataFrame:
     """The summary of the stages of a committed run. Raises as `verdicts` does."""
-    return _frame([pq.read_table(_intact(run, "stages.parquet"))])
+    return _frame([pq.read_table(_intact(Path(run), "stages.parquet"))])
 
 
-def parts(run: Path) -> pd.DataFrame:
+def parts(run: Path | str) -> pd.DataFrame:
     """The summary of the parts of a committed run. Raises as `verdicts` does."""
-    return _frame([pq.read_table(_intact(run, "parts.parquet"))])
+    return _frame([pq.read_table(_intact(Path(run), "parts.parquet"))])
 
 
 def _frame(tables: list[pa.Table]) -> pd.DataFrame:

@@ -236,20 +236,22 @@ class InS:
 
 def in_s(form: Form, values: FloatArray) -> InS:
     """The coefficient functions of a form in s; `values` as in `at_frequency`."""
-    reactive = np.array(form.kinds)[:, None] != "resistor"
-    is_capacitor = np.array(form.kinds)[:, None] == "capacitor"
+    pairs = _at_one_per_second(form, values)
+    return InS(tuple(_ratio_in_s(form, ratio, pairs) for ratio in (form.gain_ideal, *form.contrasts, *form.loadings)))
+
+
+def _at_one_per_second(form: Form, values: FloatArray) -> Pairs:
+    """Pairs at s = 1/s; a capacitor's y is proportional to s, and an inductor's z."""
     with np.errstate(divide="ignore"):
-        pairs = _scaled(np.where(reactive & is_capacitor, 1.0 / values, values))
-    each = (form.gain_ideal, *form.contrasts, *form.loadings)
-    return InS(tuple(tuple(_in_s(form, part, ratio, pairs) for part in _parts(ratio)) for ratio in each))  # type: ignore[misc]
+        return _scaled(np.where(np.array(form.kinds)[:, None] == "capacitor", 1.0 / values, values))
 
 
-def _parts(ratio: Ratio) -> tuple[Polynomial, Polynomial]:
-    return ratio.numerator, ratio.denominator
+def _ratio_in_s(form: Form, ratio: Ratio, pairs: Pairs) -> tuple[FloatArray, FloatArray]:
+    return _in_s(form, ratio.numerator, ratio, pairs), _in_s(form, ratio.denominator, ratio, pairs)
 
 
 def _in_s(form: Form, polynomial: Polynomial, ratio: Ratio, pairs: Pairs) -> FloatArray:
-    """The coefficients of the powers of s; a capacitor's y is proportional to s, and an inductor's z."""
+    """The coefficients of the powers of s."""
     powers, degrees = _all_powers(ratio, pairs), ratio.degrees()
     most = sum(degree for degree, kind in zip(degrees, form.kinds, strict=True) if kind != "resistor")
     found = np.zeros((most + 1, pairs.y.shape[1]))
@@ -285,7 +287,8 @@ def natural_frequencies(form: Form, values: FloatArray) -> FloatArray:
     values : ndarray, shape (elements,)
         As in `at_frequency`.
     """
-    roots = np.concatenate([np.roots(polynomial[::-1, 0]) for polynomial in in_s(form, values[:, None]).ratios[0]])
+    of_ideal = _ratio_in_s(form, form.gain_ideal, _at_one_per_second(form, values[:, None]))
+    roots = np.concatenate([np.roots(polynomial[::-1, 0]) for polynomial in of_ideal])
     steps = np.array([-4.0, -2.0, -1.0, -0.5, 0.0, 0.5, 1.0, 2.0, 4.0])
     hertz = (np.abs(roots)[:, None] + np.abs(roots.real)[:, None] * steps) / (2.0 * np.pi)
     return np.unique(hertz[hertz > 0.0])

@@ -22,12 +22,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from gainassay.contracts.moves import MOVES
 from gainassay.forms.coefficients import FloatArray
 from gainassay.forms.form import Form
 from gainassay.screen import bands
-from gainassay.screen.corners import SET_POINT, TRACKING, PartSide
-from gainassay.screen.kernel import NO_TERM, PAIRS_PER_BLOCK, UNBOUNDED, Outcome, put
+from gainassay.screen.corners import PartSide, largest_of_each, stage_terms
+from gainassay.screen.kernel import NO_TERM, PAIRS_PER_BLOCK, UNBOUNDED, Outcome, cut, put
 from gainassay.screen.response import Departing, Meeting, errors, every, polynomial, terms, turned
 from gainassay.screen.split import ONE, Split, over, plus, real_product, split, splits, times
 from gainassay.screen.spots import SpotSide
@@ -49,8 +48,7 @@ def part_side(nominal: FloatArray, worst: FloatArray, lags: FloatArray, evidence
 
 def term_names(form: Form) -> tuple[str, ...]:
     """As `corners.term_names`, with what rises with frequency told from what does not."""
-    elements = (f"{name}.{move}" for name in form.elements for move in MOVES)
-    return (SET_POINT, *elements, TRACKING, *(term.name for term in terms(form)))
+    return (*stage_terms(form), *(term.name for term in terms(form)))
 
 
 def screen(form: Form, stages: SpotSide, parts: PartSide, block: int = PAIRS_PER_BLOCK) -> Outcome:
@@ -107,11 +105,7 @@ def gains(form: Form, stages: SpotSide, outcome: Outcome) -> tuple[FloatArray, F
 def elements_error(stages: SpotSide) -> FloatArray:
     """As `corners.elements_error`, of magnitudes."""
     error, _ = turned(None, None, split(stages.corner_error[None]))
-    size = np.nan_to_num(np.abs(error[0]), nan=np.inf)
-    first = stages.first[stages.begin]
-    largest = np.repeat(np.maximum.reduceat(size, first), np.diff(np.append(first, len(size))))
-    candidates = np.where(size == largest, np.arange(len(size)), len(size))
-    return np.asarray(error[0][np.minimum.reduceat(candidates, first)])
+    return largest_of_each(error[0], stages.first[stages.begin])
 
 
 def _in_blocks(
@@ -125,16 +119,8 @@ def _in_blocks(
     for place in range(int(number.max(initial=0)) + 1):
         for plan in stages.plans:
             spots = plan.stages[number[plan.stages] == place]
-            for rows, columns in _cut((len(spots), parts), block):
+            for rows, columns in cut((len(spots), parts), block):
                 yield spots[rows], plan.corners, columns, place == 0
-
-
-def _cut(shape: tuple[int, int], block: int) -> Iterator[tuple[slice, slice]]:
-    width = max(1, min(shape[1], block))
-    height = max(1, block // width)
-    for top in range(0, shape[0], height):
-        for left in range(0, shape[1], width):
-            yield slice(top, min(top + height, shape[0])), slice(left, min(left + width, shape[1]))
 
 
 def _nominal(form: Form, stages: SpotSide, parts: PartSide, spots: NDArray[np.intp], columns: slice) -> FloatArray:

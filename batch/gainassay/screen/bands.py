@@ -71,8 +71,9 @@ def meeting(form: Form, stages: SpotSide, row: int, at: NDArray[np.intp] | None,
     def ideal(values: FloatArray) -> ComplexArray:
         return coefficients.gain_ideal(form, coefficients.at_frequency(form, values, hertz))
 
-    gain_ideal, reference = gains(form, stages, row, hertz)
-    complex_reference = times(ideal(nominal), reference / gain_ideal)
+    nominal_ideal = ideal(nominal)
+    gain_ideal, reference = _magnitudes(stages, row, nominal_ideal)
+    complex_reference = times(nominal_ideal, reference / gain_ideal)
     values = nominal * product(factors.own) * product(factors.together)
     of = coefficients.evaluate(form, coefficients.at_frequency(form, values, hertz))
     error = over(of.gain_ideal - complex_reference, complex_reference)
@@ -91,9 +92,13 @@ def meeting(form: Form, stages: SpotSide, row: int, at: NDArray[np.intp] | None,
 def gains(form: Form, stages: SpotSide, row: int, hertz: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Magnitudes of the ideal gain of a stage and of the gain that errors refer to, at frequencies [gain unit]."""
     values = np.repeat(stages.box.values[:, row, None], len(hertz), axis=1)
-    magnitude = magnitude_of(coefficients.gain_ideal(form, coefficients.at_frequency(form, values, hertz)))
+    return _magnitudes(stages, row, coefficients.gain_ideal(form, coefficients.at_frequency(form, values, hertz)))
+
+
+def _magnitudes(stages: SpotSide, row: int, ideal: ComplexArray) -> tuple[FloatArray, FloatArray]:
+    magnitude = magnitude_of(ideal)
     target = stages.box.targets[row]
-    return magnitude, magnitude if np.isnan(target) else np.full(len(hertz), abs(target))
+    return magnitude, magnitude if np.isnan(target) else np.full(len(ideal), abs(target))
 
 
 @dataclass(frozen=True)

@@ -45,7 +45,7 @@ from gainassay.screen.kernel import (
     undoing,
 )
 from gainassay.screen.signs import FIXED, OPEN, Reach
-from gainassay.screen.visits import Plan, factors_at, visit, what_is_known, with_a_bound
+from gainassay.screen.visits import Plan, bits, factors_at, visit, what_is_known, with_a_bound
 
 FALLEN, RISEN, IDEAL = range(3)
 """Places in `PartSide.changed`."""
@@ -73,7 +73,7 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
             known.of[variables:],
         ]
     )
-    visited = visit(form, of[None], _place, form.figures(), 2 * variables)
+    visited = visit(form, of[None], bits, form.figures(), 2 * variables)
     stage = visited.stage
     before = box.values[:, stage] * _all(held, stage, visited.is_upper[variables:])
     factors = factors_at(moving, stage, visited.is_upper[:variables])
@@ -110,11 +110,6 @@ def stage_side(form: Form, box: StageBox, reached: Reach | None = None) -> Stage
         )
 
 
-def _place(rises: Sequence[bool]) -> int:
-    """The place of a corner of the part: bit i is whether departure i rises after calibration."""
-    return sum(1 << index for index, rising in enumerate(rises) if rising)
-
-
 @cache
 def _ideal_sets(form: Form) -> tuple[tuple[bool, ...], ...]:
     """Which of the form's departures may be ideal throughout: first none, and each set that leaves other products."""
@@ -131,7 +126,7 @@ def _ideal_sets(form: Form) -> tuple[tuple[bool, ...], ...]:
 def _with_ideal_ones(form: Form, plan: Plan) -> Plan:
     """The corners of a plan, each also with departures that are ideal throughout."""
     found = {
-        (j, (which << len(ideal)) + _place([not best and bool(q >> i & 1) for i, best in enumerate(ideal)]))
+        (j, (which << len(ideal)) + bits([not best and bool(q >> i & 1) for i, best in enumerate(ideal)]))
         for j, q in plan.corners
         for which, ideal in enumerate(_ideal_sets(form))
     }

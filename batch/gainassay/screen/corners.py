@@ -29,7 +29,16 @@ from gainassay.screen.boxes import StageBox
 from gainassay.screen.boxes import product as product_of_moves
 from gainassay.screen.signs import Reach
 from gainassay.screen.tracking import Slack
-from gainassay.screen.visits import MOST_OPEN_ELEMENTS, Factors, Plan, factors_at, visit, what_is_known, with_a_bound
+from gainassay.screen.visits import (
+    MOST_OPEN_ELEMENTS,
+    Factors,
+    Plan,
+    bits,
+    factors_at,
+    visit,
+    what_is_known,
+    with_a_bound,
+)
 
 SET_POINT = "set_point"
 TRACKING = "tracking"
@@ -148,7 +157,12 @@ class PartSide:
 
 def term_names(form: Form) -> tuple[str, ...]:
     """Names of all terms of a row's account, in its order: set-point, elements, networks, departures."""
-    return (SET_POINT, *(f"{name}.{move}" for name in form.elements for move in MOVES), TRACKING, *form.accounts())
+    return (*stage_terms(form), *form.accounts())
+
+
+def stage_terms(form: Form) -> tuple[str, ...]:
+    """Names of the terms that stand first in every account: set-point, elements, networks."""
+    return (SET_POINT, *(f"{name}.{move}" for name in form.elements for move in MOVES), TRACKING)
 
 
 def moving_terms(names: tuple[str, ...], box: StageBox) -> tuple[str, ...]:
@@ -190,8 +204,8 @@ class ActiveSets(Sequence[tuple[int, ...]]):
 
     def place(self, at_limit: Sequence[bool]) -> int:
         """The place of the set where the marked departures are at their limits and the others 0."""
-        bits = sum(1 << departure for departure, marked in enumerate(at_limit) if marked)
-        return bits if self.places is None else self.places[_active(self.masks, bits)]
+        marked = bits(at_limit)
+        return marked if self.places is None else self.places[_active(self.masks, marked)]
 
 
 @cache
@@ -277,11 +291,16 @@ def elements_error(side: StageSide) -> FloatArray:
     The corners of largest and smallest gain are those of the ideal gain too: departures of 0 are part of the box
     over which directions hold.
     """
-    size = np.abs(np.nan_to_num(side.corner_error, nan=np.inf))
-    largest = np.maximum.reduceat(size, side.first)
-    counts = np.diff(np.append(side.first, len(size)))
+    return largest_of_each(side.corner_error, side.first)
+
+
+def largest_of_each(error: FloatArray, first: NDArray[np.intp]) -> FloatArray:
+    """Of each stage, whose corners begin at `first`, the first error of largest magnitude; shape (stages,)."""
+    size = np.abs(np.nan_to_num(error, nan=np.inf))
+    largest = np.maximum.reduceat(size, first)
+    counts = np.diff(np.append(first, len(size)))
     candidates = np.where(size == np.repeat(largest, counts), np.arange(len(size)), len(size))
-    return side.corner_error[np.minimum.reduceat(candidates, side.first)]
+    return np.asarray(error[np.minimum.reduceat(candidates, first)])
 
 
 def part_side(form: Form, nominal: FloatArray, worst: FloatArray, evidence: NDArray[np.uint8]) -> PartSide:

@@ -153,12 +153,18 @@ def worst_errors(
 
 def in_blocks(stages: StageSide, parts: int, block: int) -> Iterator[tuple[Plan, NDArray[np.intp], slice]]:
     """Blocks of pairs whose stages visit the same corners."""
-    width = max(1, min(parts, block))
-    height = max(1, block // width)
     for plan in stages.plans:
-        for top in range(0, len(plan.stages), height):
-            for left in range(0, parts, width):
-                yield plan, plan.stages[top : top + height], slice(left, min(left + width, parts))
+        for rows, columns in cut((len(plan.stages), parts), block):
+            yield plan, plan.stages[rows], columns
+
+
+def cut(shape: tuple[int, int], block: int) -> Iterator[tuple[slice, slice]]:
+    """Rows and columns of the blocks that pairs are cut into."""
+    width = max(1, min(shape[1], block))
+    height = max(1, block // width)
+    for top in range(0, shape[0], height):
+        for left in range(0, shape[1], width):
+            yield slice(top, min(top + height, shape[0])), slice(left, min(left + width, shape[1]))
 
 
 def _screen_block(

@@ -21,7 +21,7 @@ from gainassay.screen.boxes import StageBox, product
 from gainassay.screen.corners import elements_terms
 from gainassay.screen.response import Meeting, figures, figures_of, mattering, products, variables
 from gainassay.screen.signs import FALLS, FIXED, OPEN, RISES
-from gainassay.screen.visits import Factors, Plan, factors_at, visit, with_a_bound
+from gainassay.screen.visits import Factors, Plan, bits, factors_at, visit, with_a_bound
 
 SHARE = 0.03
 """Of the poorest figures of the parts table: those of a good part, with which slopes are looked at, too."""
@@ -183,7 +183,7 @@ def stage_side(form: Form, box: StageBox, farthest: FloatArray) -> SpotSide:
     with np.errstate(divide="ignore", invalid="ignore"):
         complex_reference = times(nominal.gain_ideal, references / magnitude)
     known = _directions(form, at_spots, hertz, farthest, np.isfinite(signals.phase_limits)[of_stage])
-    visited = visit(form, known, _mask, figures(form), len(known[0]) - len(variables(form)))
+    visited = visit(form, known, bits, figures(form), len(known[0]) - len(variables(form)))
     spot = visited.stage
     factors = factors_at(at_spots, spot, visited.is_upper)
     values = at_spots.values[:, spot] * product(factors.own) * product(factors.together)
@@ -234,11 +234,6 @@ def rises(at: Coefficients, error: AnyArray) -> ComplexArray:
 def magnitude_of(z: ComplexArray) -> FloatArray:
     """|z|, rounded the same wherever a number stands in the array."""
     return np.asarray(np.sqrt(z.real * z.real + z.imag * z.imag))
-
-
-def _mask(at_limit: Sequence[bool]) -> int:
-    """A corner of the part: bit i is whether variable i is at its limit."""
-    return sum(1 << index for index, is_there in enumerate(at_limit) if is_there)
 
 
 def _numbered(plan: Plan, masks: Sequence[int]) -> Plan:

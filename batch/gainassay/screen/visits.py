@@ -26,6 +26,11 @@ MOST_OPEN_FIGURES = 12
 """The same of one part: as many as two amplifiers have, and more than three have of `departures.BASIC`."""
 
 
+def bits(marked: Sequence[bool]) -> int:
+    """The number whose bit i says whether the i-th is marked."""
+    return sum(1 << index for index, is_marked in enumerate(marked) if is_marked)
+
+
 @dataclass(frozen=True)
 class Plan:
     """Stages that visit the same corners.
